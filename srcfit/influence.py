@@ -1,0 +1,360 @@
+"""Influence lines of anything that can be read on a member, from the state form.
+
+The kernel is never built from growing exponentials. From each end an orthonormal basis of the
+states that satisfy the end's conditions is carried along the member: Y from the left, W from the
+right. A unit load at a place splits into a part in W (right of it) and a part in Y (left of it),
+and the coefficients of the two parts only decay as they are carried away from the load.
+
+The operator is self-adjoint, so the influence line of any quantity H at x (the reading per unit
+source at s) is itself a response: to a unit force for the response, a couple for the rotation,
+a kink for the moment, a gap for the shear. One routine, `influence`, gives all of them.
+
+Source: Ascher, Mattheij & Russell, Numerical Solution of Boundary Value Problems (1995), ch. 4
+(decoupling by orthonormal bases); reciprocity after Maxwell and Betti.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from srcfit.errors import MemberError
+from srcfit.member import RIGID, Array, Member, Restraint, Support
+from srcfit.state import Chain, Matrix, chain, operator
+
+SINGULAR = 1e-9
+
+
+@dataclass(frozen=True)
+class Bases:
+    """Bases of the states that satisfy the left (Y) and the right (W) conditions at each node.
+
+    `to_left` and `to_right` carry the coefficients across each interval.
+    """
+
+    Y: Matrix
+    W: Matrix
+    to_left: Matrix
+    to_right: Matrix
+
+
+@dataclass(frozen=True)
+class Term:
+    """One term of a functional: row @ z at a node.
+
+    `before`: read on the left of a load at the same place (default: on its right).
+    """
+
+    node: int
+    row: Matrix
+    before: bool = False
+
+
+@dataclass(frozen=True)
+class Influence:
+    """Influence lines of some functionals, n of them, on a chain.
+
+    Attributes
+    ----------
+    left, right : (n, N - 1, k) scaled states at the left and right end of each interval
+    outer_left, outer_right : (n, k) scaled states beyond the loads at the ends
+    before : (n,) whether the functional is read on the left of a load at the same place
+    """
+
+    chain: Chain
+    left: Matrix
+    right: Matrix
+    outer_left: Matrix
+    outer_right: Matrix
+    before: NDArray[np.bool_]
+
+
+def _end_basis(member: Member, which: str) -> Matrix:
+    """States (columns, physical) that satisfy the conditions of one end."""
+    end = member.left if which == "left" else member.right
+    side = 1.0 if which == "left" else -1.0
+    n = member.kind.order
+    loss = 1 + 1j * member.damping if member.driven and member.damping else 1.0
+    if n == 2 and end.axis:
+        return np.array([[1.0], [side * _tip(member, which)]])
+    if n == 2:
+        k = end.response.stiffness
+        return np.array([[0.0], [1.0]]) if np.isinf(k) else np.array([[1.0], [side * k * loss]])
+    basis = np.zeros((4, 2), dtype=type(loss))
+    k, c = end.response.stiffness, end.rotation.stiffness
+    if np.isinf(k):
+        basis[3, 0] = 1.0
+    else:
+        basis[0, 0], basis[3, 0] = 1.0, side * k * loss
+    if np.isinf(c):
+        basis[2, 1] = 1.0
+    else:
+        basis[1, 1], basis[2, 1] = 1.0, -side * c * loss
+    return basis
+
+
+def _tip(member: Member, which: str) -> Any:
+    """Flux that the loss beside a singular end feeds: integral of q from the end to the chain."""
+    from srcfit.state import NEAR_AXIS, gauss
+
+    c, b, _ = gauss()
+    reach = NEAR_AXIS * member.length
+    place = member.start + reach * c if which == "left" else member.end - reach * c
+    return reach * (b * operator(member, place)["q"]).sum()
+
+
+def _orthonormal(columns: Matrix) -> tuple[Matrix, Matrix]:
+    """Thin QR of one or two columns by Gram-Schmidt with a repeat (cheaper than LAPACK here)."""
+    a = columns[:, 0]
+    size = np.sqrt(np.vdot(a, a).real)
+    a = a / size
+    if columns.shape[1] == 1:
+        return a[:, None], np.array([[size]], dtype=columns.dtype)
+    b = columns[:, 1]
+    first = np.vdot(a, b)
+    b = b - first * a
+    again = np.vdot(a, b)
+    b = b - again * a
+    rest = np.sqrt(np.vdot(b, b).real)
+    q = np.empty_like(columns)
+    q[:, 0], q[:, 1] = a, b / rest
+    return q, np.array([[size, first + again], [0.0, rest]], dtype=columns.dtype)
+
+
+def _through_pin(basis: Matrix, row: Array, column: Array, what: str) -> tuple[Matrix, Matrix]:
+    """States of `basis` with row @ z = 0, plus any jump along `column`.
+
+    Returns the new basis and the matrix that takes coefficients in it back to the old basis.
+    """
+    held = row @ basis
+    if np.abs(held).max() < 1e-13:
+        raise MemberError(
+            f"the part of the member beside {what} is free to move by itself",
+            "member",
+            "hold it by a support, an end or a spring",
+        )
+    null = np.linalg.qr(held.conj()[:, None], mode="complete")[0][:, 1:]
+    q, r = _orthonormal(np.concatenate([basis @ null, column[:, None]], axis=1))
+    back = np.concatenate([null, np.zeros((len(null), 1))], axis=1) @ np.linalg.inv(r)
+    return q, back
+
+
+def bases(line: Chain) -> Bases:
+    """Carry the bases along the chain, in both directions."""
+    scale, n = line.scale, line.order
+    half, count = n // 2, len(line.x)
+    start = _end_basis(line.member, "left") / scale[:, None]
+    stop = _end_basis(line.member, "right") / scale[:, None]
+    kind = np.result_type(line.phi, start, stop)
+    Y, W = (np.empty((count, n, half), dtype=kind) for _ in range(2))
+    to_left, to_right = (np.empty((count - 1, half, half), dtype=kind) for _ in range(2))
+    backward = np.linalg.inv(line.phi)
+    Y[0], W[-1] = _orthonormal(start.astype(kind))[0], _orthonormal(stop.astype(kind))[0]
+    for k in range(count - 1):
+        pin = line.pins.get(k)
+        if pin is None:
+            Y[k + 1], to_left[k] = _orthonormal(line.phi[k] @ Y[k])
+        else:
+            place = f"{line.x[k]:.6g} m"
+            Y[k + 1], to_left[k] = _through_pin(Y[k], pin.row, pin.column, place)
+    for k in range(count - 2, -1, -1):
+        pin = line.pins.get(k)
+        if pin is None:
+            W[k], to_right[k] = _orthonormal(backward[k] @ W[k + 1])
+        else:
+            place = f"{line.x[k]:.6g} m"
+            W[k], to_right[k] = _through_pin(W[k + 1], pin.row, pin.column, place)
+    plain = np.array([k not in line.pins for k in range(count - 1)])
+    to_left[plain] = np.linalg.inv(to_left[plain])
+    to_right[plain] = np.linalg.inv(to_right[plain])
+    return Bases(Y, W, to_left, to_right)
+
+
+def null_states(line: Chain, both: Bases) -> Matrix:
+    """States at all nodes (d, N, n) of the d null modes; d = 0 for a regular operator."""
+    # a null mode lies in both bases; the node where they meet best shows it most clearly
+    meet = np.linalg.svd(np.concatenate([both.W, both.Y], axis=2), compute_uv=False)[:, -1]
+    node = int(np.argmin(meet))
+    if meet[node] > SINGULAR:
+        return np.zeros((0, len(line.x), line.order))
+    half = line.order // 2
+    _, size, vh = np.linalg.svd(np.concatenate([both.W[node], -both.Y[node]], axis=1))
+    vectors = vh[size < SINGULAR].conj()
+    modes = np.empty((len(vectors), len(line.x), line.order), dtype=both.Y.dtype)
+    c, b = vectors[:, :half], vectors[:, half:]
+    for k in range(node, len(line.x)):
+        modes[:, k] = c @ both.W[k].T
+        if k + 1 < len(line.x):
+            c = c @ both.to_right[k].T
+    for k in range(node, -1, -1):
+        modes[:, k] = b @ both.Y[k].T
+        if k > 0:
+            b = b @ both.to_left[k - 1].T
+    return modes
+
+
+def influence(line: Chain, functionals: Sequence[Sequence[Term]]) -> Influence:
+    """Influence lines of functionals, each a sum of terms at nodes.
+
+    Parameters
+    ----------
+    line : Chain
+    functionals : n sequences of Term, rows physical
+
+    Returns
+    -------
+    Influence
+    """
+    both = bases(line)
+    rows = [(i, t.node, t.row) for i, terms in enumerate(functionals) for t in terms]
+    owner = np.array([r[0] for r in rows], dtype=int)
+    node = np.array([r[1] for r in rows], dtype=int)
+    jumps = _jump(np.array([r[2] for r in rows]).reshape(len(rows), line.order)) / line.scale
+    c, b = _split(both, node, jumps)
+    n, count, half = len(functionals), len(line.x), line.order // 2
+    kind = np.result_type(both.Y, c)
+    right_c, left_b = (np.zeros((count, n, half), dtype=kind) for _ in range(2))
+    np.add.at(right_c, (node, owner), c)
+    np.add.at(left_b, (node, owner), b)
+    for k in range(count - 1):
+        right_c[k + 1] += right_c[k] @ both.to_right[k].T
+    for k in range(count - 1, 0, -1):
+        left_b[k - 1] += left_b[k] @ both.to_left[k - 1].T
+    WT, YT = both.W.transpose(0, 2, 1), both.Y.transpose(0, 2, 1)
+    # right of its load an influence line lies in W, left of it in Y
+    carried = right_c[:-1] @ both.to_right.transpose(0, 2, 1)
+    returned = left_b[1:] @ both.to_left.transpose(0, 2, 1)
+    left = right_c[:-1] @ WT[:-1] + returned @ YT[:-1]
+    right = carried @ WT[1:] + left_b[1:] @ YT[1:]
+    return Influence(
+        line, left.transpose(1, 0, 2), right.transpose(1, 0, 2), left_b[0] @ YT[0],
+        right_c[-1] @ WT[-1], np.array([any(t.before for t in f) for f in functionals]),
+    )  # fmt: skip
+
+
+def _split(both: Bases, node: NDArray[np.int64], jumps: Matrix) -> tuple[Matrix, Matrix]:
+    """Coefficients in W (right) and Y (left) of unit jumps at nodes."""
+    if len(node) == 0:
+        half = both.Y.shape[2]
+        return np.zeros((0, half)), np.zeros((0, half))
+    system = np.concatenate([both.W[node], -both.Y[node]], axis=2)
+    found = np.linalg.solve(system, jumps[:, :, None].astype(system.dtype))[:, :, 0]
+    half = both.Y.shape[2]
+    return found[:, :half], found[:, half:]
+
+
+def _jump(rows: Matrix) -> Matrix:
+    """The state jump whose response is the influence line of row @ z (reciprocity)."""
+    if rows.shape[1] == 2:
+        return np.stack([rows[:, 1], -rows[:, 0]], axis=1)
+    u, psi, moment, shear = rows.T
+    return np.stack([shear, -moment, psi, -u], axis=1)
+
+
+def restraint_forces(lines: Influence) -> tuple[list[str], Matrix]:
+    """What each functional reads per unit prescribed amount at each restraint.
+
+    Returns
+    -------
+    names : list of str
+        ``left.value``, ``left.rotation``, ``right.value``, ``right.rotation``, ``support.1`` ...
+    columns : (n, len(names))
+        Also, by reciprocity, the reaction of that restraint to the functional's own load.
+    """
+    member, scale = lines.chain.member, lines.chain.scale
+    last = lines.chain.order - 1
+    at_left, at_right = lines.outer_left * scale, lines.outer_right * scale
+    names, columns = [], []
+    for word, end, state, side in (
+        ("left", member.left, at_left, 1.0),
+        ("right", member.right, at_right, -1.0),
+    ):
+        if end.response.stiffness != 0 and not end.axis:
+            names.append(f"{word}.value")
+            columns.append(side * state[:, last])
+        if end.rotation.stiffness != 0:
+            names.append(f"{word}.rotation")
+            columns.append(-side * state[:, 2])
+    for number, interval in enumerate(support_intervals(lines.chain), start=1):
+        names.append(f"support.{number}")
+        step = lines.right[:, interval, last] - lines.left[:, interval, last]
+        columns.append(step * scale[last])
+    empty = np.zeros((len(lines.left), 0))
+    return names, np.stack(columns, axis=1) if columns else empty
+
+
+def support_intervals(line: Chain) -> list[int]:
+    """The interval of no length of each support, in order."""
+    found = []
+    for support in line.member.supports:
+        here = np.flatnonzero((line.x[:-1] == line.x[1:]) & (np.abs(line.x[:-1] - support.at)
+                              <= 1e-12 * max(1.0, abs(support.at))))  # fmt: skip
+        found += [k for k in here if _is_support(line, int(k))]
+    return [int(k) for k in found]
+
+
+def _is_support(line: Chain, interval: int) -> bool:
+    """Whether the double node is a support's, not a hinge's or an interface's."""
+    pin = line.pins.get(interval)
+    if pin is not None:
+        return bool(pin.row[0] != 0)
+    return bool(line.phi[interval][-1, 0] != 0)
+
+
+def at_nodes(lines: Influence, node: NDArray[np.int64], component: int = 0) -> Matrix:
+    """Influence lines (or another state component) at nodes, (n, len(node)).
+
+    Where two limits differ: on the side that a load at that place has to the functional.
+    """
+    size = lines.chain.scale[component]
+    low = np.concatenate([lines.outer_left[:, None], lines.right], axis=1)[:, node, component]
+    high = np.concatenate([lines.left, lines.outer_right[:, None]], axis=1)[:, node, component]
+    return np.where(lines.before[:, None], high, low) * size
+
+
+def interval_integrals(lines: Influence, density: Matrix | None = None) -> Matrix:
+    """Integral of each influence line over each interval, (n, N - 1).
+
+    `density` (N - 1, s): values at the Gauss places to multiply with; the area weight is included.
+    """
+    weights = lines.chain.weights if density is None else lines.chain.weights * density
+    rows = np.einsum("ks,ksd->kd", weights, lines.chain.stages)
+    found: Matrix = np.einsum("nkd,kd->nk", lines.left, rows)
+    return found
+
+
+def restrained(member: Member) -> tuple[Member, Matrix | None, Chain | None]:
+    """The member, held at as many places as it has null modes (none for a regular one).
+
+    For a balanced source these holds carry no force, so the response differs from the free
+    member's by null modes only.
+
+    Returns
+    -------
+    member : Member, with supports added
+    modes : (d, N, n) scaled states of the null modes on `chain`, or None
+    chain : Chain, or None
+    """
+    # odd fractions: a hold should not fall on a user's own place
+    line = chain(member, member.start + member.length * np.linspace(0.0137, 0.9871, 23))
+    modes = null_states(line, bases(line))
+    if len(modes) == 0:
+        return member, None, None
+    left = modes[:, :, 0].copy()
+    taken = [s.at for s in member.supports]
+    allowed = (line.x > member.start) & (line.x < member.end)
+    allowed &= ~np.isin(line.x, taken)
+    added = []
+    for _ in range(len(modes)):
+        size = np.where(allowed, np.abs(left).max(axis=0), -1.0)
+        best = int(np.argmax(size))
+        column = left[:, best]
+        left = left - np.outer(column, column.conj() @ left) / (np.abs(column) ** 2).sum()
+        added.append(float(line.x[best]))
+    held = tuple(Support(at, "hold", Restraint(RIGID)) for at in added)
+    supports = tuple(sorted((*member.supports, *held), key=lambda s: s.at))
+    return replace(member, supports=supports), modes, line

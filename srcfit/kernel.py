@@ -1,0 +1,410 @@
+"""Green's kernel, its derived quantities, and the whole response to a given source.
+
+u(x) = integral of G(x, s) f(s) w(s) ds. On a singular member (null modes) the generalised kernel
+is given, on the complement of the null modes with weight r. How the numbers come about: see
+`influence`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from srcfit.errors import MemberError
+from srcfit.influence import (
+    Influence,
+    Term,
+    at_nodes,
+    bases,
+    influence,
+    interval_integrals,
+    null_states,
+    restrained,
+    restraint_forces,
+    support_intervals,
+)
+from srcfit.member import Array, Member, Unknown
+from srcfit.state import (
+    Chain,
+    Matrix,
+    chain,
+    gauss,
+    inner_edges,
+    operator,
+    profile,
+    special_places,
+)
+
+Source = Callable[[Array], Any]
+Row = Callable[[Member, float, dict[str, Any]], list[Any]]
+
+
+def _slope(member: Member, w: float, k: dict[str, Any]) -> list[Any]:
+    if member.kind.order == 2:
+        return [0.0, 1 / k["p"]]
+    if "shear" not in k:
+        return [0.0, 1.0, 0.0, 0.0]
+    share = 1 / (1 + k["p1"] / k["shear"])
+    return [0.0, share, 0.0, share / k["shear"]]
+
+
+def _flux(member: Member, w: float, k: dict[str, Any]) -> list[Any]:
+    if member.kind.order == 4:
+        return [0.0, 0.0, 0.0, 1.0]
+    return [0.0, -1.0 if member.kind.name == "radial_aquifer" else -1 / w]
+
+
+def _response(member: Member, w: float, k: dict[str, Any]) -> list[Any]:
+    return [1.0] + [0.0] * (member.kind.order - 1)
+
+
+QUANTITIES: dict[str, tuple[tuple[int, ...], Row]] = {
+    # name: (orders that have it, row on the state)
+    "response": ((2, 4), _response),
+    "slope": ((2, 4), _slope),
+    "rotation": ((4,), lambda member, w, k: [0.0, 1.0, 0.0, 0.0]),
+    "curvature": ((4,), lambda member, w, k: [0.0, 0.0, 1 / k["p2"], 0.0]),
+    "moment": ((4,), lambda member, w, k: [0.0, 0.0, 1.0, 0.0]),
+    "shear": ((4,), lambda member, w, k: [0.0, 0.0, 0.0, 1.0]),
+    "flux": ((2, 4), _flux),
+    "force": ((2,), lambda member, w, k: [0.0, 1.0]),
+    "torque": ((2,), lambda member, w, k: [0.0, 1.0]),
+}
+
+
+def functional(line: Chain, quantity: str, x: float) -> list[Term]:
+    """The functional `quantity` at the place `x`: the right limit at a jump, at the end the left.
+
+    Raises
+    ------
+    MemberError
+        When the member has no such quantity, or no reaction at `x`.
+    """
+    member = line.member
+    if quantity == "reaction":
+        return _reaction(line, x)
+    orders, row = QUANTITIES.get(quantity, ((), None))
+    if row is None or member.kind.order not in orders:
+        known = [name for name, (has, _) in QUANTITIES.items() if member.kind.order in has]
+        raise MemberError(
+            f"a {member.kind.name} has no quantity {quantity!r}",
+            "quantity",
+            "choose one of " + ", ".join([*known, "reaction"]),
+        )
+    node = int(line.node(np.array([x]))[0])
+    last = node == len(line.x) - 1
+    place = float(line.x[node])
+    # coefficients jump at edges: look just inside the side that is meant
+    nudge = 1e-12 * member.length
+    inside = place - nudge if last else place + nudge
+    k = {name: v[()] for name, v in operator(member, np.array(inside)).items()}
+    return [Term(node, np.array(row(member, float(member.area(np.array(place))), k)), last)]
+
+
+def _reaction(line: Chain, x: float) -> list[Term]:
+    """Reaction at an end or a support: the jump of the last state component there."""
+    member, last = line.member, line.order - 1
+    unit = np.zeros(line.order)
+    unit[last] = 1.0
+    near = 1e-9 * member.length
+    if abs(x - member.start) <= near and not member.left.axis:
+        return [Term(0, unit, True)]
+    if abs(x - member.end) <= near and not member.right.axis:
+        return [Term(len(line.x) - 1, -unit)]
+    for support, interval in zip(member.supports, support_intervals(line), strict=True):
+        if abs(x - support.at) <= near:
+            return [Term(interval + 1, unit), Term(interval, -unit)]
+    places = ", ".join(f"{s.at:g}" for s in member.supports) or "none"
+    raise MemberError(
+        f"there is no support at x = {x:g} m", "quantity 'reaction'",
+        f"ask at an end or at a support (supports: {places})",
+    )  # fmt: skip
+
+
+def prescribed(member: Member) -> list[tuple[str, float | Unknown]]:
+    """Prescribed amounts in the order of `influence.restraint_forces`, less the ambient."""
+    found: list[tuple[str, float | Unknown]] = []
+    base = member.ambient if member.kind.relative and not member.driven else 0.0
+
+    def less(value: float | Unknown) -> float | Unknown:
+        if isinstance(value, Unknown):
+            return Unknown(value.guess - base, value.sd)
+        return value - base
+
+    for word, end in (("left", member.left), ("right", member.right)):
+        if end.response.stiffness != 0 and not end.axis:
+            found.append((f"{word}.value", less(end.response.value)))
+        if end.rotation.stiffness != 0:
+            found.append((f"{word}.rotation", end.rotation.value))
+    for number, support in enumerate(member.supports, start=1):
+        found.append((f"support.{number}", less(support.restraint.value)))
+    return found
+
+
+def _known(value: float | Unknown) -> float:
+    return value.guess if isinstance(value, Unknown) else value
+
+
+def _checked(member: Member, x: Any, name: str) -> Array:
+    places = np.atleast_1d(np.asarray(x, dtype=float))
+    slack = 1e-9 * member.length
+    wrong = ~((places >= member.start - slack) & (places <= member.end + slack))
+    if wrong.any():
+        raise MemberError(
+            f"{name} = {places[wrong][0]:g} m is not on the member",
+            name,
+            f"keep it between {member.start:g} and {member.end:g} m",
+        )
+    return np.clip(places, member.start, member.end)
+
+
+def kernel(member: Member, x: Any, s: Any, quantity: str = "response") -> Matrix:
+    """Homogeneous Green's kernel, or its derived quantity.
+
+    Parameters
+    ----------
+    member : Member
+    x : (n,) places of the reading [m]
+    s : (k,) places of the unit source [m]
+    quantity : str
+        response, slope, rotation, curvature, moment, shear, flux (radial kinds: per area;
+        radial_aquifer: total), force, torque or reaction: those the member has.
+
+    Returns
+    -------
+    (n, k) array
+        Quantity at x per unit lumped source at s (SI); the generalised kernel on a singular
+        member. At a jump the right limit in x, at the right end the left one.
+
+    Raises
+    ------
+    MemberError
+        For places off the member and for quantities it does not have.
+    """
+    x, s = _checked(member, x, "x"), _checked(member, s, "s")
+    held, modes, _ = restrained(member)
+    line = chain(held, np.concatenate([x, s]))
+    lines = influence(line, [functional(line, quantity, place) for place in x])
+    G = at_nodes(lines, line.node(s))
+    return G if modes is None else _generalised(member, line, lines, s, quantity, x, G)
+
+
+class _Nulls:
+    """Null modes of a singular member on the chain of the held one, orthonormal with r w."""
+
+    def __init__(self, member: Member, line: Chain) -> None:
+        free = chain(member, line.x)
+        keep = np.append(True, np.diff(line.x) > 0)  # held places are double nodes in `line` only
+        self.line, self.free = line, free
+        states = null_states(free, bases(free))
+        self.density = profile(member, "r", free.places, 1.0)
+        self.spread = self.density * free.weights
+        at = np.einsum("ksd,jkd->jks", free.stages, states[:, :-1])
+        gram = np.einsum("iks,ks,jks->ij", at.conj(), self.spread, at)
+        root = np.linalg.inv(np.linalg.cholesky(gram))
+        self.states, self.at = (
+            np.einsum("ij,jkd->ikd", root, states),
+            np.einsum("ij,jks->iks", root, at),
+        )
+        self._keep = keep
+
+    def value(self, x: Array) -> Matrix:
+        """Null modes at places, (d, len(x))."""
+        return self.states[:, self.free.node(x), 0] * self.free.scale[0]
+
+    def read(self, quantity: str, x: Array) -> Matrix:
+        """A quantity of the null modes at places, (len(x), d)."""
+        rows = []
+        for place in x:
+            total = np.zeros(len(self.states), dtype=self.states.dtype)
+            for term in functional(self.free, quantity, float(place)):
+                total = total + (self.states[:, term.node] * self.free.scale) @ term.row
+            rows.append(total)
+        return np.array(rows).reshape(len(x), len(self.states))
+
+    def against(self, lines: Influence) -> Matrix:
+        """Integrals of r w phi times influence lines, (n, d)."""
+        real = np.diff(self.line.x) > 0
+        mine = np.diff(self.free.x) > 0
+        found = []
+        for phi in self.at:
+            density = np.zeros(self.line.weights.shape, dtype=phi.dtype)
+            density[real] = (phi * self.density)[mine]
+            found.append(interval_integrals(lines, density).sum(axis=1))
+        return np.stack(found, axis=1)
+
+
+def _quadrature(member: Member) -> tuple[Array, Array]:
+    """Places and weights (area weight included) fine enough for responses to null modes."""
+    c, b, _ = gauss()
+    stops = [member.start, *inner_edges(member), *(p for p, _, _ in special_places(member))]
+    edges = np.unique([*stops, member.end, *np.linspace(member.start, member.end, 13)])
+    h = np.diff(edges)
+    places = edges[:-1, None] + h[:, None] * c
+    return places.ravel(), (h[:, None] * b * member.area(places)).ravel()
+
+
+def _generalised(
+    member: Member, line: Chain, lines: Influence, s: Array, quantity: str, x: Array, G: Matrix
+) -> Matrix:
+    """Project the held member's kernel onto the complement of the null modes, on both sides."""
+    nulls = _Nulls(member, line)
+    t, weight = _quadrature(line.member)
+    fine = chain(line.member, np.concatenate([line.x, t]))
+    fine_nulls = _Nulls(member, fine)
+    response = influence(fine, [functional(fine, "response", p) for p in np.concatenate([s, t])])
+    psi = fine_nulls.against(response)  # response of the held member to r phi
+    psi_s, psi_t = psi[: len(s)], psi[len(s) :]
+    read = nulls.read(quantity, x)
+    phi_t = fine_nulls.value(t) * weight * profile(member, "r", t, 1.0)
+    inner = nulls.against(lines) - read @ (phi_t @ psi_t).T
+    found: Matrix = G - read @ psi_s.T - inner @ nulls.value(s)
+    return found
+
+
+def respond(
+    member: Member,
+    x: Any,
+    source: Source | Any,
+    lumped: Sequence[tuple[Any, ...]] = (),
+    quantity: str = "response",
+) -> Matrix:
+    """The whole, absolute response at `x`: ends, ambient and settlements included.
+
+    Parameters
+    ----------
+    member : Member
+    x : (n,) places [m]; for ``quantity="reaction"`` ends or supports
+    source : callable or (m,) array
+        Source density (SI) as a function of an array of places, or values on m equal cells.
+    lumped : sequence of (place, strength) or, for beams, (place, strength, "couple")
+    quantity : str
+        As in `kernel`.
+
+    Returns
+    -------
+    (n,) array, SI
+
+    Raises
+    ------
+    MemberError
+        For places off the member, quantities it does not have, and an unbalanced source on a
+        singular member.
+    """
+    x = _checked(member, x, "x")
+    loads = [_load(member, item) for item in lumped]
+    at = _checked(member, [p for p, _, _ in loads], "lumped place") if loads else np.zeros(0)
+    held, modes, _ = restrained(member)
+    edges, density = _source(member, source)
+    t, weight = _quadrature(held) if modes is not None else (np.zeros(0), np.zeros(0))
+    line = chain(held, np.concatenate([x, at, edges, t]))
+    f = density(line.places)
+    asked = [functional(line, quantity, place) for place in x]
+    lines = influence(line, [*asked, *(functional(line, "response", p) for p in t)])
+    found = interval_integrals(lines, f).sum(axis=1)
+    for place, (_, strength, component) in zip(line.node(at), loads, strict=True):
+        found = found + strength * at_nodes(lines, np.array([place]), component)[:, 0]
+    names, columns = restraint_forces(lines)
+    given = dict(prescribed(member))
+    for name, column in zip(*_own(member, held, names, columns), strict=True):
+        found = found + _known(given[name]) * column
+    if modes is not None:
+        found = _complement(member, line, found, f, loads, at, (quantity, x, t, weight))
+    result = found[: len(x)]
+    if quantity == "response" and member.kind.relative and not member.driven:
+        result = result + member.ambient
+    return result
+
+
+def _own(member: Member, held: Member, names: list[str], columns: Matrix) -> tuple[list[str], Any]:
+    """Restraint columns of the member's own supports, renumbered without the added holds."""
+    own, kept, number = [], [], 0
+    for name, column in zip(names, columns.T, strict=True):
+        if name.startswith("support."):
+            support = held.supports[int(name[8:]) - 1]
+            if support not in member.supports:
+                continue
+            number += 1
+            name = f"support.{number}"
+        own.append(name)
+        kept.append(column)
+    return own, kept
+
+
+def _load(member: Member, item: tuple[Any, ...]) -> tuple[float, Any, int]:
+    """(place, strength, state component it works on) of a lumped load."""
+    if len(item) == 3 and item[2] == "couple" and member.kind.order == 4:
+        return float(item[0]), item[1], 1
+    if len(item) != 2:
+        raise MemberError(
+            f"the lumped load {item!r} is not understood", "lumped",
+            'give (place, strength), or for beams (place, strength, "couple")',
+        )  # fmt: skip
+    return float(item[0]), item[1], 0
+
+
+def _source(member: Member, source: Source | Any) -> tuple[Array, Source]:
+    """Panel edges and the density as a function of places."""
+    if not callable(source):
+        value = np.atleast_1d(np.asarray(source))
+        edges = np.linspace(member.start, member.end, len(value) + 1)
+
+        def cells(places: Array) -> Any:
+            return value[np.clip(np.searchsorted(edges, places) - 1, 0, len(value) - 1)]
+
+        return edges, cells
+
+    def density(places: Array) -> Any:
+        found = np.asarray(source(places.ravel()))
+        return np.broadcast_to(found, places.size).reshape(places.shape)
+
+    return _panels(member, density), density
+
+
+def _panels(member: Member, density: Source) -> Array:
+    """Edges of panels on which the source is a polynomial of degree 7, or that are tiny."""
+    c, _, _ = gauss()
+    lower = np.polynomial.legendre.legvander(2 * c - 1, len(c) - 1)
+    edges = np.unique([member.start, *inner_edges(member), member.end])
+    done: list[Array] = [edges]
+    a, b = edges[:-1], edges[1:]
+    largest = 0.0
+    for _ in range(45):  # a jump is closed in to 1e-13 of the length
+        value = density(a[:, None] + (b - a)[:, None] * c)
+        largest = max(largest, float(np.abs(value).max()))
+        size = np.linalg.solve(lower, value.T)
+        rough = np.abs(size[-2:]).max(axis=0) * (b - a) > 1e-14 * largest * member.length
+        if not rough.any():
+            break
+        middle = (a[rough] + b[rough]) / 2
+        done.append(middle)
+        a, b = np.concatenate([a[rough], middle]), np.concatenate([middle, b[rough]])
+    return np.unique(np.concatenate(done))
+
+
+def _complement(
+    member: Member, line: Chain, found: Matrix, f: Matrix, loads: list[tuple[float, Any, int]],
+    at: Array, asked: tuple[str, Array, Array, Array],
+) -> Matrix:  # fmt: skip
+    """Check the balance of the source and take the null modes out of the response."""
+    quantity, x, t, weight = asked
+    nulls = _Nulls(member, line)
+    real, mine = np.diff(line.x) > 0, np.diff(nulls.free.x) > 0
+    parts = f[real] * line.weights[real] * (nulls.at / 1.0)[:, mine]
+    balance, size = parts.sum(axis=(1, 2)), np.abs(parts).sum(axis=(1, 2))
+    for place, (_, strength, component) in zip(nulls.free.node(at), loads, strict=True):
+        part = strength * nulls.states[:, place, component] * nulls.free.scale[component]
+        balance, size = balance + part, size + np.abs(part)
+    if (np.abs(balance) > 1e-8 * np.maximum(size, 1e-300)).any():
+        raise MemberError(
+            "the member is free to move or drift as a whole and the source is not balanced, so "
+            "there is no steady response",
+            "member",
+            "balance the source, or add a support, a foundation or a loss",
+        )
+    response = found[len(x) :]
+    share = nulls.value(t) @ (weight * profile(member, "r", t, 1.0) * response)
+    return found[: len(x)] - nulls.read(quantity, x) @ share
