@@ -1,0 +1,101 @@
+"""Recovery: the frozen result of one recovery, and how it is shown and saved."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from srcfit.case.model import Case
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Number:
+    """A value with its standard deviation and interval, in the user's unit; None: undetermined."""
+
+    value: float | None
+    sd: float | None
+    lower: float | None
+    upper: float | None
+
+
+@dataclass(frozen=True)
+class Pictures:
+    """Curves that the figures need beyond the tables, all in SI.
+
+    Attributes
+    ----------
+    x : (g,) fine places along the member [m]
+    fit : mapping sensor kind -> (g,) predicted reading of that kind along the member (SI)
+    influence : (n, g) influence line of each used reading (reading per unit source at x)
+    influence_of : tuple of n row numbers into `Recovery.readings`
+    modes : (g, c) first modes, `eigenvalues` (c,)
+    rungs : (t, m) estimates of the roughness-1 ladder (thinned) in the user's source unit,
+        `strengths` (t,), `totals` (t,), `fits` (t, n) predicted used readings in their own units
+    """
+
+    x: Array
+    fit: Mapping[str, Array]
+    influence: Array
+    influence_of: tuple[int, ...]
+    modes: Array
+    eigenvalues: Array
+    strengths: Array
+    rungs: Array
+    totals: Array
+    fits: Array
+
+
+@dataclass(frozen=True)
+class Recovery:
+    """The whole result of `srcfit.recover`, in the user's units.
+
+    Attributes
+    ----------
+    case : Case
+    source, zones, readings, ladder : DataFrame
+        With the columns of their CSV files (units in brackets).
+    total, peak : mapping
+        As in summary.json.
+    findings : list of mapping (code, level, sentence)
+    pictures : Pictures
+        Curves for the figures.
+    """
+
+    case: Case
+    source: pd.DataFrame
+    zones: pd.DataFrame
+    readings: pd.DataFrame
+    ladder: pd.DataFrame
+    pictures: Pictures
+    facts: Mapping[str, Any] = field(default_factory=dict)
+
+    @property
+    def total(self) -> Mapping[str, Any]:
+        """Total with sd, lower and upper (None where the readings cannot tell)."""
+        result: Mapping[str, Any] = self.facts["total"]
+        return result
+
+    @property
+    def peak(self) -> Mapping[str, Any] | None:
+        """Peak of the smooth part with its place; None when there is no smooth part."""
+        result: Mapping[str, Any] | None = self.facts["peak"]
+        return result
+
+    @property
+    def findings(self) -> list[Mapping[str, str]]:
+        """Findings: code, level, sentence."""
+        result: list[Mapping[str, str]] = self.facts["findings"]
+        return result
+
+    def summary(self) -> dict[str, Any]:
+        """The mapping written to summary.json."""
+        return dict(self.facts)
