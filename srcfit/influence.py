@@ -27,6 +27,7 @@ from srcfit.member import RIGID, Array, Member, Restraint, Support
 from srcfit.state import Chain, Matrix, chain, operator
 
 SINGULAR = 1e-9
+CARRIED = 0.5  # change of the state, as a norm, after which a basis is made orthonormal again
 
 
 @dataclass(frozen=True)
@@ -154,38 +155,55 @@ def bases(line: Chain) -> Bases:
     to_left, to_right = (np.empty((count - 1, half, half), dtype=kind) for _ in range(2))
     backward = np.linalg.inv(line.phi)
     Y[0], W[-1] = _orthonormal(start.astype(kind))[0], _orthonormal(stop.astype(kind))[0]
-    for k in range(count - 1):
-        pin = line.pins.get(k)
-        if pin is None:
-            Y[k + 1], to_left[k] = _orthonormal(line.phi[k] @ Y[k])
-        else:
-            place = f"{line.x[k]:.6g} m"
-            Y[k + 1], to_left[k] = _through_pin(Y[k], pin.row, pin.column, place)
-    for k in range(count - 2, -1, -1):
-        pin = line.pins.get(k)
-        if pin is None:
-            W[k], to_right[k] = _orthonormal(backward[k] @ W[k + 1])
-        else:
-            place = f"{line.x[k]:.6g} m"
-            W[k], to_right[k] = _through_pin(W[k + 1], pin.row, pin.column, place)
-    plain = np.array([k not in line.pins for k in range(count - 1)])
-    to_left[plain] = np.linalg.inv(to_left[plain])
-    to_right[plain] = np.linalg.inv(to_right[plain])
+    _carry(line, line.phi, range(count - 1), 1, Y, to_left)
+    _carry(line, backward, range(count - 2, -1, -1), 0, W, to_right)
     return Bases(Y, W, to_left, to_right)
+
+
+def _carry(
+    line: Chain, step: Matrix, intervals: range, ahead: int, basis: Matrix, back: Matrix
+) -> None:
+    """Fill `basis` node by node, and `back`, the maps of coefficients the other way.
+
+    Over short stretches the columns are carried as they are (maps are 1); before they lose their
+    independence they are made orthonormal again.
+    """
+    unit = np.eye(back.shape[1])
+    growth = np.sqrt((np.abs(step - np.eye(line.order)) ** 2).sum(axis=(1, 2)))
+    turned, skew = [], 0.0
+    for k in intervals:
+        here, there = k + 1 - ahead, k + ahead
+        pin = line.pins.get(k)
+        if pin is not None:
+            place = f"{line.x[k]:.6g} m"
+            basis[there], back[k] = _through_pin(basis[here], pin.row, pin.column, place)
+            skew = 0.0
+            continue
+        skew += growth[k]
+        basis[there] = step[k] @ basis[here]
+        if skew > CARRIED:
+            basis[there], back[k] = _orthonormal(basis[there])
+            turned.append(k)
+            skew = 0.0
+        else:
+            back[k] = unit
+    back[turned] = np.linalg.inv(back[turned])
 
 
 def null_states(line: Chain, both: Bases) -> Matrix:
     """States at all nodes (d, N, n) of the d null modes; d = 0 for a regular operator."""
     # a null mode lies in both bases; the node where they meet best shows it most clearly
-    meet = np.linalg.svd(np.concatenate([both.W, both.Y], axis=2), compute_uv=False)[:, -1]
+    W, Y = np.linalg.qr(both.W)[0], np.linalg.qr(both.Y)[0]
+    meet = np.linalg.svd(np.concatenate([W, Y], axis=2), compute_uv=False)[:, -1]
     node = int(np.argmin(meet))
     if meet[node] > SINGULAR:
         return np.zeros((0, len(line.x), line.order))
     half = line.order // 2
-    _, size, vh = np.linalg.svd(np.concatenate([both.W[node], -both.Y[node]], axis=1))
-    vectors = vh[size < SINGULAR].conj()
-    modes = np.empty((len(vectors), len(line.x), line.order), dtype=both.Y.dtype)
-    c, b = vectors[:, :half], vectors[:, half:]
+    _, size, vh = np.linalg.svd(np.concatenate([W[node], -Y[node]], axis=1))
+    states = vh[size < SINGULAR][:, :half].conj() @ W[node].T
+    c = np.linalg.lstsq(both.W[node], states.T)[0].T
+    b = np.linalg.lstsq(both.Y[node], states.T)[0].T
+    modes = np.empty((len(states), len(line.x), line.order), dtype=both.Y.dtype)
     for k in range(node, len(line.x)):
         modes[:, k] = c @ both.W[k].T
         if k + 1 < len(line.x):
@@ -255,6 +273,35 @@ def _jump(rows: Matrix) -> Matrix:
     return np.stack([shear, -moment, psi, -u], axis=1)
 
 
+def deflect(line: Chain, f: Matrix, lumped: Sequence[tuple[int, Any]] = ()) -> Matrix:
+    """Homogeneous response to one source: states at all nodes, both limits.
+
+    Parameters
+    ----------
+    line : Chain
+    f : (N - 1, s) source density at the Gauss places
+    lumped : (node, strength) pairs
+
+    Returns
+    -------
+    (2, N, n) array
+        Physical states: limits from the left and from the right.
+    """
+    unit = np.zeros(line.order)
+    unit[0] = 1.0
+    terms = [Term(node, strength * unit) for node, strength in lumped]
+    # the source of an interval, from rest at its left node, is a jump at its right node
+    jumps = np.einsum("kns,ks->kn", line.load, f) * line.scale
+    live = np.flatnonzero(np.abs(jumps).max(axis=1))
+    terms += [Term(int(k) + 1, -_jump(jumps[k : k + 1])[0]) for k in live]
+    lines = influence(line, [terms])
+    low = np.concatenate([lines.outer_left, lines.right[0]])
+    high = np.concatenate([lines.left[0], lines.outer_right])
+    low[live + 1] += jumps[live] / line.scale
+    found: Matrix = np.stack([low, high]) * line.scale
+    return found
+
+
 def restraint_forces(lines: Influence) -> tuple[list[str], Matrix]:
     """What each functional reads per unit prescribed amount at each restraint.
 
@@ -313,7 +360,8 @@ def at_nodes(lines: Influence, node: NDArray[np.int64], component: int = 0) -> M
     size = lines.chain.scale[component]
     low = np.concatenate([lines.outer_left[:, None], lines.right], axis=1)[:, node, component]
     high = np.concatenate([lines.left, lines.outer_right[:, None]], axis=1)[:, node, component]
-    return np.where(lines.before[:, None], high, low) * size
+    found: Matrix = np.where(lines.before[:, None], high, low) * size
+    return found
 
 
 def interval_integrals(lines: Influence, density: Matrix | None = None) -> Matrix:

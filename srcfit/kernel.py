@@ -11,7 +11,6 @@ from collections.abc import Callable, Sequence
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 
 from srcfit.errors import MemberError
 from srcfit.influence import (
@@ -158,7 +157,8 @@ def _checked(member: Member, x: Any, name: str) -> Array:
             name,
             f"keep it between {member.start:g} and {member.end:g} m",
         )
-    return np.clip(places, member.start, member.end)
+    inside: Array = np.clip(places, member.start, member.end)
+    return inside
 
 
 def kernel(member: Member, x: Any, s: Any, quantity: str = "response") -> Matrix:
@@ -192,12 +192,11 @@ def kernel(member: Member, x: Any, s: Any, quantity: str = "response") -> Matrix
     return G if modes is None else _generalised(member, line, lines, s, quantity, x, G)
 
 
-class _Nulls:
+class Nulls:
     """Null modes of a singular member on the chain of the held one, orthonormal with r w."""
 
     def __init__(self, member: Member, line: Chain) -> None:
         free = chain(member, line.x)
-        keep = np.append(True, np.diff(line.x) > 0)  # held places are double nodes in `line` only
         self.line, self.free = line, free
         states = null_states(free, bases(free))
         self.density = profile(member, "r", free.places, 1.0)
@@ -209,21 +208,23 @@ class _Nulls:
             np.einsum("ij,jkd->ikd", root, states),
             np.einsum("ij,jks->iks", root, at),
         )
-        self._keep = keep
 
     def value(self, x: Array) -> Matrix:
         """Null modes at places, (d, len(x))."""
-        return self.states[:, self.free.node(x), 0] * self.free.scale[0]
+        found: Matrix = self.states[:, self.free.node(x), 0] * self.free.scale[0]
+        return found
 
     def read(self, quantity: str, x: Array) -> Matrix:
         """A quantity of the null modes at places, (len(x), d)."""
-        rows = []
-        for place in x:
-            total = np.zeros(len(self.states), dtype=self.states.dtype)
-            for term in functional(self.free, quantity, float(place)):
-                total = total + (self.states[:, term.node] * self.free.scale) @ term.row
-            rows.append(total)
+        rows = [self.reading(functional(self.free, quantity, float(place))) for place in x]
         return np.array(rows).reshape(len(x), len(self.states))
+
+    def reading(self, terms: Sequence[Term]) -> Matrix:
+        """A functional of the null modes, its terms on the chain `free`, (d,)."""
+        total = np.zeros(len(self.states), dtype=self.states.dtype)
+        for term in terms:
+            total = total + (self.states[:, term.node] * self.free.scale) @ term.row
+        return total
 
     def against(self, lines: Influence) -> Matrix:
         """Integrals of r w phi times influence lines, (n, d)."""
@@ -251,10 +252,10 @@ def _generalised(
     member: Member, line: Chain, lines: Influence, s: Array, quantity: str, x: Array, G: Matrix
 ) -> Matrix:
     """Project the held member's kernel onto the complement of the null modes, on both sides."""
-    nulls = _Nulls(member, line)
+    nulls = Nulls(member, line)
     t, weight = _quadrature(line.member)
     fine = chain(line.member, np.concatenate([line.x, t]))
-    fine_nulls = _Nulls(member, fine)
+    fine_nulls = Nulls(member, fine)
     response = influence(fine, [functional(fine, "response", p) for p in np.concatenate([s, t])])
     psi = fine_nulls.against(response)  # response of the held member to r phi
     psi_s, psi_t = psi[: len(s)], psi[len(s) :]
@@ -316,7 +317,8 @@ def respond(
     result = found[: len(x)]
     if quantity == "response" and member.kind.relative and not member.driven:
         result = result + member.ambient
-    return result
+    answer: Matrix = result
+    return answer
 
 
 def _own(member: Member, held: Member, names: list[str], columns: Matrix) -> tuple[list[str], Any]:
@@ -391,9 +393,9 @@ def _complement(
 ) -> Matrix:  # fmt: skip
     """Check the balance of the source and take the null modes out of the response."""
     quantity, x, t, weight = asked
-    nulls = _Nulls(member, line)
+    nulls = Nulls(member, line)
     real, mine = np.diff(line.x) > 0, np.diff(nulls.free.x) > 0
-    parts = f[real] * line.weights[real] * (nulls.at / 1.0)[:, mine]
+    parts = f[real] * line.weights[real] * nulls.at[:, mine]
     balance, size = parts.sum(axis=(1, 2)), np.abs(parts).sum(axis=(1, 2))
     for place, (_, strength, component) in zip(nulls.free.node(at), loads, strict=True):
         part = strength * nulls.states[:, place, component] * nulls.free.scale[component]

@@ -51,6 +51,7 @@ class Chain:
     pins : mapping interval -> Pin (rows and columns for the scaled state)
     places, weights : (N - 1, s) Gauss places and weights (area weight included) of each interval
     stages : (N - 1, s, n) response at the Gauss places as a row on the state at the left node
+    load : (N - 1, n, s) state at the right node per source density at the Gauss places
     scale : (n,) natural size of each state component
     """
 
@@ -61,6 +62,7 @@ class Chain:
     places: Array
     weights: Array
     stages: Matrix
+    load: Matrix
     scale: Array
 
     @property
@@ -74,17 +76,19 @@ class Chain:
         found = np.searchsorted(self.x, np.maximum(x, first), side="right") - 1
         near = np.minimum(found + 1, len(self.x) - 1)
         off = np.abs(self.x[found] - x) > np.abs(self.x[near] - x)
-        return np.where(off, near, found)
+        node: NDArray[np.int64] = np.where(off, near, found)
+        return node
 
 
 @cache
 def gauss() -> tuple[Array, Array, Array]:
     """Nodes, weights on [0, 1] and the collocation matrix of the Gauss method."""
-    c, b = np.polynomial.legendre.leggauss(STAGES)
-    c, b = (c + 1) / 2, b / 2
+    place, weight = np.polynomial.legendre.leggauss(STAGES)
+    c: Array = (np.asarray(place) + 1) / 2
+    b: Array = np.asarray(weight) / 2
     powers = np.arange(1, STAGES + 1)
     # a[i, j] = integral of the j-th Lagrange polynomial from 0 to c[i]
-    a = np.linalg.solve((c[:, None] ** (powers - 1)).T, (c[:, None] ** powers / powers).T).T
+    a: Array = np.linalg.solve((c[:, None] ** (powers - 1)).T, (c[:, None] ** powers / powers).T).T
     return c, b, a
 
 
@@ -165,7 +169,7 @@ def scales(member: Member, x: Array, h: Array | float, mu: float = 0.0) -> Array
 
 def special_places(member: Member) -> list[tuple[float, str, Any]]:
     """Places with a point condition, ascending."""
-    found = [(s.at, "support", s) for s in member.supports]
+    found: list[tuple[float, str, Any]] = [(s.at, "support", s) for s in member.supports]
     found += [(h.at, "hinge", h) for h in member.hinges]
     found += [(i.at, "interface", i) for i in member.interfaces]
     return sorted(found, key=lambda item: item[0])
@@ -181,7 +185,8 @@ def _toward_axis(near: float, far: float, end: float) -> Array:
     """Places between `near` and `far` whose distances to `end` grow by at most GROWTH."""
     a, b = abs(near - end), abs(far - end)
     count = int(np.ceil(np.log(b / a) / np.log(GROWTH)))
-    return end + np.sign(far - end) * np.geomspace(a, b, count + 1)[1:-1]
+    places: Array = end + np.sign(far - end) * np.geomspace(a, b, count + 1)[1:-1]
+    return places
 
 
 def _resolved(member: Member, a: Array, b: Array, mu: float) -> NDArray[np.bool_]:
@@ -272,6 +277,7 @@ def transfer(member: Member, a: Array, b: Array, mu: float = 0.0) -> tuple[Matri
     phi : (N, n, n) transfer matrices (physical units)
     places : (N, s) Gauss places; weights : (N, s) their weights times the area weight
     stages : (N, s, n) response at the Gauss places as rows on the state at `a`
+    load : (N, n, s) state at `b` per source density at the Gauss places, from rest at `a`
     """
     c, weight, collocation = gauss()
     h = b - a
@@ -284,12 +290,20 @@ def transfer(member: Member, a: Array, b: Array, mu: float = 0.0) -> tuple[Matri
     # (I - a (x) A) Z = 1 (x) I for the stage values Z
     lhs = -np.einsum("ij,kjmn->kimjn", collocation, A).reshape(count, STAGES * n, STAGES * n)
     lhs += np.eye(STAGES * n)
-    rhs = np.broadcast_to(np.tile(np.eye(n), (STAGES, 1)), (count, STAGES * n, n))
-    Z = np.linalg.solve(lhs, rhs).reshape(count, STAGES, n, n)
-    phi = np.eye(n) + np.einsum("j,kjmn,kjnl->kml", weight, A, Z)
-    phi *= d[:, :, None] / d[:, None, :]
-    stages = Z[:, :, 0, :] / d[:, None, :]
-    return phi, places, weight * h[:, None] * member.area(places), stages
+    # unit states at the left node, and unit forces on the last component at each Gauss place
+    unit = np.concatenate(
+        [np.tile(np.eye(n), (STAGES, 1)), np.kron(collocation, np.eye(n)[:, -1:])], 1
+    )
+    Z = np.linalg.solve(lhs, np.broadcast_to(unit, (count, *unit.shape)))
+    Z = Z.reshape(count, STAGES, n, n + STAGES)
+    step = np.einsum("j,kjmn,kjnl->kml", weight, A, Z)
+    step[:, :, :n] += np.eye(n)
+    step[:, -1, n:] += weight
+    area = member.area(places)
+    phi = step[:, :, :n] * (d[:, :, None] / d[:, None, :])
+    load = step[:, :, n:] * d[:, :, None] * (-h[:, None] * area / d[:, -1:])[:, None, :]
+    stages = Z[:, :, 0, :n] / d[:, None, :]
+    return phi, places, weight * h[:, None] * area, stages, load
 
 
 def chain(member: Member, points: Any = (), mu: float = 0.0) -> Chain:
@@ -313,8 +327,8 @@ def chain(member: Member, points: Any = (), mu: float = 0.0) -> Chain:
         When the member is too long or a coefficient too rough to follow.
     """
     plain = _nodes(member, np.asarray(points, dtype=float).ravel(), mu)
-    phi, places, weights, stages = transfer(member, plain[:-1], plain[1:], mu)
-    x, parts = list(plain), [phi, places, weights, stages]
+    phi, places, weights, stages, load = transfer(member, plain[:-1], plain[1:], mu)
+    x, parts = list(plain), [phi, places, weights, stages, load]
     pins: dict[int, Pin] = {}
     n = member.kind.order
     middle = np.linspace(member.start, member.end, 41)[1:-1]
@@ -334,14 +348,18 @@ def chain(member: Member, points: Any = (), mu: float = 0.0) -> Chain:
             empty + x[at],
             empty,
             np.zeros((STAGES, n)),
+            np.zeros((n, STAGES)),
         )
-        parts = [np.insert(_as(old, value), at, value, axis=0) for old, value in zip(parts, new, strict=True)]
+        parts = [
+            np.insert(_as(old, value), at, value, axis=0)
+            for old, value in zip(parts, new, strict=True)
+        ]
         if pin is not None:
             pins[at] = pin
-    phi, places, weights, stages = parts
+    phi, places, weights, stages, load = parts
     return Chain(
         member, np.array(x), phi * (scale / scale[:, None]), pins, places, weights,
-        stages * scale, scale,
+        stages * scale, load / scale[:, None], scale,
     )  # fmt: skip
 
 

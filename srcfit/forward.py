@@ -1,0 +1,462 @@
+"""From a case and its readings to the linear problem: what each reading sees of each unknown.
+
+reading = A f + B beta + known + noise, all in SI. A: densities on the cells, each cell integrated
+exactly along the reading's influence line. B: lumped parts, nuisances, null modes. The whitened
+`Problem` is built when asked for, so that noise can be stated or estimated.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from srcfit.case.model import Case, ColumnSpec
+from srcfit.errors import SolveError
+from srcfit.grid import make_grid, overlap, spread
+from srcfit.influence import (
+    Influence,
+    Term,
+    at_nodes,
+    influence,
+    interval_integrals,
+    restrained,
+    restraint_forces,
+)
+from srcfit.kernel import Nulls, functional, prescribed
+from srcfit.member import Array, Member, Unknown
+from srcfit.problem import Grid, Problem
+from srcfit.readings.model import Readings
+from srcfit.sensors import samples, sensor_terms
+from srcfit.state import Chain, Matrix, chain, special_places
+
+
+@dataclass(frozen=True)
+class Column:
+    """One unpenalised unknown.
+
+    Attributes
+    ----------
+    name : str
+        As in summary.json (`offset:GROUP`, `settlement:AT`, a lumped part's name ...).
+    kind : {"lumped", "nuisance", "null"}
+    unit : str
+        Unit text it is reported in; `scale` reported units are one SI unit.
+    shift : float
+        Added (SI) to the coefficient to give the reported amount.
+    guess, sd : float or None
+        Knowledge about the coefficient (SI); None: nothing is known.
+    """
+
+    name: str
+    kind: str
+    unit: str = ""
+    si_unit: str = ""
+    shift: float = 0.0
+    guess: float = 0.0
+    sd: float | None = None
+
+
+@dataclass(frozen=True)
+class Reaction:
+    """One force, couple or flow at an end or support that can be asked for."""
+
+    name: str
+    at: float
+    kind: str
+    unit: str
+
+
+@dataclass(frozen=True)
+class Forward:
+    """The linear model of a case, in SI; n used readings, m cells, k columns, q reactions.
+
+    Attributes
+    ----------
+    rows : (n,) row numbers of the used readings
+    A : (n, m), B : (n, k), y : (n,) readings less everything known
+    known : (n,) response to ambient, prescribed amounts and known parts
+    sd : (n,) stated standard deviation, nan where it is to be estimated
+    group : (n,) number of each reading's group in `groups`
+    lag : (g,) lag-1 correlation of each group
+    order : (n,) position of each reading in its group's sequence along the member
+    reactions : tuple of q Reaction; `reaction_cells` (q, m), `reaction_columns` (q, k),
+        `reaction_known` (q,)
+    balance : (d, m) and `balance_columns` (d, k): zero for balanced sources; None when regular
+    line, lines : Chain and Influence (sensors first, then reactions)
+    """
+
+    case: Case
+    readings: Readings
+    grid: Grid
+    rows: NDArray[np.int64]
+    A: Matrix
+    B: Matrix
+    y: Matrix
+    known: Matrix
+    sd: Array
+    group: NDArray[np.int64]
+    groups: tuple[str, ...]
+    lag: Array
+    columns: tuple[Column, ...]
+    reactions: tuple[Reaction, ...]
+    reaction_cells: Matrix
+    reaction_columns: Matrix
+    reaction_known: Matrix
+    balance: Matrix | None
+    line: Chain
+    lines: Influence
+
+    def specs(self) -> list[ColumnSpec]:
+        """The column spec of each used reading."""
+        return [self.case.columns[self.readings.spec[r]] for r in self.rows]
+
+
+def build(case: Case, readings: Readings) -> Forward:
+    """Build the linear model of a case.
+
+    Raises
+    ------
+    SolveError
+        When there are fewer used readings than unknown nuisances + 1.
+    """
+    rows = np.flatnonzero(readings.used)
+    grid = make_grid(case)
+    specs = [case.columns[readings.spec[r]] for r in rows]
+    line, lines, nulls, reactions = _lines(case, readings, rows, specs, grid)
+    n = len(rows)
+    cells = _per_cell(line, grid, interval_integrals(lines)) * grid.free
+    loads, load_columns = _lumped(case, line, lines)
+    given, unknown, unknown_columns = _restraints(case, lines)
+    own, own_columns = _reading_nuisances(case, readings, rows, specs)
+    padded = np.zeros((len(lines.left) - n, own_columns.shape[1]))
+    null_columns = _null_reads(nulls, readings, rows, specs, reactions, case)
+    columns = [*loads, *unknown, *own]
+    columns += [Column(f"null mode {i + 1}", "null") for i in range(null_columns.shape[1])]
+    B = np.concatenate(
+        [load_columns, unknown_columns, np.concatenate([own_columns, padded]), null_columns],
+        axis=1,
+    )
+    known = given + _known_parts(case, line, lines)
+    absolute = _base(case.member) * _absolute(case.member, specs)
+    y = _corrected(readings, rows, specs) - known[:n] - absolute
+    _enough(case, n, columns)
+    group_names = tuple(dict.fromkeys(s.group for s in specs))
+    balance = (
+        None if nulls is None else _balance(nulls, line, grid, case, len(columns), len(loads))
+    )
+    return Forward(
+        case, readings, grid, rows, cells[:n], B[:n], y, known[:n] + absolute, readings.sd[rows],
+        np.array([group_names.index(s.group) for s in specs], dtype=int), group_names,
+        _lags(specs, group_names), tuple(columns), reactions, cells[n:], B[n:], known[n:],
+        balance, line, lines,
+    )  # fmt: skip
+
+
+def _enough(case: Case, n: int, columns: list[Column]) -> None:
+    unknown = sum(c.kind != "null" and c.sd is None for c in columns)
+    if n < unknown + 1:
+        names = ", ".join(c.name for c in columns if c.kind != "null")
+        listed = f" ({names})" if names else ""
+        raise SolveError(
+            f"{n} usable readings cannot tell {unknown} unknowns{listed}",
+            str(case.path or "case"),
+            "add readings, or state some of the unknowns",
+        )  # fmt: skip
+
+
+def _lines(
+    case: Case, readings: Readings, rows: NDArray[np.int64], specs: list[ColumnSpec], grid: Grid
+) -> tuple[Chain, Influence, Nulls | None, tuple[Reaction, ...]]:
+    """Influence lines of all used sensors and of all reactions, on one chain."""
+    member = case.member
+    held, modes, _ = restrained(member)
+    kinks = np.unique([*grid.edges, *(p for p, _, _ in special_places(held))])
+    spots = [
+        samples(member, float(readings.x[r]), s.gauge_length, kinks)
+        for r, s in zip(rows, specs, strict=True)
+    ]
+    loads = [p.at for p in case.source.lumped if p.at is not None]
+    known = [e for part in case.source.known for e in (part.start, part.end)]
+    points = np.concatenate([grid.edges, loads, known, *(place for place, _ in spots)])
+    line = chain(held, points)
+    asked = [
+        sensor_terms(line, s.kind, place, weight, s.distance)
+        for s, (place, weight) in zip(specs, spots, strict=True)
+    ]
+    reactions, terms = _reactions(member, line)
+    nulls = None if modes is None else Nulls(member, line)
+    return line, influence(line, [*asked, *terms]), nulls, reactions
+
+
+def _reactions(member: Member, line: Chain) -> tuple[tuple[Reaction, ...], list[list[Term]]]:
+    """Every reaction, end couple and end flow that the member's restraints can carry."""
+    found, terms = [], []
+    order, kind = member.kind.order, member.kind
+    flow = kind.flux_name or "force"
+    unit = kind.flux_unit or kind.total_unit
+    for word, end, place in (
+        ("left", member.left, member.start),
+        ("right", member.right, member.end),
+    ):
+        if end.response.stiffness != 0 and not end.axis:
+            found.append(Reaction(word, place, flow if order == 2 else "force", unit))
+            terms.append(functional(line, "reaction", place))
+        if end.rotation.stiffness != 0:
+            found.append(Reaction(word, place, "moment", "N*m"))
+            terms.append(functional(line, "moment", place))
+    for number, support in enumerate(member.supports, start=1):
+        found.append(
+            Reaction(f"support.{number}", support.at, "force" if order == 4 else flow, unit)
+        )
+        terms.append(functional(line, "reaction", support.at))
+    return tuple(found), terms
+
+
+def _per_cell(line: Chain, grid: Grid, intervals: Matrix) -> Matrix:
+    """Sum interval columns into cell columns."""
+    middle = (line.x[1:] + line.x[:-1]) / 2
+    cell = np.clip(np.searchsorted(grid.edges, middle) - 1, 0, len(grid.free) - 1)
+    first = np.searchsorted(cell, np.arange(len(grid.free)))
+    found: Matrix = np.add.reduceat(intervals, first, axis=1)
+    return found
+
+
+def _stretch(line: Chain, lines: Influence, start: float, end: float) -> Matrix:
+    """Response of each functional to unit density on [start, end], (n,)."""
+    middle = (line.x[1:] + line.x[:-1]) / 2
+    inside = (middle > start) & (middle < end)
+    density = np.where(inside[:, None], 1.0, 0.0) * np.ones(line.weights.shape)
+    found: Matrix = interval_integrals(lines, density).sum(axis=1)
+    return found
+
+
+def _at(line: Chain, lines: Influence, place: float) -> Matrix:
+    """Response of each functional to a unit lumped source, (n,)."""
+    found: Matrix = at_nodes(lines, line.node(np.array([place])))[:, 0]
+    return found
+
+
+def _lumped(case: Case, line: Chain, lines: Influence) -> tuple[list[Column], Matrix]:
+    source, member = case.source, case.member
+    columns, rows = [], []
+    for part in source.lumped:
+        if part.at is None:
+            raise SolveError(
+                f"the lumped part {part.name!r} has no place (`between`), and searching for one "
+                "is not offered", "source.lumped", "give its place with `at`",
+            )  # fmt: skip
+        columns.append(Column(part.name, "lumped", source.total_unit, member.kind.total_unit))
+        if part.width == 0:
+            rows.append(_at(line, lines, part.at))
+        else:
+            start, end = spread(part)
+            size = overlap(member, np.array([member.start, member.end]), start, end)[0]
+            rows.append(_stretch(line, lines, start, end) / size)
+    return columns, _stack(rows, len(lines.left))
+
+
+def _stack(rows: Sequence[Matrix], n: int) -> Matrix:
+    return np.stack(rows, axis=1) if rows else np.zeros((n, 0))
+
+
+def _base(member: Member) -> float:
+    return member.ambient if member.kind.relative and not member.driven else 0.0
+
+
+def _absolute(member: Member, specs: list[ColumnSpec]) -> Array:
+    """1 for readings of the response itself (they include the ambient), else 0."""
+    return np.array([float(member.kind.sensor(s.kind).quantity == "response") for s in specs])
+
+
+def restraint_label(case: Case, name: str) -> tuple[str, str]:
+    """(name, SI unit) under which an unknown prescribed amount is reported."""
+    kind = case.member.kind
+    if name.startswith("support."):
+        at = case.member.supports[int(name[8:]) - 1].at
+        return f"settlement:{place_text(case, at)}", kind.response_unit
+    if name.endswith("rotation"):
+        return name, "rad"
+    return (name.replace("value", "settlement") if kind.order == 4 else name), kind.response_unit
+
+
+def place_text(case: Case, at: float) -> str:
+    """A place in the user's position unit, e.g. ``24 m``."""
+    from srcfit.units import factor
+
+    unit = case.source.position_unit
+    return f"{at / factor(unit, 'm', 'source.position_unit')[0]:.10g} {unit}"
+
+
+def _restraints(case: Case, lines: Influence) -> tuple[Matrix, list[Column], Matrix]:
+    """Response to known prescribed amounts; columns of the unknown ones."""
+    names, forces = restraint_forces(lines)
+    given = dict(zip(names, forces.T, strict=True))
+    base = _base(case.member)
+    known = np.zeros(len(lines.left), dtype=forces.dtype)
+    columns, rows = [], []
+    for name, amount in prescribed(case.member):
+        if isinstance(amount, Unknown):
+            label, unit = restraint_label(case, name)
+            shift = base if name.endswith("value") else 0.0
+            columns.append(Column(label, "nuisance", unit, unit, shift, amount.guess, amount.sd))
+            rows.append(given[name])
+        else:
+            known = known + amount * given[name]
+    return known, columns, _stack(rows, len(lines.left))
+
+
+def _known_parts(case: Case, line: Chain, lines: Influence) -> Matrix:
+    total = np.zeros(len(lines.left), dtype=lines.left.dtype)
+    for part in case.source.known:
+        one = (
+            _at(line, lines, part.start)
+            if part.start == part.end
+            else _stretch(line, lines, part.start, part.end)
+        )
+        total = total + part.value * one
+    return total
+
+
+def _reading_nuisances(
+    case: Case, readings: Readings, rows: NDArray[np.int64], specs: list[ColumnSpec]
+) -> tuple[list[Column], Matrix]:
+    """Unknown offset, drift, scale and step of each group, over the sensors."""
+    found: dict[str, tuple[Column, Array]] = {}
+    n = len(rows)
+    for i, (r, s) in enumerate(zip(rows, specs, strict=True)):
+        si = case.member.kind.sensor(s.kind).unit
+        shown = readings.unit[r] or si
+        value = float(np.real(readings.value[r]))
+        asked: list[tuple[str, float | Unknown, float, str, str, float]] = [
+            (f"offset:{s.group}", s.offset, 1.0, shown, si, 0.0),
+            (f"drift:{s.group}", s.drift, float(readings.time[r]), f"{shown}/s", f"{si}/s", 0.0),
+            (f"scale:{s.group}", s.scale, value, "1", "1", 1.0),
+        ]
+        if s.step is not None:
+            name = f"step:{s.group}@{place_text(case, s.step.at)}"
+            beyond = float(readings.x[r] > s.step.at)
+            asked.append((name, s.step.amount, beyond, shown, si, 0.0))
+        for name, amount, entry, unit, si_unit, shift in asked:
+            if isinstance(amount, Unknown):
+                guess = amount.guess - shift
+                column = Column(name, "nuisance", unit, si_unit, shift, guess, amount.sd)
+                found.setdefault(name, (column, np.zeros(n)))[1][i] = entry
+    return [c for c, _ in found.values()], _stack([v for _, v in found.values()], n)
+
+
+def _corrected(readings: Readings, rows: NDArray[np.int64], specs: list[ColumnSpec]) -> Matrix:
+    """Values less the known offsets, drifts, steps and scales."""
+    y = readings.value[rows].copy()
+    for i, (r, s) in enumerate(zip(rows, specs, strict=True)):
+        if not isinstance(s.offset, Unknown):
+            y[i] -= s.offset
+        if not isinstance(s.drift, Unknown) and s.drift:
+            y[i] -= s.drift * readings.time[r]
+        if s.step is not None and not isinstance(s.step.amount, Unknown):
+            y[i] -= s.step.amount * (readings.x[r] > s.step.at)
+        if not isinstance(s.scale, Unknown):
+            y[i] /= s.scale
+    return y
+
+
+def _null_reads(
+    nulls: Nulls | None, readings: Readings, rows: NDArray[np.int64], specs: list[ColumnSpec],
+    reactions: tuple[Reaction, ...], case: Case,
+) -> Matrix:  # fmt: skip
+    """What sensors and reactions read of the null modes, (n + q, d)."""
+    if nulls is None:
+        return np.zeros((len(rows) + len(reactions), 0))
+    kinks = nulls.free.x
+    terms = [
+        sensor_terms(
+            nulls.free, s.kind, *samples(case.member, float(readings.x[r]), s.gauge_length, kinks),
+            s.distance,
+        )
+        for r, s in zip(rows, specs, strict=True)
+    ]  # fmt: skip
+    terms += _reactions(case.member, nulls.free)[1]
+    return np.array([nulls.reading(t) for t in terms])
+
+
+def _balance(
+    nulls: Nulls, line: Chain, grid: Grid, case: Case, k: int, loads: int
+) -> Matrix:  # fmt: skip
+    """Rows over (cells, columns, 1) that vanish for balanced sources, (d, m + k + 1)."""
+    member = case.member
+    middle = (nulls.free.x[1:] + nulls.free.x[:-1]) / 2
+    cell = np.clip(np.searchsorted(grid.edges, middle) - 1, 0, len(grid.free) - 1)
+    density = nulls.at * nulls.free.weights
+    rows = np.zeros((len(nulls.at), len(grid.free) + k + 1))
+    for d, part in enumerate(density.sum(axis=2)):
+        np.add.at(rows[d], cell, part)
+    rows[:, : len(grid.free)] *= grid.free
+    for j, part in enumerate(case.source.lumped[:loads]):
+        rows[:, len(grid.free) + j] = nulls.value(np.array([part.at or 0.0]))[:, 0]
+    places = nulls.free.places
+    for known in case.source.known:
+        if known.start == known.end:
+            rows[:, -1] += known.value * nulls.value(np.array([known.start]))[:, 0]
+        else:
+            inside = (places > known.start) & (places < known.end) & (member.start <= places)
+            rows[:, -1] += known.value * (density * inside).sum(axis=(1, 2))
+    return rows
+
+
+def _lags(specs: list[ColumnSpec], groups: tuple[str, ...]) -> Array:
+    """Stated lag-1 correlation of each group (0 where it is to be estimated)."""
+    stated: dict[str, Any] = {s.group: s.correlation for s in specs}
+    return np.array([0.0 if stated[g] == "estimate" else float(stated[g]) for g in groups])
+
+
+def whitened(forward: Forward, sd: Array | None = None, lag: Array | None = None) -> Problem:
+    """The whitened problem with the stated noise, or with `sd` (n,) and `lag` (g,) in its place.
+
+    Unknowns with prior knowledge, and a known total, become rows after the readings.
+    """
+    sd = forward.sd if sd is None else sd
+    lag = forward.lag if lag is None else lag
+    A, B, d = forward.A, forward.B, forward.y
+    m, k = A.shape[1], B.shape[1]
+    stacked = np.concatenate([A, B, d[:, None]], axis=1) / sd[:, None]
+    stacked = _decorrelated(forward, stacked, lag)
+    extra = []
+    for j, column in enumerate(forward.columns):
+        if column.sd is not None:
+            row = np.zeros(m + k + 1)
+            row[m + j], row[-1] = 1 / column.sd, column.guess / column.sd
+            extra.append(row)
+    total = forward.case.source.total
+    if total is not None:
+        row = np.zeros(m + k + 1)
+        row[:m] = forward.grid.weights * forward.grid.free
+        row[m : m + k] = [float(c.kind == "lumped") for c in forward.columns]
+        row[-1] = total.value
+        extra.append(row / total.sd)
+    stacked = np.concatenate([stacked, *(r[None] for r in extra)])
+    source = forward.case.source
+    balance = None if forward.balance is None else forward.balance[:, :m]
+    return Problem(
+        stacked[:, :m], stacked[:, m : m + k], stacked[:, -1], forward.grid,
+        tuple(c.name for c in forward.columns),
+        constant=balance is None and (source.smooth or source.background),
+        smooth=source.smooth, balance=balance, pseudo=len(extra),
+        stated=bool(np.isfinite(forward.sd).all()),
+    )  # fmt: skip
+
+
+def _decorrelated(forward: Forward, rows: Matrix, lag: Array) -> Matrix:
+    """Rows of a first-order autoregressive group, made independent along the member."""
+    if not lag.any():
+        return rows
+    out = rows.copy()
+    x = forward.readings.x[forward.rows]
+    for g in np.flatnonzero(lag):
+        members = np.flatnonzero(forward.group == g)
+        members = members[np.argsort(x[members], kind="stable")]
+        step = rows[members[1:]] - lag[g] * rows[members[:-1]]
+        out[members[1:]] = step / np.sqrt(1 - lag[g] ** 2)
+    return out
