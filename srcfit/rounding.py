@@ -1,0 +1,116 @@
+"""Numbers for people: at most two significant digits of the uncertainty (GUM, JCGM 100, 7.2.6)."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from decimal import ROUND_HALF_EVEN, Decimal
+from math import floor, isfinite, log10
+from typing import Any
+
+import numpy as np
+
+UNDETERMINED = "not determined"
+
+
+def round_pair(value: float | None, sd: float | None) -> tuple[str, str]:
+    """A value and its standard deviation as texts that end at the same decimal place.
+
+    Parameters
+    ----------
+    value, sd : float or None
+        In one unit. Without a usable `sd` the value keeps four significant digits.
+
+    Returns
+    -------
+    (str, str)
+        Plain decimals, or both with one common power of ten for very large and small numbers.
+        Empty texts stand for what is not determined.
+
+    Notes
+    -----
+    Two significant digits of `sd`, the value to the same place: JCGM 100:2008, 7.2.6.
+    """
+    number, spread = _real(value), _real(sd)
+    if number is None:
+        return "", ""
+    if spread is None or spread <= 0:
+        return _significant(number, 4), "" if spread is None else "0"
+    last = int(f"{spread:.1e}".split("e")[1]) - 1
+    power = _common_power(max(abs(number), spread))
+    return _fixed(number, last, power), _fixed(spread, last, power)
+
+
+def round_like(value: float | None, sd: float | None, scale: float | None = None) -> str:
+    """`value` rounded to the decimal place that `sd` sets; `scale` is the number it stands by."""
+    number, spread, beside = _real(value), _real(sd), _real(scale)
+    if number is None:
+        return ""
+    if spread is None or spread <= 0:
+        return _significant(number, 4)
+    last = int(f"{spread:.1e}".split("e")[1]) - 1
+    return _fixed(number, last, _common_power(max(abs(beside or number), spread)))
+
+
+def brief(value: Any, digits: int = 3) -> str:
+    """`value` with so many significant digits; empty when it is none."""
+    number = _real(value)
+    return "" if number is None else _significant(number, digits)
+
+
+def plus_minus(number: Mapping[str, Any], unit: str = "") -> str:
+    """Text like ``918.4 ± 9.2 kN`` of a mapping with value and sd (standard uncertainty)."""
+    value, sd = round_pair(number.get("value"), number.get("sd"))
+    if not value:
+        return UNDETERMINED
+    return minus(" ".join(t for t in (value, f"± {sd}" if sd else "", unit) if t))
+
+
+def interval(number: Mapping[str, Any], unit: str = "") -> str:
+    """Text like ``900.3 to 936.5 kN`` of a mapping with lower and upper."""
+    sd, value = number.get("sd"), number.get("value")
+    ends = [round_like(number.get(k), sd, value) for k in ("lower", "upper")]
+    if not all(ends):
+        return "no interval"
+    return minus(f"{ends[0]} to {ends[1]} {unit}".rstrip())
+
+
+def minus(text: str) -> str:
+    """The same text with true minus signs before digits."""
+    import re
+
+    return re.sub(r"(?<![\w.])-(?=\d)|(?<=e)-(?=\d)", "\u2212", text)
+
+
+def _real(value: Any) -> float | None:
+    if value is None:
+        return None
+    try:
+        number = float(np.real(value))
+    except (TypeError, ValueError):
+        return None
+    return number if isfinite(number) else None
+
+
+def _common_power(size: float) -> int:
+    """0 for sizes written plainly, else the power of ten to take out."""
+    power = floor(log10(size)) if size > 0 else 0
+    return 0 if -4 <= power < 7 else power
+
+
+def _fixed(number: float, last: int, power: int) -> str:
+    place = Decimal(1).scaleb(last)
+    exact = Decimal(repr(number)).quantize(place, rounding=ROUND_HALF_EVEN)
+    text = f"{exact.scaleb(-power):f}" if last - power < 0 else f"{exact.scaleb(-power):.0f}"
+    text = text[1:] if text.startswith("-") and not text.strip("-0.") else text
+    return f"{text}e{power}" if power else text
+
+
+def _significant(number: float, digits: int) -> str:
+    if number == 0:
+        return "0"
+    last = int(f"{number:.{digits - 1}e}".split("e")[1]) - digits + 1
+    text = _fixed(number, last, _common_power(abs(number)))
+    head, _, power = text.partition("e")
+    if "." in head:
+        head = head.rstrip("0").rstrip(".")
+    return f"{head}e{power}" if power else head
