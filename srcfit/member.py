@@ -142,13 +142,15 @@ class SensorSpec:
     """A sensor kind of a member kind: reading = factor * quantity, in the SI unit `unit`.
 
     `quantity` is one of response, slope, rotation, curvature, moment, shear, flux, force, torque,
-    reaction; `strain` of a beam multiplies curvature by the reading's `distance`.
+    reaction; `strain` of a beam multiplies curvature by the reading's `distance`. `directions`
+    are the words for the positive and the negative direction, where such words make sense.
     """
 
     name: str
     quantity: str
     unit: str
     needs_distance: bool = False
+    directions: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -214,6 +216,8 @@ class Member:
     frequency : float or None
         Driving frequency [Hz]; `damping` is the loss factor.
     uncertainty : mapping key path -> Uncertainty
+    coefficients : mapping key -> Profile
+        The coefficients as given, by their key in the case file; `profiles` are their products.
     """
 
     kind: MemberKind
@@ -230,6 +234,7 @@ class Member:
     frequency: float | None = None
     damping: float = 0.0
     uncertainty: Mapping[str, Uncertainty] = field(default_factory=dict)
+    coefficients: Mapping[str, Profile] = field(default_factory=dict)
 
     @property
     def length(self) -> float:
