@@ -10,6 +10,8 @@ import itertools
 from dataclasses import dataclass
 
 import numpy as np
+import scipy.sparse as sparse
+from scipy.sparse.linalg import splu
 
 from .shapes import gauss, lagrange, load_pieces, lookup, mesh
 
@@ -115,14 +117,14 @@ def settle(line, density=(), lumped=(), degree=10, size=None, places=()):
     probe = np.array([coefficient(c, nodes[:1] + 1e-9 * size)[0] for c in (line.p, line.q)])
     kind = complex if np.iscomplexobj(probe) else float
     total = first + (count - 1) * inner
-    K, F = np.zeros((total, total), dtype=kind), np.zeros(total, dtype=kind)
+    parts, F = [], np.zeros(total, dtype=kind)  # parts of K: (block of numbers, values)
     for e, (a, b) in enumerate(itertools.pairwise(nodes)):
         here, middle, half = numbers[e], (a + b) / 2, (b - a) / 2
         x, w = gauss(a, b, degree + 4)
         N0, N1 = (lagrange(degree, (x - middle) / half, d, half) for d in (0, 1))
         wa = w * area(x)
-        K[np.ix_(here, here)] += (N1.T * (wa * coefficient(line.p, x))) @ N1
-        K[np.ix_(here, here)] += (N0.T * (wa * coefficient(line.q, x))) @ N0
+        stiff = (N1.T * (wa * coefficient(line.p, x))) @ N1
+        parts.append((here, stiff + (N0.T * (wa * coefficient(line.q, x))) @ N0))
         for lo, hi, value in load_pieces(density, a, b):
             x, w = gauss(lo, hi, degree + 12)
             F[here] += lagrange(degree, (x - middle) / half, 0, half).T @ (w * area(x) * value(x))
@@ -133,33 +135,43 @@ def settle(line, density=(), lumped=(), degree=10, size=None, places=()):
     for at, P in lumped:
         F[before[node_of(at)]] += P
     for node, resistance in doubled.items():
-        pair = [before[node], after[node]]
-        K[np.ix_(pair, pair)] += area(nodes[node]) / resistance * np.array([[1, -1], [-1, 1]])
+        conductance = area(nodes[node]) / resistance
+        parts.append(([before[node], after[node]], conductance * np.array([[1, -1], [-1, 1]])))
     springs = [(0, *line.left), (count - 1, *line.right)]
     springs += [(before[node_of(at)], spring, value) for at, spring, value in line.supports]
     springs = [
         (n, s if np.isinf(abs(s)) or n not in (0, count - 1) else s * area(nodes[n]), v)
         for n, s, v in springs
     ]
-    return _finish(line, nodes, numbers, degree, K, F, springs)
+    return _finish(line, nodes, numbers, degree, _assembled(parts, total), F, springs)
+
+
+def _assembled(parts, total):
+    rows = np.concatenate([np.repeat(block, len(block)) for block, _ in parts])
+    columns = np.concatenate([np.tile(block, len(block)) for block, _ in parts])
+    values = np.concatenate([value.ravel() for _, value in parts])
+    return sparse.csc_array((values, (rows, columns)), shape=(total, total))
 
 
 def _finish(line, nodes, numbers, degree, K, F, springs):
     held = {n: v for n, spring, v in springs if np.isinf(abs(spring))}
-    stiff, pull = K.copy(), F.copy()
+    elastic = np.zeros(len(F), dtype=np.result_type(K.dtype, *(type(s) for _, s, _ in springs)))
+    pull = F.astype(elastic.dtype)
     for n, spring, value in springs:
         if not np.isinf(abs(spring)):
-            stiff[n, n] += spring
+            elastic[n] += spring
             pull[n] += spring * value
+    stiff = (K + sparse.diags_array(elastic)).tocsc()
     free = np.setdiff1d(np.arange(len(F)), list(held))
-    amounts = np.zeros(len(F), dtype=K.dtype)
+    amounts = np.zeros(len(F), dtype=elastic.dtype)
     amounts[list(held)] = list(held.values())
-    scale = 1 / np.sqrt(np.abs(np.diag(stiff)[free]))
-    A = stiff[np.ix_(free, free)] * scale * scale[:, None]
-    right = scale * (pull - stiff @ amounts)[free]
-    solved = np.linalg.solve(A, right)
-    solved += np.linalg.solve(A, right - A @ solved)
-    amounts[free] = scale * solved
+    scale = sparse.diags_array(1 / np.sqrt(np.abs(stiff.diagonal()[free])))
+    A = (scale @ stiff[free][:, free] @ scale).tocsc()
+    right = scale @ (pull - stiff @ amounts)[free]
+    factor = splu(A)
+    solved = factor.solve(right)
+    solved += factor.solve(right - A @ solved)  # one step of refinement
+    amounts[free] = scale @ solved
     residual = F - K @ amounts
     reactions = {
         float(nodes[n]): residual[n] if np.isinf(abs(spring)) else spring * (amounts[n] - value)
