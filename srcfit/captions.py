@@ -7,9 +7,9 @@ from typing import Any
 
 import numpy as np
 
-from srcfit.frames import flags, ladder_of, number, numbers, texts, unit_of
+from srcfit.frames import flags, ladder_of, number, numbers, pretty, texts, unit_of
 from srcfit.recovery import Recovery
-from srcfit.rounding import brief, interval, minus, plus_minus
+from srcfit.rounding import NO_INTERVAL, brief, interval, minus, plus_minus
 
 SOURCE_WORDS = {
     "rod": "load", "cable": "load", "beam": "load", "shaft": "torque", "conductor": "heat source",
@@ -30,16 +30,15 @@ def percent(recovery: Recovery) -> str:
 
 def unit(recovery: Recovery, name: str) -> str:
     """Unit of position, source, total, response or strength; a dimensionless one is empty."""
-    text = str((recovery.facts.get("units") or {}).get(name) or "")
-    return "" if text in ("1", "dimensionless") else text
+    return pretty(str((recovery.facts.get("units") or {}).get(name) or ""))
 
 
 def describe_member(recovery: Recovery) -> str:
     """Kind, extent, ends, supports and sensors of the member."""
     member, place = recovery.case.member, unit(recovery, "position")
     x0, x1 = extent(recovery)
-    parts = [f"{len(getattr(member, k))} {k}" for k in ("supports", "hinges", "interfaces")
-             if getattr(member, k)]  # fmt: skip
+    counts = {k: len(getattr(member, f"{k}s")) for k in ("support", "hinge", "interface")}
+    parts = [f"{n} {k}{'s' if n > 1 else ''}" for k, n in counts.items() if n]
     extra = f", with {' and '.join(parts)} between" if parts else ""
     kinds = {k: n for k, n in count_kinds(recovery).items() if k}
     sensors = " and ".join(f"{n} of {k}" for k, n in kinds.items()) or "none"
@@ -74,8 +73,9 @@ def describe_source(recovery: Recovery) -> str:
     """Peak, total and how wide the band is."""
     facts, word = recovery.facts, source_word(recovery)
     total = facts.get("total") or {}
-    text = f"Total {word} {plus_minus(total, unit(recovery, 'total'))}"
-    text += f" ({percent(recovery)} interval {interval(total)})."
+    text = f"Total {word}: {plus_minus(total, unit(recovery, 'total'))}"
+    ends = interval(total)
+    text += f" ({percent(recovery)} interval {ends})." if ends != NO_INTERVAL else "."
     peak = facts.get("peak")
     if peak:
         at, u = brief(peak.get("position")), unit(recovery, "source")
@@ -109,7 +109,7 @@ def describe_readings(recovery: Recovery) -> str:
         text += (
             f"; standardised residuals have a root mean square of "
             f"{brief(float(np.sqrt(np.nanmean(z**2))), 2)}, the largest is {brief(z[worst], 2)} "
-            f"at x = {brief(numbers(frame, 'x')[worst])} {unit_of(frame, 'x')} "
+            f"at x = {brief(numbers(frame, 'x')[worst])} {pretty(unit_of(frame, 'x'))} "
             f"(line {texts(frame, 'line')[worst]})"
         )
     chi, dof = brief(fit.get("chi_square")), brief(fit.get("dof"))

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from srcfit.frames import flags, numbers, texts, unit_of
+from srcfit.frames import flags, numbers, pretty_header, texts, unit_of
 from srcfit.member import RIGID, End, Member, Profile
 from srcfit.units import factor
 
@@ -72,7 +72,7 @@ def draw_member(
     for side in ("left", "right", "top"):
         ax.spines[side].set_visible(False)
     word = "radius" if member.kind.geometry != "line" or _radial(member) else "x"
-    ax.set_xlabel(plain(f"{word} [{unit}]" if unit else word))
+    ax.set_xlabel(plain(pretty_header(f"{word} [{unit}]" if unit else word)))
 
 
 def _radial(member: Member) -> bool:

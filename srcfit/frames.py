@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -25,6 +26,22 @@ def unit_of(frame: pd.DataFrame, name: str) -> str:
     """Unit in the brackets of the column `name`; empty without one."""
     text = header(frame, name) or ""
     return text[len(name) + 2 : -1] if text.endswith("]") else ""
+
+
+_RAISED = str.maketrans("0123456789-", "⁰¹²³⁴⁵⁶⁷⁸⁹⁻")
+
+
+def pretty(unit: str) -> str:
+    """A unit text for people: ``kN*m^2`` as kN·m²; a plain number has none."""
+    if unit in ("", "1", "dimensionless"):
+        return ""
+    raised = re.sub(r"(?:\^|\*\*)(-?\d+)", lambda m: m[1].translate(_RAISED), unit)
+    return {"degC": "°C", "degF": "°F", "ue": "µε"}.get(raised, raised.replace("*", "·"))
+
+
+def pretty_header(text: str) -> str:
+    """A column's header with the unit in its brackets written for people."""
+    return re.sub(r"\[(.*)\]$", lambda m: f"[{pretty(m[1])}]", text)
 
 
 def number(value: Any) -> float:

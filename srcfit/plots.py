@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from srcfit.captions import DESCRIPTIONS, choices_of, extent, per_metre, source_word, unit
 from srcfit.drawing import BLACK, BLUE, GREY, MARKERS, VERMILLION, draw_member, plain, short
 from srcfit.errors import UnitError
-from srcfit.frames import flags, ladder_of, number, numbers, texts
+from srcfit.frames import flags, ladder_of, number, numbers, pretty, texts
 from srcfit.recovery import Recovery
 from srcfit.rounding import brief, minus, plus_minus
 from srcfit.units import factor
@@ -43,7 +43,8 @@ class Drawn:
 
 def labelled(name: str, unit_text: str) -> str:
     """Axis label: name and unit in brackets."""
-    return plain(f"{name} [{unit_text}]" if unit_text else name)
+    shown = pretty(unit_text)
+    return plain(f"{name} [{shown}]" if shown else name)
 
 
 def plot_source(recovery: Recovery, ax: Axes) -> None:

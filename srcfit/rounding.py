@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 
 UNDETERMINED = "not determined"
+NO_INTERVAL = "no interval"
 
 
 def round_pair(value: float | None, sd: float | None) -> tuple[str, str]:
@@ -70,7 +71,7 @@ def interval(number: Mapping[str, Any], unit: str = "") -> str:
     sd, value = number.get("sd"), number.get("value")
     ends = [round_like(number.get(k), sd, value) for k in ("lower", "upper")]
     if not all(ends):
-        return "no interval"
+        return NO_INTERVAL
     return minus(f"{ends[0]} to {ends[1]} {unit}".rstrip())
 
 

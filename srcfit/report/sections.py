@@ -1,0 +1,359 @@
+"""The sections of the page in their order: the answer first, then its reasons."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from typing import Any
+
+import numpy as np
+
+from srcfit.captions import extent, percent, source_word, unit
+from srcfit.case.model import ColumnSpec
+from srcfit.frames import number, pretty
+from srcfit.member import Unknown
+from srcfit.recovery import Recovery
+from srcfit.report import tables
+from srcfit.report.html import clean, figure, listing, name, nested, safe, section
+from srcfit.report.method import CAUTIONS, method_text
+from srcfit.report.numbers import interval, minus, plus_minus, shown
+from srcfit.rounding import NO_INTERVAL, UNDETERMINED, brief
+
+LEVELS = ("serious", "caution", "note")
+
+
+def answer(recovery: Recovery) -> str:
+    """One sentence that a client understands, the zones, the verdict, and what to know first."""
+    body = f'<p class="answer">{total_sentence(recovery)}</p>'
+    zones = recovery.facts.get("zones") or []
+    if zones:
+        scale = _span(zones)
+        body += f'<ul class="zones">{"".join(_zone(recovery, z, scale) for z in zones)}</ul>'
+    body += _verdict(recovery) + _first_findings(recovery)
+    return section("answer", "Answer", body)
+
+
+def total_sentence(recovery: Recovery) -> str:
+    """The total with its interval, or that it is not determined."""
+    facts, T = recovery.facts, unit(recovery, "total")
+    total, word = facts.get("total") or {}, source_word(recovery)
+    x0, x1 = extent(recovery)
+    where = f"between {brief(x0)} and {brief(x1)} {unit(recovery, 'position')}"
+    amount = plus_minus(total, T)
+    kind = recovery.case.member.kind.title.lower()
+    if amount == UNDETERMINED:
+        return shown(
+            f"These readings cannot tell the total {word} on this {clean(kind)} {where}; the "
+            "findings say why and what would help."
+        )
+    known = " beyond the known parts" if recovery.case.source.known else ""
+    return (
+        f"The total {word} on this {safe(kind)} {shown(where)}{known} is "
+        f"<strong>{shown(amount)}</strong>: with {percent(recovery)} confidence it lies in "
+        f"{shown(interval(total, T))}."
+        if interval(total) != NO_INTERVAL
+        else f"The total {word} on this {safe(kind)} {shown(where)}{known} is "
+        f"<strong>{shown(amount)}</strong>; there is no interval for it."
+    )
+
+
+def _span(zones: Sequence[Mapping[str, Any]]) -> tuple[float, float]:
+    """Range that holds zero, every zone's value and its interval."""
+    ends = [number(z.get(k)) for z in zones for k in ("value", "lower", "upper")]
+    known = [0.0, *(v for v in ends if np.isfinite(v))]
+    low, high = min(known), max(known)
+    return (low, high) if high > low else (low, low + 1.0)
+
+
+def _strip(zone: Mapping[str, Any], scale: tuple[float, float]) -> str:
+    """A zone's value as a dot on its interval, all zones on one scale; zero as a tick."""
+
+    def at(value: Any) -> float:
+        return 4 + 192 * (number(value) - scale[0]) / (scale[1] - scale[0])
+
+    zero, dot, ends = (
+        at(0.0),
+        at(zone.get("value")),
+        (at(zone.get("lower")), at(zone.get("upper"))),
+    )
+    marks = f'<path d="M{zero:.1f} 1V13" stroke="var(--grey)"/>'
+    if np.isfinite(ends).all():
+        marks += (
+            f'<path d="M{ends[0]:.1f} 7H{ends[1]:.1f}" stroke="var(--band)" stroke-width="8"/>'
+        )
+    if np.isfinite(dot):
+        marks += f'<path d="M{dot:.1f} 2V12" stroke="var(--blue)" stroke-width="3"/>'
+    return f'<svg viewBox="0 0 200 14" preserveAspectRatio="none" aria-hidden="true">{marks}</svg>'
+
+
+def _zone(recovery: Recovery, zone: Mapping[str, Any], scale: tuple[float, float]) -> str:
+    T, P = unit(recovery, "total"), unit(recovery, "position")
+    place = shown(minus(f"{brief(zone.get('from'))} to {brief(zone.get('to'))} {P}"))
+    amount = shown(plus_minus(zone, T))
+    ends = interval(zone, T)
+    share = number(zone.get("data_share"))
+    weak = np.isfinite(share) and share < 0.5
+    doubt = '<span class="weak">mainly the prior’s</span>' if weak else ""
+    return (
+        f'<li><span class="zone">{name(zone.get("name"))} <small>{place}</small></span>'
+        f'<span class="amount">{amount}{doubt}</span>{_strip(zone, scale)}'
+        f'<span class="range">{shown(ends) if ends != NO_INTERVAL else "–"}</span></li>'
+    )
+
+
+def _verdict(recovery: Recovery) -> str:
+    limit = recovery.facts.get("limit")
+    if not limit:
+        return ""
+    chance = number(limit.get("probability"))
+    most = limit.get("at_most")
+    asked = recovery.case.source.limit
+    kind = "total" if asked is not None and not asked.density else "source"
+    text = str(most) if isinstance(most, str) else f"{brief(most)} {unit(recovery, kind)}"
+    odds = ""
+    if np.isfinite(chance):
+        near = "less than 0.1" if chance < 0.001 else f"{brief(100 * chance, 3)}"
+        odds = f" The probability that it is kept is {near if chance <= 0.999 else 'over 99.9'} %."
+    return (
+        f'<p class="verdict">Limit of {shown(text)} in {name(limit.get("zone"))}: '
+        f"<strong>{safe(limit.get('verdict') or 'no verdict')}</strong>.{shown(odds)}</p>"
+    )
+
+
+def _first_findings(recovery: Recovery) -> str:
+    found = recovery.facts.get("findings") or []
+    counts = {level: sum(f.get("level") == level for f in found) for level in LEVELS}
+    words = {"serious": ("serious finding",) * 2, "caution": ("caution", "cautions"),
+             "note": ("note", "notes")}  # fmt: skip
+    parts = [
+        f"{n} {words[k][n > 1]}{'s' if k == 'serious' and n > 1 else ''}"
+        for k, n in counts.items()
+        if n
+    ]
+    if not parts:
+        return "<p>There are no findings against this answer.</p>"
+    return f'<p>Before you use it: <a href="#findings">{" and ".join(parts)}</a>.</p>'
+
+
+def member(recovery: Recovery) -> str:
+    """The member to scale with its sensors."""
+    body = f"{figure('member')}<details><summary>The member as it was described</summary>"
+    body += f"{nested(recovery.case.member_text)}</details>"
+    return section("member", "Member", body)
+
+
+def source(recovery: Recovery) -> str:
+    """Source with its band, zones and lumped parts."""
+    lead = (
+        f"<p>The estimate, and the band that holds the source at any one place with "
+        f"{percent(recovery)} confidence. Dotted lines are the edges of zones.</p>"
+    )
+    return section("source", "Source", lead + figure("source") + tables.cells(recovery))
+
+
+def readings(recovery: Recovery) -> str:
+    """Readings, fit, residuals, noise."""
+    fit = recovery.facts.get("fit") or {}
+    scale = (recovery.facts.get("noise") or {}).get("scale")
+    lead = f"{safe(fit.get('used'))} of {safe(fit.get('read'))} readings are used."
+    if brief(scale):
+        lead += (
+            f" Their residuals are {shown(brief(scale, 3))} times as large as the noise "
+            "lets expect (1 is just right)."
+        )
+    tail = tables.noise(recovery) + tables.excluded(recovery) + tables.readings(recovery)
+    return section("readings", "Readings and fit", f"<p>{lead}</p>{figure('readings')}{tail}")
+
+
+def strength(recovery: Recovery) -> str:
+    """The ladder with its slider, the L-curve, the criteria."""
+    facts = recovery.facts.get("strength") or {}
+    value, choose = brief(facts.get("value")), str(facts.get("choose"))
+    dof = brief(facts.get("effective_dof"), 3)
+    if choose == "averaged":
+        lead = (
+            "The answer is <em>averaged</em>: no single strength is picked, but the estimates of "
+            "all strengths and of several families of roughness are averaged, each weighted by its "
+            "evidence, that is by how probable it makes the readings."
+        )
+    else:
+        text = f"The strength {value} was chosen by {choose}" if value else f"Chosen by {choose}"
+        lead = f"{shown(text)}."
+    lead += f" It spends {shown(dof)} effective degrees of freedom." if dof else ""
+    more = (
+        "Too weak a strength follows the noise, too strong a one flattens the source. Where the "
+        "criteria agree, and where the totals hardly move along the ladder, the choice matters "
+        "little."
+    )
+    body = f"<p>{lead}</p><p>{more}</p>{figure('l-curve')}{tables.criteria(recovery)}"
+    return section("strength", "Strength", body)
+
+
+def influence(recovery: Recovery) -> str:
+    """Influence lines and modes."""
+    lead = (
+        "<p>An influence line says how much one reading would change for a unit source at each "
+        "place. Where all lines are small the readings cannot see.</p>"
+    )
+    body = lead + figure("influence") + tables.influence(recovery)
+    body += (
+        "<h3>Modes</h3><p>A source shaped like a high mode hardly moves the member: what the "
+        "readings tell about it drowns in the noise first.</p>"
+    )
+    return section("influence", "Influence", body + figure("modes") + tables.modes(recovery))
+
+
+def findings(recovery: Recovery) -> str:
+    """What the user must know and do, the most serious first."""
+    found = recovery.facts.get("findings") or []
+    ranked = sorted(found, key=lambda f: _rank(f.get("level")))
+    items = "".join(
+        f'<li class="{_level(f.get("level"))}"><strong>{_level(f.get("level"))}</strong> '
+        f"<code>{safe(f.get('code'))}</code> {shown(clean(f.get('sentence')))}</li>"
+        for f in ranked
+    )
+    body = f'<ul class="findings">{items}</ul>' if items else "<p>None.</p>"
+    return section("findings", "Findings", body)
+
+
+def _rank(level: Any) -> int:
+    return LEVELS.index(level) if level in LEVELS else len(LEVELS)
+
+
+def _level(level: Any) -> str:
+    return level if level in LEVELS else "note"
+
+
+def numbers(recovery: Recovery) -> str:
+    """All answers as tables."""
+    parts = (
+        tables.zones(recovery),
+        tables.background(recovery),
+        tables.lumped(recovery),
+        tables.detection(recovery),
+        tables.with_own_units(recovery, "reactions", "Reactions", ("name", "at", "kind")),
+        tables.with_own_units(recovery, "nuisances", "Nuisances", ("name",)),
+    )
+    note = (
+        "<p>Standard uncertainties and intervals are those of the cautious band; they are not "
+        "additive, because neighbouring zones share their doubt.</p>"
+    )
+    return section("numbers", "Numbers", note + "".join(parts))
+
+
+def assumptions(recovery: Recovery) -> str:
+    """Signs and what was taken for granted, printed back."""
+    kind, asked = recovery.case.member.kind, recovery.case.source
+    radial = kind.geometry != "line" or kind.name == "radial_aquifer"
+    grows = (
+        "from the inner to the outer radius" if radial else "from the left end to the right end"
+    )
+    signs = [
+        f"x grows {grows}.",
+        f"A positive source pushes the {clean(kind.response)} in its positive direction.",
+    ]
+    if kind.order == 4:
+        signs.append(
+            "Positive is down for a beam's load and deflection; a sagging moment is positive; a "
+            "reaction is positive when it opposes a positive load."
+        )
+    elif kind.relative:
+        signs.append("A flux is positive towards growing x.")
+    elif kind.name in ("rod", "cable", "shaft"):
+        signs.append("A force is positive in tension, a torque with growing twist.")
+    if recovery.case.member.driven:
+        signs.append("Complex amplitudes with time factor exp(+iωt); their real parts are shown.")
+    items = "".join(f"<li>{safe(s)}</li>" for s in signs)
+    body = f"<h3>Signs</h3><ul>{items}</ul><h3>Columns</h3>"
+    body += "".join(_column(c) for c in recovery.case.columns)
+    body += f"<h3>Asked of the source</h3>{listing(_asked(recovery, asked))}"
+    return section("assumptions", "Signs and assumptions", body)
+
+
+def _column(column: ColumnSpec) -> str:
+    turned = "turned round to the member's own sign" if column.sign < 0 else "as they are"
+    pairs = [
+        ("kind", safe(column.kind)),
+        ("group", name(column.group)),
+        ("unit", safe(pretty(column.unit) if column.unit else "as the table states")),
+        ("positive", safe(f"{column.positive or 'the member’s own direction'}: values {turned}")),
+    ]
+    for key in ("offset", "scale", "drift"):
+        value = getattr(column, key)
+        if isinstance(value, Unknown):
+            pairs.append((key, "unknown, found from the readings"))
+        elif value != (1.0 if key == "scale" else 0.0):
+            pairs.append((key, shown(f"{brief(value, 6)} (SI)")))
+    if column.step is not None:
+        pairs.append(("step", shown(f"beyond x = {brief(column.step.at, 6)} m")))
+    if column.gauge_length:
+        pairs.append(("gauge length", shown(f"{brief(column.gauge_length, 6)} m")))
+    if column.distance is not None:
+        pairs.append(("distance below the axis", shown(f"{brief(column.distance, 6)} m")))
+    if column.correlation:
+        pairs.append(("correlation of neighbours", safe(column.correlation)))
+    heads = ", ".join(name(c) for c in column.columns[:6])
+    more = f" and {len(column.columns) - 6} more" if len(column.columns) > 6 else ""
+    return f'<div class="column"><h4>{heads}{more}</h4>{listing(pairs)}</div>'
+
+
+def _asked(recovery: Recovery, asked: Any) -> list[tuple[str, str]]:
+    per = {
+        "sign": asked.sign,
+        "cells": asked.cells,
+        "smooth part": "yes" if asked.smooth else "no",
+    }
+    pairs = [(k, safe(v)) for k, v in per.items()]
+    for key in ("zones", "breaks", "known", "zero", "lumped"):
+        count = len(getattr(asked, key))
+        if count:
+            pairs.append((key, f"{count} declared"))
+    if asked.total is not None:
+        pairs.append(("total", "known beforehand, with its uncertainty"))
+    uncertain = recovery.case.member.uncertainty
+    if uncertain:
+        pairs.append(("uncertain properties", ", ".join(safe(k) for k in uncertain)))
+    pairs.append(("interval", safe(f"{recovery.case.strength.interval}, {percent(recovery)}")))
+    return pairs
+
+
+def method(recovery: Recovery) -> str:
+    """How it was done, with sources."""
+    del recovery  # the same for every member
+    return section("method", "Method", method_text())
+
+
+def inputs(recovery: Recovery) -> str:
+    """Files with their hashes, version and seed."""
+    facts = recovery.facts
+    rows = "".join(
+        f"<li>{name(i.get('file'))}<br><code>sha256 {safe(i.get('sha256'))}</code></li>"
+        for i in facts.get("inputs") or []
+    )
+    line = f"srcfit {safe(facts.get('version'))}, seed {safe(facts.get('seed'))}."
+    return section(
+        "inputs", "Inputs", f"<p>{line} The same inputs give the same numbers.</p><ul>{rows}</ul>"
+    )
+
+
+def cautions(recovery: Recovery) -> str:
+    """The member's own cautions and the general ones."""
+    own = [clean(c) for c in recovery.facts.get("cautions") or recovery.case.member.kind.cautions]
+    every = dict.fromkeys([*own, *CAUTIONS])
+    items = "".join(f"<li>{safe(c)}</li>" for c in every)
+    return section("cautions", "Cautions", f"<ul>{items}</ul>")
+
+
+SECTIONS: dict[str, Callable[[Recovery], str]] = {
+    "answer": answer,
+    "member": member,
+    "source": source,
+    "readings": readings,
+    "strength": strength,
+    "influence": influence,
+    "findings": findings,
+    "numbers": numbers,
+    "assumptions": assumptions,
+    "method": method,
+    "inputs": inputs,
+    "cautions": cautions,
+}
