@@ -1,0 +1,85 @@
+"""Unit texts met in tables -> SI, by way of `srcfit.units`."""
+
+from __future__ import annotations
+
+import re
+from dataclasses import dataclass
+from functools import lru_cache
+
+from srcfit.errors import ReadingsError, UnitError
+from srcfit.units import factor
+
+_BRACKETS = re.compile(r"[\[(]([^\[\]()]*)[\])]")
+_TEMPERATURE = {"f": "degF", "c": "degC", "k": "K", "deg f": "degF", "deg c": "degC",
+                "grad c": "degC", "℃": "degC", "℉": "degF", "cel": "degC"}  # fmt: skip
+
+
+@dataclass(frozen=True)
+class Unit:
+    """A unit text and its way to SI: SI = scale * number + offset."""
+
+    text: str
+    scale: float
+    offset: float
+
+    def same(self, other: Unit) -> bool:
+        """Whether both give the same SI value for any number."""
+        near = 1e-9 * abs(self.scale)
+        return abs(self.scale - other.scale) <= near and abs(self.offset - other.offset) <= 1e-6
+
+
+@lru_cache(maxsize=4096)
+def find(text: str, si: str, difference: bool = False) -> Unit | None:
+    """The unit named by a text of a table; None when it is none of that dimension."""
+    if not text or len(text) > 40:
+        return None
+    names = [text]
+    if si == "K":  # in tables of temperatures a bare F or C is a degree
+        names = [n for n in (_TEMPERATURE.get(text.lower()), text) if n]
+    for name in names:
+        try:
+            scale, offset = factor(name, si, text, difference=difference)
+        except UnitError:
+            continue
+        return Unit(text, scale, offset)
+    return None
+
+
+@lru_cache(maxsize=4096)
+def known(text: str) -> bool:
+    """Whether a text is a unit of any dimension (a lone capital letter does not count)."""
+    if not re.search(r"[^\W\d_]|[°%]", text) or len(text) > 40 or re.fullmatch("[A-Z]", text):
+        return False
+    try:
+        factor(text, text, text)
+    except UnitError:
+        return False
+    return True
+
+
+def need(text: str, si: str, where: str, difference: bool = False) -> Unit:
+    """The unit named by a text, or an error that says where it stands."""
+    unit = find(text, si, difference)
+    if unit is None:
+        raise ReadingsError(
+            f"{text!r} is no unit that fits {si or '1'}", where, "set `unit` to the right one"
+        )
+    return unit
+
+
+def in_header(header: str, si: str, difference: bool = False) -> tuple[Unit | None, str]:
+    """The unit in a header's brackets, and the text of one that is of another dimension."""
+    other = ""
+    for text in (t.strip() for t in _BRACKETS.findall(header)):
+        unit = find(text, si, difference)
+        if unit is not None:
+            return unit, ""
+        if known(text):
+            other = text
+    return None, other
+
+
+def bare(text: str) -> str:
+    """Text of a units row without brackets around it."""
+    match = _BRACKETS.fullmatch(text.strip())
+    return match[1].strip() if match else text.strip()

@@ -1,0 +1,217 @@
+"""Case -> Readings: every reading found, used or with the reason why not."""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Sequence
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from srcfit.case.model import Case, ColumnSpec, TableSpec
+from srcfit.errors import Finding, ReadingsError
+from srcfit.readings.batch import Batch, table_batches
+from srcfit.readings.blanks import Places
+from srcfit.readings.model import Readings
+from srcfit.readings.places import gauge_places, row_places, wanted_places
+from srcfit.readings.sheets import File, load, open_table
+from srcfit.readings.table import Table, Wanted, title
+from srcfit.readings.watch import findings
+
+_NEAR_END = 1e-9
+
+
+def read(case: Case) -> Readings:
+    """Read every table that a case names.
+
+    Parameters
+    ----------
+    case : Case
+
+    Returns
+    -------
+    Readings
+        In SI and in the member's own sign, n rows in file order: every non-empty cell of every
+        selected row and column, used or with the reason why it is excluded. A dropout (an empty
+        cell where its row or its column set is read) is listed as excluded too.
+
+    Raises
+    ------
+    ReadingsError
+        A file is missing, empty or no table; a named column is missing or stands twice; units
+        contradict each other; something can be read in two ways; no reading is left.
+    """
+    files: dict[Path, File] = {}
+    out: list[tuple[str, Sequence[Batch]]] = []
+    seen: list[Finding] = []
+    understood: list[str] = []
+    first = 0
+    for spec in case.tables:
+        table, batches, also = _read_table(case, spec, first, files)
+        for batch in batches:
+            _bound(case, case.columns[batch.spec], batch)
+        seen += findings(table, batches)
+        understood += [_sentence(table, batches), *also]
+        out.append((table.name, batches))
+        first += len(spec.columns)
+    names = {f.name: f.sha256 for f in files.values()}
+    return _assemble(case, out, tuple(seen), tuple(dict.fromkeys(understood)), names)
+
+
+def _file(case: Case, path: Path, key: str, files: dict[Path, File]) -> File:
+    full = case.folder / path
+    if full not in files:
+        near = full.is_relative_to(case.folder)
+        name = full.relative_to(case.folder).as_posix() if near else str(path)
+        files[full] = load(full, name, key)
+    return files[full]
+
+
+def _read_table(
+    case: Case, spec: TableSpec, first: int, files: dict[Path, File]
+) -> tuple[Table, list[Batch], list[str]]:
+    stated = getattr(spec, "decimal", None)
+    table = open_table(_file(case, spec.file, f"{spec.key}.file", files), _wanted(case, spec))
+    also: list[str] = []
+    if spec.position.file is None:
+        places: Places = row_places(spec, table, stated)
+    else:
+        file = _file(case, spec.position.file, f"{spec.key}.position.file", files)
+        other = open_table(file, wanted_places(spec.position, spec.key))
+        places = gauge_places(spec, table, other, stated)
+        also.append(f"{other.name}: {other.story}.")
+    return table, table_batches(case, spec, table, places, first, stated), also
+
+
+def _wanted(case: Case, spec: TableSpec) -> Wanted:
+    """All columns that a table must have, and which of them hold numbers with a unit."""
+    keys: dict[str, str] = {}
+    measured: dict[str, str] = {}
+
+    def want(name: str | None, key: str, si: str = "") -> None:
+        if name is None:
+            return
+        keys.setdefault(title(name), key)
+        if si:
+            measured.setdefault(title(name), si)
+
+    position = spec.position
+    if position.file is None:
+        want(position.column, f"{spec.key}.position.column", "m")
+        want(position.unit_column, f"{spec.key}.position.unit_column")
+    for column in spec.columns:
+        si = case.member.kind.sensor(column.kind).unit
+        for name in column.columns:
+            want(name, f"{column.key}.column", si or "1")
+        want(column.unit_column, f"{column.key}.unit_column")
+        want(column.sd_column, f"{column.key}.sd_column")
+        if column.phase:
+            want(column.phase.column, f"{column.key}.phase.column", "rad")
+        if column.baseline:
+            want(column.baseline.match, f"{column.key}.baseline.match")
+            for name in column.baseline.where:
+                want(name, f"{column.key}.baseline.where")
+        if column.correction:
+            want(column.correction.column, f"{column.key}.correction.column")
+        for name in column.where:
+            want(name, f"{column.key}.where")
+    for name in spec.where:
+        want(name, f"{spec.key}.where")
+    if spec.time:
+        want(spec.time.column, f"{spec.key}.time.column")
+    gauge = position.gauge if position.file is not None else None
+    return Wanted(keys, measured, title(gauge or ""))
+
+
+def _bound(case: Case, column: ColumnSpec, batch: Batch) -> None:
+    """Reasons that hang on the place: none, off the member, excluded stretches."""
+    member, x, why = case.member, batch.x, batch.reason
+    near = _NEAR_END * member.length
+    for end in (member.start, member.end):
+        x[np.abs(x - end) <= near] = end
+    for k in np.flatnonzero((x < member.start) | (x > member.end)):
+        why.setdefault(int(k), f"off the member (x = {x[k]:.6g} m)")
+    for low, high in column.exclude:
+        for k in np.flatnonzero((x >= low - near) & (x <= high + near)):
+            why.setdefault(int(k), "in an excluded stretch")
+    for k in np.flatnonzero(np.isnan(x)):
+        why.setdefault(int(k), "no position")
+
+
+def _sentence(table: Table, batches: Sequence[Batch]) -> str:
+    marks = {m for b in batches for m in b.decimal}
+    decimal = {".": "decimal point; ", ",": "decimal comma; "}
+    words = "".join(decimal[m] for m in marks) if len(marks) == 1 and marks <= set(decimal) else ""
+    count = sum(len(b.line) for b in batches)
+    left = sum(len(b.reason) for b in batches)
+    return f"{table.name}: {table.story}; {words}{count} readings, {left} of them excluded."
+
+
+def _assemble(
+    case: Case, tables: list[tuple[str, Sequence[Batch]]], seen: tuple[Finding, ...],
+    understood: tuple[str, ...], inputs: dict[str, str],
+) -> Readings:  # fmt: skip
+    """All batches as one set of readings, in file order."""
+    columns = case.columns
+    names = [name for name, found in tables for _ in found]
+    batches = [b for _, found in tables for b in found]
+    sizes = [len(b.line) for b in batches]
+    table = np.repeat(np.arange(len(tables)), [sum(len(b.line) for b in f) for _, f in tables])
+    line = np.concatenate([b.line for b in batches])
+    order = np.lexsort((line, table))  # stable: columns stay in the order of the case
+    reason = _texts([_reasons(b) for b in batches], sizes, order)
+    used = np.array([not r for r in reason], dtype=bool)
+    if not used.any():
+        raise _nothing_left(tables, reason)
+    kind = complex if case.member.driven else float
+    value = np.concatenate([b.value * columns[b.spec].sign for b in batches]).astype(kind)
+    x, sd, time = (
+        np.concatenate(a)[order] for a in zip(*((b.x, b.sd, b.time) for b in batches), strict=True)
+    )
+    spec = np.repeat([b.spec for b in batches], sizes)[order].astype(np.int64)
+    return Readings(
+        file=_texts(names, sizes, order),
+        line=line[order],
+        group=_texts([columns[b.spec].group for b in batches], sizes, order),
+        kind=_texts([columns[b.spec].kind for b in batches], sizes, order),
+        unit=_texts([b.unit for b in batches], sizes, order),
+        x=x,
+        value=value[order],
+        sd=sd,
+        used=used,
+        reason=reason,
+        spec=spec,
+        time=time if np.all(np.isnan(time)) else time - np.nanmin(time),
+        findings=seen,
+        understood=understood,
+        inputs=inputs,
+    )
+
+
+def _reasons(batch: Batch) -> list[str] | str:
+    return [batch.reason.get(k, "") for k in range(len(batch.line))] if batch.reason else ""
+
+
+def _texts(
+    parts: Sequence[list[str] | str], sizes: Sequence[int], order: NDArray[np.int64]
+) -> tuple[str, ...]:
+    """Texts of all batches in the common order; one text may stand for a whole batch."""
+    words = {p for p in parts if isinstance(p, str)}
+    if len(words) == 1 and all(isinstance(p, str) for p in parts):
+        return (words.pop(),) * len(order)
+    every: list[str] = []
+    for part, size in zip(parts, sizes, strict=True):
+        every += [part] * size if isinstance(part, str) else part
+    return tuple(every[i] for i in order)
+
+
+def _nothing_left(
+    tables: list[tuple[str, Sequence[Batch]]], reason: Sequence[str]
+) -> ReadingsError:
+    names = ", ".join(dict.fromkeys(name for name, _ in tables))
+    common = Counter(reason).most_common(3)
+    why = "; ".join(f"{count} times: {text}" for text, count in common) or "the table has no rows"
+    return ReadingsError(
+        f"no reading is left ({why})", names, "correct the columns, units, `where` or `range`"
+    )
