@@ -1,0 +1,288 @@
+"""The command line. Heavy modules are imported by the commands that need them."""
+
+from __future__ import annotations
+
+import codecs
+import json
+import os
+import sys
+from collections.abc import Callable, Mapping, Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, TextIO, TypeVar
+
+import click
+
+from srcfit import __version__
+from srcfit.errors import SrcfitError
+
+if TYPE_CHECKING:
+    from click.shell_completion import CompletionItem
+
+    from srcfit.case.model import Case
+    from srcfit.readings.model import Readings
+
+DONE, BROKEN, USAGE, UNUSABLE, SERIOUS, INTERRUPTED = 0, 1, 2, 3, 4, 130
+ASCII = {"±": "+-", "−": "-", "–": "-", "…": "...", "°": "deg ", "²": "^2", "³": "^3", "·": "*"}
+
+EPILOG = """\b
+Exit status: 0 done; 2 wrong usage; 3 the input cannot be used (nothing is
+written); 4 with --strict when a finding is serious; 130 interrupted.
+
+\b
+Completion of commands and options, one line in the shell's start file:
+  bash  eval "$(_SRCFIT_COMPLETE=bash_source srcfit)"
+  zsh   eval "$(_SRCFIT_COMPLETE=zsh_source srcfit)"
+  fish  _SRCFIT_COMPLETE=fish_source srcfit | source
+"""
+
+F = TypeVar("F", bound=Callable[..., Any])
+
+
+def main(argv: Sequence[str] | None = None) -> int:
+    """Run the command line and return its exit status.
+
+    Parameters
+    ----------
+    argv : sequence of str, optional
+        Arguments after the program's name; those of the process when left out.
+    """
+    _tolerant(sys.stdout, sys.stderr)
+    try:
+        status = cli.main(args=argv, prog_name="srcfit", standalone_mode=False)
+        return status if isinstance(status, int) else DONE
+    except SrcfitError as error:
+        return _fail(str(error), UNUSABLE)
+    except (click.Abort, KeyboardInterrupt):
+        return _fail("interrupted", INTERRUPTED)
+    except click.ClickException as error:
+        error.show()
+        return error.exit_code
+    except MemoryError:
+        return _fail("not enough memory; ask for fewer cells or readings", UNUSABLE)
+    except Exception as error:
+        if os.environ.get("SRCFIT_DEBUG"):
+            raise
+        what = f"unexpected {type(error).__name__}: {error}"
+        how = "this is a fault of srcfit; run again with SRCFIT_DEBUG=1 set and report the trace"
+        return _fail(f"{what}; {how}", BROKEN)
+
+
+def _fail(message: str, status: int) -> int:
+    click.echo(f"srcfit: {' '.join(message.split())}", err=True)
+    return status
+
+
+def _tolerant(*streams: TextIO) -> None:
+    """Let terminals without the signs we print get plain ones instead of an error."""
+
+    def plain(error: UnicodeError) -> tuple[str, int]:
+        if not isinstance(error, UnicodeEncodeError):
+            raise error
+        text = error.object[error.start : error.end]
+        return "".join(ASCII.get(c, "?") for c in text), error.end
+
+    codecs.register_error("srcfit", plain)
+    for stream in streams:
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="srcfit")
+
+
+def _kind_names(
+    context: click.Context, parameter: click.Parameter, text: str
+) -> list[CompletionItem]:
+    from click.shell_completion import CompletionItem
+
+    from srcfit.members import MEMBERS
+
+    return [CompletionItem(name) for name in MEMBERS if name.startswith(text)]
+
+
+def _checked_kind(
+    context: click.Context, parameter: click.Parameter, name: str | None
+) -> str | None:
+    """The member kind, or wrong usage with the nearest names."""
+    from difflib import get_close_matches
+
+    from srcfit.members import MEMBERS
+
+    if name is None or name in MEMBERS:
+        return name
+    near = get_close_matches(name, MEMBERS, 1) or MEMBERS
+    raise click.BadParameter(f"there is no member kind {name!r}; did you mean {', '.join(near)}?")
+
+
+CASE = click.argument("case_path", metavar="CASE", type=click.Path())
+
+
+def _kind(required: bool) -> Callable[[F], F]:
+    return click.argument(
+        "kind", required=required, shell_complete=_kind_names, callback=_checked_kind
+    )
+
+
+AS_JSON = click.option("--json", "as_json", is_flag=True, help="Print JSON for machines.")
+QUIET = click.option("--quiet", "-q", is_flag=True, help="No progress and no table.")
+REPLACE = click.option("--replace", is_flag=True, help="Replace what is there already.")
+
+
+@click.group(epilog=EPILOG, context_settings={"help_option_names": ["-h", "--help"]})
+@click.version_option(__version__, message="srcfit %(version)s")
+def cli() -> None:
+    """Recover the source that drives a one-dimensional member from readings along it.
+
+    CASE is a TOML file: start one with `srcfit new KIND`, look at what it reads with
+    `srcfit inspect CASE`, then `srcfit recover CASE`.
+    """
+
+
+@cli.command(short_help="List the member kinds, or all that one takes.")
+@_kind(required=False)
+@AS_JSON
+def kinds(kind: str | None, as_json: bool) -> None:
+    """List the member kinds, or all that one KIND takes."""
+    from srcfit import kindtext
+    from srcfit.members import MEMBERS
+
+    if as_json:
+        chosen = [MEMBERS[kind]] if kind else MEMBERS.values()
+        facts = [kindtext.kind_facts(k) for k in chosen]
+        return _print_json(facts[0] if kind else facts)
+    click.echo(kindtext.kind_text(MEMBERS[kind]) if kind else kindtext.kinds_text(MEMBERS))
+
+
+@cli.command(short_help="Write a commented case to fill in.")
+@_kind(required=True)
+@click.option("-o", "--output", type=click.Path(), help="A .toml file or a folder to write.")
+@click.option("--demo", is_flag=True, help="Add invented readings, so that the case runs.")
+@click.option("--seed", type=click.IntRange(min=0), default=0, help="Seed of the demo's noise.")
+@REPLACE
+def new(kind: str, output: str | None, demo: bool, seed: int, replace: bool) -> None:
+    """Write a commented case of this KIND to fill in (on the screen without -o).
+
+    With --demo it comes with invented readings and runs as it stands; the folder is KIND-demo
+    unless -o names another.
+    """
+    from srcfit import start
+
+    if output is None and not demo:
+        click.echo(start.case_text(kind), nl=False)
+        return
+    written = start.write(kind, output or f"{kind}-demo", demo=demo, seed=seed, replace=replace)
+    for path in written:
+        click.echo(path)
+
+
+@cli.command(short_help="Show what a case reads and asks; solve nothing.")
+@CASE
+@click.option("-o", "--output", type=click.Path(), help="Draw the readings to this picture.")
+@AS_JSON
+@QUIET
+@REPLACE
+def inspect(case_path: str, output: str | None, as_json: bool, quiet: bool, replace: bool) -> None:
+    """Show what CASE reads and asks and what is wrong with it, without solving anything."""
+    from srcfit import inspection
+
+    case, readings = _load(case_path, quiet)
+    facts = inspection.inspect(case, readings)
+    if output is not None:
+        from srcfit import rawplot
+
+        rawplot.save(case, readings, output, replace=replace)
+    if as_json:
+        _print_json(facts)
+    elif not quiet:
+        click.echo(inspection.text(facts))
+
+
+@cli.command(short_help="Recover the source into a new folder.")
+@CASE
+@click.option("-o", "--output", type=click.Path(), help="Folder to make.  [default: CASE-result]")
+@click.option("--seed", type=click.IntRange(min=0), default=0, show_default=True,
+              help="Seed of everything random; it is recorded.")  # fmt: skip
+@click.option("--strict", is_flag=True, help="Exit with 4 when a finding is serious.")
+@AS_JSON
+@QUIET
+@REPLACE
+def recover(
+    case_path: str, output: str | None, seed: int, strict: bool, as_json: bool, quiet: bool,
+    replace: bool,
+) -> int:  # fmt: skip
+    """Recover the source of CASE and write tables, figures and a report into a new folder.
+
+    The folder is named after the case file, with -result, in the current folder.
+    """
+    from srcfit import output as saving
+    from srcfit.recover import recover as run
+
+    folder = output if output is not None else f"{Path(case_path).stem}-result"
+    case, readings = _load(case_path, quiet)
+    saving.check(folder, replace=replace, inputs=saving.input_paths(case))
+    _say(f"recovering the source from {int(readings.used.sum())} readings", quiet)
+    found = run(case, readings, rng=seed)
+    _say(f"writing {folder}", quiet)
+    saved = saving.save(found, folder, replace=replace)
+    if saved.kept is not None:
+        _say(f"files that srcfit did not write were moved to {saved.kept}", False)
+    summary = saving.ordered(found.summary())
+    if as_json:
+        _print_json(summary)
+    elif not quiet:
+        from srcfit.text import recovery_text
+
+        click.echo(f"{recovery_text(summary)}\n\nWritten to {folder}")
+    serious = any(f["level"] == "serious" for f in summary["findings"])
+    return SERIOUS if strict and serious else DONE
+
+
+@cli.command(short_help="Predict the readings for a given source.")
+@CASE
+@click.option("--source", "source_path", metavar="FILE", type=click.Path(), required=True,
+              help="Table of the source to try.")  # fmt: skip
+@click.option("-o", "--output", type=click.Path(), help="Write the predicted readings as CSV.")
+@AS_JSON
+@QUIET
+@REPLACE
+def predict(
+    case_path: str, source_path: str, output: str | None, as_json: bool, quiet: bool, replace: bool
+) -> None:
+    """Predict the readings of CASE for the source in FILE (a forward what-if).
+
+    FILE is a table with units in the brackets of its header. A row may hold a stretch
+    (`from [m]`, `to [m]`, `value [kN/m]`), a lumped part (`at [m]`, `strength [kN]`), or both;
+    cells that do not apply stay empty. A source.csv that `srcfit recover` wrote is read too
+    (`x [m]` and `estimate [kN/m]`, the middles of joined cells). Parts that overlap add up, and
+    so does what the case states as known; unknown nuisances are taken at their guess.
+    """
+    from srcfit import prediction
+    from srcfit.trial import read_source
+
+    case, readings = _load(case_path, quiet)
+    source = read_source(source_path, case)
+    found = prediction.predict(case, readings, source)
+    if output is not None:
+        from srcfit.output import csv_text, put_file
+
+        put_file(output, csv_text(found.readings), replace=replace)
+    if as_json:
+        _print_json(prediction.facts(found))
+    elif not quiet:
+        click.echo(prediction.text(found))
+
+
+def _load(case_path: str, quiet: bool) -> tuple[Case, Readings]:
+    from srcfit.case import load_case
+    from srcfit.readings import read
+
+    _say(f"reading {case_path}", quiet)
+    case = load_case(Path(case_path))
+    return case, read(case)
+
+
+def _say(message: str, quiet: bool) -> None:
+    """Progress, on the error stream."""
+    if not quiet:
+        click.echo(f"srcfit: {message}", err=True)
+
+
+def _print_json(value: Mapping[str, Any] | Sequence[Any]) -> None:
+    click.echo(json.dumps(value, indent=2, ensure_ascii=False, allow_nan=False))

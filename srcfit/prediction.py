@@ -1,0 +1,273 @@
+"""The forward what-if: what the sensors of a case would read under a given source."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from srcfit.case.model import Case, ColumnSpec, Known, PositionSpec, TableSpec
+from srcfit.errors import MemberError
+from srcfit.forward import Forward, build
+from srcfit.grid import overlap
+from srcfit.inspection import shown
+from srcfit.member import Array, Member, Unknown
+from srcfit.output import strict
+from srcfit.readings.model import Readings
+from srcfit.rounding import brief
+from srcfit.state import Matrix, gauss, inner_edges, operator
+from srcfit.text import bullets, clean, join, section, table
+from srcfit.trial import Trial
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+PIECES = 96
+
+
+@dataclass(frozen=True)
+class Prediction:
+    """Predicted readings and reactions under a trial source.
+
+    Attributes
+    ----------
+    readings : DataFrame
+        Used rows: file, line, group, kind, unit, x, value, predicted, residual, standardised.
+    reactions : list of mapping (name, at, kind, unit, value)
+    balance : mapping
+        source (known parts included), reactions, along (taken up by bedding, loss, decay or
+        inertia along the member) and difference, in the total's unit; real parts.
+    misfit : float or None
+        Root mean square of the standardised residuals.
+    """
+
+    case: Case
+    readings: pd.DataFrame
+    reactions: list[dict[str, Any]]
+    balance: dict[str, float]
+    misfit: float | None
+    notes: tuple[str, ...]
+
+
+def predict(case: Case, readings: Readings, trial: Trial) -> Prediction:
+    """Predict the used readings of a case under a source, what the case knows included.
+
+    Unknown nuisances are taken at their guess. The balance is a check of its own: reactions are
+    read from the state at supports and ends, what the member takes up along it is integrated from
+    the response.
+
+    Raises
+    ------
+    MemberError
+        When the source is out of balance on a member that nothing holds.
+    """
+    parts = (*case.source.known, *trial.parts)
+    bare, probed, weights = _probed(case, readings, parts)
+    forward = build(bare, probed)
+    f = _densities(forward, parts)
+    _check_balance(forward, f, parts)
+    guess = np.array([c.guess for c in forward.columns])
+    residual = forward.y - forward.A @ f - forward.B @ guess
+    reactions = (
+        forward.reaction_known + forward.reaction_cells @ f + forward.reaction_columns @ guess
+    )
+    n = int(readings.used.sum())
+    held = complex(weights @ -residual[n:])
+    spread = readings.sd[forward.rows[:n]]
+    misfit = float(np.sqrt(np.mean(np.abs(residual[:n] / spread) ** 2)))
+    return Prediction(
+        case,
+        _frame(case, readings, forward.rows[:n], residual[:n]),
+        _reactions(case, forward, reactions),
+        _balance(case, forward, reactions, held, parts),
+        misfit if math.isfinite(misfit) else None,
+        _notes(forward, trial),
+    )
+
+
+def _probed(
+    case: Case, readings: Readings, parts: tuple[Known, ...]
+) -> tuple[Case, Readings, Matrix]:
+    """The case with cells as the parts need them, with more readings of the response.
+
+    The weights (one a further reading) turn their excess over the ambient into what the member
+    takes up along it: bedding, loss, decay, inertia.
+    """
+    member = case.member
+    edges = {e for part in parts if part.start < part.end for e in (part.start, part.end)}
+    points = tuple(p for p in parts if p.start == p.end)
+    source = replace(
+        case.source, known=points, breaks=tuple(sorted(edges)), zones=(), lumped=(), zero=(),
+        cells=1, smooth=True, background=False, total=None, limit=None, sign="any",
+    )  # fmt: skip
+    panels = np.unique([*np.linspace(member.start, member.end, PIECES + 1), *inner_edges(member)])
+    c, b, _ = gauss()
+    places = (panels[:-1, None] + np.diff(panels)[:, None] * c).ravel()
+    symbol = "q" if member.kind.order == 2 else "p0"
+    weights = operator(member, places)[symbol] * (np.diff(panels)[:, None] * b).ravel()
+    if not weights.any():
+        places, weights = np.zeros(0), np.zeros(0)
+    sensor = next(s for s in member.kind.sensors if s.quantity == "response")
+    spec = ColumnSpec(("",), sensor.name, "response", unit=sensor.unit, sd=1.0)
+    table_ = TableSpec(Path(), PositionSpec("", "m"), (spec,))
+    more = len(places)
+    ambient = member.ambient if member.kind.relative and not member.driven else 0.0
+    wide = replace(
+        readings, file=readings.file + ("",) * more,
+        line=np.append(readings.line, np.zeros(more, dtype=np.int64)),
+        group=readings.group + (spec.group,) * more, kind=readings.kind + (spec.kind,) * more,
+        unit=readings.unit + (sensor.unit,) * more, x=np.append(readings.x, places),
+        value=np.append(readings.value, np.full(more, ambient)),
+        sd=np.append(readings.sd, np.ones(more)), used=np.append(readings.used, [True] * more),
+        reason=readings.reason + ("",) * more,
+        spec=np.append(readings.spec, np.full(more, len(case.columns))),
+        time=np.append(readings.time, np.zeros(more)),
+    )  # fmt: skip
+    return replace(case, source=source, tables=(*case.tables, table_)), wide, weights
+
+
+def _densities(forward: Forward, parts: tuple[Known, ...]) -> Array:
+    """Density on each cell (m,): stretches that overlap add up."""
+    middle = forward.grid.middles
+    f = np.zeros(len(middle))
+    for part in parts:
+        f += np.where((middle > part.start) & (middle < part.end), part.value, 0.0)
+    return f
+
+
+def _check_balance(forward: Forward, f: Array, parts: tuple[Known, ...]) -> None:
+    """Refuse a source that a member without any hold cannot carry."""
+    if forward.balance is None:
+        return
+    off = np.abs(forward.balance[:, : len(f)] @ f + forward.balance[:, -1]).max()
+    member = forward.case.member
+    size = sum(abs(p.value) * _extent(member, p) for p in parts) / np.sqrt(member.length)
+    if off > 1e-6 * size:
+        raise MemberError(
+            "the source is out of balance, and nothing holds the member", "source",
+            "balance it, or hold the member at an end, a support or along its length",
+        )  # fmt: skip
+
+
+def _extent(member: Member, part: Known) -> float:
+    """Area-weighted size of a part's stretch; 1 for a strength at one place."""
+    if part.start == part.end:
+        return 1.0
+    return float(overlap(member, np.array([member.start, member.end]), part.start, part.end)[0])
+
+
+def _balance(
+    case: Case, forward: Forward, reactions: Matrix, held: complex, parts: tuple[Known, ...]
+) -> dict[str, float]:
+    """Source, reactions and what the member takes up, in the total's unit (real parts)."""
+    member, kind = case.member, case.member.kind
+    given = sum(p.value * _extent(member, p) for p in parts)
+    forces = [r for r, w in zip(reactions, forward.reactions, strict=True) if w.kind != "moment"]
+    total = complex(sum(forces))
+    amounts = {"source": given, "reactions": total.real, "along": held.real,
+               "difference": given - total.real - held.real}  # fmt: skip
+    unit = case.source.total_unit
+    return {k: float(shown(v, unit, kind.total_unit)) for k, v in amounts.items()}
+
+
+def _reactions(case: Case, forward: Forward, values: Matrix) -> list[dict[str, Any]]:
+    """Reactions with their places, forces and flows in the total's unit."""
+    found = []
+    for reaction, value in zip(forward.reactions, values, strict=True):
+        moment = reaction.kind == "moment"
+        unit = reaction.unit if moment else case.source.total_unit
+        si = reaction.unit if moment else case.member.kind.total_unit
+        row = {"name": reaction.name, "at": shown(reaction.at, case.source.position_unit, "m"),
+               "kind": reaction.kind, "unit": unit,
+               "value": float(shown(np.real(value), unit, si))}  # fmt: skip
+        if case.member.driven:
+            row["imaginary"] = float(shown(np.imag(value), unit, si))
+        found.append(row)
+    return found
+
+
+def _frame(case: Case, readings: Readings, rows: Any, residual: Matrix) -> pd.DataFrame:
+    """One row a used reading, in the unit it was read in."""
+    import pandas as pd
+
+    found = []
+    for row, left in zip(rows, residual, strict=True):
+        spec = case.columns[readings.spec[row]]
+        unit, si = readings.unit[row], case.member.kind.sensor(spec.kind).unit
+        left = left * (1.0 if isinstance(spec.scale, Unknown) else spec.scale)
+        value = readings.value[row]
+        amounts = {
+            "value": shown(value, unit, si), "predicted": shown(value - left, unit, si),
+            "residual": shown(left, unit, si, difference=True),
+            "standardised": left / readings.sd[row],
+        }  # fmt: skip
+        at = shown(readings.x[row], case.source.position_unit, "m")
+        record = {
+            "file": readings.file[row], "line": int(readings.line[row]),
+            "group": readings.group[row], "kind": readings.kind[row], "unit": unit,
+            f"x [{case.source.position_unit}]": at,
+        } | {k: float(np.real(v)) for k, v in amounts.items()}  # fmt: skip
+        if case.member.driven:
+            record |= {f"{k}_imag": float(np.imag(v)) for k, v in amounts.items()}
+        found.append(record)
+    return pd.DataFrame(found)
+
+
+def _notes(forward: Forward, trial: Trial) -> tuple[str, ...]:
+    """What the reader of a prediction must know."""
+    notes = []
+    nuisances = [c.name for c in forward.columns if c.kind == "nuisance"]
+    if nuisances:
+        notes.append(f"Unknown amounts are taken at their guess: {', '.join(nuisances)}.")
+    if any(c.kind == "null" for c in forward.columns):
+        notes.append("Nothing holds the member: the response is told up to its free motion.")
+    if forward.case.source.known or trial.parts:
+        notes.append("Parts that overlap, and what the case states as known, add up.")
+    if trial.unread:
+        notes.append(f"Columns of the source that were not used: {', '.join(trial.unread)}.")
+    return tuple(notes)
+
+
+def facts(found: Prediction) -> dict[str, Any]:
+    """A prediction as a mapping for machines."""
+    return {
+        "title": found.case.title, "units": {
+            "position": found.case.source.position_unit, "total": found.case.source.total_unit},
+        "readings": strict(found.readings.to_dict("records")), "reactions": found.reactions,
+        "balance": found.balance, "misfit": found.misfit, "notes": list(found.notes),
+    }  # fmt: skip
+
+
+def text(found: Prediction) -> str:
+    """A prediction as tables for a terminal."""
+    frame, source = found.readings, found.case.source
+    names = ["group", "kind", f"x [{source.position_unit}]", "value", "predicted", "residual"]
+    names += [c for c in ("predicted_imag",) if c in frame.columns]
+    rows = [
+        [row[c] if isinstance(row[c], str) else brief(row[c], 5) for c in names] + [row["unit"]]
+        for row in frame.to_dict("records")
+    ]
+    reactions = [
+        (r["name"], f"{brief(r['at'], 6)} {source.position_unit}", r["kind"],
+         f"{brief(r['value'], 5)} {r['unit']}") for r in found.reactions
+    ]  # fmt: skip
+    misfit = f"Root mean square of residual/sd: {brief(found.misfit)}" if found.misfit else ""
+    return join(
+        clean(found.case.title),
+        section("Readings", table([*names, "unit"], rows, "llrrrr" + "r" * (len(names) - 6))),
+        misfit,
+        section("Reactions", table(("", "", "", ""), reactions, "lllr")),
+        section("Balance", _balance_text(found)),
+        bullets(found.notes),
+    )
+
+
+def _balance_text(found: Prediction) -> str:
+    unit = found.case.source.total_unit
+    words = {"source": "source", "reactions": "ends and supports", "along": "along the member",
+             "difference": "difference"}  # fmt: skip
+    rows = [(words[k], f"{brief(v, 6)} {unit}") for k, v in found.balance.items()]
+    return table(("", ""), rows, "lr")

@@ -1,0 +1,207 @@
+"""Results as plain text for a terminal: aligned tables, rounded as the GUM asks."""
+
+from __future__ import annotations
+
+import textwrap
+from collections.abc import Iterable, Mapping, Sequence
+from typing import Any
+from unicodedata import category, east_asian_width
+
+from srcfit.rounding import UNDETERMINED, brief, interval, plus_minus
+
+WIDTH = 96
+LEVELS = ("serious", "caution", "note")
+
+Summary = Mapping[str, Any]
+
+
+def clean(text: object) -> str:
+    """`text` on one line without control or direction characters, safe to print."""
+    return "".join(c if category(c)[0] != "C" else " " for c in str(text))
+
+
+def width(text: str) -> int:
+    """Columns that `text` takes on a terminal."""
+    return sum(0 if category(c)[0] == "M" else 1 + (east_asian_width(c) in "WF") for c in text)
+
+
+def table(header: Sequence[str], rows: Iterable[Sequence[object]], right: str = "") -> str:
+    """An aligned table with two blanks between columns.
+
+    Parameters
+    ----------
+    header : sequence of str
+        Headers; no rule and no header is printed when all of them are empty.
+    rows : sequences of anything, each as long as `header`
+    right : str
+        One letter a column: "r" aligns it to the right.
+    """
+    body = [[clean(cell) for cell in row] for row in rows]
+    lines = [list(header), *body] if any(header) else body
+    wide = [max(map(width, column)) for column in zip(*lines, strict=True)] if lines else []
+    right = right.ljust(len(wide), "l")
+    return "\n".join(
+        "  ".join(
+            " " * (w - width(c)) + c if side == "r" else c + " " * (w - width(c))
+            for c, w, side in zip(line, wide, right, strict=False)
+        ).rstrip()
+        for line in lines
+    )
+
+
+def section(title: str, body: str) -> str:
+    """A titled part with its lines set in by two blanks; empty when there is no body."""
+    return f"{title}\n{textwrap.indent(body, '  ')}" if body else ""
+
+
+def bullets(lines: Iterable[str]) -> str:
+    """Wrapped sentences, one a bullet."""
+    return "\n".join(
+        textwrap.fill(clean(line), WIDTH, initial_indent="- ", subsequent_indent="  ")
+        for line in lines
+    )
+
+
+def join(*parts: str) -> str:
+    """Parts that are not empty, with a blank line between them."""
+    return "\n\n".join(part for part in parts if part)
+
+
+def recovery_text(summary: Summary) -> str:
+    """The table at the end of `srcfit recover`.
+
+    Parameters
+    ----------
+    summary : mapping
+        As in summary.json.
+
+    Returns
+    -------
+    str
+        Title, what was read and how, every number with its standard uncertainty and interval,
+        the limit's verdict, the findings and the cautions.
+    """
+    return join(
+        _opening(summary),
+        _numbers(summary),
+        section("Limit", _limit(summary)),
+        section("Findings", findings_text(summary["findings"])),
+        section("Cautions", bullets(summary["cautions"])),
+    )
+
+
+def findings_text(findings: Iterable[Mapping[str, str]]) -> str:
+    """Findings, the serious ones first, one a bullet."""
+    order = sorted(findings, key=lambda f: LEVELS.index(f["level"]))
+    return bullets(f"{f['level']}: {f['sentence']} ({f['code']})" for f in order)
+
+
+def _opening(summary: Summary) -> str:
+    fit, strength = summary["fit"], summary["strength"]
+    value = brief(strength["value"], 4)
+    chosen = f"strength {value}, chosen by {strength['choose']}" if value else "strength averaged"
+    rows = [
+        ("readings", f"{fit['used']} used of {fit['read']}"),
+        ("method", f"{strength['solver']}, {chosen}, {_dof(strength['effective_dof'])}"),
+        ("noise", _noise(summary)),
+    ]
+    return join(clean(summary["title"]), table(("", ""), rows))
+
+
+def _dof(value: float | None) -> str:
+    return (
+        f"{brief(value, 3)} effective degrees of freedom" if value is not None else "dof unknown"
+    )
+
+
+def _noise(summary: Summary) -> str:
+    noise = summary["noise"]
+    groups = ", ".join(
+        f"{g['group']} {brief(g['sd'])} {g['unit']}{' (estimated)' if g['estimated'] else ''}"
+        for g in noise["groups"]
+    )
+    scale = brief(noise["scale"])
+    seen = f"; residuals {scale} times that" if scale else ""
+    return f"sd {groups}{seen}" if groups else f"scale {scale}"
+
+
+def _numbers(summary: Summary) -> str:
+    units = summary["units"]
+    at, total, source = units["position"], units["total"], units["source"]
+    rows = [("total", "", *_cells(summary["total"], total), "")]
+    rows += [
+        (f"zone {z['name']}", f"{brief(z['from'], 6)} to {brief(z['to'], 6)} {at}",
+         *_cells(z, total), _share(z)) for z in summary["zones"] or ()
+    ]  # fmt: skip
+    if summary["background"]:
+        rows.append(("background", "", *_cells(summary["background"], source), ""))
+    rows += [
+        (f"lumped {p['name']}", _at(p["at"], at), *_cells(p, total), "")
+        for p in summary["lumped"] or ()
+    ]
+    rows += [_peak(summary["peak"], at, source)] if summary["peak"] else []
+    rows += [(n["name"], "", *_cells(n, n["unit"]), "") for n in summary["nuisances"] or ()]
+    rows += [
+        (f"reaction {r['name']}", _at(r["at"], at), *_cells(r, r["unit"]), "")
+        for r in summary["reactions"] or ()
+    ]
+    level = f"{100 * summary['level']:g} % interval"
+    return table(("", "where", "value ± sd", level, "data share"), rows, "llrrr")
+
+
+def _cells(number: Mapping[str, Any], unit: str) -> tuple[str, str]:
+    told = plus_minus(number, unit)
+    bounds = interval(number, unit)
+    imaginary = number.get("imaginary")
+    if imaginary is not None and told != UNDETERMINED:
+        told += f" {_twin(imaginary, unit)}"
+    return told, bounds
+
+
+def _twin(imaginary: object, unit: str) -> str:
+    """The imaginary part of a driven member's number, beside its real part."""
+    if isinstance(imaginary, Mapping):
+        return f"and i({plus_minus(imaginary, unit)})"
+    return f"and i({brief(imaginary, 4)} {unit})"
+
+
+def _at(place: float | None, unit: str) -> str:
+    return f"{brief(place, 6)} {unit}" if place is not None else ""
+
+
+def _share(zone: Mapping[str, Any]) -> str:
+    share = zone["data_share"]
+    return f"{100 * share:.0f} %" if share is not None else ""
+
+
+def _peak(peak: Mapping[str, Any], at: str, source: str) -> tuple[str, str, str, str, str]:
+    """The peak has no sd of its own: its interval sets the last decimal place."""
+    lower, upper = peak["lower"], peak["upper"]
+    known = lower is not None and upper is not None
+    spread = {"value": peak["value"], "lower": lower, "upper": upper,
+              "sd": (upper - lower) / 4 if known else None}  # fmt: skip
+    first, last = peak["position_lower"], peak["position_upper"]
+    place = _at(peak["position"], at)
+    if first is not None and last is not None:
+        place += f" ({brief(first, 4)} to {brief(last, 4)})"
+    told = plus_minus(spread, source).split(" ± ")[0]
+    told = told if told == UNDETERMINED or not known else f"{told} {source}"
+    return "peak", place, told, interval(spread, source), ""
+
+
+def _limit(summary: Summary) -> str:
+    limit = summary["limit"]
+    if not limit:
+        return ""
+    chance = limit["probability"]
+    sure = f"with probability {_percent(chance)}" if chance is not None else "cannot be said"
+    return bullets([
+        f"{limit['zone']} at most {limit['at_most']}: {limit['verdict']} "
+        f"(estimate {brief(limit['estimate'])}; kept {sure})"
+    ])  # fmt: skip
+
+
+def _percent(share: float) -> str:
+    if 0.001 <= share <= 0.999:
+        return f"{100 * share:.3g} %"
+    return "below 0.1 %" if share < 0.5 else "above 99.9 %"
