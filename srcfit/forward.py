@@ -132,7 +132,7 @@ def build(case: Case, readings: Readings) -> Forward:
     loads, load_columns = _lumped(case, line, lines)
     given, unknown, unknown_columns = _restraints(case, lines)
     own, own_columns = _reading_nuisances(case, readings, rows, specs)
-    padded = np.zeros((len(lines.left) - n, own_columns.shape[1]))
+    padded = np.zeros((len(lines) - n, own_columns.shape[1]))
     null_columns = _null_reads(nulls, readings, rows, specs, reactions, case)
     columns = [*loads, *unknown, *own]
     columns += [Column(f"null mode {i + 1}", "null") for i in range(null_columns.shape[1])]
@@ -256,7 +256,7 @@ def _lumped(case: Case, line: Chain, lines: Influence) -> tuple[list[Column], Ma
             start, end = spread(part)
             size = overlap(member, np.array([member.start, member.end]), start, end)[0]
             rows.append(_stretch(line, lines, start, end) / size)
-    return columns, _stack(rows, len(lines.left))
+    return columns, _stack(rows, len(lines))
 
 
 def _stack(rows: Sequence[Matrix], n: int) -> Matrix:
@@ -296,7 +296,7 @@ def _restraints(case: Case, lines: Influence) -> tuple[Matrix, list[Column], Mat
     names, forces = restraint_forces(lines)
     given = dict(zip(names, forces.T, strict=True))
     base = _base(case.member)
-    known = np.zeros(len(lines.left), dtype=forces.dtype)
+    known = np.zeros(len(lines), dtype=forces.dtype)
     columns, rows = [], []
     for name, amount in prescribed(case.member):
         if isinstance(amount, Unknown):
@@ -306,11 +306,11 @@ def _restraints(case: Case, lines: Influence) -> tuple[Matrix, list[Column], Mat
             rows.append(given[name])
         else:
             known = known + amount * given[name]
-    return known, columns, _stack(rows, len(lines.left))
+    return known, columns, _stack(rows, len(lines))
 
 
 def _known_parts(case: Case, line: Chain, lines: Influence) -> Matrix:
-    total = np.zeros(len(lines.left), dtype=lines.left.dtype)
+    total = np.zeros(len(lines), dtype=lines.left_of.dtype)
     for part in case.source.known:
         one = (
             _at(line, lines, part.start)

@@ -61,17 +61,37 @@ class Influence:
 
     Attributes
     ----------
-    left, right : (n, N - 1, k) scaled states at the left and right end of each interval
-    outer_left, outer_right : (n, k) scaled states beyond the loads at the ends
+    both : Bases
+    right_of, left_of : (N, n, h) coefficients in W and Y of the parts right and left of the loads
     before : (n,) whether the functional is read on the left of a load at the same place
     """
 
     chain: Chain
-    left: Matrix
-    right: Matrix
-    outer_left: Matrix
-    outer_right: Matrix
+    both: Bases
+    right_of: Matrix
+    left_of: Matrix
     before: NDArray[np.bool_]
+
+    def __len__(self) -> int:
+        return len(self.before)
+
+    def after(self, node: NDArray[np.int64]) -> Matrix:
+        """Scaled states just right of nodes, (len(node), n, k)."""
+        found = self.right_of[node] @ self.both.W[node].transpose(0, 2, 1)
+        inner = node < len(self.chain.x) - 1
+        k = node[inner]
+        back = self.left_of[k + 1] @ self.both.to_left[k].transpose(0, 2, 1)
+        found[inner] += back @ self.both.Y[k].transpose(0, 2, 1)
+        return found
+
+    def ahead(self, node: NDArray[np.int64]) -> Matrix:
+        """Scaled states just left of nodes, (len(node), n, k)."""
+        found = self.left_of[node] @ self.both.Y[node].transpose(0, 2, 1)
+        inner = node > 0
+        k = node[inner]
+        on = self.right_of[k - 1] @ self.both.to_right[k - 1].transpose(0, 2, 1)
+        found[inner] += on @ self.both.W[k].transpose(0, 2, 1)
+        return found
 
 
 def _end_basis(member: Member, which: str) -> Matrix:
@@ -242,16 +262,8 @@ def influence(line: Chain, functionals: Sequence[Sequence[Term]]) -> Influence:
         right_c[k + 1] += right_c[k] @ both.to_right[k].T
     for k in range(count - 1, 0, -1):
         left_b[k - 1] += left_b[k] @ both.to_left[k - 1].T
-    WT, YT = both.W.transpose(0, 2, 1), both.Y.transpose(0, 2, 1)
-    # right of its load an influence line lies in W, left of it in Y
-    carried = right_c[:-1] @ both.to_right.transpose(0, 2, 1)
-    returned = left_b[1:] @ both.to_left.transpose(0, 2, 1)
-    left = right_c[:-1] @ WT[:-1] + returned @ YT[:-1]
-    right = carried @ WT[1:] + left_b[1:] @ YT[1:]
-    return Influence(
-        line, left.transpose(1, 0, 2), right.transpose(1, 0, 2), left_b[0] @ YT[0],
-        right_c[-1] @ WT[-1], np.array([any(t.before for t in f) for f in functionals]),
-    )  # fmt: skip
+    before = np.array([any(t.before for t in f) for f in functionals], dtype=bool)
+    return Influence(line, both, right_c, left_b, before)
 
 
 def _split(both: Bases, node: NDArray[np.int64], jumps: Matrix) -> tuple[Matrix, Matrix]:
@@ -295,8 +307,8 @@ def deflect(line: Chain, f: Matrix, lumped: Sequence[tuple[int, Any]] = ()) -> M
     live = np.flatnonzero(np.abs(jumps).max(axis=1))
     terms += [Term(int(k) + 1, -_jump(jumps[k : k + 1])[0]) for k in live]
     lines = influence(line, [terms])
-    low = np.concatenate([lines.outer_left, lines.right[0]])
-    high = np.concatenate([lines.left[0], lines.outer_right])
+    everywhere = np.arange(len(line.x))
+    low, high = lines.ahead(everywhere)[:, 0], lines.after(everywhere)[:, 0]
     low[live + 1] += jumps[live] / line.scale
     found: Matrix = np.stack([low, high]) * line.scale
     return found
@@ -314,7 +326,8 @@ def restraint_forces(lines: Influence) -> tuple[list[str], Matrix]:
     """
     member, scale = lines.chain.member, lines.chain.scale
     last = lines.chain.order - 1
-    at_left, at_right = lines.outer_left * scale, lines.outer_right * scale
+    ends = np.array([0]), np.array([len(lines.chain.x) - 1])
+    at_left, at_right = lines.ahead(ends[0])[0] * scale, lines.after(ends[1])[0] * scale
     names, columns = [], []
     for word, end, state, side in (
         ("left", member.left, at_left, 1.0),
@@ -328,9 +341,10 @@ def restraint_forces(lines: Influence) -> tuple[list[str], Matrix]:
             columns.append(-side * state[:, 2])
     for number, interval in enumerate(support_intervals(lines.chain), start=1):
         names.append(f"support.{number}")
-        step = lines.right[:, interval, last] - lines.left[:, interval, last]
-        columns.append(step * scale[last])
-    empty = np.zeros((len(lines.left), 0))
+        inside = np.array([interval]), np.array([interval + 1])
+        step = lines.ahead(inside[1])[0] - lines.after(inside[0])[0]
+        columns.append(step[:, last] * scale[last])
+    empty = np.zeros((len(lines), 0))
     return names, np.stack(columns, axis=1) if columns else empty
 
 
@@ -358,8 +372,8 @@ def at_nodes(lines: Influence, node: NDArray[np.int64], component: int = 0) -> M
     Where two limits differ: on the side that a load at that place has to the functional.
     """
     size = lines.chain.scale[component]
-    low = np.concatenate([lines.outer_left[:, None], lines.right], axis=1)[:, node, component]
-    high = np.concatenate([lines.left, lines.outer_right[:, None]], axis=1)[:, node, component]
+    low = lines.ahead(node)[:, :, component].T
+    high = lines.after(node)[:, :, component].T
     found: Matrix = np.where(lines.before[:, None], high, low) * size
     return found
 
@@ -371,8 +385,31 @@ def interval_integrals(lines: Influence, density: Matrix | None = None) -> Matri
     """
     weights = lines.chain.weights if density is None else lines.chain.weights * density
     rows = np.einsum("ks,ksd->kd", weights, lines.chain.stages)
-    found: Matrix = np.einsum("nkd,kd->nk", lines.left, rows)
-    return found
+    both, right_of, left_of = lines.both, lines.right_of[:-1], lines.left_of[1:]
+    ahead = np.einsum("kd,kdh->kh", rows, both.W[:-1])
+    back = np.einsum("kd,kdg,kgh->kh", rows, both.Y[:-1], both.to_left)
+    found = (right_of @ ahead[:, :, None] + left_of @ back[:, :, None])[:, :, 0]
+    return found.T
+
+
+def _surely_held(member: Member) -> bool:
+    """Whether a glance tells that a steady member has no null mode, however soft it is."""
+    if member.driven or member.lam or member.hinges:
+        return False
+    x = member.start + member.length * np.linspace(0.0137, 0.9871, 23)
+    k = {name: np.real(v) for name, v in operator(member, x).items()}
+    rate = k["q"] if member.kind.order == 2 else k["p0"]
+    if (rate < 0).any() or (k.get("p1", rate) < 0).any():
+        return False
+    ends = member.left, member.right
+    if any(r.stiffness < 0 for e in ends for r in (e.response, e.rotation)):
+        return False
+    if member.kind.order == 2:
+        held = any(e.response.stiffness > 0 for e in ends) or bool(member.supports)
+        return held or bool((rate > 0).any())
+    clamped = any(e.response.stiffness > 0 and e.rotation.stiffness > 0 for e in ends)
+    held_places = sum(e.response.stiffness > 0 for e in ends) + len(member.supports)
+    return clamped or held_places > 1 or bool((rate > 0).any())
 
 
 def restrained(member: Member) -> tuple[Member, Matrix | None, Chain | None]:
@@ -387,6 +424,8 @@ def restrained(member: Member) -> tuple[Member, Matrix | None, Chain | None]:
     modes : (d, N, n) scaled states of the null modes on `chain`, or None
     chain : Chain, or None
     """
+    if _surely_held(member):
+        return member, None, None
     # odd fractions: a hold should not fall on a user's own place
     line = chain(member, member.start + member.length * np.linspace(0.0137, 0.9871, 23))
     modes = null_states(line, bases(line))

@@ -52,6 +52,7 @@ class Chain:
     places, weights : (N - 1, s) Gauss places and weights (area weight included) of each interval
     stages : (N - 1, s, n) response at the Gauss places as a row on the state at the left node
     load : (N - 1, n, s) state at the right node per source density at the Gauss places
+    inner : (N - 1, s, s) response at the Gauss places per source density there, from rest
     scale : (n,) natural size of each state component
     """
 
@@ -63,6 +64,7 @@ class Chain:
     weights: Array
     stages: Matrix
     load: Matrix
+    inner: Matrix
     scale: Array
 
     @property
@@ -278,6 +280,7 @@ def transfer(member: Member, a: Array, b: Array, mu: float = 0.0) -> tuple[Matri
     places : (N, s) Gauss places; weights : (N, s) their weights times the area weight
     stages : (N, s, n) response at the Gauss places as rows on the state at `a`
     load : (N, n, s) state at `b` per source density at the Gauss places, from rest at `a`
+    inner : (N, s, s) response at the Gauss places per source density there, from rest at `a`
     """
     c, weight, collocation = gauss()
     h = b - a
@@ -301,9 +304,11 @@ def transfer(member: Member, a: Array, b: Array, mu: float = 0.0) -> tuple[Matri
     step[:, -1, n:] += weight
     area = member.area(places)
     phi = step[:, :, :n] * (d[:, :, None] / d[:, None, :])
-    load = step[:, :, n:] * d[:, :, None] * (-h[:, None] * area / d[:, -1:])[:, None, :]
+    force = (-h[:, None] * area / d[:, -1:])[:, None, :]
+    load = step[:, :, n:] * d[:, :, None] * force
+    inner = Z[:, :, 0, n:] * d[:, None, :1] * force
     stages = Z[:, :, 0, :n] / d[:, None, :]
-    return phi, places, weight * h[:, None] * area, stages, load
+    return phi, places, weight * h[:, None] * area, stages, load, inner
 
 
 def chain(member: Member, points: Any = (), mu: float = 0.0) -> Chain:
@@ -327,8 +332,8 @@ def chain(member: Member, points: Any = (), mu: float = 0.0) -> Chain:
         When the member is too long or a coefficient too rough to follow.
     """
     plain = _nodes(member, np.asarray(points, dtype=float).ravel(), mu)
-    phi, places, weights, stages, load = transfer(member, plain[:-1], plain[1:], mu)
-    x, parts = list(plain), [phi, places, weights, stages, load]
+    phi, places, weights, stages, load, inner = transfer(member, plain[:-1], plain[1:], mu)
+    x, parts = list(plain), [phi, places, weights, stages, load, inner]
     pins: dict[int, Pin] = {}
     n = member.kind.order
     middle = np.linspace(member.start, member.end, 41)[1:-1]
@@ -349,6 +354,7 @@ def chain(member: Member, points: Any = (), mu: float = 0.0) -> Chain:
             empty,
             np.zeros((STAGES, n)),
             np.zeros((n, STAGES)),
+            np.zeros((STAGES, STAGES)),
         )
         parts = [
             np.insert(_as(old, value), at, value, axis=0)
@@ -356,10 +362,10 @@ def chain(member: Member, points: Any = (), mu: float = 0.0) -> Chain:
         ]
         if pin is not None:
             pins[at] = pin
-    phi, places, weights, stages, load = parts
+    phi, places, weights, stages, load, inner = parts
     return Chain(
         member, np.array(x), phi * (scale / scale[:, None]), pins, places, weights,
-        stages * scale, load / scale[:, None], scale,
+        stages * scale, load / scale[:, None], inner, scale,
     )  # fmt: skip
 
 

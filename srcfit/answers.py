@@ -1,0 +1,173 @@
+"""What is asked of a problem, and the answers in the user's units.
+
+Every number reported is a linear question to the source and the unknowns: total, zones, single
+cells, lumped parts, nuisances, background, reactions. `ask` lines them up; `Asked` says where
+each stands, so that bands can treat all of them alike.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from srcfit.case.model import Case
+from srcfit.forward import Forward
+from srcfit.grid import overlap, spread
+from srcfit.member import Array
+from srcfit.problem import Questions
+from srcfit.units import factor
+
+CURRIE = 1.6448536269514722  # one-sided 5 % point of the normal distribution
+
+
+@dataclass(frozen=True)
+class Asked:
+    """The questions of a case and where each block of them stands.
+
+    Attributes
+    ----------
+    questions : Questions, q rows
+    blocks : mapping block name -> slice (total, zones, lumped, nuisances, background, reactions,
+        cells)
+    constant : (q,) known part (SI) added to each answer
+    factor, shift : (q,) user unit = (SI + shift) * factor
+    """
+
+    questions: Questions
+    blocks: Mapping[str, slice]
+    constant: Array
+    factor: Array
+    shift: Array
+
+
+def ask(forward: Forward) -> Asked:
+    """Line up every question of the case."""
+    case, grid = forward.case, forward.grid
+    m, k = forward.A.shape[1], forward.B.shape[1]
+    lumped = [i for i, c in enumerate(forward.columns) if c.kind == "lumped"]
+    nuisances = [i for i, c in enumerate(forward.columns) if c.kind == "nuisance"]
+    total_unit = per(case.source.total_unit, case.member.kind.total_unit)
+    density_unit = per(case.source.unit, case.member.kind.source_unit)
+    parts: list[tuple[str, Any, Any, Any, Any, Any]] = []
+    whole = np.zeros((1, k))
+    whole[0, lumped] = 1.0
+    parts.append(("total", grid.weights[None] * grid.free, whole, 0.0, total_unit, 0.0))
+    cells, columns = _zones(forward)
+    parts.append(("zones", cells, columns, 0.0, total_unit, 0.0))
+    parts.append(("lumped", np.zeros((len(lumped), m)), np.eye(k)[lumped], 0.0, total_unit, 0.0))
+    scale = [per(c.unit, c.si_unit, difference=not c.shift) for c in shown(forward, nuisances)]
+    shift = [c.shift for c in shown(forward, nuisances)]
+    none = np.zeros((len(nuisances), m))
+    parts.append(("nuisances", none, np.eye(k)[nuisances], 0.0, scale, shift))
+    level = (grid.weights * grid.free / max((grid.weights * grid.free).sum(), 1e-300))[None]
+    asked = int(case.source.background and not case.source.smooth)
+    parts.append(("background", level[:asked], np.zeros((asked, k)), 0.0, density_unit, 0.0))
+    units = [per(r.unit, r.unit) for r in forward.reactions]
+    rows = forward.reaction_cells, forward.reaction_columns
+    parts.append(("reactions", *rows, forward.reaction_known, units, 0.0))
+    parts.append(("cells", np.eye(m), np.zeros((m, k)), 0.0, density_unit, 0.0))
+    return _joined(parts)
+
+
+def _joined(parts: list[tuple[str, Any, Any, Any, Any, Any]]) -> Asked:
+    blocks, start = {}, 0
+    for name, cells, *_ in parts:
+        blocks[name] = slice(start, start + len(cells))
+        start += len(cells)
+    spread_out = [
+        np.concatenate([np.broadcast_to(np.asarray(p[i], float), len(p[1])) for p in parts])
+        for i in (3, 4, 5)
+    ]
+    cells = np.concatenate([p[1] for p in parts])
+    columns = np.concatenate([p[2] for p in parts])
+    return Asked(Questions(cells, columns), blocks, *spread_out)
+
+
+def shown(forward: Forward, which: Sequence[int]) -> list[Any]:
+    """Columns by number."""
+    return [forward.columns[i] for i in which]
+
+
+def per(unit: str, si_unit: str, *, difference: bool = True) -> float:
+    """How many of the user's unit make one SI unit."""
+    return 1 / factor(unit, si_unit, "unit", difference=difference)[0]
+
+
+def _zones(forward: Forward) -> tuple[Array, Array]:
+    """Rows of the zones over cells and columns; a lumped part counts where it stands."""
+    case, grid = forward.case, forward.grid
+    member, zones = case.member, case.source.zones
+    cells = np.zeros((len(zones), len(grid.free)))
+    columns = np.zeros((len(zones), forward.B.shape[1]))
+    for i, zone in enumerate(zones):
+        cells[i] = overlap(member, grid.edges, zone.start, zone.end) * grid.free
+        for j, part in enumerate(case.source.lumped):
+            assert part.at is not None
+            if part.width == 0:
+                inside = zone.start <= part.at < zone.end
+                columns[i, j] = inside or zone.end == part.at == member.end
+            else:
+                start, end = spread(part)
+                ends = np.array([member.start, member.end])
+                low, high = max(start, zone.start), min(end, zone.end)
+                share = overlap(member, ends, low, max(low, high))[0]
+                columns[i, j] = share / overlap(member, ends, start, end)[0]
+    return cells, columns
+
+
+def zone_sizes(case: Case) -> Array:
+    """Area-weighted size of each zone, (z,): a zone's mean density is its integral over this."""
+    ends = np.array([case.member.start, case.member.end])
+    sizes = [overlap(case.member, ends, z.start, z.end)[0] for z in case.source.zones]
+    return np.array(sizes, dtype=float)
+
+
+def peak(middles: Array, estimate: Array, lower: Array, upper: Array, free: NDArray[np.bool_]) -> (
+    dict[str, float] | None
+):  # fmt: skip
+    """Peak of the smooth part: largest |estimate|, interval [largest lower, largest upper].
+
+    Its places are all x whose upper bound reaches the largest lower bound. All in one unit;
+    None where there is no smooth part or no band.
+    """
+    if not free.any() or not np.isfinite(lower[free]).all():
+        return None
+    x, f = middles[free], estimate[free]
+    best = int(np.argmax(np.abs(f)))
+    turn = -1.0 if f[best] < 0 else 1.0
+    low, high = (lower, upper) if turn > 0 else (-upper, -lower)
+    low, high = low[free], high[free]
+    bound = sorted([turn * low.max(), turn * high.max()])
+    places = x[high >= low.max()]
+    return {
+        "value": float(f[best]),
+        "lower": float(bound[0]),
+        "upper": float(bound[1]),
+        "position": float(x[best]),
+        "position_lower": float(places.min()),
+        "position_upper": float(places.max()),
+    }
+
+
+def detection(name: str, value: float | None, sd: float | None) -> dict[str, Any]:
+    """Critical level and detection limit of one part, 5 % error of either kind.
+
+    Source: Currie (1968), Analytical Chemistry 40, 586; ISO 11929.
+    """
+    if value is None or sd is None:
+        return {"name": name, "critical": None, "limit": None, "detected": None}
+    critical = CURRIE * sd
+    return {
+        "name": name, "critical": critical, "limit": 2 * critical, "detected": value > critical,
+    }  # fmt: skip
+
+
+def verdict(probability: float, level: float) -> str:
+    """Word for the probability that a limit is exceeded."""
+    if probability >= level:
+        return "exceeded"
+    return "kept" if probability <= 1 - level else "undecided"

@@ -1,0 +1,254 @@
+"""Checks of a recovery, each a finding only where it matters.
+
+Every function takes plain numbers and gives a list of findings, empty when there is nothing to
+say. `recover` calls them in turn.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+
+import numpy as np
+
+from srcfit.balance import Balance
+from srcfit.errors import Finding
+from srcfit.forward import Forward
+from srcfit.member import Array
+
+SURE = 0.001  # probability below which a residual pattern is called more than chance
+DISAGREE = 30.0  # ratio of strengths between criteria that is worth a sentence
+TOLD = 0.5  # share of the answer that the readings should tell
+CLOSED = 1e-6  # relative gap of the balance that is rounding
+
+
+def noise(chi_square: float, dof: float, stated: bool) -> list[Finding]:
+    """Stated noise against the residuals (chi-square test)."""
+    if not stated or dof < 1:
+        return []
+    from scipy.special import chdtr, chdtrc
+
+    scale = float(np.sqrt(chi_square / dof))
+    if chdtrc(dof, chi_square) < SURE:
+        return [
+            Finding(
+                "noise-contradicted", "serious",
+                f"The residuals are {scale:.2g} times as large as the stated noise "
+                f"(chi-square {chi_square:.4g} for {dof:.3g} degrees of freedom): the noise is "
+                "larger, or the member, an end, a support or a sensor is not as described; "
+                "check those before trusting the intervals.",
+            )
+        ]  # fmt: skip
+    if chdtr(dof, chi_square) < SURE:
+        return [
+            Finding(
+                "noise-overstated", "caution",
+                f"The residuals are only {scale:.2g} times the stated noise (chi-square "
+                f"{chi_square:.4g} for {dof:.3g} degrees of freedom): the stated noise is too "
+                "large and the intervals wider than they need be.",
+            )
+        ]  # fmt: skip
+    return []
+
+
+def correlated(forward: Forward, standardised: Array) -> list[Finding]:
+    """Lag-1 correlation of the standardised residuals along the member, group by group."""
+    found = []
+    x = forward.readings.x[forward.rows]
+    for g, name in enumerate(forward.groups):
+        members = np.flatnonzero(forward.group == g)
+        members = members[np.argsort(x[members], kind="stable")]
+        e = standardised[members]
+        n = len(e)
+        if n < 10 or not e.any():
+            continue
+        lag = float((e[1:] * e[:-1]).sum() / (e**2).sum())
+        if lag > 3.1 / np.sqrt(n):  # one-sided, one in a thousand for independent noise
+            found.append(
+                Finding(
+                    "residuals-correlated", "caution",
+                    f"Neighbouring residuals of {name!r} resemble each other (lag-1 correlation "
+                    f"{lag:.2f} over {n} readings): independent noise is a poor description and "
+                    "the intervals are too narrow; state `correlation` for the group, or look for "
+                    "something the member lacks.",
+                )
+            )  # fmt: skip
+    return found
+
+
+def outliers(forward: Forward, standardised: Array) -> list[Finding]:
+    """Readings far outside the stated noise."""
+    n = len(standardised)
+    from scipy.special import ndtri
+
+    bound = max(float(-ndtri(SURE / max(n, 1))), 3.5)
+    far = np.flatnonzero(np.abs(standardised) > bound)
+    if not len(far):
+        return []
+    readings = forward.readings
+    lines = ", ".join(
+        f"{readings.file[r]} line {readings.line[r]}" for r in forward.rows[far][:8]
+    )
+    more = f" and {len(far) - 8} more" if len(far) > 8 else ""
+    return [
+        Finding(
+            "outlier", "caution",
+            f"{len(far)} of {n} readings lie more than {bound:.1f} standard deviations from the "
+            f"fit ({lines}{more}): look at them and exclude what is not a reading.",
+        )
+    ]  # fmt: skip
+
+
+def edge(index: int, count: int, name: str) -> list[Finding]:
+    """The chosen strength at the end of its ladder."""
+    if 0 < index < count - 1:
+        return []
+    which = "weak" if index == 0 else "strong"
+    return [
+        Finding(
+            "ladder-edge", "caution",
+            f"The strength chosen by {name} stands at the {which} end of its ladder: the readings "
+            "call for more or less smoothing than was tried, so look at the noise and the source "
+            "unit.",
+        )
+    ]  # fmt: skip
+
+
+def disagreement(values: Mapping[str, float | None]) -> list[Finding]:
+    """Criteria whose strengths lie far apart."""
+    known = {name: v for name, v in values.items() if v is not None and v > 0}
+    if len(known) < 2:
+        return []
+    low, high = min(known, key=known.__getitem__), max(known, key=known.__getitem__)
+    ratio = known[high] / known[low]
+    if ratio <= DISAGREE:
+        return []
+    return [
+        Finding(
+            "criteria-disagree", "note",
+            f"The criteria disagree about the strength by a factor of {ratio:.2g} ({low} weakest, "
+            f"{high} strongest; more than {DISAGREE:g}): one single strength would be hard to "
+            "justify here.",
+        )
+    ]  # fmt: skip
+
+
+def told(names: Sequence[str], shares: Sequence[float | None]) -> list[Finding]:
+    """Zones whose answer comes mainly from what was assumed beforehand."""
+    weak = [
+        f"{name} ({share:.0%})"
+        for name, share in zip(names, shares, strict=True)
+        if share is not None and share < TOLD
+    ]
+    if not weak:
+        return []
+    return [
+        Finding(
+            "zone-told-by-prior", "caution",
+            "The readings tell less than half of the answer for "
+            + ", ".join(weak)
+            + ": it rests mainly on smoothness and the mean level; more readings there, or less "
+            "noise, would change that.",
+        )
+    ]  # fmt: skip
+
+
+def inseparable(forward: Forward, groups: Sequence[Sequence[str]]) -> list[Finding]:
+    """Unknowns that the readings cannot tell apart, by name."""
+    return [
+        Finding(
+            "inseparable", "serious",
+            "The readings cannot tell apart " + _listed(names) + ": only a combination of them is "
+            "determined, so every number that depends on them is left empty; state one of them, "
+            "declare where there is no source (`zero`), or add a reading that sees them "
+            "differently.",
+        )
+        for names in groups
+    ]  # fmt: skip
+
+
+def _listed(names: Sequence[str]) -> str:
+    words = list(names)
+    return words[0] if len(words) == 1 else ", ".join(words[:-1]) + " and " + words[-1]
+
+
+def singular(forward: Forward) -> list[Finding]:
+    """The operator has null modes."""
+    if forward.balance is None:
+        return []
+    order4 = forward.case.member.kind.order == 4
+    how = "move as a rigid body" if order4 else "drift to any level"
+    return [
+        Finding(
+            "singular-member", "caution",
+            f"Nothing holds the member, which can {how}: the source was taken as balanced (its "
+            "total is zero), and the level of the response was fitted as unknown.",
+        )
+    ]  # fmt: skip
+
+
+def balanced(result: Balance, unit: str, scale: float) -> list[Finding]:
+    """Equilibrium of the recovered source."""
+    if result.gap <= CLOSED:
+        return []
+    return [
+        Finding(
+            "balance", "serious",
+            f"The balance does not close: source {result.source * scale:.6g} {unit}, reactions "
+            f"and end flows {result.reactions * scale:.6g} {unit}, foundation or loss "
+            f"{result.loss * scale:.6g} {unit}.",
+        )
+    ]  # fmt: skip
+
+
+def exclusions(forward: Forward) -> list[Finding]:
+    """How many readings were left out, and why."""
+    reasons: dict[str, int] = {}
+    for used, reason in zip(forward.readings.used, forward.readings.reason, strict=True):
+        if not used:
+            reasons[reason] = reasons.get(reason, 0) + 1
+    if not reasons:
+        return []
+    total = sum(reasons.values())
+    listed = "; ".join(f"{count} × {reason}" for reason, count in reasons.items())
+    return [
+        Finding("excluded", "note", f"{total} readings were left out: {listed}; see readings.csv.")
+    ]
+
+
+def few(n: int, unknown: int) -> list[Finding]:
+    """Too few readings for intervals."""
+    if n - unknown >= 3:
+        return []
+    return [
+        Finding(
+            "few-readings", "serious",
+            f"{n} readings for {unknown} unpenalised unknowns leave fewer than three to judge the "
+            "fit by: the intervals are left empty; add readings.",
+        )
+    ]  # fmt: skip
+
+
+def asymmetric(name: str, ratio: float) -> list[Finding]:
+    """A property whose effect is not linear over its own uncertainty."""
+    if ratio <= 0.3:
+        return []
+    return [
+        Finding(
+            "property-not-linear", "caution",
+            f"The effect of the uncertainty of {name} bends by {ratio:.0%} over one standard "
+            "deviation: its share of the intervals is rough; try the case at both ends of it.",
+        )
+    ]  # fmt: skip
+
+
+def property_share(name: str, share: float) -> list[Finding]:
+    """A property that dominates the uncertainty of the total."""
+    if share <= 0.5:
+        return []
+    return [
+        Finding(
+            "property-dominates", "caution",
+            f"{share:.0%} of the variance of the total comes from the uncertainty of {name}: "
+            "knowing it better helps more than better readings.",
+        )
+    ]  # fmt: skip
