@@ -83,8 +83,8 @@ def describe_source(recovery: Recovery) -> str:
             f" The smooth part is largest near {at} {unit(recovery, 'position')}: "
             f"{brief(peak.get('value'))} {u}"
         )
-        ends = brief(peak.get("lower")), brief(peak.get("upper"))
-        text += f", between {ends[0]} and {ends[1]} {u}." if all(ends) else "."
+        low, high = brief(peak.get("lower")), brief(peak.get("upper"))
+        text += f", between {low} and {high} {u}." if low and high else "."
     elif len(recovery.source):
         values = numbers(recovery.source, "estimate")
         text += f" Densities run from {brief(_least(values))} to {brief(_most(values))}."

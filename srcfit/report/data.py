@@ -86,9 +86,11 @@ def _source(recovery: Recovery) -> dict[str, Any]:
         "lower": _list(numbers(frame, "lower")),
         "upper": _list(numbers(frame, "upper")),
         "zones": [
-            {"name": clean(n), "from": _six(a), "to": _six(b)}
-            for n, a, b in zip(
-                texts(zones, "name"), numbers(zones, "from"), numbers(zones, "to"), strict=True
+            {"name": clean(n), "from": _six(a), "to": _six(b), "mean": _six(m)}
+            for n, a, b, m in zip(
+                texts(zones, "name"),
+                *(numbers(zones, k) for k in ("from", "to", "mean")),
+                strict=True,
             )
         ],
         "lumped": [row for row in lumped if row["at"] is not None],
@@ -100,6 +102,7 @@ def _panel(
     recovery: Recovery, kind: str, unit_text: str, kept: NDArray[np.int64]
 ) -> dict[str, Any]:
     frame = recovery.readings
+    used = flags(frame)
     kinds, units, x = texts(frame, "kind"), texts(frame, "unit"), numbers(frame, "x")
     rows = np.array(
         [i for i in kept if (kinds[i], units[i]) == (kind, unit_text) and np.isfinite(x[i])],
@@ -108,7 +111,13 @@ def _panel(
     rows = rows[np.argsort(x[rows], kind="stable")]
     curve = fit_curve(recovery, kind, unit_text)
     lines, groups = texts(frame, "line"), texts(frame, "group")
+    off = [
+        (x[i], v)
+        for i, v in enumerate(numbers(frame, "value"))
+        if not used[i] and (kinds[i], units[i]) == (kind, unit_text) and np.isfinite(x[i] + v)
+    ]
     return {
+        "off": [[_six(a), _six(b)] for a, b in off[:READINGS]],
         "kind": clean(kind), "unit": clean(pretty(unit_text)), "rows": [int(i) for i in rows],
         "x": _list(x[rows]), "line": [lines[i] for i in rows],
         "group": [clean(groups[i]) for i in rows],
@@ -140,7 +149,7 @@ def _ladder(recovery: Recovery, kept: NDArray[np.int64]) -> dict[str, Any]:
         "labels": [brief(v) for v in strengths[pick]],
         "totals": [brief(v, 4) for v in np.real(pictures.totals)[pick]],
         "cells": _f32(np.real(pictures.rungs)[pick]) if len(pick) else "",
-        "fits": _f32(fits[np.ix_(pick, columns)]) if complete and columns else "",
+        "fits": _f32(fits[pick][:, columns]) if complete and columns else "",
         "rows": [int(i) for i in kept if int(i) in row_of] if complete else [],
         "curve": {"strength": _list(strength[good]), "a": _list(np.log10(a[good])),
                   "b": _list(np.log10(b[good]))},
@@ -172,7 +181,7 @@ def _influence(recovery: Recovery, kept: NDArray[np.int64]) -> dict[str, Any]:
     step = np.unique(np.linspace(0, len(x) - 1, min(PLACES, len(x))).astype(int))
     if not rows or not lines.size:
         return {"x": [], "rows": [], "scale": [], "lines": "", "units": []}
-    picked = lines[np.ix_([row_of[i] for i in rows], step)]
+    picked = lines[[row_of[i] for i in rows]][:, step]
     top = np.abs(picked).max(axis=1)
     top = np.where(top > 0, top, 1.0)
     small = np.round(picked / top[:, None] * 32767).astype("<i2")

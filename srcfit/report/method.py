@@ -33,8 +33,8 @@ STEPS = (
         "The cautious band",
         "An estimate that smooths is biased where the source is rough, and its formal spread does "
         "not say so [8, 9]. The interval is therefore taken from a cautious prior: as if the "
-        "source might vary by at least half its own mean within a tenth of the member, and jump at "
-        "the edges that were drawn, whether or not they are exact. The distance between the "
+        "source might vary by at least half its own mean within a tenth of the member, and jump "
+        "at the edges that were drawn, whether or not they are exact. The distance between the "
         "estimate and the cautious estimates is added to it in quadrature, and so are the stated "
         "uncertainties of the member's properties.",
     ),
@@ -53,10 +53,10 @@ STEPS = (
 SOURCES = (
     "A. N. Tikhonov, Solution of incorrectly formulated problems and the regularization method, "
     "Soviet Mathematics Doklady 4 (1963) 1035–1038.",
-    "P. C. Hansen, Analysis of discrete ill-posed problems by means of the L-curve, SIAM Review 34 "
-    "(1992) 561–580.",
-    "G. H. Golub, M. Heath, G. Wahba, Generalized cross-validation as a method for choosing a good "
-    "ridge parameter, Technometrics 21 (1979) 215–223.",
+    "P. C. Hansen, Analysis of discrete ill-posed problems by means of the L-curve, SIAM Review "
+    "34 (1992) 561–580.",
+    "G. H. Golub, M. Heath, G. Wahba, Generalized cross-validation as a method for choosing a "
+    "good ridge parameter, Technometrics 21 (1979) 215–223.",
     "M. A. Lukas, Robust generalized cross-validation for choosing the regularization parameter, "
     "Inverse Problems 22 (2006) 1883–1902.",
     "V. A. Morozov, On the solution of functional equations by the method of regularization, "

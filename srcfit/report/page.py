@@ -14,6 +14,7 @@ from srcfit.recovery import Recovery
 from srcfit.report import tables
 from srcfit.report.data import as_json, chart_data
 from srcfit.report.html import clean, name, safe
+from srcfit.report.numbers import shown
 from srcfit.report.sections import SECTIONS, answer, findings
 from srcfit.report.svg import inline
 
@@ -101,13 +102,14 @@ def _figure(key: str, drawn: Mapping[str, Drawn]) -> str:
     """One figure: the drawing, the place of the live chart, the text alternative, downloads."""
     picture = drawn[key]
     bitmap = base64.b64encode(picture.png).decode("ascii")
+    vector = inline(picture.svg, key, picture.text)
     live = f'<div class="live" id="live-{LIVE[key]}" hidden></div>' if key in LIVE else ""
     kind = "still replaced" if key in LIVE else "still"
     return (
         f'<figure id="figure-{key}">{live}'
         f'<div class="{kind}"><div class="scroll" tabindex="0" role="region" '
-        f'aria-label="Figure: {CAPTIONS[key]}">{inline(picture.svg, key, picture.text)}</div></div>'
-        f"<figcaption>{CAPTIONS[key]} {safe(clean(picture.text))} "
+        f'aria-label="Figure: {CAPTIONS[key]}">{vector}</div></div>'
+        f"<figcaption>{CAPTIONS[key]} {shown(clean(picture.text))} "
         f'<span class="get"><a download="{key}.png" href="data:image/png;base64,{bitmap}">'
         f"PNG<span class='unseen'> of the figure {key}</span></a></span></figcaption></figure>"
     )

@@ -46,14 +46,13 @@ def total_sentence(recovery: Recovery) -> str:
             "findings say why and what would help."
         )
     known = " beyond the known parts" if recovery.case.source.known else ""
-    return (
-        f"The total {word} on this {safe(kind)} {shown(where)}{known} is "
-        f"<strong>{shown(amount)}</strong>: with {percent(recovery)} confidence it lies in "
-        f"{shown(interval(total, T))}."
-        if interval(total) != NO_INTERVAL
-        else f"The total {word} on this {safe(kind)} {shown(where)}{known} is "
-        f"<strong>{shown(amount)}</strong>; there is no interval for it."
-    )
+    lead = f"The total {word} on this {safe(kind)} {shown(where)}{known} is "
+    lead += f"<strong>{shown(amount)}</strong>"
+    ends = interval(total, T)
+    if ends == NO_INTERVAL:
+        return f"{lead}; there is no interval for it."
+    low, high = ends.split(" to ", 1)
+    return f"{lead}: with {percent(recovery)} confidence between {shown(low)} and {shown(high)}."
 
 
 def _span(zones: Sequence[Mapping[str, Any]]) -> tuple[float, float]:
@@ -172,8 +171,8 @@ def strength(recovery: Recovery) -> str:
     if choose == "averaged":
         lead = (
             "The answer is <em>averaged</em>: no single strength is picked, but the estimates of "
-            "all strengths and of several families of roughness are averaged, each weighted by its "
-            "evidence, that is by how probable it makes the readings."
+            "all strengths and of several families of roughness are averaged, each weighted by "
+            "its evidence, that is by how probable it makes the readings."
         )
     else:
         text = f"The strength {value} was chosen by {choose}" if value else f"Chosen by {choose}"

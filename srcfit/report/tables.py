@@ -177,12 +177,11 @@ def criteria(recovery: Recovery) -> str:
     found = (recovery.facts.get("strength") or {}).get("choices") or {}
     values = choices_of(recovery)
     rows: list[Row] = [
-        [safe(k), num(values.get(k), brief(values.get(k)) or "no choice"),
-         "chosen" if k == chosen else ""]
+        [safe(k) + (" (in use)" if k == chosen else ""),
+         num(values.get(k), brief(values.get(k)) or "no choice")]
         for k in map(str, found)
     ]  # fmt: skip
-    heads = ["criterion", with_unit("strength", unit(recovery, "strength")), ""]
-    heads[2] = "in use"
+    heads = ["criterion", with_unit("strength", unit(recovery, "strength"))]
     return table("table-criteria", "Choices of the criteria", heads, rows)
 
 
@@ -197,8 +196,9 @@ def influence(recovery: Recovery) -> str:
     rows: list[Row] = []
     for k, i in enumerate(recovery.pictures.influence_of):
         top = int(np.argmax(np.abs(lines[k])))
-        rows.append([safe(line[i]), safe(kind[i]), num(x[i]), num(place[top]),
-                     num(lines[k][top], digits=3), safe(influence_unit(recovery, kind[i]))])  # fmt: skip
+        there = num(lines[k][top], digits=3)
+        row: Row = [safe(line[i]), safe(kind[i]), num(x[i]), num(place[top]), there]
+        rows.append([*row, safe(influence_unit(recovery, kind[i]))])
     P = unit(recovery, "position")
     heads = ["line", "kind", with_unit("x", P), with_unit("feels most at", P), "there", "SI unit"]
     return table("table-influence", "Where each reading feels the source most", heads, rows,
@@ -207,11 +207,11 @@ def influence(recovery: Recovery) -> str:
 
 def noise(recovery: Recovery) -> str:
     """Noise of each group, stated or estimated."""
-    rows: list[Row] = [
-        [name(g.get("group")), safe(g.get("kind")), num(g.get("sd"), digits=2),
-         safe(pretty(str(g.get("unit") or ""))), "estimated from the readings" if g.get("estimated") else "stated"]
-        for g in (recovery.facts.get("noise") or {}).get("groups") or []
-    ]  # fmt: skip
+    rows: list[Row] = []
+    for g in (recovery.facts.get("noise") or {}).get("groups") or []:
+        row: Row = [name(g.get("group")), safe(g.get("kind")), num(g.get("sd"), digits=2)]
+        known = "estimated from the readings" if g.get("estimated") else "stated"
+        rows.append([*row, safe(pretty(str(g.get("unit") or ""))), known])
     heads = ["group", "kind", "sd of one reading", "unit", "how known"]
     return table("table-noise", "Noise", heads, rows)
 
