@@ -18,7 +18,8 @@ ROOT = Path(srcfit.__file__).parent
 ORDER = (
     "errors", "unit_names", "units", "member", "members", "case.model", "readings.model",
     "problem", "recovery", "case", "readings", "state", "influence", "kernel", "eigencount",
-    "eigen", "sensors", "grid", "forward", "priors", "solvers", "criteria", "bands", "answers", "balance", "checks",
+    "eigen", "sensors", "grid", "forward", "priors", "solvers", "criteria", "bands", "answers",
+    "balance", "checks",
     "rounding", "frames", "output", "captions", "drawing", "plots", "report", "recover",
     "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "start",
     "plan", "rehearse", "series", "compare", "sklearn", "cli", "__main__",
