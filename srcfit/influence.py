@@ -388,8 +388,8 @@ def interval_integrals(lines: Influence, density: Matrix | None = None) -> Matri
     both, right_of, left_of = lines.both, lines.right_of[:-1], lines.left_of[1:]
     ahead = np.einsum("kd,kdh->kh", rows, both.W[:-1])
     back = np.einsum("kd,kdg,kgh->kh", rows, both.Y[:-1], both.to_left)
-    found = (right_of @ ahead[:, :, None] + left_of @ back[:, :, None])[:, :, 0]
-    return found.T
+    found: Matrix = (right_of @ ahead[:, :, None] + left_of @ back[:, :, None])[:, :, 0].T
+    return found
 
 
 def _surely_held(member: Member) -> bool:
