@@ -55,7 +55,8 @@ class Prediction:
 def predict(case: Case, readings: Readings, trial: Trial) -> Prediction:
     """Predict the used readings of a case under a source, what the case knows included.
 
-    Unknown nuisances are taken at their guess. The balance is a check of its own: reactions are
+    Unknown nuisances are taken at their guess; the free motion of a member that nothing holds is
+    fitted to the readings. The balance is a check of its own: reactions are
     read from the state at supports and ends, what the member takes up along it is integrated from
     the response.
 
@@ -69,12 +70,12 @@ def predict(case: Case, readings: Readings, trial: Trial) -> Prediction:
     forward = build(bare, probed)
     f = _densities(forward, parts)
     _check_balance(forward, f, parts)
-    guess = np.array([c.guess for c in forward.columns])
+    n = int(readings.used.sum())
+    guess = _guess(forward, forward.y - forward.A @ f, n)
     residual = forward.y - forward.A @ f - forward.B @ guess
     reactions = (
         forward.reaction_known + forward.reaction_cells @ f + forward.reaction_columns @ guess
     )
-    n = int(readings.used.sum())
     held = complex(weights @ -residual[n:])
     spread = readings.sd[forward.rows[:n]]
     misfit = float(np.sqrt(np.mean(np.abs(residual[:n] / spread) ** 2)))
@@ -84,7 +85,7 @@ def predict(case: Case, readings: Readings, trial: Trial) -> Prediction:
         _reactions(case, forward, reactions),
         _balance(case, forward, reactions, held, parts),
         misfit if math.isfinite(misfit) else None,
-        _notes(forward, trial),
+        _notes(case, forward, trial),
     )
 
 
@@ -136,6 +137,18 @@ def _densities(forward: Forward, parts: tuple[Known, ...]) -> Array:
     for part in parts:
         f += np.where((middle > part.start) & (middle < part.end), part.value, 0.0)
     return f
+
+
+def _guess(forward: Forward, left: Matrix, n: int) -> Matrix:
+    """Amounts of the unknown columns: guesses, and a free motion fitted to the n readings."""
+    guess = np.array([c.guess for c in forward.columns], dtype=left.dtype)
+    free = np.array([c.kind == "null" for c in forward.columns], dtype=bool)
+    if free.any():
+        weight = 1 / np.where(np.isfinite(forward.sd[:n]), forward.sd[:n], 1.0)
+        rest = (left - forward.B @ guess)[:n] * weight
+        columns = forward.B[:n, free] * weight[:, None]
+        guess[free] = np.linalg.lstsq(columns, rest, rcond=None)[0]
+    return guess
 
 
 def _check_balance(forward: Forward, f: Array, parts: tuple[Known, ...]) -> None:
@@ -216,16 +229,16 @@ def _frame(case: Case, readings: Readings, rows: Any, residual: Matrix) -> pd.Da
     return pd.DataFrame(found)
 
 
-def _notes(forward: Forward, trial: Trial) -> tuple[str, ...]:
+def _notes(case: Case, forward: Forward, trial: Trial) -> tuple[str, ...]:
     """What the reader of a prediction must know."""
     notes = []
     nuisances = [c.name for c in forward.columns if c.kind == "nuisance"]
     if nuisances:
         notes.append(f"Unknown amounts are taken at their guess: {', '.join(nuisances)}.")
     if any(c.kind == "null" for c in forward.columns):
-        notes.append("Nothing holds the member: the response is told up to its free motion.")
-    if forward.case.source.known or trial.parts:
-        notes.append("Parts that overlap, and what the case states as known, add up.")
+        notes.append("Nothing holds the member: its free motion is fitted to the readings.")
+    if case.source.known:
+        notes.append("What the case states as known is added to the source.")
     if trial.unread:
         notes.append(f"Columns of the source that were not used: {', '.join(trial.unread)}.")
     return tuple(notes)
@@ -269,5 +282,7 @@ def _balance_text(found: Prediction) -> str:
     unit = found.case.source.total_unit
     words = {"source": "source", "reactions": "ends and supports", "along": "along the member",
              "difference": "difference"}  # fmt: skip
-    rows = [(words[k], f"{brief(v, 6)} {unit}") for k, v in found.balance.items()]
+    size = max(abs(v) for v in found.balance.values())
+    shares = {k: v if abs(v) > 1e-9 * size else 0.0 for k, v in found.balance.items()}
+    rows = [(words[k], f"{brief(v, 6)} {unit}") for k, v in shares.items()]
     return table(("", ""), rows, "lr")
