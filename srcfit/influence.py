@@ -301,7 +301,8 @@ def deflect(line: Chain, f: Matrix, lumped: Sequence[tuple[int, Any]] = ()) -> M
     """
     unit = np.zeros(line.order)
     unit[0] = 1.0
-    terms = [Term(node, strength * unit) for node, strength in lumped]
+    tips = [(node, tip * f[interval, interval]) for tip, node, interval in _tips(line)]
+    terms = [Term(node, strength * unit) for node, strength in [*lumped, *tips]]
     # the source of an interval, from rest at its left node, is a jump at its right node
     jumps = np.einsum("kns,ks->kn", line.load, f) * line.scale
     live = np.flatnonzero(np.abs(jumps).max(axis=1))
@@ -389,7 +390,17 @@ def interval_integrals(lines: Influence, density: Matrix | None = None) -> Matri
     ahead = np.einsum("kd,kdh->kh", rows, both.W[:-1])
     back = np.einsum("kd,kdg,kgh->kh", rows, both.Y[:-1], both.to_left)
     found: Matrix = (right_of @ ahead[:, :, None] + left_of @ back[:, :, None])[:, :, 0].T
+    # what lies between a singular end and the chain acts at its first or last node
+    for tip, node, interval in _tips(lines.chain):
+        size = 1.0 if density is None else density[interval, interval]
+        found[:, interval] += tip * size * at_nodes(lines, np.array([node]))[:, 0]
     return found
+
+
+def _tips(line: Chain) -> list[tuple[float, int, int]]:
+    """(area weight, node, interval) of the stretches beside singular ends."""
+    both = ((line.tips[0], 0, 0), (line.tips[1], len(line.x) - 1, -1))
+    return [item for item in both if item[0] > 0]
 
 
 def _surely_held(member: Member) -> bool:

@@ -54,6 +54,7 @@ class Chain:
     load : (N - 1, n, s) state at the right node per source density at the Gauss places
     inner : (N - 1, s, s) response at the Gauss places per source density there, from rest
     scale : (n,) natural size of each state component
+    tips : area weight between a singular end and the first or last node
     """
 
     member: Member
@@ -66,6 +67,7 @@ class Chain:
     load: Matrix
     inner: Matrix
     scale: Array
+    tips: tuple[float, float] = (0.0, 0.0)
 
     @property
     def order(self) -> int:
@@ -366,8 +368,16 @@ def chain(member: Member, points: Any = (), mu: float = 0.0) -> Chain:
     phi, places, weights, stages, load, inner = parts
     return Chain(
         member, np.array(x), phi * (scale / scale[:, None]), pins, places, weights,
-        stages * scale, load / scale[:, None], inner, scale,
+        stages * scale, load / scale[:, None], inner, scale, _tips(member, plain[0], plain[-1]),
     )  # fmt: skip
+
+
+def _tips(member: Member, first: float, last: float) -> tuple[float, float]:
+    """Area weight between the ends and the chain (nothing unless an end is singular)."""
+    c, b, _ = gauss()
+    gaps = ((member.start, first - member.start), (last, member.end - last))
+    left, right = (float(gap * (b * member.area(at + gap * c)).sum()) for at, gap in gaps)
+    return left, right
 
 
 def _as(old: Matrix, new: Matrix) -> Matrix:
