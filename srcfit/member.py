@@ -127,7 +127,11 @@ class Uncertainty:
 
 @dataclass(frozen=True)
 class CoefficientSpec:
-    """One key of a member table: its SI unit, and what is assumed when it is left out."""
+    """One key of a member table: its SI unit, and what is assumed when it is left out.
+
+    Required ones and those marked `positive` must be positive, others not negative unless
+    `signed`; `to_ambient` marks a loss that draws the response to the ambient.
+    """
 
     key: str
     unit: str
@@ -135,6 +139,9 @@ class CoefficientSpec:
     default: float | None = None
     signed: bool = False
     meaning: str = ""
+    positive: bool = False
+    at_most: float | None = None
+    to_ambient: bool = False
 
 
 @dataclass(frozen=True)

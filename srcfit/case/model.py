@@ -34,7 +34,10 @@ class Baseline:
 
 @dataclass(frozen=True)
 class Correction:
-    """Less `per` * (value of `column` minus its baseline value)."""
+    """Less `per` * (value of `column` minus its baseline value).
+
+    `per` is SI: of the sensor's unit per coherent SI unit of `unit` (per K for temperatures).
+    """
 
     column: str
     unit: str
@@ -54,8 +57,9 @@ class ColumnSpec:
     """One measured quantity: a `[[readings.column]]` table.
 
     `sd` is in SI of the sensor kind (a difference), None with `sd_column` or `estimate_sd`.
-    `range` and `exclude` are SI. `sign` is +1 or -1 from `positive`. `where_line` is the line of
-    the case file on which the table begins, for messages.
+    `range` (of the readings as they stand in the file, before sign and baseline) and `exclude`
+    (places on the member) are SI. `sign` is +1 or -1 from `positive`. `key` and `line` say where
+    the table stands in the case file (line 0: there is no file), for messages.
     """
 
     columns: tuple[str, ...]
@@ -84,6 +88,7 @@ class ColumnSpec:
     baseline: Baseline | None = None
     correction: Correction | None = None
     key: str = "readings.column[1]"
+    line: int = 0
 
 
 @dataclass(frozen=True)
@@ -117,6 +122,7 @@ class TableSpec:
     where: Mapping[str, str] = field(default_factory=dict)
     time: TimeSpec | None = None
     key: str = "readings"
+    line: int = 0
 
 
 @dataclass(frozen=True)
@@ -211,6 +217,8 @@ class Case:
         The `[member]` table as written, to be printed back.
     tables : tuple of TableSpec
     source, strength
+    files : tuple of Path
+        Every file that was read to make the case: the case file and those of coefficients.
     """
 
     title: str
@@ -221,6 +229,7 @@ class Case:
     tables: tuple[TableSpec, ...]
     source: SourceSpec
     strength: StrengthSpec
+    files: tuple[Path, ...] = ()
 
     @property
     def columns(self) -> tuple[ColumnSpec, ...]:

@@ -12,7 +12,9 @@ AQUIFER = MemberKind(
         CoefficientSpec(
             "transmissivity", "m^2/s", required=True, meaning="conductivity times thickness"
         ),
-        CoefficientSpec("leakage", "1/s", meaning="inverse resistance of the leaky layer"),
+        CoefficientSpec(
+            "leakage", "1/s", to_ambient=True, meaning="inverse resistance of the leaky layer"
+        ),
         CoefficientSpec("storage", "1", meaning="storativity, for driven aquifers"),
     ),
     operator={"p": ("transmissivity",), "q": ("leakage",), "r": ("storage",)},

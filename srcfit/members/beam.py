@@ -14,7 +14,9 @@ BEAM = MemberKind(
         ),
         CoefficientSpec("foundation", "N/m^2", meaning="bedding per length; none if left out"),
         CoefficientSpec("tension", "N", signed=True, meaning="axial force; negative: compression"),
-        CoefficientSpec("shear_stiffness", "N", meaning="rigid in shear if left out"),
+        CoefficientSpec(
+            "shear_stiffness", "N", positive=True, meaning="rigid in shear if left out"
+        ),
         CoefficientSpec("mass", "kg/m", meaning="mass per length, for driven beams and modes"),
     ),
     operator={

@@ -13,7 +13,12 @@ COLUMN = MemberKind(
             "diffusivity", "m^2/s", required=True, meaning="effective diffusivity in the pores"
         ),
         CoefficientSpec(
-            "porosity", "1", default=1.0, meaning="volume of pores per bulk volume; 1 if left out"
+            "porosity",
+            "1",
+            default=1.0,
+            positive=True,
+            at_most=1.0,
+            meaning="volume of pores per bulk volume; 1 if left out",
         ),
         CoefficientSpec("decay", "1/s", meaning="decay constant; none if left out"),
     ),

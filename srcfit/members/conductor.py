@@ -13,7 +13,7 @@ CONDUCTOR = MemberKind(
             "conductance", "W*m/K", required=True, meaning="conductivity times section area, k*A"
         ),
         CoefficientSpec(
-            "loss", "W/(m*K)", meaning="heat lost per length and kelvin above ambient"
+            "loss", "W/(m*K)", to_ambient=True, meaning="per length and kelvin above ambient"
         ),
         CoefficientSpec("heat_capacity", "J/(m*K)", meaning="per length, for driven conductors"),
     ),

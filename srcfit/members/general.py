@@ -14,7 +14,7 @@ GENERAL_2 = MemberKind(
     coefficients=(
         CoefficientSpec("p", "1", required=True, meaning="number, steps or expression in x"),
         CoefficientSpec("q", "1", signed=True, meaning="0 if left out"),
-        CoefficientSpec("r", "1", meaning="weight of the eigenvalue problem; 1 if left out"),
+        CoefficientSpec("r", "1", positive=True, meaning="weight of the modes; 1 if left out"),
     ),
     operator={"p": ("p",), "q": ("q",), "r": ("r",)},
     response="response",
@@ -61,7 +61,7 @@ GENERAL_4 = replace(
         CoefficientSpec("p2", "1", required=True, meaning="number, steps or expression in x"),
         CoefficientSpec("p1", "1", signed=True, meaning="0 if left out"),
         CoefficientSpec("p0", "1", signed=True, meaning="0 if left out"),
-        CoefficientSpec("r", "1", meaning="weight of the eigenvalue problem; 1 if left out"),
+        CoefficientSpec("r", "1", positive=True, meaning="weight of the modes; 1 if left out"),
     ),
     operator={"p2": ("p2",), "p1": ("p1",), "p0": ("p0",), "r": ("r",)},
     sensors=(

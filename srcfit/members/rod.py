@@ -1,4 +1,4 @@
-"""Rod: axial displacement under load along its axis, perhaps held by the ground along its shaft."""
+"""Rod: axial displacement under load along its axis, perhaps bedded along its shaft."""
 
 from srcfit.member import CoefficientSpec, MemberKind, SensorSpec
 from srcfit.members.common import DIRECTION_AXIAL, GENERAL, NOT_A_RATING

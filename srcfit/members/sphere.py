@@ -10,7 +10,9 @@ SPHERE = MemberKind(
     geometry="sphere",
     coefficients=(
         CoefficientSpec("conductivity", "W/(m*K)", required=True, meaning="thermal conductivity"),
-        CoefficientSpec("loss", "W/(m^3*K)", meaning="heat lost per volume and kelvin"),
+        CoefficientSpec(
+            "loss", "W/(m^3*K)", to_ambient=True, meaning="per volume and kelvin above ambient"
+        ),
         CoefficientSpec("heat_capacity", "J/(m^3*K)", meaning="per volume, for driven spheres"),
     ),
     operator={"p": ("conductivity",), "q": ("loss",), "r": ("heat_capacity",)},
