@@ -103,7 +103,8 @@ def _end_basis(member: Member, which: str) -> Matrix:
     if n == 2 and end.axis:
         return np.array([[1.0], [side * _tip(member, which)]])
     if n == 2:
-        k = end.response.stiffness
+        place = np.array(member.start if which == "left" else member.end)
+        k = end.response.stiffness * float(member.area(place))  # radial kinds: per area
         return np.array([[0.0], [1.0]]) if np.isinf(k) else np.array([[1.0], [side * k * loss]])
     basis = np.zeros((4, 2), dtype=type(loss))
     k, c = end.response.stiffness, end.rotation.stiffness

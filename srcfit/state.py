@@ -265,7 +265,8 @@ def _point(member: Member, what: str, item: Any) -> tuple[Matrix | None, Pin | N
     if what == "support":
         if np.isinf(item.restraint.stiffness):
             return None, Pin(unit[0], unit[-1])
-        return unit + item.restraint.stiffness * loss * np.outer(unit[-1], unit[0]), None
+        k = item.restraint.stiffness * loss * float(member.area(np.array(item.at)))
+        return unit + k * np.outer(unit[-1], unit[0]), None
     if what == "hinge":
         if item.spring == 0:
             return None, Pin(unit[2], unit[1])
