@@ -149,7 +149,7 @@ def sphere_rise():
 
 def mazure():
     # T 100 m2/d, c 500 d; 35 leakage lengths stand for the half plane
-    length = 35 * np.sqrt(100.0 * 500.0)
+    length = float(35 * np.sqrt(100.0 * 500.0))
     member = srcfit.make_member({
         "kind": "aquifer", "length": f"{length!r} m", "transmissivity": f"{100 / DAY!r} m^2/s",
         "leakage": f"{1 / (500 * DAY)!r} 1/s", "ambient": "0 m",

@@ -64,15 +64,11 @@ class Bent:
 
     def derivative(self, x, order):
         """A derivative of the deflection at x: right limit, at the right end the left."""
-        out = np.empty(np.shape(x), dtype=self.amounts.dtype)
-        x = np.asarray(x, dtype=float)
         element = np.clip(np.searchsorted(self.nodes, x, side="right") - 1, 0, len(self.nodes) - 2)
-        for i, e in np.ndenumerate(element):
-            a, b = self.nodes[e : e + 2]
-            t = np.array([(2 * x[i] - a - b) / (b - a)])
-            values = hermite(self.degree, t, order, (b - a) / 2)[0]
-            out[i] = values @ self.amounts[self.numbers[e]]
-        return out
+        a, b = self.nodes[element], self.nodes[element + 1]
+        half = (b - a) / 2
+        values = hermite(self.degree, (x - (a + b) / 2) / half, order, half[:, None])
+        return np.einsum("ij,ij->i", values, self.amounts[self.numbers[element]])
 
     def at(self, name, x):
         """deflection, rotation, curvature, moment or shear at x."""
