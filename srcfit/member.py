@@ -72,10 +72,13 @@ class Restraint:
     value : float or Unknown
         The amount it is held or drawn to, absolute (a held temperature in K, the ambient of a
         convective end, a settlement [m], a rotation [rad]).
+    to_ambient : bool
+        Whether `value` is the member's ambient and moves with it.
     """
 
     stiffness: float = 0.0
     value: float | Unknown = 0.0
+    to_ambient: bool = False
 
 
 @dataclass(frozen=True)
@@ -94,11 +97,15 @@ class End:
 
 @dataclass(frozen=True)
 class Support:
-    """A restraint of the response inside the span; `value` is the settlement (or held response)."""
+    """A restraint of the response inside the span; `value` is the settlement (or held response).
+
+    `key` is its place in the case file, e.g. "support.1" (order of the file, not of `at`).
+    """
 
     at: float
     word: str
     restraint: Restraint
+    key: str = ""
 
 
 @dataclass(frozen=True)
@@ -107,6 +114,7 @@ class Hinge:
 
     at: float
     spring: float = 0.0
+    key: str = ""
 
 
 @dataclass(frozen=True)
@@ -115,6 +123,7 @@ class Interface:
 
     at: float
     resistance: float
+    key: str = ""
 
 
 @dataclass(frozen=True)

@@ -74,17 +74,17 @@ class Frame:
         self.note(path, found, kind.response_unit)
         return found
 
-    def reference(self, path: Path) -> float:
-        """The ambient that an end refers to: steady, so that it has no amplitude when driven."""
+    def around(self, path: Path, stiffness: float) -> Restraint:
+        """A restraint to the ambient, which is steady: no amplitude on driven members."""
         if not self.kind.relative:
-            return 0.0
+            return Restraint(stiffness)
         self.refers.append(path)
-        return 0.0 if self.driven or self.ambient is None else self.ambient
+        value = 0.0 if self.driven or self.ambient is None else self.ambient
+        return Restraint(stiffness, value, to_ambient=True)
 
     def note(self, path: Path, value: float | Unknown | None, unit: str) -> None:
         """Note an amount that may have an uncertainty under the key path of `path`."""
-        key = ".".join(str(p + 1) if isinstance(p, int) else p for p in path[1:])
-        self.amounts[key] = (value, unit)
+        self.amounts[_key(path)] = (value, unit)
 
     def inside(self, path: Path, value: object) -> float:
         """A place strictly inside the member."""
@@ -104,6 +104,11 @@ class Frame:
         found = self.reader.quantity(path, value, unit, least=least)
         self.note(path, found, unit)
         return found
+
+
+def _key(path: Path) -> str:
+    """Key path below `[member]`, e.g. "support.1.stiffness"."""
+    return ".".join(str(p + 1) if isinstance(p, int) else p for p in path[1:])
 
 
 def read_end(frame: Frame, side: str, value: object, at_axis: bool) -> End:
@@ -147,7 +152,7 @@ def _word_end(frame: Frame, path: Path, word: str, at_axis: bool) -> End:
         return End(word, axis=True)
     if word in FREE_WORDS:
         return End(word)
-    return End(word, Restraint(RIGID, frame.reference(path)))
+    return End(word, frame.around(path, RIGID))
 
 
 def _table_end(frame: Frame, path: Path, data: Any, side: str) -> End:
@@ -177,7 +182,7 @@ def _transfer_end(frame: Frame, path: Path, data: Any) -> End:
     table = check(frame.reader, TransferEnd, data, path)
     k = frame.stiffness((*path, "transfer"), table.transfer, frame.kind.spring_unit)
     if table.ambient is None:
-        return End("transfer", Restraint(k, frame.reference(path)))
+        return End("transfer", frame.around(path, k))
     here = (*path, "ambient")
     around = frame.reader.quantity(here, table.ambient, frame.kind.response_unit)
     if frame.driven:  # surroundings are steady: no amplitude
@@ -260,7 +265,7 @@ def read_supports(frame: Frame, value: object) -> tuple[Support, ...]:
             (*path, "kind"), table.kind, words, f"support of a {frame.kind.name}"
         ):
             return None
-        return Support(at, table.kind, _support(frame, path, table))
+        return Support(at, table.kind, _support(frame, path, table), _key(path))
 
     found: Any = each(frame.reader, ("member", "support"), value, one)
     _distinct(frame.reader, ("member", "support"), [s.at for s in found], "support")
@@ -281,7 +286,7 @@ def _support(frame: Frame, path: Path, table: SupportTable) -> Restraint:
     key = "settlement" if table.value is None else "value"
     held = table.settlement if table.value is None else table.value
     if held is None and table.sd is None:
-        return Restraint(stiffness, frame.reference(path))
+        return frame.around(path, stiffness)
     beside = {"guess": table.guess, "sd": table.sd}
     return Restraint(stiffness, frame.level((*path, key), held, beside))
 
@@ -295,9 +300,9 @@ def read_hinges(frame: Frame, value: object) -> tuple[Hinge, ...]:
             return None
         at = frame.inside((*path, "at"), table.at)
         if table.spring is None:
-            return Hinge(at)
+            return Hinge(at, key=_key(path))
         unit = frame.kind.rotation_spring_unit
-        return Hinge(at, frame.stiffness((*path, "spring"), table.spring, unit))
+        return Hinge(at, frame.stiffness((*path, "spring"), table.spring, unit), _key(path))
 
     found: Any = each(frame.reader, ("member", "hinge"), value, one)
     _distinct(frame.reader, ("member", "hinge"), [h.at for h in found], "hinge")
@@ -316,7 +321,7 @@ def read_interfaces(frame: Frame, value: object) -> tuple[Interface, ...]:
         here = (*path, "resistance")
         resistance = frame.reader.quantity(here, table.resistance, unit, least=0)
         frame.note(here, resistance, unit)
-        return Interface(at, resistance)
+        return Interface(at, resistance, _key(path))
 
     found: Any = each(frame.reader, ("member", "interface"), value, one)
     _distinct(frame.reader, ("member", "interface"), [i.at for i in found], "interface")

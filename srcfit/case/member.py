@@ -18,7 +18,7 @@ from srcfit.case.ends import (
     read_supports,
 )
 from srcfit.case.lines import Path
-from srcfit.case.profiles import product, read_profile
+from srcfit.case.profiles import products, read_profile
 from srcfit.case.reader import NAN, Reader
 from srcfit.case.schema import MemberTable, check, member_table
 from srcfit.errors import UnitError
@@ -92,7 +92,7 @@ def read_member(reader: Reader, data: Mapping[str, Any], amount: str) -> Member 
         return None
     drawn = any(c.to_ambient for c in kind.coefficients)
     return Member(
-        kind, *span, _profiles(kind, coefficients, span), left, right, supports, hinges,
+        kind, *span, products(kind, coefficients), left, right, supports, hinges,
         interfaces,
         ambient=frame.ambient or 0.0 if drawn and not frame.driven else 0.0,
         lam=_number(reader, table, "lambda", "1") or 0.0,
@@ -245,17 +245,6 @@ def _coefficients(frame: Frame, table: MemberTable) -> dict[str, Profile]:
         elif spec.default is not None:
             found[spec.key] = Profile(frame.span, (spec.default,))
     return found
-
-
-def _profiles(
-    kind: MemberKind, coefficients: Mapping[str, Profile], span: tuple[float, float]
-) -> dict[str, Profile]:
-    """Coefficients of the equation, by symbol."""
-    return {
-        symbol: product([coefficients[key] for key in keys])
-        for symbol, keys in kind.operator.items()
-        if all(key in coefficients for key in keys)
-    }
 
 
 def _ambient_due(frame: Frame, coefficients: Mapping[str, Profile]) -> None:

@@ -18,7 +18,7 @@ from srcfit.case.lines import Path
 from srcfit.case.reader import Reader
 from srcfit.case.schema import CurveTable, check
 from srcfit.errors import CaseError
-from srcfit.member import Array, CoefficientSpec, Curve, Profile
+from srcfit.member import Array, CoefficientSpec, Curve, MemberKind, Profile
 
 NEAR = 1e-9  # places that differ by less than this part of the length are one
 
@@ -37,6 +37,18 @@ class Product:
         return out
 
 
+@dataclass(frozen=True)
+class Shifted:
+    """A function of x plus a constant."""
+
+    curve: Curve
+    step: float
+
+    def __call__(self, x: Array) -> Array:
+        """Values at the places `x`."""
+        return self.curve(x) + self.step
+
+
 def product(profiles: list[Profile]) -> Profile:
     """The product of coefficients, with the edges of all."""
     if len(profiles) == 1:
@@ -50,6 +62,15 @@ def product(profiles: list[Profile]) -> Profile:
         curves = tuple(p for p in parts if callable(p))
         values.append(Product((math.prod(numbers), *curves)) if curves else math.prod(numbers))
     return Profile(edges, tuple(values))
+
+
+def products(kind: MemberKind, coefficients: Mapping[str, Profile]) -> dict[str, Profile]:
+    """Coefficients of the equation, by symbol; those whose keys are not all given are left out."""
+    return {
+        symbol: product([coefficients[key] for key in keys])
+        for symbol, keys in kind.operator.items()
+        if all(key in coefficients for key in keys)
+    }
 
 
 def read_profile(

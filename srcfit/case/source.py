@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Mapping
+from dataclasses import dataclass
 from typing import Any, get_args
 
 from srcfit import units
@@ -161,11 +162,13 @@ def _something_left(
                          "leave a stretch out, or add `lumped`")  # fmt: skip
 
 
+@dataclass(frozen=True)
 class _Asked:
-    """Places and amounts of the source: the reader, the kind's units and the member's span."""
+    """Reads places and amounts of the source, in the kind's units and on the member's span."""
 
-    def __init__(self, reader: Reader, kind: MemberKind, span: tuple[float, float]) -> None:
-        self.reader, self.kind, self.span = reader, kind, span
+    reader: Reader
+    kind: MemberKind
+    span: tuple[float, float]
 
     def place(self, path: Path, value: object) -> float:
         """A place on the member; one that misses an end by rounding is put there."""
