@@ -74,6 +74,8 @@ class Problem:
         The last `pseudo` rows are knowledge, not readings (not counted in dof or residuals).
     stated : bool
         True when the noise is stated; False: s is unknown and integrated out.
+    places : (n,) or None
+        Place of each row along the member [m], for folds of neighbours (None: row order).
     """
 
     A: Array
@@ -86,6 +88,7 @@ class Problem:
     balance: Array | None = None
     pseudo: int = 0
     stated: bool = True
+    places: Array | None = None
 
 
 @dataclass(frozen=True)

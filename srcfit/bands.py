@@ -1,0 +1,356 @@
+"""Intervals for any linear question about the source: the cautious band and the plain one.
+
+The cautious band keeps the best estimate m and takes its width from a cautious prior: as if the
+source might vary by at least half its own mean within a tenth of the member, and jump at the
+edges that were drawn, whether or not they are exact. With m_c, s_c the mean and standard
+deviation under that prior, and m_0 the mean under the same prior with steps at the known breaks
+only, the interval is
+
+    m +- z sqrt(s_c**2 + max(|m - m_c|, |m - m_0|)**2).
+
+The plain band is that of one strength, chosen by one criterion; it is too narrow wherever the
+source is rougher than the penalty expects.
+Sources: Wahba (1983), J. R. Stat. Soc. B 45, 133, and Nychka (1988), J. Am. Stat. Assoc. 83,
+1134, for what bands of this kind can promise.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.linalg import qr
+from scipy.special import ndtri, stdtrit
+
+from srcfit.criteria import Choice, choose
+from srcfit.errors import SolveError
+from srcfit.evidence import (
+    Weighted,
+    at_one,
+    conditional,
+    data_share,
+    grid,
+    mean_source,
+    means,
+    moments,
+    weigh,
+)
+from srcfit.priors import CAUTIOUS, SCALE, estimate_families, pieces
+from srcfit.problem import Array, Problem, Questions
+from srcfit.solvers.frame import UNIFORM, Asked, Frame, ask, frame, unpenalised
+from srcfit.solvers.ladder import ALONE, Ladder, penalised
+from srcfit.solvers.spectrum import Base, Spectrum, bases, route, spectrum
+from srcfit.solvers.tikhonov import tikhonov
+
+Centre = tuple[Ladder, int]
+# intervals need this many readings beyond the unpenalised unknowns
+FEWEST = 3
+
+
+@dataclass(frozen=True)
+class Fit:
+    """How the estimate fits the n readings; all whitened and averaged by evidence.
+
+    Attributes
+    ----------
+    residual, leave_one_out, hat : (n,)
+        leave_one_out is nan where nothing but the reading itself tells some unknown.
+    noise : float
+        Standard deviation of the whitened noise: 1 where it is stated.
+    ladders : tuple of Ladder
+        One per family of the average (or the one that the estimate was taken from).
+    weights : tuple of (t,)
+        Weight of each rung of each ladder, 1 in all.
+    """
+
+    residual: Array
+    leave_one_out: Array
+    hat: Array
+    noise: float
+    ladders: tuple[Ladder, ...] = ()
+    weights: tuple[Array, ...] = ()
+
+    @property
+    def effective_dof(self) -> float:
+        """Trace of the hat matrix at the readings, unpenalised columns included."""
+        return float(self.hat.sum())
+
+    @property
+    def standardised(self) -> Array:
+        """Residuals over their own standard deviations, (n,)."""
+        free = np.where(1 - self.hat > ALONE, 1 - self.hat, np.nan)
+        return np.asarray(self.residual / (self.noise * np.sqrt(free)))
+
+
+@dataclass(frozen=True)
+class Answers:
+    """Answers to q questions, and how the readings fit.
+
+    Attributes
+    ----------
+    value, sd, lower, upper : (q,)
+        nan where the readings cannot tell; sd is the half-width over `quantile`.
+    m_c, m_0, s_c : (q,)
+        Cautious mean, the same with steps at the known breaks only, cautious sd.
+    data_share : (q,)
+        How much of the smooth part's prior variance the readings took away; nan where the
+        question has none.
+    determined : (q,) bool
+        Whether the readings tell the question's unpenalised part.
+    reason : str
+        Why there are no intervals at all; empty where there are.
+    level : float
+        Mean of |source| over the free cells.
+    quantile : float
+        z, or Student's t where the noise is not stated.
+    fit : Fit
+    choice : Choice or None
+        The plain band's choice.
+    """
+
+    value: Array
+    sd: Array
+    lower: Array
+    upper: Array
+    m_c: Array
+    m_0: Array
+    s_c: Array
+    data_share: Array
+    determined: NDArray[np.bool_]
+    reason: str
+    level: float
+    quantile: float
+    fit: Fit
+    choice: Choice | None = None
+
+
+def cautious(
+    problem: Problem,
+    questions: Questions,
+    *,
+    level: float = 0.95,
+    centre: Centre | None = None,
+) -> Answers:
+    """Answers with the cautious band.
+
+    Parameters
+    ----------
+    problem : Problem
+    questions : Questions
+    level : float
+        Probability that an interval promises to hold.
+    centre : (Ladder, int), optional
+        Take the estimate from this rung; by default it is averaged over families by evidence.
+
+    Returns
+    -------
+    Answers
+    """
+    fr = frame(problem)
+    asked = ask(fr, questions)
+    if not len(fr.free) or fr.nu == 0:
+        return _without_source(fr, asked, level)
+    drawn, known = pieces(problem.grid, zones=True), pieces(problem.grid, zones=False)
+    families = estimate_families(drawn)
+    keys = [SCALE, *((f.base, f.length) for f in (*families, *CAUTIOUS))]
+    products = bases(fr, keys, route(fr))
+    sigma = grid(fr, products)
+    if centre is None:
+        averaged = weigh([spectrum(fr, f, products, drawn) for f in families], sigma)
+        f = mean_source(averaged)
+        value, density = means(fr, asked, f), _density(fr, f)
+        fit = _averaged_fit(averaged)
+    else:
+        ladder, at = centre
+        value, density = ladder.answers(questions)[:, at], ladder.estimates[fr.free, at]
+        fit = _rung_fit(ladder, at)
+    mean_level = _mean_level(fr, density)
+    m_c, s_c, m_0, share = _cautious(fr, asked, products, sigma, mean_level, drawn, known)
+    off = np.maximum(np.abs(value - m_c), np.abs(value - m_0))
+    parts = (value, np.sqrt(s_c**2 + off**2), m_c, m_0, s_c, share)
+    return _answers(fr, asked, parts, fit, mean_level, level)
+
+
+def plain(
+    problem: Problem,
+    questions: Questions,
+    *,
+    choose_by: str = "evidence",
+    roughness: int | float | str = 1,
+    level: float = 0.95,
+) -> Answers:
+    """Answers with the band of one strength: the named alternative to `cautious`.
+
+    Raises
+    ------
+    SolveError
+        When the criterion has nothing to say about this problem.
+    """
+    ladder = tikhonov(problem, roughness=roughness)
+    fr, asked = ladder.frame, ask(ladder.frame, questions)
+    if not len(fr.free) or fr.nu == 0:
+        return _without_source(fr, asked, level)
+    choice = choose(ladder, choose_by)
+    if choice.index < 0:
+        how = "choose another criterion or leave strength.choose out"
+        raise SolveError(f"{choose_by} cannot choose here: {choice.note}", "strength.choose", how)
+    at, fam = choice.index, ladder.family
+    products = bases(fr, [(fam.base, fam.length)], "svd")
+    sp = spectrum(fr, fam, products, np.zeros((len(fr.free), 0)))
+    one = at_one(sp, choice.strength, _noise(ladder, at) ** 2)
+    value, variance = (part[:, 0] for part in conditional(asked, one))
+    sd = np.sqrt(variance)
+    parts = (value, sd, value, value, sd, data_share(asked, [one]))
+    mean_level = _mean_level(fr, ladder.estimates[fr.free, at])
+    return _answers(fr, asked, parts, _rung_fit(ladder, at), mean_level, level, choice)
+
+
+def undetermined(problem: Problem) -> tuple[tuple[str, ...], ...]:
+    """Names of the unpenalised unknowns that the readings cannot tell apart, one tuple each.
+
+    The source's own constant is called "uniform source". A tuple of one name: no reading sees it.
+    """
+    U = unpenalised(problem)
+    names = ([UNIFORM] if problem.constant else []) + list(problem.names)
+    fr = frame(problem)
+    rank = fr.U.shape[1]
+    if rank == len(names):
+        return ()
+    _, R, order = qr(U / fr.norms, mode="economic", pivoting=True)
+    mixed = np.linalg.lstsq(R[:rank, :rank], R[:rank, rank:], rcond=None)[0]
+    found = []
+    for j, column in enumerate(mixed.T):
+        alike = [int(order[i]) for i in np.flatnonzero(np.abs(column) > 1e-6)]
+        found.append(tuple(names[i] for i in sorted([int(order[rank + j]), *alike])))
+    return tuple(found)
+
+
+def _cautious(
+    fr: Frame,
+    asked: Asked,
+    products: dict[tuple[str, float], Base],
+    sigma: Array,
+    mean_level: float,
+    drawn: Array,
+    known: Array,
+) -> tuple[Array, Array, Array, Array]:
+    """m_c, s_c, m_0 and the data share of each question."""
+
+    def under(steps: Array) -> list[Weighted]:
+        spectra: list[Spectrum] = [spectrum(fr, f, products, steps) for f in CAUTIOUS]
+        return weigh(spectra, sigma, mean_level)
+
+    families = under(drawn)
+    m_c, variance = moments(asked, families)
+    same = drawn.shape == known.shape
+    m_0 = m_c if same else means(fr, asked, mean_source(under(known)))
+    return m_c, np.sqrt(variance), m_0, data_share(asked, families)
+
+
+def _density(fr: Frame, variation: Array) -> Array:
+    """Source density on the free cells, the constant included."""
+    f = variation if fr.balanced is None else fr.balanced @ variation
+    if not fr.problem.constant:
+        return f
+    return np.asarray(f + (fr.solve @ (fr.Ud - fr.UA @ variation))[0])
+
+
+def _mean_level(fr: Frame, density: Array) -> float:
+    weights = fr.problem.grid.weights[fr.free]
+    return float(np.abs(density) @ weights / weights.sum())
+
+
+def _noise(ladder: Ladder, at: int) -> float:
+    """Sd of the whitened noise at one rung: 1 where it is stated."""
+    if ladder.frame.problem.stated:
+        return 1.0
+    left = ladder.readings - float(ladder.dof[at])
+    return float(ladder.residual_norms[at] / np.sqrt(left)) if left > ALONE else float("nan")
+
+
+def _averaged_fit(families: Sequence[Weighted]) -> Fit:
+    """Fit of the average over families and rungs."""
+    ladders = tuple(penalised(w.spectrum, w.sigma**-2.0) for w in families)
+    weights = tuple(w.weights for w in families)
+
+    def average(name: str) -> Array:
+        parts = (_times(getattr(la, name), w) for la, w in zip(ladders, weights, strict=True))
+        return np.asarray(sum(parts))
+
+    noise = float(np.sqrt(sum(float(w.weights @ w.noise) for w in families)))
+    residual, left, hat = (average(name) for name in ("residuals", "leave_one_out", "hat"))
+    return Fit(residual, left, hat, noise, ladders, weights)
+
+
+def _times(values: Array, weights: Array) -> Array:
+    """Values @ weights over the rungs that carry weight (others may be nan)."""
+    used = weights > 0
+    return np.asarray(values[:, used] @ weights[used])
+
+
+def _rung_fit(ladder: Ladder, at: int) -> Fit:
+    """Fit of one rung."""
+    weights = np.eye(len(ladder.strengths))[at]
+    three = (ladder.residuals[:, at], ladder.leave_one_out[:, at], ladder.hat[:, at])
+    return Fit(*three, _noise(ladder, at), (ladder,), (weights,))
+
+
+def _answers(
+    fr: Frame,
+    asked: Asked,
+    parts: tuple[Array, Array, Array, Array, Array, Array],
+    fit: Fit,
+    mean_level: float,
+    level: float,
+    choice: Choice | None = None,
+) -> Answers:
+    """Intervals from value, spread, m_c, m_0, s_c and data share; nan where undetermined."""
+    told = asked.determined
+    value, sd, m_c, m_0, s_c, share = (np.where(told, part, np.nan) for part in parts)
+    reason = ""
+    if fr.nu < FEWEST:
+        reason = f"only {fr.nu} readings beyond the unpenalised unknowns"
+        sd = np.full(len(value), np.nan)
+    dof = None if fr.problem.stated else fr.readings - fit.effective_dof
+    quantile = _quantile(level, dof)
+    return Answers(
+        value=value,
+        sd=sd,
+        lower=value - quantile * sd,
+        upper=value + quantile * sd,
+        m_c=m_c,
+        m_0=m_0,
+        s_c=s_c,
+        data_share=share,
+        determined=told,
+        reason=reason,
+        level=mean_level,
+        quantile=quantile,
+        fit=fit,
+        choice=choice,
+    )
+
+
+def _quantile(level: float, dof: float | None) -> float:
+    """Two-sided normal quantile, or Student's with `dof` degrees of freedom (at least one)."""
+    p = (1 + level) / 2
+    return float(ndtri(p) if dof is None else stdtrit(max(dof, 1.0), p))
+
+
+def _without_source(fr: Frame, asked: Asked, level: float) -> Answers:
+    """Least squares for the unpenalised columns alone: no smooth part, or nothing left for it."""
+    n = fr.readings
+    residual = (fr.problem.d - fr.U @ fr.Ud)[:n]
+    hat = (fr.U[:n] ** 2).sum(axis=1)
+    left = n - float(hat.sum())
+    noise = 1.0
+    if not fr.problem.stated:
+        noise = float(np.sqrt(residual @ residual / left)) if left > ALONE else float("nan")
+    free = np.where(1 - hat > ALONE, 1 - hat, np.nan)
+    value = asked.H @ fr.Ud
+    sd = noise * np.linalg.norm(asked.H, axis=1)
+    uniform = abs(float((fr.solve @ fr.Ud)[0])) if fr.problem.constant else 0.0
+    parts = (value, sd, value, value, sd, np.full(len(value), np.nan))
+    return _answers(fr, asked, parts, Fit(residual, residual / free, hat, noise), uniform, level)

@@ -1,0 +1,194 @@
+"""Averaging over families and strengths by their evidence.
+
+Every family is taken at a grid of sigma (in units of the noise's sd where that is not stated),
+with a prior uniform in ln sigma; the weights are the normalised restricted likelihoods. Means
+and variances of linear questions are those of the mixture (law of total variance).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from scipy.sparse import issparse
+
+from srcfit.priors import REACH, RUNGS, SCALE, above_floor, natural, sigma_grid
+from srcfit.problem import Array
+from srcfit.solvers.frame import Asked, Frame
+from srcfit.solvers.ladder import log_evidence, misfit
+from srcfit.solvers.spectrum import Base, Spectrum
+
+# an unstated noise is looked for between this part of what the unpenalised columns leave and all
+FAINTEST = 1e-6
+
+
+@dataclass(frozen=True)
+class Weighted:
+    """One family on its grid of sigma.
+
+    Attributes
+    ----------
+    sigma : (t,)
+        In units of the noise's sd.
+    noise : (t,)
+        Variance of the noise at each rung, in whitened units (1 where it is stated).
+    log_evidence, weights : (t,)
+    shrink : (c, t)
+        1 / (1 + sigma**2 lam).
+    """
+
+    spectrum: Spectrum
+    sigma: Array
+    noise: Array
+    log_evidence: Array
+    weights: Array
+    shrink: Array
+
+
+def level_scale(fr: Frame, products: Mapping[tuple[str, float], Base]) -> float:
+    """Scale of sigma: |P d| / sqrt(|P A 1|**2 + tr P A C A'), P without the nuisances B."""
+    base = products[SCALE]
+    size = len(fr.Qd)
+    spread = float(np.trace(base.S[:size, :size]))
+    energy = float(fr.Qd @ fr.Qd + fr.rest @ fr.rest)
+    if fr.own:
+        energy += float(fr.Ud[-1] ** 2)
+        spread += float(base.S[-1, -1] + fr.UA[-1].sum() ** 2)
+    if spread <= 0:
+        return 1.0
+    # readings that are exactly 0: the noise takes the place of the signal
+    return float(np.sqrt((energy if energy > 0 else fr.nu) / spread))
+
+
+def grid(fr: Frame, products: Mapping[tuple[str, float], Base]) -> Array:
+    """Sigmas of every family, (t,); in units of the noise's sd where that is not stated."""
+    scale = level_scale(fr, products)
+    if fr.problem.stated:
+        return sigma_grid(scale)
+    loudest = float(np.sqrt((fr.Qd @ fr.Qd + fr.rest @ fr.rest) / fr.nu)) or 1.0
+    low, high = scale / loudest / REACH, scale / loudest / FAINTEST * REACH
+    per_rung = 2 * np.log(REACH) / (RUNGS - 1)
+    return np.geomspace(low, high, int(np.ceil(np.log(high / low) / per_rung)) + 1)
+
+
+def weigh(spectra: Sequence[Spectrum], sigma: Array, level: float | None = None) -> list[Weighted]:
+    """Evidence weights of some families over one grid, summing to 1 over all of them.
+
+    Parameters
+    ----------
+    spectra : sequence of Spectrum
+    sigma : (t,)
+    level : float, optional
+        Mean level of the source: sigmas under the cautious floor are left out.
+    """
+    raw = [_rungs(sp, sigma * natural(sp.family.base, sp.frame.problem.grid)) for sp in spectra]
+    kept = [
+        np.ones(len(sigma), dtype=bool)
+        if level is None
+        else above_floor(w.sigma * np.sqrt(w.noise), level)
+        for w in raw
+    ]
+    best = max(float(w.log_evidence[k].max()) for w, k in zip(raw, kept, strict=True))
+    weights = [
+        np.where(k, np.exp(np.minimum(w.log_evidence - best, 0.0)), 0.0)
+        for w, k in zip(raw, kept, strict=True)
+    ]
+    total = sum(float(part.sum()) for part in weights)
+    return [replace(w, weights=part / total) for w, part in zip(raw, weights, strict=True)]
+
+
+def _rungs(sp: Spectrum, sigma: Array) -> Weighted:
+    """One family on its grid, not yet weighed against others."""
+    tau, nu = sigma**-2.0, sp.frame.nu
+    noise = np.ones(len(sigma)) if sp.frame.problem.stated else misfit(sp, tau) / nu
+    shrink = 1 / (1 + sp.lam[:, None] * sigma**2)
+    return Weighted(sp, sigma, noise, log_evidence(sp, tau), np.ones(len(sigma)), shrink)
+
+
+def at_one(sp: Spectrum, strength: float, noise: float) -> Weighted:
+    """One family at one strength, with all the weight and a given variance of the noise."""
+    return replace(_rungs(sp, np.array([strength**-0.5])), noise=np.array([noise]))
+
+
+def mean_source(families: Sequence[Weighted]) -> Array:
+    """Evidence-averaged variation of the source on the free cells, before balancing, (m',)."""
+    total: Array = np.zeros(families[0].spectrum.K.shape[0])
+    for w in families:
+        sp = w.spectrum
+        amounts = sp.y * (w.shrink @ (w.weights * w.sigma**2))
+        total = total + sp.K[:, : len(sp.V)] @ (sp.V @ amounts)
+    return total
+
+
+def means(fr: Frame, asked: Asked, f: Array) -> Array:
+    """Values (q,) of questions for a variation f of the source (unpenalised parts refitted)."""
+    return np.asarray(asked.G @ f + asked.H @ (fr.Ud - fr.UA @ f))
+
+
+def moments(asked: Asked, families: Sequence[Weighted]) -> tuple[Array, Array]:
+    """Mean and variance (q,) of each question under the mixture (law of total variance)."""
+    parts = [(w, *conditional(asked, w)) for w in families]
+    mean = np.sum([m @ w.weights for w, m, _ in parts], axis=0)
+    variance = np.sum([(v + (m - mean[:, None]) ** 2) @ w.weights for w, m, v in parts], axis=0)
+    return np.asarray(mean), np.asarray(variance)
+
+
+def conditional(asked: Asked, w: Weighted) -> tuple[Array, Array]:
+    """Mean and variance (q, t) of each question at each rung of one family.
+
+    With g~ = g - A'h: mean = h'd + sigma**2 T D y, T = g~'C A'QV, D = 1 / (1 + sigma**2 lam);
+    variance = |h|**2 + sigma**2 g~'C g~ - sigma**4 T**2 D, or the same as a sum of positive
+    terms in the coordinates of the covariance's factor.
+    """
+    sp, fr, size = w.spectrum, w.spectrum.frame, len(w.spectrum.V)
+    unpenalised = (asked.H**2).sum(axis=1)[:, None]
+    T = asked.G @ (sp.K[:, :size] @ sp.V) - asked.H @ (sp.S[size:, :size] @ sp.V)
+    mean = (asked.H @ fr.Ud)[:, None] + T @ (w.sigma**2 * w.shrink * sp.y[:, None])
+    if sp.factor is not None and sp.right is not None:
+        whole = asked.G @ sp.factor - asked.H @ (fr.UA @ sp.factor)
+        seen = whole @ sp.right.T
+        unseen = ((whole - seen @ sp.right) ** 2).sum(axis=1)[:, None]
+        spread = w.sigma**2 * (unseen + seen**2 @ w.shrink)
+    else:
+        cross = (asked.G @ sp.K[:, size:]) * asked.H
+        prior = prior_variance(asked, sp) - 2 * cross.sum(axis=1)
+        prior = prior + ((asked.H @ sp.S[size:, size:]) * asked.H).sum(axis=1)
+        spread = w.sigma**2 * prior[:, None] - T**2 @ (w.sigma**4 * w.shrink)
+    return mean, w.noise * (unpenalised + np.maximum(spread, 0.0))
+
+
+def prior_variance(asked: Asked, sp: Spectrum) -> Array:
+    """Variance (q,) of G f for sigma = 1, the constant held fixed."""
+    G = asked.G
+    if sp.factor is not None:
+        return np.asarray(((G @ sp.factor) ** 2).sum(axis=1))
+    assert sp.C is not None
+    GC = G @ sp.C
+    product = G.multiply(GC) if issparse(G) else G * GC
+    return np.asarray(product.sum(axis=1)).ravel()
+
+
+def data_share(asked: Asked, families: Sequence[Weighted]) -> Array:
+    """1 - posterior / prior variance (q,) of each question's smooth part, weighted by evidence.
+
+    The mean level is held fixed: then the readings' part in the constant's own direction tells
+    about the source too. nan where the question has no smooth part.
+    """
+    total: Array = np.zeros(len(asked.H))
+    for w in families:
+        sp, fr, size = w.spectrum, w.spectrum.frame, len(w.spectrum.V)
+        prior = prior_variance(asked, sp)
+        square = w.sigma**2 * w.shrink
+        T = asked.G @ (sp.K[:, :size] @ sp.V)
+        told = T**2 @ square
+        if fr.own:
+            own = sp.S[-1, :size] @ sp.V
+            cross = (asked.G @ sp.K[:, -1])[:, None] - (T * own) @ square
+            spread = w.sigma**-2 + sp.S[-1, -1] - own**2 @ square
+            told = told + cross**2 / np.maximum(spread, np.finfo(float).tiny)
+        share = np.full(len(prior), np.nan)
+        some = prior > 1e-12 * prior.max(initial=0.0)
+        share[some] = (told[some] @ w.weights) / prior[some]
+        total = total + share
+    return np.clip(total, 0.0, 1.0)

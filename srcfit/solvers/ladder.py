@@ -1,0 +1,192 @@
+"""The ladder: estimates over a grid of strengths or cuts, and all that the criteria need of them.
+
+In the modes Z of the projected problem every rung is a set of filters: the fitted part of mode j
+at rung t is fill[j, t] y[j]. So residuals, hat values, leave-one-out residuals and estimates are
+matrix products, for all rungs at once.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from srcfit.priors import Family
+from srcfit.problem import Array, Questions
+from srcfit.solvers.frame import Frame, ask
+from srcfit.solvers.spectrum import Spectrum
+
+# a reading whose hat value is this close to 1 is told by nothing else
+ALONE = 1e-9
+
+
+@dataclass(frozen=True)
+class Ladder:
+    """Estimates over t strengths, ascending in smoothness or in cuts.
+
+    n rows (readings first), c modes, m cells, k columns of `Problem.B`.
+
+    Attributes
+    ----------
+    solver : str
+        As in SOLVERS.
+    family : Family
+        What the roughness norm measures.
+    frame : Frame
+    strengths : (t,)
+        tau [1 / source**2 of the family's unit] for penalties, the number kept for cuts.
+    Z : (n, c)
+        Modes; `y` (c,) the readings' part in them, `rest` (n,) what lies beyond.
+    fill : (c, t)
+        Fitted part of each mode.
+    shapes : ((m', j), (j, c))
+        Two factors whose product gives the source per amount of each mode.
+    amounts : (c, t)
+        Amounts of each mode in the source.
+    roughness : (t,)
+        Roughness norms, sqrt(f'Qf).
+    log_evidence : (t,)
+        Restricted log likelihood up to a constant shared by all families; nan for cuts.
+    """
+
+    solver: str
+    family: Family
+    frame: Frame
+    strengths: Array
+    Z: Array
+    y: Array
+    rest: Array
+    fill: Array
+    shapes: tuple[Array, Array]
+    amounts: Array
+    roughness: Array
+    log_evidence: Array
+
+    @property
+    def readings(self) -> int:
+        """Number of rows that are readings."""
+        return self.frame.readings
+
+    @cached_property
+    def all_residuals(self) -> Array:
+        """Whitened residuals of all rows, knowledge included, (n, t)."""
+        out = self.Z @ ((1 - self.fill) * self.y[:, None])
+        out += self.rest[:, None]
+        return np.asarray(out)
+
+    @property
+    def residuals(self) -> Array:
+        """Whitened residuals of the readings, (readings, t)."""
+        return self.all_residuals[: self.readings]
+
+    @cached_property
+    def hat(self) -> Array:
+        """Diagonal of the hat matrix at the readings, (readings, t)."""
+        own = (self.frame.U[: self.readings] ** 2).sum(axis=1)
+        return np.asarray(self.Z[: self.readings] ** 2 @ self.fill + own[:, None])
+
+    @cached_property
+    def dof(self) -> Array:
+        """Effective degrees of freedom, unpenalised columns included, (t,)."""
+        return np.asarray(self.hat.sum(axis=0))
+
+    @cached_property
+    def leave_one_out(self) -> Array:
+        """Residual of each reading when it is left out of the fit, (readings, t).
+
+        nan where nothing but the reading itself tells some unknown. Source: Craven & Wahba
+        (1979), Numer. Math. 31, 377 (leaving-out-one lemma).
+        """
+        free = 1 - self.hat
+        free[free < ALONE] = np.nan
+        return np.asarray(self.residuals / free)
+
+    @cached_property
+    def residual_norms(self) -> Array:
+        """Norms of the whitened residuals of the readings, (t,)."""
+        return np.asarray(np.linalg.norm(self.residuals, axis=0))
+
+    @cached_property
+    def variation(self) -> Array:
+        """Source about its unpenalised part on the free cells, (m', t)."""
+        left, right = self.shapes
+        f = left @ (right @ self.amounts)
+        return f if self.frame.balanced is None else self.frame.balanced @ f
+
+    @cached_property
+    def unpenalised(self) -> Array:
+        """Amounts of the unpenalised columns (constant, further shapes, B), (k', t)."""
+        fr = self.frame
+        left, right = self.shapes
+        f = left @ (right @ self.amounts)
+        return np.asarray(fr.solve @ (fr.Ud[:, None] - fr.UA @ f))
+
+    @property
+    def columns(self) -> Array:
+        """Amounts of the columns of `Problem.B`, (k, t)."""
+        k = self.frame.problem.B.shape[1]
+        return self.unpenalised[len(self.unpenalised) - k :]
+
+    @cached_property
+    def estimates(self) -> Array:
+        """Source density on every cell, constant included, (m, t)."""
+        problem = self.frame.problem
+        out = np.zeros((len(problem.grid.free), len(self.strengths)))
+        f = self.variation.copy()
+        if problem.constant:
+            f += self.unpenalised[0]
+            j = self.frame.extra.shape[1]
+            f += self.frame.extra @ self.unpenalised[1 : 1 + j]
+        out[self.frame.free] = f
+        return out
+
+    def answers(self, questions: Questions) -> Array:
+        """Values of linear questions at every rung, (q, t)."""
+        asked = ask(self.frame, questions)
+        left, right = self.shapes
+        f = left @ (right @ self.amounts)
+        fr = self.frame
+        return np.asarray(asked.G @ f + asked.H @ (fr.Ud[:, None] - fr.UA @ f))
+
+
+def penalised(sp: Spectrum, strengths: Array, solver: str = "tikhonov") -> Ladder:
+    """Ladder of one family over strengths tau = 1 / sigma**2 (in units of the noise)."""
+    lam, tau = sp.lam[:, None], strengths[None, :]
+    fill = lam / (lam + tau)
+    amounts = sp.y[:, None] / (lam + tau)
+    size = sp.V.shape[0]
+    return Ladder(
+        solver=solver,
+        family=sp.family,
+        frame=sp.frame,
+        strengths=strengths,
+        Z=sp.Z,
+        y=sp.y,
+        rest=sp.rest,
+        fill=fill,
+        shapes=(sp.K[:, :size], sp.V),
+        amounts=amounts,
+        roughness=np.sqrt((lam * amounts**2).sum(axis=0)),
+        log_evidence=log_evidence(sp, strengths),
+    )
+
+
+def log_evidence(sp: Spectrum, strengths: Array) -> Array:
+    """Restricted log likelihood at each strength, up to a constant shared by all families, (t,).
+
+    With an unstated noise the sd s is integrated out under a prior uniform in ln s.
+    Source: Harville (1977); Wahba (1985), Ann. Stat. 13, 1378.
+    """
+    grow = sp.lam[:, None] / strengths
+    energy = misfit(sp, strengths)
+    volume = -0.5 * np.log1p(grow).sum(axis=0)
+    if sp.frame.problem.stated:
+        return np.asarray(volume - 0.5 * energy)
+    return np.asarray(volume - 0.5 * sp.frame.nu * np.log(energy))
+
+
+def misfit(sp: Spectrum, strengths: Array) -> Array:
+    """Quadratic form d'(I + A C A' / tau)^-1 d of the projected readings, (t,)."""
+    shrunk = 1 / (1 + sp.lam[:, None] / strengths)
+    return np.asarray(sp.y**2 @ shrunk + sp.rest @ sp.rest)
