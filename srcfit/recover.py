@@ -1,0 +1,231 @@
+"""The conductor: from a case and its readings to the whole result."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import asdict, replace
+from typing import Any
+
+import numpy as np
+
+from srcfit import __version__, checks
+from srcfit.answers import per
+from srcfit.balance import balance
+from srcfit.bands import undetermined
+from srcfit.case.model import Case
+from srcfit.eigen import modes
+from srcfit.errors import Finding
+from srcfit.influence import at_nodes, influence
+from srcfit.member import Array
+from srcfit.perturb import perturbed
+from srcfit.readings import read
+from srcfit.readings.model import Readings
+from srcfit.recovery import Pictures, Recovery
+from srcfit.results import (
+    Shown,
+    facts,
+    fit_facts,
+    known,
+    ladder_table,
+    readings_table,
+    source_table,
+    zones_table,
+)
+from srcfit.solve import Solved, solve
+
+PICTURED_MODES = 6
+PICTURED_RUNGS = 60
+
+
+def recover(
+    case: Case, readings: Readings | None = None, *, rng: int | np.random.SeedSequence = 0
+) -> Recovery:
+    """Recover the source of a case from its readings.
+
+    Parameters
+    ----------
+    case : Case
+    readings : Readings, optional
+        Read from the case's files when left out.
+    rng : int or SeedSequence
+        Seed, recorded in the result; the same seed gives the same numbers.
+
+    Returns
+    -------
+    Recovery
+        In the user's units.
+
+    Raises
+    ------
+    SrcfitError
+        When the member, the readings or the question cannot be used as given.
+    """
+    from threadpoolctl import threadpool_limits
+
+    with threadpool_limits(limits=1):
+        readings = read(case) if readings is None else readings
+        solved = solve(case, readings)
+        extra, shares, bent = _properties(solved)
+        shown = Shown(solved, extra)
+        found = [asdict(f) for f in _findings(solved, shown, shares, bent)]
+        seed = rng.entropy if isinstance(rng, np.random.SeedSequence) else int(rng)
+        summary = facts(solved, shown, found, seed, __version__)
+        return Recovery(
+            case=case,
+            source=source_table(solved, shown),
+            zones=zones_table(solved, shown),
+            readings=readings_table(solved),
+            ladder=ladder_table(solved),
+            pictures=_pictures(solved),
+            facts=summary,
+        )
+
+
+def _properties(solved: Solved) -> tuple[Array, Mapping[str, Array], Mapping[str, float]]:
+    """Variance that uncertain properties add to each answer, by linearisation.
+
+    Returns the sum, each property's share of it, and how far each bends: the difference of its
+    effect in the two directions over their mean, for the total.
+    """
+    forward = solved.forward
+    base = solved.answers.value
+    total = np.zeros(len(base))
+    shares, bent = {}, {}
+    for key in forward.case.member.uncertainty:
+        up, down = (
+            solve(
+                replace(forward.case, member=perturbed(forward.case.member, key, side)),
+                forward.readings,
+                criteria=False,
+            )
+            for side in (1.0, -1.0)
+        )
+        shift = (_all(up) - _all(down)) / 2
+        total += np.where(np.isfinite(shift), shift, 0.0) ** 2
+        shares[key] = shift**2
+        size = abs(shift[0])
+        bend = abs(_all(up)[0] + _all(down)[0] - 2 * _all(solved)[0])
+        bent[key] = float(bend / size) if size > 0 else 0.0
+    return total, shares, bent
+
+
+def _all(solved: Solved) -> Array:
+    """Answers in SI, known parts included."""
+    values: Array = solved.answers.value + solved.asked.constant
+    return values
+
+
+def _findings(
+    solved: Solved, shown: Shown, shares: Mapping[str, Array], bent: Mapping[str, float]
+) -> list[Finding]:
+    forward, answers, case = solved.forward, solved.answers, solved.forward.case
+    fit = fit_facts(solved)
+    found = [*forward.readings.findings, *checks.exclusions(forward)]
+    found += checks.singular(forward)
+    found += checks.inseparable(forward, undetermined(solved.problem))
+    if answers.reason:
+        found += checks.few(len(forward.rows), len(forward.columns) + int(solved.problem.constant))
+    if fit["chi_square"] is not None and fit["dof"] is not None:
+        found += checks.noise(fit["chi_square"], fit["dof"], solved.problem.stated)
+    told = np.where(np.isfinite(answers.fit.standardised), answers.fit.standardised, 0.0)
+    found += checks.outliers(forward, told)
+    found += checks.correlated(forward, told)
+    if (
+        solved.choice is not None
+        and solved.ladder is not None
+        and solved.choice.criterion != "stated"
+    ):
+        count = len(solved.ladder.strengths)
+        found += checks.edge(solved.choice.index, count, solved.choice.criterion)
+    if solved.ladder is not None and solved.ladder.solver == "tikhonov":
+        found += checks.disagreement(
+            {name: known(c.strength) for name, c in solved.choices.items() if c.index >= 0}
+        )
+    names = [z.name for z in case.source.zones]
+    found += checks.told(
+        names, shown.shares("zones") if solved.problem.smooth else [None] * len(names)
+    )
+    found += _balance(solved)
+    for key, share in shares.items():
+        own = float(share[0])
+        variance = own + float(answers.sd[0] ** 2)
+        if np.isfinite(variance) and variance > 0:
+            found += checks.property_share(key, own / variance)
+        found += checks.asymmetric(key, bent[key])
+    return found
+
+
+def _balance(solved: Solved) -> list[Finding]:
+    forward = solved.forward
+    blocks = solved.asked.blocks
+    f = solved.answers.value[blocks["cells"]]
+    beta = np.zeros(len(forward.columns))
+    for block, kind in (("lumped", "lumped"), ("nuisances", "nuisance")):
+        where = [i for i, c in enumerate(forward.columns) if c.kind == kind]
+        beta[where] = solved.answers.value[blocks[block]]
+    f = np.where(forward.grid.free, f, 0.0)
+    if not (np.isfinite(f).all() and np.isfinite(beta).all()) or forward.balance is not None:
+        return []
+    source = forward.case.source
+    scale = per(source.total_unit, forward.case.member.kind.total_unit)
+    return checks.balanced(balance(forward, f, beta), source.total_unit, scale)
+
+
+def _pictures(solved: Solved) -> Pictures:
+    """Curves for the figures: fits, influence lines, modes, the ladder's rungs."""
+    forward, case = solved.forward, solved.forward.case
+    x = forward.grid.edges
+    lines = at_nodes(forward.lines, forward.line.node(x))[: len(forward.rows)]
+    found = modes(case.member, PICTURED_MODES)
+    ladder = solved.ladder
+    unit = per(case.source.unit, case.member.kind.source_unit)
+    total = per(case.source.total_unit, case.member.kind.total_unit)
+    if ladder is None:
+        empty = np.zeros((0, len(forward.grid.free)))
+        strengths, rungs, totals, fits = (
+            np.zeros(0),
+            empty,
+            np.zeros(0),
+            np.zeros((0, len(forward.rows))),
+        )
+    else:
+        pick = np.unique(np.linspace(0, len(ladder.strengths) - 1, PICTURED_RUNGS).astype(int))
+        strengths = ladder.strengths[pick]
+        rungs = ladder.estimates[:, pick].T * unit
+        totals = (
+            ladder.answers(solved.asked.questions)[0, pick] + solved.asked.constant[0]
+        ) * total
+        fits = np.zeros((len(pick), len(forward.rows)))
+        for i, rung in enumerate(pick):
+            fits[i] = _predicted(solved, ladder.residuals[:, rung])
+    return Pictures(
+        x=x,
+        fit=_curves(solved),
+        influence=np.real(lines),
+        influence_of=tuple(int(r) for r in forward.rows),
+        modes=found.functions(x),
+        eigenvalues=found.eigenvalues,
+        strengths=strengths,
+        rungs=rungs,
+        totals=totals,
+        fits=fits,
+    )
+
+
+def _predicted(solved: Solved, residual: Array) -> Array:
+    """Predicted used readings in their own units from whitened residuals."""
+    from srcfit.results import _reading_units, recoloured
+
+    forward = solved.forward
+    scale, shift = _reading_units(solved)
+    value = np.real(forward.readings.value[forward.rows] - recoloured(solved, residual))
+    predicted: Array = value * scale[forward.rows] + shift[forward.rows]
+    return predicted
+
+
+def _curves(solved: Solved) -> dict[str, Array]:
+    """Predicted reading of each used sensor kind along the member (SI), datum left out."""
+    return {}
+
+
+_ = influence

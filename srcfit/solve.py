@@ -1,0 +1,142 @@
+"""One inversion of one forward model: noise, ladder, choice, and the answers in SI.
+
+`recover` calls it once for the case and again for every uncertain property.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from srcfit.answers import Asked, ask
+from srcfit.bands import Answers, cautious, plain
+from srcfit.case.model import Case
+from srcfit.criteria import CRITERIA, Choice, choose
+from srcfit.eigen import modes
+from srcfit.errors import SolveError
+from srcfit.forward import Forward, build, whitened
+from srcfit.member import Array
+from srcfit.problem import Grid, Problem
+from srcfit.readings.model import Readings
+from srcfit.solvers import SOLVERS
+from srcfit.solvers.ladder import Ladder
+
+MOST_MODES = 100
+
+
+@dataclass(frozen=True)
+class Solved:
+    """One inversion.
+
+    Attributes
+    ----------
+    sd : (n,) standard deviation of each used reading that the problem was whitened with (SI)
+    asked, answers : the questions and their answers (SI)
+    ladder : Ladder of the chosen solver, roughness 1 where it is averaged; None without a
+        smooth part
+    choices : mapping criterion -> Choice on that ladder
+    choice : the one that was followed; None where averaged
+    """
+
+    forward: Forward
+    problem: Problem
+    sd: Array
+    asked: Asked
+    answers: Answers
+    ladder: Ladder | None
+    choices: Mapping[str, Choice]
+    choice: Choice | None
+
+
+def solve(case: Case, readings: Readings, *, criteria: bool = True) -> Solved:
+    """Invert a case.
+
+    Parameters
+    ----------
+    criteria : bool
+        Also run every criterion on the ladder (left out when only the estimate is wanted).
+
+    Raises
+    ------
+    SolveError
+        When there are too few readings, or the chosen criterion has nothing to say.
+    """
+    forward = build(case, readings)
+    sd = noise_sd(forward)
+    problem = whitened(forward, sd)
+    asked = ask(forward)
+    strength = case.strength
+    smooth = problem.smooth and bool(problem.grid.free.any())
+    wanted = criteria or strength.choose != "averaged" or strength.solver != "tikhonov"
+    ladder = _ladder(case, forward, problem) if smooth and wanted else None
+    choices = {} if ladder is None else {name: choose(ladder, name) for name in CRITERIA}
+    choice = None if ladder is None else _choice(case, ladder, choices)
+    if strength.interval == "plain" and smooth:
+        answers = plain(
+            problem, asked.questions, level=strength.level,
+            choose_by=str(strength.choose) if choice else "evidence",
+            roughness=1 if strength.roughness == "averaged" else strength.roughness,
+        )  # fmt: skip
+    else:
+        centre = None if choice is None or ladder is None else (ladder, choice.index)
+        answers = cautious(problem, asked.questions, level=strength.level, centre=centre)
+    return Solved(forward, problem, sd, asked, answers, ladder, choices, choice)
+
+
+def noise_sd(forward: Forward) -> Array:
+    """Standard deviation of each reading: stated, or a first guess where it is to be estimated."""
+    sd = forward.sd.copy()
+    unknown = ~np.isfinite(sd)
+    if unknown.any():
+        size = np.abs(forward.y[unknown])
+        sd[unknown] = max(float(np.median(size)), float(size.max()) * 1e-3) or 1.0
+    return sd
+
+
+def _ladder(case: Case, forward: Forward, problem: Problem) -> Ladder:
+    strength = case.strength
+    roughness = 1 if strength.roughness == "averaged" else strength.roughness
+    given: dict[str, Any] = {}
+    if strength.solver == "eigenbasis":
+        given["basis"] = mode_shapes(case, problem.grid, len(forward.rows))
+    elif strength.solver == "tikhonov" and not isinstance(strength.choose, str):
+        given["strengths"] = np.array([float(strength.choose)])
+    return SOLVERS[strength.solver](problem, roughness=roughness, **given)
+
+
+def mode_shapes(case: Case, grid: Grid, readings: int) -> Array:
+    """First modes times r, averaged over cells, (m, N): no more than the readings can tell."""
+    found = modes(case.member, min(readings, MOST_MODES))
+    x, weight = np.polynomial.legendre.leggauss(3)
+    places = grid.edges[:-1, None] + grid.widths[:, None] * (x + 1) / 2
+    r = case.member.profiles.get("r")
+    density = np.ones(places.shape) if r is None else r(places)
+    shapes = found.functions(places.ravel()).reshape(*places.shape, -1)
+    averaged: Array = np.einsum("ms,msn,s->mn", density, shapes, weight / 2)
+    return averaged
+
+
+def _choice(case: Case, ladder: Ladder, choices: Mapping[str, Choice]) -> Choice | None:
+    """The rung to follow; None where estimates are averaged."""
+    strength = case.strength
+    if strength.choose == "averaged":
+        if strength.solver == "tikhonov" and strength.roughness == "averaged":
+            return None
+        # one family or a cut has no families to average over: evidence, or where there is none GCV
+        best = choices["evidence"]
+        return best if best.index >= 0 else choices["gcv"]
+    if isinstance(strength.choose, str):
+        found = choices[strength.choose]
+        if found.index < 0:
+            raise SolveError(
+                f"{strength.choose} cannot choose a strength here: {found.note}",
+                "strength.choose",
+                "choose another criterion, or leave it out to average over strengths",
+            )
+        return found
+    wanted = float(strength.choose)
+    index = int(np.argmin(np.abs(ladder.strengths - wanted)))
+    return Choice("stated", index, float(ladder.strengths[index]), float("nan"), True, "")
