@@ -54,6 +54,7 @@ PREFIXED: Mapping[str, Unit] = {
     "rad": unit(1, rad=1),
     "N": unit(1, **FORCE),
     "Pa": unit(1, **PRESSURE),
+    "Nm": unit(1, kg=1, m=2, s=-2),
     "J": unit(1, kg=1, m=2, s=-2),
     "W": unit(1, kg=1, m=2, s=-3),
     "Hz": unit(1, s=-1),

@@ -59,7 +59,8 @@ _MARKS = str.maketrans(
 
 def _plain_text(text: str) -> str:
     raised = re.sub(r"[⁰¹²³⁴⁵⁶⁷⁸⁹⁺⁻]+", lambda m: "^" + m[0].translate(_SUPER), text)
-    return raised.translate(_MARKS).replace("℃", "°C").replace("℉", "°F").strip()
+    plain = raised.translate(_MARKS).replace("℃", "°C").replace("℉", "°F")
+    return re.sub(r"(?<![A-Za-z])(?:[Dd]eg|°) ?([CF])(?![A-Za-z])", r"deg\1", plain).strip()
 
 
 def _tokens(text: str) -> list[tuple[str, str]]:
@@ -307,8 +308,6 @@ def quantity(text: object, unit: str, where: str, *, difference: bool = False) -
     result = scale * value + offset
     if not math.isfinite(result):
         raise UnitError(f'"{text}" is out of all bounds', where)
-    if unit == "K" and not difference and result < 0:
-        raise UnitError(f'"{text}" is below absolute zero', where, "check its sign and its unit")
     return result
 
 
@@ -355,6 +354,11 @@ def multiply_text(unit_a: str, unit_b: str) -> str:
     """Product of two unit texts, e.g. "kN/m" and "m" -> "kN"."""
     parts = [p for text in (unit_a, unit_b) if text != "1" for p in _parts(_plain_text(text))]
     return _text([(n, p) for n, p in parts if n != "1"])
+
+
+def divide_text(unit_a: str, unit_b: str) -> str:
+    """Quotient of two unit texts, e.g. "mm" and "d" -> "mm/d"."""
+    return unit_a if unit_b == "1" else multiply_text(unit_a, f"({unit_b})^-1")
 
 
 def total_unit(source_unit: str, length_unit: str = "m", geometry: str = "line") -> str:

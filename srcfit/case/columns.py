@@ -183,7 +183,7 @@ class ColumnReader:
         if table.drift is not None and not timed:
             self.reader.wrong(self.at("drift"), "a drift needs the time of each reading",
                               "add `time` to the table of readings")  # fmt: skip
-        unit = f"({_per(sensor.unit)})/s"
+        unit = units.divide_text(sensor.unit, "s")
         return self.reader.amount(self.at("drift"), table.drift, unit, difference=True)
 
     def _step(self, table: ColumnTable, sensor: SensorSpec) -> Step | None:
@@ -246,8 +246,9 @@ class ColumnReader:
         if table.range is None:
             return None
         path = self.at("range")
-        pair = _pair(self.reader, path, table.range, sensor.unit, self.driven)
-        return pair
+        return _pair(
+            self.reader, path, table.range, sensor.unit, difference=self.driven, marks=True
+        )
 
     def _exclude(self, table: ColumnTable) -> tuple[tuple[float, float], ...]:
         found = (
@@ -284,25 +285,20 @@ class ColumnReader:
         except UnitError as error:
             self.reader.problems.append(error)
             return None
-        unit = f"({_per(sensor.unit)})/({base})"
+        unit = units.divide_text(sensor.unit, base)
         per = self.reader.quantity((*path, "per"), found.per, unit)
         return Correction(found.column, found.unit, per)
 
 
-def _per(unit: str) -> str:
-    """A unit text that may stand in brackets; "1" may not."""
-    return "m/m" if unit == "1" else unit
-
-
 def _pair(
-    reader: Reader, path: Path, value: Any, unit: str, difference: bool = False
+    reader: Reader, path: Path, value: Any, unit: str, **how: bool
 ) -> tuple[float, float] | None:
     """Two quantities, the first less than the second."""
     if not isinstance(value, (list, tuple)) or len(value) != 2:
         reader.wrong(path, f"{value!r} is no pair", "write it as [from, to]")
         return None
-    a = reader.quantity((*path, 0), value[0], unit, difference=difference)
-    b = reader.quantity((*path, 1), value[1], unit, difference=difference)
+    a = reader.quantity((*path, 0), value[0], unit, **how)
+    b = reader.quantity((*path, 1), value[1], unit, **how)
     if b <= a:
         reader.wrong(path, f"{value[1]!r} is not more than {value[0]!r}")
     return a, b

@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
+from srcfit import units
 from srcfit.case.lines import Path
 from srcfit.case.reader import Reader, each
 from srcfit.case.schema import (
@@ -134,6 +135,8 @@ def read_end(frame: Frame, side: str, value: object, at_axis: bool) -> End:
 
 def _word_end(frame: Frame, path: Path, word: str, at_axis: bool) -> End:
     words = frame.kind.end_words
+    if frame.kind.order == 2:  # these say the same everywhere
+        words = (*words, *(w for w in FREE_WORDS if w not in words))
     if not frame.reader.choose(path, word, words, f"end of a {frame.kind.name}"):
         return End(word)
     if frame.kind.order == 4:
@@ -227,13 +230,13 @@ def _beam_end(frame: Frame, path: Path, data: Any) -> End:
         reader.wrong((*path, "sd"), "it is not clear what `sd` belongs to",
                      'write settlement = { unknown = true, sd = "…" }')  # fmt: skip
     moved: dict[str, float | Unknown] = {}
-    units = {"settlement": kind.response_unit, "rotation": "rad"}
+    unit_of = {"settlement": kind.response_unit, "rotation": "rad"}
     for key, stiffness in (("settlement", held), ("rotation", turn)):
         value = getattr(table, key)
         beside = {"sd": table.sd} if key in unknown and len(unknown) == 1 else None
-        moved[key] = reader.amount((*path, key), value, units[key], beside=beside)
+        moved[key] = reader.amount((*path, key), value, unit_of[key], beside=beside)
         if value is not None:
-            frame.note((*path, key), moved[key], units[key])
+            frame.note((*path, key), moved[key], unit_of[key])
             if stiffness == 0:
                 reader.wrong((*path, key), f"a {word} end does not hold what is to move there",
                              "choose a kind or a spring that does")  # fmt: skip
@@ -311,7 +314,7 @@ def read_hinges(frame: Frame, value: object) -> tuple[Hinge, ...]:
 
 def read_interfaces(frame: Frame, value: object) -> tuple[Interface, ...]:
     """`[[member.interface]]`."""
-    unit = f"1/({frame.kind.spring_unit})"
+    unit = units.divide_text("1", frame.kind.spring_unit)
 
     def one(path: Path, data: object) -> Interface | None:
         table = check(frame.reader, InterfaceTable, data, path)

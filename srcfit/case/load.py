@@ -9,7 +9,7 @@ from pathlib import Path as File
 from typing import Any
 
 from srcfit.case.lines import key_lines
-from srcfit.case.member import amount_in, kind_of, read_member
+from srcfit.case.member import amount_in, as_toml, kind_of, read_member
 from srcfit.case.model import Case, TableSpec
 from srcfit.case.reader import NAN, Reader
 from srcfit.case.readings import read_tables
@@ -43,6 +43,8 @@ def load_case(path: str | File) -> Case:
         data = tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
         raise _syntax(file, error) from None
+    except RecursionError:
+        raise CaseError("the case is nested too deeply", file.name) from None
     reader = Reader(file.parent, file.name, key_lines(text), files=[file])
     return _case(reader, data, file)
 
@@ -66,7 +68,7 @@ def make_case(mapping: Mapping[str, Any], folder: str | File = ".") -> Case:
     CaseError
         Naming the key of everything that cannot be used.
     """
-    return _case(Reader(File(folder)), mapping, None)
+    return _case(Reader(File(folder)), as_toml(mapping), None)
 
 
 def _text(file: File) -> str:

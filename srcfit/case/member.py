@@ -59,10 +59,18 @@ def make_member(mapping: Mapping[str, Any]) -> Member:
         Naming every key that cannot be used, and why.
     """
     reader = Reader(File())
-    found = read_member(reader, mapping, amount_in(mapping, ()))
+    data = as_toml(mapping)
+    found = read_member(reader, data, amount_in(data, ()))
     reader.finish()
     assert found is not None
     return found
+
+
+def as_toml(value: Any) -> Any:
+    """A mapping of one's own with tuples as lists, as a TOML text would give it."""
+    if isinstance(value, Mapping):
+        return {str(key): as_toml(item) for key, item in value.items()}
+    return [as_toml(item) for item in value] if isinstance(value, (list, tuple)) else value
 
 
 def read_member(reader: Reader, data: Mapping[str, Any], amount: str) -> Member | None:
@@ -134,7 +142,6 @@ def _general(reader: Reader, data: Mapping[str, Any]) -> MemberKind | None:
     except UnitError as error:
         reader.problems.append(error)
         return kind
-    per = {"spring_unit": units.total_unit(f, "m"), "rotation_spring_unit": ""}
     flux = units.total_unit(f, "m")
     by_name = {
         "response": u,
@@ -149,7 +156,8 @@ def _general(reader: Reader, data: Mapping[str, Any]) -> MemberKind | None:
         total_unit=flux,
         flux_unit=flux,
         sensors=tuple(replace(s, unit=by_name[s.name]) for s in kind.sensors),
-        spring_unit=per["spring_unit"],
+        spring_unit=units.divide_text(flux, u),
+        rotation_spring_unit=units.multiply_text(units.divide_text(flux, u), "m^2"),
     )
 
 

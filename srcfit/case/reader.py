@@ -71,8 +71,12 @@ class Reader:
         difference: bool = False,
         above: float | None = None,
         least: float | None = None,
+        marks: bool = False,
     ) -> float:
-        """A quantity in SI, nan after noting what is wrong with it (or when it is None)."""
+        """A quantity in SI, nan after noting what is wrong with it (or when it is None).
+
+        `marks`: the amount may be one that no reading can have (a temperature below 0 K).
+        """
         if value is None:
             return NAN
         try:
@@ -81,6 +85,9 @@ class Reader:
                 found = units.quantity(value, unit, self.place(path), difference=difference)
         except UnitError as error:
             self.problems.append(error)
+            return NAN
+        if unit == "K" and found < 0 and not (difference or marks or self.plain):
+            self.wrong(path, f"{value!r} is below absolute zero", "check its sign and its unit")
             return NAN
         if above is not None and not found > above:
             self.wrong(path, f"{value!r} is not more than {above:g}", "give a larger value")

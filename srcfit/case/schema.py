@@ -333,7 +333,7 @@ def check(reader: Reader, model: type[T], data: object, path: Path) -> T:
     for key in model.needed:
         if data.get(key) is None:
             reader.missing(path, key)
-    good = dict(data)
+    good = {str(key): value for key, value in data.items()}
     try:
         return model.model_validate(good)
     except ValidationError as error:

@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import os
 from collections.abc import Mapping
+from contextlib import suppress
 from dataclasses import dataclass
+from pathlib import Path as File
 from typing import Any, get_args
 
 from srcfit import units
@@ -43,10 +45,11 @@ CONTRADICTION = 5.0  # standard deviations
 
 def most_cells() -> int:
     """The largest number of cells whose dense matrices fit into half of the memory."""
-    try:
+    memory = 4 * 2**30
+    with suppress(AttributeError, ValueError, OSError):
         memory = os.sysconf("SC_PHYS_PAGES") * os.sysconf("SC_PAGE_SIZE")
-    except (AttributeError, ValueError, OSError):
-        memory = 4 * 2**30
+    with suppress(ValueError, OSError):  # a container may be allowed less than there is
+        memory = min(memory, int(File("/sys/fs/cgroup/memory.max").read_text()))
     return int((memory / 2 / (8 * DENSE_MATRICES)) ** 0.5)
 
 

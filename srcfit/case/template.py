@@ -10,7 +10,7 @@ from srcfit.errors import CaseError
 from srcfit.member import CoefficientSpec, MemberKind
 from srcfit.members import MEMBERS
 
-SPAN_KEYS = ("length", "inner_radius", "outer_radius", "start", "end", "order")
+SPAN_KEYS = ("order", "length", "inner_radius", "outer_radius", "start", "end")
 
 
 def template(kind: str) -> str:
@@ -63,7 +63,7 @@ def _toml(value: Any) -> str:
 
 def _line(key: str, value: Any, remark: str = "", *, active: bool = True) -> str:
     text = f"{'' if active else '# '}{key} = {_toml(value)}"
-    return f"{text:<44}# {remark}" if remark else text
+    return f"{text:<43} # {remark}" if remark else text
 
 
 def _member(kind: MemberKind) -> list[str]:
