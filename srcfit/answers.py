@@ -166,8 +166,8 @@ def detection(name: str, value: float | None, sd: float | None) -> dict[str, Any
     }  # fmt: skip
 
 
-def verdict(probability: float, level: float) -> str:
-    """Word for the probability that a limit is exceeded."""
-    if probability >= level:
-        return "exceeded"
-    return "kept" if probability <= 1 - level else "undecided"
+def verdict(kept: float, level: float) -> str:
+    """Word for the probability that a limit is kept."""
+    if kept >= level:
+        return "kept"
+    return "exceeded" if kept <= 1 - level else "undecided"

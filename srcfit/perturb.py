@@ -36,7 +36,9 @@ def perturbed(member: Member, key: str, sigmas: float) -> Member:
 
     first, _, rest = key.partition(".")
     if first in ("left", "right") and rest:
-        return replace(member, **{first: _end(getattr(member, first), rest, moved)})
+        if first == "left":
+            return replace(member, left=_end(member.left, rest, moved))
+        return replace(member, right=_end(member.right, rest, moved))
     if first == "support" and rest:
         number, _, what = rest.partition(".")
         supports = list(member.supports)

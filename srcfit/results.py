@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
-from numpy.typing import NDArray
 
 from srcfit.answers import detection, peak, per, verdict, zone_sizes
 from srcfit.criteria import CRITERIA
@@ -15,7 +15,6 @@ from srcfit.member import Array
 from srcfit.priors import Family
 from srcfit.recovery import Number
 from srcfit.solve import Solved
-from srcfit.solvers.ladder import Ladder
 from srcfit.units import factor
 
 if TYPE_CHECKING:
@@ -77,7 +76,7 @@ def source_table(solved: Solved, shown: Shown) -> pd.DataFrame:
     source, grid = solved.forward.case.source, solved.forward.grid
     P, U, scale = source.position_unit, source.unit, position_scale(solved)
     value, sd, lower, upper, share = shown.block("cells")
-    held = ~grid.free if solved.problem.smooth or solved.problem.constant else ~grid.free
+    held = ~grid.free
     return pd.DataFrame(
         {
             f"x [{P}]": grid.middles * scale,
@@ -166,7 +165,7 @@ def recoloured(solved: Solved, white: Array) -> Array:
     for g in np.flatnonzero(forward.lag):
         members = np.flatnonzero(forward.group == g)
         members = members[np.argsort(x[members], kind="stable")]
-        for before, here in zip(members[:-1], members[1:], strict=True):
+        for before, here in pairwise(members):
             keep = forward.lag[g]
             out[here] = keep * out[before] + np.sqrt(1 - keep**2) * white[here]
     result: Array = out * solved.sd
@@ -183,8 +182,7 @@ def strength_unit(solved: Solved, family: Family) -> tuple[str, float]:
     s, ell = per(source, case.member.kind.source_unit), per(length, "m")
     power = {"roughness-0": -1, "roughness-1": 1, "roughness-2": 3}.get(family.base, 0)
     head = {0: "1", 1: length, -1: f"1/{length}"}.get(power, f"{length}^{power}")
-    text = f"{head}/({source})^2" if power >= 0 else f"{head}/({source})^2"
-    return text, ell**power / s**2
+    return f"{head}/({source})^2", ell**power / s**2
 
 
 def ladder_table(solved: Solved) -> pd.DataFrame:
@@ -207,7 +205,7 @@ def ladder_table(solved: Solved) -> pd.DataFrame:
                     "family": f"{name} (averaged)" if averaged and name == "roughness 1" else name,
                     "strength": ladder.strengths * (1 if cut else scale),
                     "residual_norm": ladder.residual_norms,
-                    "roughness_norm": ladder.roughness,
+                    "roughness_norm": ladder.roughness / np.sqrt(scale),
                     "effective_dof": ladder.dof,
                     **{key: score(ladder) for key, score in CRITERIA.items()},
                     "weight": weights,
@@ -226,13 +224,13 @@ def facts(
     solved: Solved, shown: Shown, findings: Sequence[Mapping[str, str]], seed: Any, version: str
 ) -> dict[str, Any]:
     """The mapping of summary.json."""
-    forward, answers = solved.forward, solved.answers
+    forward = solved.forward
     case = forward.case
     source = case.source
     fit = fit_facts(solved)
-    lumped = [
-        {"name": c.name, "at": p.at * position_scale(solved) if p.at is not None else None}
-        | number_map(n)
+    lumped: list[dict[str, Any]] = [
+        {"name": c.name, "at": None if p.at is None else p.at * position_scale(solved)}
+        | dict[str, Any](number_map(n))
         for c, p, n in zip(
             [c for c in forward.columns if c.kind == "lumped"], source.lumped,
             shown.numbers("lumped"), strict=True,
@@ -380,7 +378,7 @@ def _peak(solved: Solved, shown: Shown) -> dict[str, float] | None:
 
 
 def _limit(solved: Solved, shown: Shown) -> dict[str, Any] | None:
-    """Verdict on the limit: `probability` is that of its being exceeded."""
+    """Verdict on the limit: `probability` is that of the limit being kept."""
     case = solved.forward.case
     limit = case.source.limit
     if limit is None:
@@ -400,9 +398,10 @@ def _limit(solved: Solved, shown: Shown) -> dict[str, Any] | None:
     estimate, sd = n.value * per_size, n.sd * per_size
     from scipy.special import ndtr, stdtr
 
-    ratio = (estimate - at_most) / sd
+    ratio = (at_most - estimate) / sd
     dof = len(solved.forward.rows) - solved.answers.fit.effective_dof
     chance = float(ndtr(ratio) if solved.problem.stated else stdtr(max(dof, 1.0), ratio))
     return facts | {
-        "estimate": estimate, "probability": chance, "verdict": verdict(chance, case.strength.level),
+        "estimate": estimate, "probability": chance,
+        "verdict": verdict(chance, case.strength.level),
     }  # fmt: skip

@@ -92,7 +92,8 @@ def gauss() -> tuple[Array, Array, Array]:
     b: Array = weight / 2
     powers = np.arange(1, STAGES + 1)
     # a[i, j] = integral of the j-th Lagrange polynomial from 0 to c[i]
-    a: Array = np.linalg.solve((c[:, None] ** (powers - 1)).T, (c[:, None] ** powers / powers).T).T
+    moments = (c[:, None] ** (powers - 1)).T, (c[:, None] ** powers / powers).T
+    a = np.asarray(np.linalg.solve(*moments).T, dtype=np.float64)
     return c, b, a
 
 
