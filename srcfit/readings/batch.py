@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field, replace
 from typing import Any
 
@@ -21,6 +21,7 @@ from srcfit.units import coherent
 
 Array = NDArray[np.float64]
 UNFINISHED = "unfinished last line"
+_UNDRIVEN = "a complex number, but the member is not driven"
 
 
 @dataclass(frozen=True)
@@ -105,6 +106,8 @@ def _nothing_selected(table: Table, where: Mapping[str, str], key: str) -> Readi
 
 def _duplicates(table: Table) -> dict[int, int]:
     """Rows that repeat an earlier row cell by cell -> the line of the first one."""
+    if len(set(map(tuple, table.rows))) == len(table.rows):
+        return {}
     seen: dict[tuple[str | float, ...], int] = {}
     out: dict[int, int] = {}
     for i, row in enumerate(table.rows):
@@ -145,7 +148,7 @@ class _Reader:
         reason = dict(main.reason)
         value = self._complex(main.value.copy(), reason, every)
         raw = value.copy()
-        self._saturated(raw, reason, every)
+        saturated(self.column, self.si, self.driven, raw, reason)
         if self.column.baseline:
             value = self._relative(value, reason, rows, base)
         sd = self._sd(main, reason, rows)
@@ -162,7 +165,7 @@ class _Reader:
         if self.spec.time is not None and self.column.drift != 0.0:
             for row in np.flatnonzero(np.isnan(when)):
                 why.setdefault(int(row), "its time cannot be read")
-        line = np.array([self.table.line[i] for i in kept], dtype=np.int64)
+        line = np.asarray(self.table.line, dtype=np.int64)[kept]
         shown = np.asarray(main.raw.real[kept], dtype=float)
         return Batch(number, name, line, x, value[kept], raw[kept], shown, sd[kept], when, unit,
                      why, sorted(set(rough)), main.changes, main.decimal)  # fmt: skip
@@ -183,8 +186,9 @@ class _Reader:
         spec = self.column
         if not self.driven:
             if np.iscomplexobj(value):
-                for i in np.flatnonzero(np.nan_to_num(value.imag) != 0):
-                    reason[int(i)] = "a complex number, but the member is not driven"
+                odd = np.nan_to_num(value.imag) != 0
+                reason |= dict.fromkeys(np.flatnonzero(odd).tolist(), _UNDRIVEN)
+                value[odd] = np.nan
                 value = value.real.copy()
             return value
         if spec.phase is not None:
@@ -197,20 +201,6 @@ class _Reader:
                 reason[int(at)] = f"a complex number in a column of {spec.component} parts"
         turn = 1j if spec.component == "imaginary" else 1.0
         return np.asarray(value * turn, dtype=complex)
-
-    def _saturated(self, raw: NDArray[Any], reason: dict[int, str], rows: list[int]) -> None:
-        """Values at or beyond an end of `range`, and temperatures at absolute zero."""
-        shown = np.abs(raw) if self.driven and self.column.component is None else raw.real
-        shown = raw.imag if self.column.component == "imaginary" else shown
-        if self.column.range is not None:
-            low, high = self.column.range
-            near = 1e-9 * (high - low)
-            for i in np.flatnonzero((shown <= low + near) | (shown >= high - near)):
-                end = "lower" if shown[i] <= low + near else "upper"
-                reason.setdefault(int(i), f"at or beyond the {end} end of `range`")
-        if self.si == "K" and not self.driven:
-            for i in np.flatnonzero(shown <= 1e-6):
-                reason.setdefault(int(i), "at or below absolute zero")
 
     def _relative(
         self, value: NDArray[Any], reason: dict[int, str], rows: list[int], base: list[int]
@@ -275,6 +265,23 @@ class _Reader:
                 )
 
 
+def saturated(
+    column: ColumnSpec, si: str, driven: bool, raw: NDArray[Any], reason: dict[int, str]
+) -> None:
+    """Values at or beyond an end of `range`, and temperatures at absolute zero."""
+    shown = np.abs(raw) if driven and column.component is None else raw.real
+    shown = raw.imag if column.component == "imaginary" else shown
+    if column.range is not None:
+        low, high = column.range
+        near = 1e-9 * (high - low)
+        for i in np.flatnonzero((shown <= low + near) | (shown >= high - near)):
+            end = "lower" if shown[i] <= low + near else "upper"
+            reason.setdefault(int(i), f"at or beyond the {end} end of `range`")
+    if si == "K" and not driven:
+        for i in np.flatnonzero(shown <= 1e-6):
+            reason.setdefault(int(i), "at or below absolute zero")
+
+
 def _by_match(
     value: NDArray[Any], reason: Mapping[int, str], match: list[str], rows: list[int]
 ) -> dict[str, complex]:
@@ -292,22 +299,14 @@ def _exclude(
 ) -> None:  # fmt: skip
     """Reasons that belong to whole rows, in order of weight."""
     why = batch.reason
-    for k, i in enumerate(kept):
-        line = table.line[i]
-        if i == table.unfinished:
-            why[k] = UNFINISHED
-            last = len(table.rows[i]) - 1
-            index = table.blocks[-1].index
-            if index[title(batch.name)] >= last:
-                batch.value[k] = math.nan
-            if index.get(title(spec.position.column), -1) >= last:
-                batch.x[k] = math.nan
-        elif i in table.broken:
-            why[k], batch.x[k], batch.value[k] = table.broken[i], math.nan, math.nan
-        elif line in column.exclude_lines:
-            why[k] = "its line is in `exclude_lines`"
-        elif k not in why and i in twice:
-            why[k] = f"an exact duplicate of line {twice[i]}"
+    place = {i: k for k, i in enumerate(kept)} if table.broken or twice else {}
+    for i, text in table.broken.items():
+        if i in place:
+            k = place[i]
+            why[k], batch.x[k], batch.value[k] = text, math.nan, math.nan
+    leave_out(batch, column.exclude_lines, {place[i]: n for i, n in twice.items() if i in place})
+    if kept and kept[-1] == table.unfinished:
+        _unfinished(batch, spec, table)
     if kept and table.cut is not None and kept[-1] == table.cut[0]:
         measured = [batch.name, column.sd_column, column.phase and column.phase.column]
         if spec.position.file is None:
@@ -316,12 +315,31 @@ def _exclude(
             why.setdefault(len(kept) - 1, UNFINISHED)
 
 
+def leave_out(batch: Batch, lines: Iterable[int], twice: Mapping[int, int]) -> None:
+    """Readings on lines that the case excludes, and those of exact duplicates of earlier rows."""
+    for k, line in twice.items():
+        batch.reason.setdefault(k, f"an exact duplicate of line {line}")
+    for at in np.flatnonzero(np.isin(batch.line, list(lines))):
+        batch.reason[int(at)] = "its line is in `exclude_lines`"
+
+
+def _unfinished(batch: Batch, spec: TableSpec, table: Table) -> None:
+    """The last row ends without a line end before its last cell: what is whole stays shown."""
+    last = len(table.rows[-1]) - 1
+    index = table.blocks[-1].index
+    batch.reason[len(batch.line) - 1] = UNFINISHED
+    if index[title(batch.name)] >= last:
+        batch.value[-1] = math.nan
+    if index.get(title(spec.position.column), -1) >= last:
+        batch.x[-1] = math.nan
+
+
 def _shortened(table: Table, name: str) -> bool:
     """Whether the last number, without a line end, has fewer decimals than all others."""
     if table.cut is None or table.blocks[-1].index[title(name)] != table.cut[1]:
         return False
     parts = [decimals(str(c)) for c in table.cells(name) if clean(c)]
-    return len(parts) > 2 and len(set(parts[:-1])) == 1 and parts[-1] < parts[0]
+    return len(parts) > 3 and len(set(parts[:-1])) == 1 and parts[-1] < parts[0]
 
 
 def decimals(text: str) -> int:

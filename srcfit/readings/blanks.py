@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from srcfit.case.model import TableSpec
 from srcfit.readings.table import Table
-from srcfit.readings.text import clean
+from srcfit.readings.text import is_blank
 
 Array = NDArray[np.float64]
 
@@ -72,14 +72,14 @@ class Shown:
             keep = np.zeros(size, dtype=bool)
             keep[rows[n]] = True
             for name in column.columns:
-                empty = np.array([not clean(c) for c in table.cells(name)], dtype=bool)
+                empty = np.array([is_blank(c) for c in table.cells(name)], dtype=bool)
                 blank[n, name] = empty
                 own[n] |= ~empty & keep
         filled = np.any(own, axis=0) if own else np.zeros(size, dtype=bool)
         placed = np.zeros(size, dtype=bool)
         if places.x is not None:
             placed = np.array(
-                [bool(clean(c)) for c in table.cells(spec.position.column)], dtype=bool
+                [not is_blank(c) for c in table.cells(spec.position.column)], dtype=bool
             )
         elif places.names is not None:
             placed = np.array([bool(n) for n in places.names], dtype=bool)

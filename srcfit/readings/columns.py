@@ -89,6 +89,8 @@ def decimal_of(cells: Iterable[Cell]) -> tuple[set[str], str]:
     for cell in cells:
         if isinstance(cell, float):
             continue
+        if "," not in cell and (cell.count(".") == 1 if "." in marks else False):
+            continue  # proves no more than is known
         if "." not in cell and "," not in cell:
             whole = whole or (len(cell.strip(" +-0")) in (1, 2, 3) and cell.strip(" +-").isdigit())
             continue
@@ -145,21 +147,29 @@ def _square(table: Table) -> Iterable[list[Cell]]:
 
 def read_numbers(
     table: Table, ask: Ask, rows: Sequence[int], stated: str | None
-) -> tuple[list[Amount | float | None], dict[int, str], str]:
-    """Numbers of the selected rows as they stand, the reasons of the others, the decimal mark."""
+) -> tuple[Array, dict[int, Amount], dict[int, str], str]:
+    """Numbers of the selected rows as they stand.
+
+    Returns
+    -------
+    (rows,) float, nan where there is no plain number; row -> what is more than a plain number;
+    row -> why there is none; the decimal mark
+    """
     cells = table.cells(ask.header)
-    found: list[Amount | float | None] = [None] * len(cells)
+    found = np.full(len(cells), np.nan)
+    more: dict[int, Amount] = {}
     reason: dict[int, str] = {}
     decimal = settle(table, ask.header, stated)
+    point = decimal in (".", "")
     for i in rows:
         cell = cells[i]
         if isinstance(cell, float):
-            found[i] = cell if cell == cell else None
-            if cell != cell:
-                reason[i] = why_not("")
+            found[i] = cell
+            if not np.isfinite(cell):
+                reason[i] = why_not("" if cell != cell else "inf")
             continue
         text = cell.strip()
-        if decimal in (".", "") and PLAIN.fullmatch(text):
+        if point and PLAIN.fullmatch(text):
             found[i] = float(text)
             continue
         text = normal(text)
@@ -167,10 +177,18 @@ def read_numbers(
         if mark[:1] == "?":
             raise _two_ways(table, ask.header, text)
         try:
-            found[i] = amount(text, mark or ".", ask.place)
+            item = amount(text, mark or ".", ask.place)
         except UnreadableError as error:
             reason[i] = str(error)
-    return found, reason, decimal
+            continue
+        if isinstance(item.value, float) and not (item.metres or item.rough or item.suffix):
+            found[i] = item.value
+        else:
+            more[i] = item
+    for at in np.flatnonzero(np.isinf(found)):
+        reason.setdefault(int(at), "too large for a number")
+    found[np.isinf(found)] = np.nan
+    return found, more, reason, decimal
 
 
 def block_units(table: Table, ask: Ask) -> list[Unit | None]:
@@ -267,38 +285,39 @@ def read_column(table: Table, ask: Ask, rows: Sequence[int], stated: str | None)
     ReadingsError
         No unit, contradicting units, or numbers that can be read in two ways.
     """
-    found, reason, decimal = read_numbers(table, ask, rows, stated)
+    raw, more, reason, decimal = read_numbers(table, ask, rows, stated)
     units, lacking, changes = row_units(table, ask, rows)
-    kind = complex if any(_amount(f).imag for f in found if isinstance(f, Amount)) else float
-    raw = np.full(len(found), np.nan, dtype=kind)
-    value, scale = raw.copy(), np.full(len(found), np.nan)
+    for i, text in lacking.items():
+        reason.setdefault(i, text)
+    scale, offset = _sizes(units)
+    value = scale * raw + offset
+    if any(complex(item.value).imag for item in more.values()):
+        raw, value = raw.astype(complex), value.astype(complex)
     rough: list[int] = []
-    for i in rows:
-        item, unit = found[i], units[i]
-        if item is None:
-            continue
-        if unit is None:
-            reason[i] = lacking[i]
-            continue
-        scale[i] = unit.scale
-        if isinstance(item, float):
-            raw[i], value[i] = item, unit.scale * item + unit.offset
-            continue
-        misfit = _misfit(item, unit, ask)
-        if misfit:
-            reason[i] = misfit
+    for i, item in more.items():
+        unit = units[i]
+        misfit = _misfit(item, unit, ask) if unit else ""
+        if unit is None or misfit:
+            reason.setdefault(i, misfit)
             continue
         raw[i] = item.value
         value[i] = item.value if item.metres else unit.scale * item.value + unit.offset
         if item.rough:
             rough.append(i)
-    texts = {u.text for u in units if u}
-    text = texts.pop() if len(texts) == 1 else [u.text if u else "" for u in units]
-    return Column(value, raw, reason, text, scale, rough, changes, decimal)
+    words = {u.text for u in {id(u): u for u in units}.values() if u}
+    unit_text = words.pop() if len(words) == 1 else [u.text if u else "" for u in units]
+    return Column(value, raw, reason, unit_text, scale, rough, changes, decimal)
 
 
-def _amount(item: Amount) -> complex:
-    return complex(item.value)
+def _sizes(units: Sequence[Unit | None]) -> tuple[Array, Array]:
+    """Scale and offset of each row; nan without a unit."""
+    known = {id(u): u for u in units}
+    sizes = {k: (u.scale, u.offset) if u else (np.nan, np.nan) for k, u in known.items()}
+    if len(sizes) == 1:
+        ((scale, offset),) = sizes.values()
+        return np.full(len(units), scale), np.full(len(units), offset)
+    pairs = np.array([sizes[id(u)] for u in units], dtype=float).reshape(-1, 2)
+    return pairs[:, 0].copy(), pairs[:, 1].copy()
 
 
 def _misfit(item: Amount, unit: Unit, ask: Ask) -> str:
@@ -308,7 +327,7 @@ def _misfit(item: Amount, unit: Unit, ask: Ask) -> str:
     if item.suffix:
         own = convert.find(item.suffix, ask.si, ask.difference)
         if own is None:
-            return f"{item.value:g} {item.suffix} is no number"
+            return f"'{item.value:g} {item.suffix}' is no number"
         if not own.same(unit):
             return _MISFIT.format(repr(item.suffix), repr(unit.text))
     return ""

@@ -47,8 +47,10 @@ def find(text: str, si: str, difference: bool = False) -> Unit | None:
 
 @lru_cache(maxsize=4096)
 def known(text: str) -> bool:
-    """Whether a text is a unit of any dimension (a lone capital letter does not count)."""
-    if not re.search(r"[^\W\d_]|[°%]", text) or len(text) > 40 or re.fullmatch("[A-Z]", text):
+    """Whether a text is a unit of any dimension (channel letters and "min" do not count)."""
+    if not re.search(r"[^\W\d_]|[°%]", text) or len(text) > 40:
+        return False
+    if re.fullmatch("[A-Za-ln-z]|min", text):
         return False
     try:
         factor(text, text, text)
@@ -71,6 +73,8 @@ def in_header(header: str, si: str, difference: bool = False) -> tuple[Unit | No
     """The unit in a header's brackets, and the text of one that is of another dimension."""
     other = ""
     for text in (t.strip() for t in _BRACKETS.findall(header)):
+        if text.isdigit():  # a channel number
+            continue
         unit = find(text, si, difference)
         if unit is not None:
             return unit, ""

@@ -12,7 +12,7 @@ from srcfit.errors import ReadingsError
 from srcfit.readings.blanks import Places
 from srcfit.readings.columns import Ask, read_column
 from srcfit.readings.table import Table, Wanted, title
-from srcfit.readings.text import clean
+from srcfit.readings.text import is_blank
 
 Array = NDArray[np.float64]
 Open = Callable[[Wanted], Table]
@@ -27,7 +27,7 @@ def wanted_places(position: PositionSpec, key: str) -> Wanted:
     return Wanted(keys, {title(position.column): "m"})
 
 
-def _turned(x: Array, position: PositionSpec) -> Array:
+def turned(x: Array, position: PositionSpec) -> Array:
     """Less the origin, turned where depths are counted negative."""
     return np.asarray((x - position.origin) * (-1.0 if position.reversed else 1.0) + 0.0)
 
@@ -40,12 +40,10 @@ def _column(
     )
     found = read_column(table, ask, range(len(table.rows)), stated)
     reason = {i: f"its position: {text}" for i, text in found.reason.items()}
-    reason |= {
-        i: "no position" for i, c in enumerate(table.cells(position.column)) if not clean(c)
-    }
+    reason |= {i: "no position" for i, c in enumerate(table.cells(position.column)) if is_blank(c)}
     if np.iscomplexobj(found.value):
         reason |= {int(i): "its position is complex" for i in np.flatnonzero(found.value.imag)}
-    return _turned(found.value.real.astype(float), position), reason, found.rough
+    return turned(found.value.real.astype(float), position), reason, found.rough
 
 
 def row_places(spec: TableSpec, table: Table, stated: str | None) -> Places:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Sequence
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,13 +14,15 @@ from srcfit.case.model import Case, ColumnSpec, TableSpec
 from srcfit.errors import Finding, ReadingsError
 from srcfit.readings.batch import Batch, table_batches
 from srcfit.readings.blanks import Places
+from srcfit.readings.fast import fast_batches
 from srcfit.readings.model import Readings
 from srcfit.readings.places import gauge_places, row_places, wanted_places
 from srcfit.readings.sheets import File, load, open_table
 from srcfit.readings.table import Table, Wanted, title
-from srcfit.readings.watch import findings
+from srcfit.readings.watch import findings, used_rows
 
 _NEAR_END = 1e-9
+OFF = "off the member"
 
 
 def read(case: Case) -> Readings:
@@ -60,7 +63,7 @@ def read(case: Case) -> Readings:
 
 
 def _file(case: Case, path: Path, key: str, files: dict[Path, File]) -> File:
-    full = case.folder / path
+    full = path if path.is_relative_to(case.folder) else case.folder / path
     if full not in files:
         near = full.is_relative_to(case.folder)
         name = full.relative_to(case.folder).as_posix() if near else str(path)
@@ -72,7 +75,11 @@ def _read_table(
     case: Case, spec: TableSpec, first: int, files: dict[Path, File]
 ) -> tuple[Table, list[Batch], list[str]]:
     stated = getattr(spec, "decimal", None)
-    table = open_table(_file(case, spec.file, f"{spec.key}.file", files), _wanted(case, spec))
+    source, wanted = _file(case, spec.file, f"{spec.key}.file", files), _wanted(case, spec)
+    fast = fast_batches(case, spec, source, wanted, first, stated)
+    if fast is not None:
+        return (*fast, [])
+    table = open_table(source, wanted)
     also: list[str] = []
     if spec.position.file is None:
         places: Places = row_places(spec, table, stated)
@@ -80,7 +87,7 @@ def _read_table(
         file = _file(case, spec.position.file, f"{spec.key}.position.file", files)
         other = open_table(file, wanted_places(spec.position, spec.key))
         places = gauge_places(spec, table, other, stated)
-        also.append(f"{other.name}: {other.story}.")
+        also.append(f"{other.name}: {other.story}; {len(other.line)} rows.")
     return table, table_batches(case, spec, table, places, first, stated), also
 
 
@@ -131,7 +138,7 @@ def _bound(case: Case, column: ColumnSpec, batch: Batch) -> None:
     for end in (member.start, member.end):
         x[np.abs(x - end) <= near] = end
     for k in np.flatnonzero((x < member.start) | (x > member.end)):
-        why.setdefault(int(k), f"off the member (x = {x[k]:.6g} m)")
+        why.setdefault(int(k), f"{OFF} (x = {x[k]:.6g} m)")
     for low, high in column.exclude:
         for k in np.flatnonzero((x >= low - near) & (x <= high + near)):
             why.setdefault(int(k), "in an excluded stretch")
@@ -145,7 +152,8 @@ def _sentence(table: Table, batches: Sequence[Batch]) -> str:
     words = "".join(decimal[m] for m in marks) if len(marks) == 1 and marks <= set(decimal) else ""
     count = sum(len(b.line) for b in batches)
     left = sum(len(b.reason) for b in batches)
-    return f"{table.name}: {table.story}; {words}{count} readings, {left} of them excluded."
+    numbers = f"{len(table.line)} rows, {count} readings, {left} of them excluded"
+    return f"{table.name}: {table.story}; {words}{numbers}."
 
 
 def _assemble(
@@ -159,29 +167,28 @@ def _assemble(
     sizes = [len(b.line) for b in batches]
     table = np.repeat(np.arange(len(tables)), [sum(len(b.line) for b in f) for _, f in tables])
     line = np.concatenate([b.line for b in batches])
-    order = np.lexsort((line, table))  # stable: columns stay in the order of the case
+    order = None
+    if len(batches) > 1 or np.any(np.diff(line) < 0):
+        order = np.lexsort((line, table))  # stable: columns stay in the order of the case
     reason = _texts([_reasons(b) for b in batches], sizes, order)
-    used = np.array([not r for r in reason], dtype=bool)
+    used = np.concatenate([used_rows(b) for b in batches])
+    used = used if order is None else used[order]
     if not used.any():
         raise _nothing_left(tables, reason)
     kind = complex if case.member.driven else float
-    value = np.concatenate([b.value * columns[b.spec].sign for b in batches]).astype(kind)
-    x, sd, time = (
-        np.concatenate(a)[order] for a in zip(*((b.x, b.sd, b.time) for b in batches), strict=True)
-    )
-    spec = np.repeat([b.spec for b in batches], sizes)[order].astype(np.int64)
+    time = _joined([b.time for b in batches], order)
     return Readings(
         file=_texts(names, sizes, order),
-        line=line[order],
+        line=_joined([b.line for b in batches], order),
         group=_texts([columns[b.spec].group for b in batches], sizes, order),
         kind=_texts([columns[b.spec].kind for b in batches], sizes, order),
         unit=_texts([b.unit for b in batches], sizes, order),
-        x=x,
-        value=value[order],
-        sd=sd,
+        x=_joined([b.x for b in batches], order),
+        value=_joined([b.value * columns[b.spec].sign for b in batches], order).astype(kind),
+        sd=_joined([b.sd for b in batches], order),
         used=used,
         reason=reason,
-        spec=spec,
+        spec=_joined([np.full(n, b.spec) for n, b in zip(sizes, batches, strict=True)], order),
         time=time if np.all(np.isnan(time)) else time - np.nanmin(time),
         findings=seen,
         understood=understood,
@@ -189,29 +196,41 @@ def _assemble(
     )
 
 
+def _joined(parts: Sequence[NDArray[Any]], order: NDArray[np.int64] | None) -> NDArray[Any]:
+    """Rows of all batches in the common order."""
+    every = parts[0] if len(parts) == 1 else np.concatenate(parts)
+    return every if order is None else every[order]
+
+
 def _reasons(batch: Batch) -> list[str] | str:
-    return [batch.reason.get(k, "") for k in range(len(batch.line))] if batch.reason else ""
+    if not batch.reason:
+        return ""
+    out = [""] * len(batch.line)
+    for k, text in batch.reason.items():
+        out[k] = text
+    return out
 
 
 def _texts(
-    parts: Sequence[list[str] | str], sizes: Sequence[int], order: NDArray[np.int64]
+    parts: Sequence[list[str] | str], sizes: Sequence[int], order: NDArray[np.int64] | None
 ) -> tuple[str, ...]:
     """Texts of all batches in the common order; one text may stand for a whole batch."""
     words = {p for p in parts if isinstance(p, str)}
     if len(words) == 1 and all(isinstance(p, str) for p in parts):
-        return (words.pop(),) * len(order)
+        return (words.pop(),) * sum(sizes)
     every: list[str] = []
     for part, size in zip(parts, sizes, strict=True):
         every += [part] * size if isinstance(part, str) else part
-    return tuple(every[i] for i in order)
+    return tuple(every) if order is None else tuple(every[i] for i in order.tolist())
 
 
 def _nothing_left(
     tables: list[tuple[str, Sequence[Batch]]], reason: Sequence[str]
 ) -> ReadingsError:
     names = ", ".join(dict.fromkeys(name for name, _ in tables))
-    common = Counter(reason).most_common(3)
+    common = Counter(text.split(" (x =")[0] for text in reason).most_common(3)
     why = "; ".join(f"{count} times: {text}" for text, count in common) or "the table has no rows"
-    return ReadingsError(
-        f"no reading is left ({why})", names, "correct the columns, units, `where` or `range`"
-    )
+    how = "correct the columns, units, `where` or `range`"
+    if common and common[0][0] == OFF:
+        how = "check `position`: its unit, `origin`, and `reversed` for depths counted negative"
+    return ReadingsError(f"no reading is left ({why})", names, how)

@@ -74,13 +74,13 @@ def open_table(file: File, wanted: Wanted) -> Table:
             f"the file is {packed}, not a table", file.name, "unpack it or export it as text (CSV)"
         )
     lines = lines_of(data, file.name)
-    return text_table(lines, wanted, file.name)
+    return text_table(lines, wanted, file.name)[0]
 
 
-def text_table(lines: Lines, wanted: Wanted, name: str) -> Table:
-    """The table in the lines of a text file."""
+def text_table(lines: Lines, wanted: Wanted, name: str) -> tuple[Table, str]:
+    """The table in the lines of a text file, and its delimiter."""
     delimiter = sniff(lines, wanted, declared_delimiter(lines.text), name)
-    return build(text_records(lines, delimiter), wanted, name)
+    return build(text_records(lines, delimiter), wanted, name), delimiter
 
 
 def _spreadsheet(file: File, wanted: Wanted) -> Records:

@@ -10,7 +10,16 @@ from dataclasses import dataclass, field
 from srcfit.errors import ReadingsError
 from srcfit.readings import convert
 from srcfit.readings.numbers import MISSING, UnreadableError, amount, normal, why_not
-from srcfit.readings.text import DELIMITERS, Cell, Lines, Records, clean, records, split
+from srcfit.readings.text import (
+    DELIMITERS,
+    Cell,
+    Lines,
+    Records,
+    clean,
+    is_blank,
+    records,
+    split,
+)
 
 _HEADER_ROWS = 5
 _TRIED = 2000
@@ -67,20 +76,27 @@ class Table:
     cut : (row, column) of a last cell without a line end after it, or None
     headers : every header text of the first block
     story : what was understood, in words
+    read : cells of the columns asked for so far
     """
 
     name: str
     blocks: tuple[Block, ...]
-    line: list[int]
+    line: Sequence[int]
     rows: list[list[Cell]]
     broken: Mapping[int, str]
     unfinished: int | None
     cut: tuple[int, int] | None
     headers: tuple[str, ...]
     story: str
+    read: dict[str, list[Cell]] = field(default_factory=dict, compare=False, repr=False)
 
     def cells(self, name: str) -> list[Cell]:
         """Cells of one named column, "" where a row is too short."""
+        if name not in self.read:
+            self.read[name] = self._cells(name)
+        return self.read[name]
+
+    def _cells(self, name: str) -> list[Cell]:
         out: list[Cell] = []
         stops = [b.first for b in self.blocks[1:]] + [len(self.rows)]
         for block, stop in zip(self.blocks, stops, strict=True):
@@ -112,10 +128,12 @@ def sniff(lines: Lines, wanted: Wanted, declared: str, name: str) -> str:
     ReadingsError
         No line has them all: the nearest line, the missing column and the nearest text.
     """
-    tried = (declared,) if declared else tuple(DELIMITERS)
+    tried: tuple[str, ...] = tuple(dict.fromkeys([*declared, *DELIMITERS]))
     best: tuple[int, int, str] = (-1, 0, "")
     for i in _likely(lines.text, wanted):
         found = [d for d in tried if matches(_first(lines.text, i, d), wanted) == len(wanted.keys)]
+        if declared in found:
+            return declared
         if found:
             return max(found, key=lambda d: _steady(lines.text, i, d))
     for delimiter in tried:
@@ -155,27 +173,35 @@ def _no_header(
     lines: Lines, wanted: Wanted, best: tuple[int, int, str], tried: Sequence[str], name: str
 ) -> ReadingsError:
     count, line, delimiter = best
-    if count <= 0:  # no name at all: compare with every early cell
-        pool = [(title(c), i + 1) for d in tried for i, t in enumerate(lines.text[:50])
-                for c in split(t, d)]  # fmt: skip
-    else:
-        pool = [(title(c), line) for c in _first(lines.text, line - 1, delimiter)]
-    there = {text for text, _ in pool}
-    missing = next((n for n in wanted.keys if n not in there), next(iter(wanted.keys)))
-    near = difflib.get_close_matches(missing, sorted(there - set(wanted.keys)), 1, 0.3)
-    return no_column(name, missing, wanted, line if count > 0 else None, near[0] if near else "")
+    if count > 0:
+        return no_column(
+            name, wanted, [title(c) for c in _first(lines.text, line - 1, delimiter)], line
+        )
+    early = [title(c) for d in tried for t in lines.text[:50] for c in split(t, d)]
+    return no_column(name, wanted, early, None)
 
 
-def no_column(
-    name: str, missing: str, wanted: Wanted, line: int | None, near: str
-) -> ReadingsError:
-    """The error for a named column that the header lacks."""
-    place = f"{name}, line {line}" if line else name
+def no_column(name: str, wanted: Wanted, there: Sequence[str], line: int | None) -> ReadingsError:
+    """The error for named columns that no header line has.
+
+    Parameters
+    ----------
+    name : file name
+    wanted : Wanted
+    there : texts of the line that has most of them, or of all early lines
+    line : that line, or None
+    """
+    missing = [n for n in wanted.keys if n not in there] or list(wanted.keys)
+    pool = sorted({t for t in there if t and t not in wanted.keys and len(t) < 80})
+    pairs = [(n, m) for n in missing for m in difflib.get_close_matches(n, pool, 1, 0.5)]
+    column, near = pairs[0] if pairs else (missing[0], "")
     hint = f" (nearest: {near!r})" if near else ""
+    if not near and line:
+        hint = f" (the line has {', '.join(map(repr, pool[:6]))})"
     return ReadingsError(
-        f"no header line has all named columns: {missing!r} is missing{hint}",
-        place,
-        f"set {wanted.keys[missing]} to a header text of the file",
+        f"no header line has all named columns: {column!r} is missing{hint}",
+        f"{name}, line {line}" if line else name,
+        f"set {wanted.keys[column]} to a header text of the file",
     )
 
 
@@ -231,10 +257,8 @@ def build(found: Records, wanted: Wanted, name: str) -> Table:
         (i for i, c in enumerate(found.cells) if matches(c, wanted) == len(wanted.keys)), None
     )
     if start is None:
-        texts = sorted({title(c) for row in found.cells[:50] for c in row})
-        missing = next((n for n in wanted.keys if n not in texts), next(iter(wanted.keys)))
-        near = difflib.get_close_matches(missing, texts, 1, 0.3)
-        raise no_column(name, missing, wanted, None, near[0] if near else "")
+        best = max(range(min(len(found.cells), 50)), key=lambda i: matches(found.cells[i], wanted))
+        raise no_column(name, wanted, [title(c) for c in found.cells[best]], found.line[best])
     return _Builder(found, wanted, name, start).table()
 
 
@@ -258,7 +282,7 @@ class _Builder:
                 self._drop_preamble()
                 i = self._block(i)
                 continue
-            if tuple(row) not in self.repeats and any(map(clean, row)):
+            if not all(map(is_blank, row)) and tuple(row) not in self.repeats:
                 self.kept.append(i)
             i += 1
         return self._finish()
@@ -305,7 +329,7 @@ class _Builder:
         broken |= self._misfits(rows, unfinished)
         return Table(
             self.name, tuple(self.blocks), line, rows, broken, unfinished, cut,
-            tuple(title(c) for c in found.cells[self.start]), self._story(len(rows)),
+            tuple(title(c) for c in found.cells[self.start]), self._story(),
         )  # fmt: skip
 
     def _misfits(self, rows: list[list[Cell]], unfinished: int | None) -> dict[int, str]:
@@ -322,7 +346,7 @@ class _Builder:
                     out[k] = f"the row has {size} cells where the header has {block.width}"
         return out
 
-    def _story(self, count: int) -> str:
+    def _story(self) -> str:
         """What was understood of this file, in words."""
         first = self.blocks[0]
         parts = [self.found.manner]
@@ -335,5 +359,4 @@ class _Builder:
         if len(self.blocks) > 1:
             again = ", ".join(str(b.line) for b in self.blocks[1:])
             parts.append(f"header again in line {again}")
-        parts.append(f"{count} rows")
         return "; ".join(parts)

@@ -84,6 +84,11 @@ def clean(cell: Cell) -> str:
     return " ".join(cell.split())
 
 
+def is_blank(cell: Cell) -> bool:
+    """Whether a cell is empty."""
+    return cell != cell if isinstance(cell, float) else not cell or cell.isspace()
+
+
 def decode(data: bytes, name: str) -> tuple[str, str]:
     """Text of a file and its encoding in words.
 
@@ -140,18 +145,18 @@ def _eight_bit(data: bytes) -> tuple[str, str]:
 def physical_lines(text: str) -> tuple[list[str], str, bool]:
     """Lines without their ends, the kinds of line ends in words, whether the last has one."""
     crlf = text.count("\r\n")
-    counts = {
-        "CRLF": crlf,
-        "LF": text.count("\n") - crlf,
-        "CR": text.count("\r") - crlf,
-    }
-    found = [word for word, count in counts.items() if count]
-    lines = _ENDS.split(text) if counts["CR"] or crlf else text.split("\n")
+    cr = text.count("\r") - crlf
+    lines = _ENDS.split(text) if cr or crlf else text.split("\n")
     finished = not lines[-1]
     if finished:
         lines.pop()
-    words = f"mixed line ends ({', '.join(found)})" if len(found) > 1 else "".join(found)
-    return lines, words, finished
+    return lines, ends_in_words(crlf, text.count("\n") - crlf, cr), finished
+
+
+def ends_in_words(crlf: int, lf: int, cr: int) -> str:
+    """Kinds of line ends from their numbers."""
+    found = [w for w, count in (("CRLF", crlf), ("LF", lf), ("CR", cr)) if count]
+    return f"mixed line ends ({', '.join(found)})" if len(found) > 1 else "".join(found)
 
 
 def lines_of(data: bytes, name: str) -> Lines:

@@ -6,6 +6,7 @@ from collections import Counter
 from collections.abc import Iterable, Sequence
 
 import numpy as np
+from numpy.typing import NDArray
 
 from srcfit.errors import Finding
 from srcfit.readings.batch import Batch
@@ -38,7 +39,8 @@ def findings(table: Table, batches: Sequence[Batch]) -> list[Finding]:
     return [*out, *_cut(table, batches), *_time(table.name, batches)]
 
 
-def _used(batch: Batch) -> np.ndarray:
+def used_rows(batch: Batch) -> NDArray[np.bool_]:
+    """Rows without a reason against them."""
     keep = np.ones(len(batch.line), dtype=bool)
     keep[list(batch.reason)] = False
     return keep
@@ -74,7 +76,9 @@ def status_columns(headers: Sequence[str]) -> list[str]:
 
 def _flags(table: Table, batches: Sequence[Batch]) -> list[Finding]:
     """Used rows whose flag differs from the usual one."""
-    used = {int(n) for b in batches for n in b.line[_used(b)]}
+    if not status_columns(table.headers):
+        return []
+    used = {n for b in batches for n in b.line[used_rows(b)].tolist()}
     out = []
     for header in status_columns(table.headers):
         column = table.headers.index(header)
@@ -97,7 +101,7 @@ def _flags(table: Table, batches: Sequence[Batch]) -> list[Finding]:
 
 def _stuck(name: str, batch: Batch) -> list[Finding]:
     """Long runs of one value in a column whose values otherwise differ."""
-    keep = _used(batch)
+    keep = used_rows(batch)
     value, line = batch.raw[keep], batch.line[keep]
     if len(value) < 2 * _RUN:
         return []
@@ -117,7 +121,7 @@ def _stuck(name: str, batch: Batch) -> list[Finding]:
 
 def _marks(name: str, batch: Batch) -> list[Finding]:
     """Numbers that usually mark a missing value, far from all others."""
-    keep = _used(batch)
+    keep = used_rows(batch)
     shown, line = batch.number[keep], batch.line[keep]
     if len(shown) < 4:
         return []
@@ -143,7 +147,7 @@ def _cut(table: Table, batches: Sequence[Batch]) -> list[Finding]:
     row, column = table.cut
     line = table.line[row]
     names = {n for n, i in table.blocks[-1].index.items() if i == column}
-    used = any(len(b.line) and b.line[-1] == line and _used(b)[-1] for b in batches)
+    used = any(len(b.line) and b.line[-1] == line and used_rows(b)[-1] for b in batches)
     if not names or not used:
         return []
     return [Finding(
