@@ -22,7 +22,6 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import qr
-from scipy.special import ndtri, stdtrit
 
 from srcfit.criteria import Choice, choose
 from srcfit.errors import SolveError
@@ -41,7 +40,7 @@ from srcfit.priors import CAUTIOUS, SCALE, estimate_families, pieces
 from srcfit.problem import Array, Problem, Questions
 from srcfit.solvers.frame import UNIFORM, Asked, Frame, ask, frame, unpenalised
 from srcfit.solvers.ladder import ALONE, Ladder, penalised
-from srcfit.solvers.spectrum import Base, Spectrum, bases, route, spectrum
+from srcfit.solvers.spectrum import Base, bases, route, spectrum
 from srcfit.solvers.tikhonov import tikhonov
 
 Centre = tuple[Ladder, int]
@@ -198,7 +197,7 @@ def plain(
         raise SolveError(f"{choose_by} cannot choose here: {choice.note}", "strength.choose", how)
     at, fam = choice.index, ladder.family
     products = bases(fr, [(fam.base, fam.length)], "svd")
-    sp = spectrum(fr, fam, products, np.zeros((len(fr.free), 0)))
+    sp = spectrum(fr, fam, products, np.zeros((len(fr.free), 0)), right=True)
     one = at_one(sp, choice.strength, _noise(ladder, at) ** 2)
     value, variance = (part[:, 0] for part in conditional(asked, one))
     sd = np.sqrt(variance)
@@ -238,14 +237,14 @@ def _cautious(
 ) -> tuple[Array, Array, Array, Array]:
     """m_c, s_c, m_0 and the data share of each question."""
 
-    def under(steps: Array) -> list[Weighted]:
-        spectra: list[Spectrum] = [spectrum(fr, f, products, steps) for f in CAUTIOUS]
+    def under(steps: Array, *, spread: bool) -> list[Weighted]:
+        spectra = [spectrum(fr, f, products, steps, right=spread) for f in CAUTIOUS]
         return weigh(spectra, sigma, mean_level)
 
-    families = under(drawn)
+    families = under(drawn, spread=True)
     m_c, variance = moments(asked, families)
     same = drawn.shape == known.shape
-    m_0 = m_c if same else means(fr, asked, mean_source(under(known)))
+    m_0 = m_c if same else means(fr, asked, mean_source(under(known, spread=False)))
     return m_c, np.sqrt(variance), m_0, data_share(asked, families)
 
 
@@ -335,6 +334,8 @@ def _answers(
 
 def _quantile(level: float, dof: float | None) -> float:
     """Two-sided normal quantile, or Student's with `dof` degrees of freedom (at least one)."""
+    from scipy.special import ndtri, stdtrit
+
     p = (1 + level) / 2
     return float(ndtri(p) if dof is None else stdtrit(max(dof, 1.0), p))
 

@@ -10,13 +10,18 @@ from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from srcfit.problem import Array
 from srcfit.solvers.ladder import ALONE, Ladder
 
+Rows = NDArray[np.intp]
+
 # Lukas (2006) robust GCV: 1 is GCV itself, smaller guards more against too rough a source
 ROBUSTNESS = 0.3
 FOLDS = 10
+# ladders of this many rungs are fine enough to interpolate a score
+FINE = 100
 # a corner turns at least this sharply, and both branches span at least this ratio
 CORNER = 1.0
 BRANCH = 1.5
@@ -86,7 +91,7 @@ def leave_one_out(ladder: Ladder) -> Array:
     return np.where(np.isnan(scores), np.inf, scores)
 
 
-def folds(ladder: Ladder) -> list[np.ndarray[tuple[int], np.dtype[np.intp]]]:
+def folds(ladder: Ladder) -> list[Rows]:
     """Row numbers of each fold: runs of neighbouring readings of about equal size."""
     places = ladder.frame.problem.places
     n = ladder.readings
@@ -99,17 +104,28 @@ def k_fold(ladder: Ladder) -> Array:
 
     The residuals of a left-out block b are (I - H_bb)^-1 r_b, H_bb the block of the hat matrix.
     A block that alone tells some unpenalised unknown cannot be predicted and is skipped.
+    Of a fine ladder every third rung is computed, the others are interpolated.
     """
-    total, told = np.zeros(len(ladder.strengths)), 0
+    t = len(ladder.strengths)
+    every = 3 if t >= FINE else 1
+    rungs = np.unique(np.append(np.arange(0, t, every), t - 1))
+    scores = _k_fold(ladder, rungs)
+    return np.asarray(np.interp(np.arange(t), rungs, scores))
+
+
+def _k_fold(ladder: Ladder, rungs: Rows) -> Array:
+    """Scores at some rungs."""
+    total, told = np.zeros(len(rungs)), 0
+    fill = ladder.fill[:, rungs]
     for rows in folds(ladder):
         Z, U = ladder.Z[rows], ladder.frame.U[rows]
         if np.linalg.norm(U, 2) ** 2 >= 1 - ALONE:
             continue
         i, j = np.triu_indices(len(rows))
-        upper = (Z[i] * Z[j]) @ ladder.fill + (U[i] * U[j]).sum(axis=1)[:, None]
-        blocks = np.empty((len(ladder.strengths), len(rows), len(rows)))
+        upper = (Z[i] * Z[j]) @ fill + (U[i] * U[j]).sum(axis=1)[:, None]
+        blocks = np.empty((len(rungs), len(rows), len(rows)))
         blocks[:, i, j] = blocks[:, j, i] = -upper.T
-        total += _left_out(blocks, ladder.residuals[rows].T)
+        total += _left_out(blocks, ladder.residuals[np.ix_(rows, rungs)].T)
         told += len(rows)
     return total / told if told else np.full(len(total), np.nan)
 
@@ -223,6 +239,9 @@ _SILENT = {
 def choose(ladder: Ladder, criterion: str) -> Choice:
     """The rung with the smallest score.
 
+    Where that lies at an edge of the ladder, the smoothest inner minimum is taken instead and the
+    note says so; without an inner minimum the choice stays at the edge and is not valid.
+
     Parameters
     ----------
     ladder : Ladder
@@ -234,10 +253,21 @@ def choose(ladder: Ladder, criterion: str) -> Choice:
     if not finite.any():
         note = _SILENT.get(criterion, "too few readings for this criterion")
         return Choice(criterion, -1, float("nan"), float("nan"), False, note)
-    at = int(np.argmin(np.where(finite, scores, np.inf)))
-    edge = len(scores) > 1 and at in (0, len(scores) - 1)
-    note = "at the edge of the ladder" if edge else ""
-    return Choice(criterion, at, float(ladder.strengths[at]), float(scores[at]), not edge, note)
+    scores = np.where(finite, scores, np.inf)
+    at, note, valid = int(np.argmin(scores)), "", True
+    if at in (0, len(scores) - 1) and len(scores) > 1:
+        inner = _inner_minima(scores)
+        valid, note = bool(len(inner)), "the smallest score is at the edge of the ladder"
+        if valid:
+            smoothest = np.argmin(ladder.dof[inner])
+            at, note = int(inner[smoothest]), note + "; the smoothest inner minimum is taken"
+    return Choice(criterion, at, float(ladder.strengths[at]), float(scores[at]), valid, note)
+
+
+def _inner_minima(scores: Array) -> Rows:
+    """Rungs whose score is below that of both neighbours."""
+    inner = (scores[1:-1] < scores[:-2]) & (scores[1:-1] < scores[2:])
+    return np.flatnonzero(inner) + 1
 
 
 def agree(choices: Iterable[Choice]) -> float:

@@ -11,7 +11,6 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
-from scipy.sparse import issparse
 
 from srcfit.priors import REACH, RUNGS, SCALE, above_floor, natural, sigma_grid
 from srcfit.problem import Array
@@ -100,10 +99,13 @@ def weigh(spectra: Sequence[Spectrum], sigma: Array, level: float | None = None)
 
 def _rungs(sp: Spectrum, sigma: Array) -> Weighted:
     """One family on its grid, not yet weighed against others."""
-    tau, nu = sigma**-2.0, sp.frame.nu
-    noise = np.ones(len(sigma)) if sp.frame.problem.stated else misfit(sp, tau) / nu
+    fr, tau, beyond = sp.frame, sigma**-2.0, float(sp.rest @ sp.rest)
+    noise = np.ones(len(sigma))
+    if not fr.problem.stated:
+        noise = misfit(sp.lam, sp.y, beyond, tau) / fr.nu
+    evidence = log_evidence(fr, sp.lam, sp.y, beyond, tau)
     shrink = 1 / (1 + sp.lam[:, None] * sigma**2)
-    return Weighted(sp, sigma, noise, log_evidence(sp, tau), np.ones(len(sigma)), shrink)
+    return Weighted(sp, sigma, noise, evidence, np.ones(len(sigma)), shrink)
 
 
 def at_one(sp: Spectrum, strength: float, noise: float) -> Weighted:
@@ -145,8 +147,9 @@ def conditional(asked: Asked, w: Weighted) -> tuple[Array, Array]:
     unpenalised = (asked.H**2).sum(axis=1)[:, None]
     T = asked.G @ (sp.K[:, :size] @ sp.V) - asked.H @ (sp.S[size:, :size] @ sp.V)
     mean = (asked.H @ fr.Ud)[:, None] + T @ (w.sigma**2 * w.shrink * sp.y[:, None])
-    if sp.factor is not None and sp.right is not None:
-        whole = asked.G @ sp.factor - asked.H @ (fr.UA @ sp.factor)
+    if sp.right is not None:
+        L = sp.factor
+        whole = asked.G @ L - asked.H @ (fr.UA @ L)
         seen = whole @ sp.right.T
         unseen = ((whole - seen @ sp.right) ** 2).sum(axis=1)[:, None]
         spread = w.sigma**2 * (unseen + seen**2 @ w.shrink)
@@ -160,13 +163,15 @@ def conditional(asked: Asked, w: Weighted) -> tuple[Array, Array]:
 
 def prior_variance(asked: Asked, sp: Spectrum) -> Array:
     """Variance (q,) of G f for sigma = 1, the constant held fixed."""
-    G = asked.G
-    if sp.factor is not None:
-        return np.asarray(((G @ sp.factor) ** 2).sum(axis=1))
-    assert sp.C is not None
-    GC = G @ sp.C
-    product = G.multiply(GC) if issparse(G) else G * GC
-    return np.asarray(product.sum(axis=1)).ravel()
+    G, base = asked.G, sp.base
+    if base.L is not None:
+        variance = ((G @ base.L) ** 2).sum(axis=1)
+    else:
+        assert base.C is not None
+        GC = G @ base.C
+        product = G * GC if isinstance(G, np.ndarray) else G.multiply(GC)
+        variance = np.asarray(product.sum(axis=1)).ravel()
+    return np.asarray(sp.family.scale * variance + ((G @ sp.steps) ** 2).sum(axis=1))
 
 
 def data_share(asked: Asked, families: Sequence[Weighted]) -> Array:

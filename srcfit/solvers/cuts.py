@@ -14,7 +14,7 @@ from srcfit.priors import factor, family, null_columns
 from srcfit.problem import Array, Problem
 from srcfit.solvers.frame import Frame, frame
 from srcfit.solvers.ladder import Ladder
-from srcfit.solvers.spectrum import bases, spectrum
+from srcfit.solvers.spectrum import thin_svd
 
 # shapes seen less than this part of the best seen one, or of their own norm, are left out
 UNSEEN = 1e-12
@@ -30,15 +30,12 @@ def svd_cut(
     """
     chosen = family(roughness, problem.grid)
     fr = frame(problem, null_columns(chosen.base, problem.grid))
-    products = bases(fr, [(chosen.base, chosen.length)], "svd")
-    sp = spectrum(fr, chosen, products, np.zeros((len(fr.free), 0)))
-    s = np.sqrt(sp.lam)
+    S = factor(chosen.base, chosen.length, problem.grid)
+    V, s, Wt = thin_svd(fr.QA @ S, right=True)
+    assert Wt is not None
     kept = int((s > UNSEEN * s.max(initial=0.0)).sum())
     kept = min(kept, max(fr.nu - 1, 0), DEEPEST)
-    assert sp.factor is not None
-    assert sp.right is not None
-    shapes = sp.factor @ (sp.right[:kept] / s[:kept, None]).T
-    return _cut(fr, "svd-cut", roughness, sp.Z[:, :kept], shapes, np.eye(kept))
+    return _cut(fr, "svd-cut", roughness, fr.Q @ V[:, :kept], S, (Wt[:kept] / s[:kept, None]).T)
 
 
 def eigenbasis(

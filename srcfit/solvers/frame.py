@@ -10,11 +10,14 @@ Source: Harville (1977), J. Am. Stat. Assoc. 72, 320 (restricted likelihood, err
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.sparse import csr_array
 
 from srcfit.problem import Array, Problem, Questions
+
+if TYPE_CHECKING:
+    from scipy.sparse import csr_array
 
 # columns are scaled to unit norm before the rank test, so this is free of units
 RANK = 1e-7
@@ -196,6 +199,8 @@ def _balanced(problem: Problem, free: np.ndarray[tuple[int], np.dtype[np.intp]])
 
 def ask(fr: Frame, questions: Questions) -> Asked:
     """Bring questions into the frame: unpenalised weights b become h = N+' b."""
+    from scipy.sparse import csr_array
+
     problem = fr.problem
     on_free = np.asarray(questions.cells)[:, problem.grid.free]
     parts = [on_free.sum(axis=1)[:, None]] if problem.constant else []

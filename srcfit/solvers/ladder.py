@@ -150,43 +150,57 @@ class Ladder:
         return np.asarray(asked.G @ f + asked.H @ (fr.Ud[:, None] - fr.UA @ f))
 
 
-def penalised(sp: Spectrum, strengths: Array, solver: str = "tikhonov") -> Ladder:
+def penalised(sp: Spectrum, strengths: Array) -> Ladder:
     """Ladder of one family over strengths tau = 1 / sigma**2 (in units of the noise)."""
-    lam, tau = sp.lam[:, None], strengths[None, :]
-    fill = lam / (lam + tau)
-    amounts = sp.y[:, None] / (lam + tau)
     size = sp.V.shape[0]
+    return filtered(sp.frame, sp.family, sp.lam, sp.Z, sp.y, (sp.K[:, :size], sp.V), strengths)
+
+
+def filtered(
+    fr: Frame,
+    family: Family,
+    lam: Array,
+    Z: Array,
+    y: Array,
+    shapes: tuple[Array, Array],
+    strengths: Array,
+) -> Ladder:
+    """Ladder of penalised estimates from modes Z with variances lam; `shapes` give A'Z in C."""
+    # one division; the fill is 1 - tau / (lam + tau)
+    amounts = 1 / (lam[:, None] + strengths)
+    fill = lam[:, None] * amounts
+    amounts *= y[:, None]
+    rest = fr.rest + fr.Q @ fr.Qd - Z @ y
     return Ladder(
-        solver=solver,
-        family=sp.family,
-        frame=sp.frame,
+        solver="tikhonov",
+        family=family,
+        frame=fr,
         strengths=strengths,
-        Z=sp.Z,
-        y=sp.y,
-        rest=sp.rest,
+        Z=Z,
+        y=y,
+        rest=rest,
         fill=fill,
-        shapes=(sp.K[:, :size], sp.V),
+        shapes=shapes,
         amounts=amounts,
-        roughness=np.sqrt((lam * amounts**2).sum(axis=0)),
-        log_evidence=log_evidence(sp, strengths),
+        roughness=np.sqrt(lam @ amounts**2),
+        log_evidence=log_evidence(fr, lam, y, float(rest @ rest), strengths),
     )
 
 
-def log_evidence(sp: Spectrum, strengths: Array) -> Array:
+def log_evidence(fr: Frame, lam: Array, y: Array, beyond: float, strengths: Array) -> Array:
     """Restricted log likelihood at each strength, up to a constant shared by all families, (t,).
 
-    With an unstated noise the sd s is integrated out under a prior uniform in ln s.
+    With an unstated noise the sd s is integrated out under a prior uniform in ln s. `beyond` is
+    the sum of squares that no mode reaches.
     Source: Harville (1977); Wahba (1985), Ann. Stat. 13, 1378.
     """
-    grow = sp.lam[:, None] / strengths
-    energy = misfit(sp, strengths)
-    volume = -0.5 * np.log1p(grow).sum(axis=0)
-    if sp.frame.problem.stated:
+    energy = misfit(lam, y, beyond, strengths)
+    volume = -0.5 * np.log1p(lam[:, None] / strengths).sum(axis=0)
+    if fr.problem.stated:
         return np.asarray(volume - 0.5 * energy)
-    return np.asarray(volume - 0.5 * sp.frame.nu * np.log(energy))
+    return np.asarray(volume - 0.5 * fr.nu * np.log(energy))
 
 
-def misfit(sp: Spectrum, strengths: Array) -> Array:
+def misfit(lam: Array, y: Array, beyond: float, strengths: Array) -> Array:
     """Quadratic form d'(I + A C A' / tau)^-1 d of the projected readings, (t,)."""
-    shrunk = 1 / (1 + sp.lam[:, None] / strengths)
-    return np.asarray(sp.y**2 @ shrunk + sp.rest @ sp.rest)
+    return np.asarray(y**2 @ (strengths / (lam[:, None] + strengths)) + beyond)

@@ -27,15 +27,23 @@ SHARP = 2e3
 
 @dataclass(frozen=True)
 class Base:
-    """Products of one base kernel: K = C T' (m', v + r), S = T K, T = [QA; UA].
+    """One base kernel C and its products with T = [QA; UA], v + r rows.
 
-    Beside them C itself (eigh) or its factor (svd).
+    Attributes
+    ----------
+    K : (m', v + r), C T'
+    S : (v + r, v + r), T C T'
+    C : (m', m') or None
+        The covariance (eigh route).
+    L, TL : (m', j), (v + r, j) or None
+        Its factor, C = L L', and T L (svd route).
     """
 
     K: Array
     S: Array
-    C: Array | None
-    factor: Array | None
+    C: Array | None = None
+    L: Array | None = None
+    TL: Array | None = None
 
 
 @dataclass(frozen=True)
@@ -44,6 +52,9 @@ class Spectrum:
 
     Attributes
     ----------
+    base : Base
+    steps : (m', j)
+        C = scale * base + steps steps'; without columns where the family has none.
     lam : (c,)
         Variance of each mode of the readings for sigma = 1.
     V : (v, c)
@@ -52,16 +63,16 @@ class Spectrum:
         The readings' part in each mode.
     rest : (n,)
         Readings beyond the unpenalised columns and the modes.
-    K, S : products of the family's covariance with T = [QA; UA], as in `Base`
-    C : (m', m') or None
-        Covariance (eigh route).
-    factor : (m', j) or None
-        Factor of the covariance (svd route); `right` (c, j) are its directions that the modes
-        see: f = factor @ right' z puts sqrt(lam) z into the modes.
+    K, S : products of the family's covariance, as in `Base`
+    right : (c, j) or None
+        Directions of the factor that the modes see (svd route, where asked for):
+        f = factor @ right' z puts sqrt(lam) z into the modes.
     """
 
     frame: Frame
     family: Family
+    base: Base
+    steps: Array
     lam: Array
     V: Array
     Z: Array
@@ -69,15 +80,13 @@ class Spectrum:
     rest: Array
     K: Array
     S: Array
-    C: Array | None
-    factor: Array | None
     right: Array | None
 
-    def source(self, amounts: Array) -> Array:
-        """Variation of the source (m', ...) = C A'Z amounts, for (c, ...) amounts of each mode."""
-        size = self.V.shape[0]
-        f = self.K[:, :size] @ (self.V @ amounts)
-        return f if self.frame.balanced is None else self.frame.balanced @ f
+    @property
+    def factor(self) -> Array:
+        """Factor of the family's covariance, (m', j); svd route only."""
+        assert self.base.L is not None
+        return np.hstack([np.sqrt(self.family.scale) * self.base.L, self.steps])
 
 
 def route(fr: Frame) -> Route:
@@ -93,55 +102,71 @@ def bases(
 ) -> dict[tuple[str, float], Base]:
     """Products of each base kernel (name, length), computed once for all families that use it."""
     T = np.vstack([fr.QA, fr.UA])
+    return {key: _base(fr, T, *key, by) for key in dict.fromkeys(keys)}
+
+
+def _base(fr: Frame, T: Array, name: str, length: float, by: Route) -> Base:
     grid = fr.problem.grid
-    found: dict[tuple[str, float], Base] = {}
-    for name, length in keys:
-        if (name, length) in found:
-            continue
-        if by == "svd" or name.startswith("roughness"):
-            L = factor(name, length, grid)
-            TL = T @ L
-            C = L @ L.T if by == "eigh" else None
-            found[name, length] = Base(L @ TL.T, TL @ TL.T, C, L if by == "svd" else None)
-        else:
-            C = covariance(name, length, grid)
-            K = C @ T.T
-            found[name, length] = Base(K, T @ K, C, None)
-    return found
+    if by == "svd":
+        L = factor(name, length, grid)
+        TL = T @ L
+        return Base(L @ TL.T, TL @ TL.T, L=L, TL=TL)
+    C = covariance(name, length, grid)
+    K = C @ T.T
+    return Base(K, T @ K, C=C)
 
 
 def spectrum(
-    fr: Frame, family: Family, products: Mapping[tuple[str, float], Base], pieces: Array
+    fr: Frame,
+    family: Family,
+    products: Mapping[tuple[str, float], Base],
+    pieces: Array,
+    *,
+    right: bool = False,
 ) -> Spectrum:
-    """Decompose one family; steps enter as a low-rank addition to the base's products."""
+    """Decompose one family; steps enter as a low-rank addition to the base's products.
+
+    Parameters
+    ----------
+    fr : Frame
+    family : Family
+    products : of `bases`
+    pieces : (m', j)
+        Indicators of the pieces within which the source may step.
+    right : bool
+        Also find the right singular vectors where the route is svd (for variances).
+    """
     base = products[family.base, family.length]
-    steps = np.sqrt(family.steps) * pieces if family.steps and pieces.shape[1] else None
-    K, S, size = family.scale * base.K, family.scale * base.S, len(fr.Qd)
-    if steps is not None:
-        seen = np.vstack([fr.QA, fr.UA]) @ steps
+    K, S, size = base.K, base.S, len(fr.Qd)
+    if family.scale != 1:
+        K, S = family.scale * K, family.scale * S
+    steps = np.sqrt(family.steps) * pieces if family.steps else pieces[:, :0]
+    seen = np.vstack([fr.QA @ steps, fr.UA @ steps])
+    if steps.shape[1]:
         K, S = K + steps @ seen.T, S + seen @ seen.T
-    C = L = right = None
-    if base.factor is None:
-        assert base.C is not None
+    Wt = None
+    if base.TL is None:
         lam, V = eigh(S[:size, :size], driver="evd", check_finite=False)
         lam = np.maximum(lam, 0.0)
-        C = family.scale * base.C if steps is None else family.scale * base.C + steps @ steps.T
     else:
-        L = np.sqrt(family.scale) * base.factor
-        L = L if steps is None else np.hstack([L, steps])
-        V, s, right = _thin_svd(fr.QA @ L)
+        F = np.hstack([np.sqrt(family.scale) * base.TL[:size], seen[:size]])
+        V, s, Wt = thin_svd(F, right=right)
         lam = s**2
     Z = fr.Q @ V
     y = V.T @ fr.Qd
     rest = fr.rest if V.shape[1] == size else fr.rest + fr.Q @ (fr.Qd - V @ y)
-    return Spectrum(fr, family, lam, V, Z, y, rest, K, S, C, L, right)
+    return Spectrum(fr, family, base, steps, lam, V, Z, y, rest, K, S, Wt)
 
 
-def _thin_svd(F: Array) -> tuple[Array, Array, Array]:
-    """Thin SVD of a (usually wide) matrix, by a QR of its longer side first."""
+def thin_svd(F: Array, *, right: bool) -> tuple[Array, Array, Array | None]:
+    """Thin SVD of a (usually wide) matrix; the right vectors only where they are asked for."""
     if F.shape[1] <= F.shape[0]:
         V, s, Wt = svd(F, full_matrices=False, check_finite=False)
-        return V, s, Wt
+        return V, s, Wt if right else None
+    if not right:
+        lower = np.asarray(np.linalg.qr(F.T, mode="r")).T
+        V, s, _ = svd(lower, check_finite=False)
+        return V, s, None
     G, R = np.linalg.qr(F.T)
-    V, s, Wt = svd(R.T, full_matrices=False, check_finite=False)
+    V, s, Wt = svd(R.T, check_finite=False)
     return V, s, Wt @ G.T

@@ -8,11 +8,11 @@ from __future__ import annotations
 
 import numpy as np
 
-from srcfit.priors import family, null_columns
+from srcfit.priors import factor, family, null_columns
 from srcfit.problem import Array, Problem
 from srcfit.solvers.frame import frame
-from srcfit.solvers.ladder import Ladder, penalised
-from srcfit.solvers.spectrum import bases, spectrum
+from srcfit.solvers.ladder import Ladder, filtered
+from srcfit.solvers.spectrum import thin_svd
 
 RUNGS = 200
 # the ladder spans at most this ratio to the largest eigenvalue
@@ -45,10 +45,19 @@ def tikhonov(
     """
     chosen = family(roughness, problem.grid)
     fr = frame(problem, null_columns(chosen.base, problem.grid))
-    products = bases(fr, [(chosen.base, chosen.length)], "svd")
-    none = np.zeros((len(fr.free), 0))
-    sp = spectrum(fr, chosen, products, none)
-    return penalised(sp, _strengths(sp.lam, fr.nu) if strengths is None else np.asarray(strengths))
+    S = factor(chosen.base, chosen.length, problem.grid)
+    F = _times(fr.QA, S, chosen.base)
+    V, s, _ = thin_svd(F, right=False)
+    tau = _strengths(s**2, fr.nu) if strengths is None else np.asarray(strengths, dtype=float)
+    return filtered(fr, chosen, s**2, fr.Q @ V, V.T @ fr.Qd, (S, F.T @ V), tau)
+
+
+def _times(A: Array, S: Array, base: str) -> Array:
+    """A S; first differences are a sum over all cells beyond."""
+    if base != "roughness-1":
+        return A @ S
+    beyond = np.cumsum(A[:, ::-1], axis=1)[:, -2::-1]
+    return np.asarray(beyond * S[-1])
 
 
 def _strengths(lam: Array, nu: int) -> Array:
@@ -60,7 +69,7 @@ def _strengths(lam: Array, nu: int) -> Array:
     top = float(lam.max(initial=0.0))
     if top == 0:
         return np.ones(1)
-    tau = np.geomspace(top * DEEPEST, top * MARGIN, 8 * RUNGS)
+    tau = np.geomspace(top * DEEPEST, top * MARGIN, 2 * RUNGS)
     left = nu - (lam[:, None] / (lam[:, None] + tau)).sum(axis=0)
     low = tau[int(np.argmax(left >= min(1.0, nu / 2)))]
     return np.geomspace(low, top * MARGIN, RUNGS)
