@@ -128,32 +128,59 @@ def build(case: Case, readings: Readings) -> Forward:
     specs = [case.columns[readings.spec[r]] for r in rows]
     line, lines, nulls, reactions = _lines(case, readings, rows, specs, grid)
     n = len(rows)
-    cells = _per_cell(line, grid, interval_integrals(lines)) * grid.free
-    loads, load_columns = _lumped(case, line, lines)
-    given, unknown, unknown_columns = _restraints(case, lines)
+    cells, columns, member_columns, known = _model(case, grid, line, lines)
+    loads = len(case.source.lumped)
     own, own_columns = _reading_nuisances(case, readings, rows, specs)
     padded = np.zeros((len(lines) - n, own_columns.shape[1]))
     null_columns = _null_reads(nulls, readings, rows, specs, reactions, case)
-    columns = [*loads, *unknown, *own]
+    columns += own
     columns += [Column(f"null mode {i + 1}", "null") for i in range(null_columns.shape[1])]
     B = np.concatenate(
-        [load_columns, unknown_columns, np.concatenate([own_columns, padded]), null_columns],
-        axis=1,
+        [member_columns, np.concatenate([own_columns, padded]), null_columns], axis=1
     )
-    known = given + _known_parts(case, line, lines)
     absolute = _base(case.member) * _absolute(case.member, specs)
     y = _corrected(readings, rows, specs) - known[:n] - absolute
     _enough(case, n, columns)
     group_names = tuple(dict.fromkeys(s.group for s in specs))
-    balance = (
-        None if nulls is None else _balance(nulls, line, grid, case, len(columns), len(loads))
-    )
+    balance = None if nulls is None else _balance(nulls, line, grid, case, len(columns), loads)
     return Forward(
         case, readings, grid, rows, cells[:n], B[:n], y, known[:n] + absolute, readings.sd[rows],
         np.array([group_names.index(s.group) for s in specs], dtype=int), group_names,
         _lags(specs, group_names), tuple(columns), reactions, cells[n:], B[n:], known[n:],
         balance, line, lines,
     )  # fmt: skip
+
+
+def _model(
+    case: Case, grid: Grid, line: Chain, lines: Influence
+) -> tuple[Matrix, list[Column], Matrix, Matrix]:
+    """What functionals see: of each cell, of lumped parts, of unknown amounts, and what is known."""
+    cells = _per_cell(line, grid, interval_integrals(lines)) * grid.free
+    loads, load_columns = _lumped(case, line, lines)
+    given, unknown, unknown_columns = _restraints(case, lines)
+    columns = np.concatenate([load_columns, unknown_columns], axis=1)
+    return cells, [*loads, *unknown], columns, given + _known_parts(case, line, lines)
+
+
+def along(forward: Forward, quantity: str, x: Array) -> tuple[Matrix, Matrix, Matrix]:
+    """A quantity along the member as rows over cells and columns, and its known part.
+
+    Parameters
+    ----------
+    quantity : str
+        As in `kernel.kernel`.
+    x : (g,) places that are nodes of the forward's chain (cell edges are) [m]
+
+    Returns
+    -------
+    cells (g, m), columns (g, k), known (g,), in SI; the ambient is left out, and so are nuisances
+    of readings and null modes.
+    """
+    line = forward.line
+    lines = influence(line, [functional(line, quantity, float(place)) for place in x])
+    cells, _, columns, known = _model(forward.case, forward.grid, line, lines)
+    padded = np.zeros((len(x), forward.B.shape[1] - columns.shape[1]))
+    return cells, np.concatenate([columns, padded], axis=1), known
 
 
 def _enough(case: Case, n: int, columns: list[Column]) -> None:

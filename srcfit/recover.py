@@ -14,7 +14,8 @@ from srcfit.bands import undetermined
 from srcfit.case.model import Case
 from srcfit.eigen import modes
 from srcfit.errors import Finding
-from srcfit.influence import at_nodes, influence
+from srcfit.forward import along
+from srcfit.influence import at_nodes
 from srcfit.member import Array
 from srcfit.perturb import perturbed
 from srcfit.readings import read
@@ -26,7 +27,9 @@ from srcfit.results import (
     fit_facts,
     known,
     ladder_table,
+    reading_units,
     readings_table,
+    recoloured,
     source_table,
     zones_table,
 )
@@ -154,16 +157,22 @@ def _findings(
     return found
 
 
-def _balance(solved: Solved) -> list[Finding]:
-    forward = solved.forward
-    blocks = solved.asked.blocks
-    f = solved.answers.value[blocks["cells"]]
+def estimate(solved: Solved) -> tuple[Array | None, Array]:
+    """Densities (m,) and unknowns (k,) of the estimate in SI; None where undetermined."""
+    forward, blocks = solved.forward, solved.asked.blocks
+    f = np.where(forward.grid.free, solved.answers.value[blocks["cells"]], 0.0)
     beta = np.zeros(len(forward.columns))
     for block, kind in (("lumped", "lumped"), ("nuisances", "nuisance")):
         where = [i for i, c in enumerate(forward.columns) if c.kind == kind]
         beta[where] = solved.answers.value[blocks[block]]
-    f = np.where(forward.grid.free, f, 0.0)
-    if not (np.isfinite(f).all() and np.isfinite(beta).all()) or forward.balance is not None:
+    told = np.isfinite(f).all() and np.isfinite(beta).all()
+    return (f if told else None), beta
+
+
+def _balance(solved: Solved) -> list[Finding]:
+    forward = solved.forward
+    f, beta = estimate(solved)
+    if f is None or forward.balance is not None:
         return []
     source = forward.case.source
     scale = per(source.total_unit, forward.case.member.kind.total_unit)
@@ -213,18 +222,30 @@ def _pictures(solved: Solved) -> Pictures:
 
 def _predicted(solved: Solved, residual: Array) -> Array:
     """Predicted used readings in their own units from whitened residuals."""
-    from srcfit.results import _reading_units, recoloured
-
     forward = solved.forward
-    scale, shift = _reading_units(solved)
+    scale, shift = reading_units(solved)
     value = np.real(forward.readings.value[forward.rows] - recoloured(solved, residual))
     predicted: Array = value * scale[forward.rows] + shift[forward.rows]
     return predicted
 
 
 def _curves(solved: Solved) -> dict[str, Array]:
-    """Predicted reading of each used sensor kind along the member (SI), datum left out."""
-    return {}
+    """Predicted reading of each used sensor kind along the member (SI); datum offsets left out.
 
-
-_ = influence
+    Empty where the readings do not determine the source, and on members with null modes.
+    """
+    forward = solved.forward
+    f, beta = estimate(solved)
+    if f is None or forward.balance is not None:
+        return {}
+    member, curves = forward.case.member, {}
+    for spec in {s.kind: s for s in forward.specs()}.values():
+        sensor = member.kind.sensor(spec.kind)
+        if sensor.quantity == "reaction":
+            continue
+        cells, columns, known = along(forward, sensor.quantity, forward.grid.edges)
+        value = np.real(cells @ f + columns @ beta + known)
+        if sensor.quantity == "response" and member.kind.relative and not member.driven:
+            value = value + member.ambient
+        curves[spec.kind] = value * ((spec.distance or 0.0) if sensor.needs_distance else 1.0)
+    return curves

@@ -121,7 +121,7 @@ def readings_table(solved: Solved) -> pd.DataFrame:
 
     forward = solved.forward
     readings, n = forward.readings, len(forward.readings)
-    scale, shift = _reading_units(solved)
+    scale, shift = reading_units(solved)
     residual, left = (np.full(n, np.nan, dtype=forward.y.dtype) for _ in range(2))
     standardised = np.full(n, np.nan)
     residual[forward.rows] = recoloured(solved, solved.answers.fit.residual)
@@ -144,7 +144,7 @@ def readings_table(solved: Solved) -> pd.DataFrame:
     return pd.DataFrame(shown)
 
 
-def _reading_units(solved: Solved) -> tuple[Array, Array]:
+def reading_units(solved: Solved) -> tuple[Array, Array]:
     """Scale and shift from SI to each row's own unit."""
     case, readings = solved.forward.case, solved.forward.readings
     scale, shift = np.ones(len(readings)), np.zeros(len(readings))
@@ -319,7 +319,7 @@ def fit_facts(solved: Solved) -> dict[str, Any]:
 def noise_facts(solved: Solved, chi_square: float | None, dof: float | None) -> dict[str, Any]:
     """Stated or estimated noise, group by group, in the readings' units."""
     forward = solved.forward
-    scale, _ = _reading_units(solved)
+    scale, _ = reading_units(solved)
     groups = []
     for g, name in enumerate(forward.groups):
         members = np.flatnonzero(forward.group == g)
