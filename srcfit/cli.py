@@ -6,7 +6,8 @@ import codecs
 import json
 import os
 import sys
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, TextIO, TypeVar
 
@@ -48,7 +49,8 @@ def main(argv: Sequence[str] | None = None) -> int:
     """
     _tolerant(sys.stdout, sys.stderr)
     try:
-        status = cli.main(args=argv, prog_name="srcfit", standalone_mode=False)
+        with _orderly():
+            status = cli.main(args=argv, prog_name="srcfit", standalone_mode=False)
         return status if isinstance(status, int) else DONE
     except SrcfitError as error:
         return _fail(str(error), UNUSABLE)
@@ -70,6 +72,25 @@ def main(argv: Sequence[str] | None = None) -> int:
 def _fail(message: str, status: int) -> int:
     click.echo(f"srcfit: {' '.join(message.split())}", err=True)
     return status
+
+
+@contextmanager
+def _orderly() -> Iterator[None]:
+    """Let a request to end run the clean-up that an interrupt runs."""
+    import signal
+    from threading import current_thread, main_thread
+
+    def end(number: int, frame: object) -> None:
+        raise SystemExit(128 + number)
+
+    if current_thread() is not main_thread():
+        yield
+        return
+    before = signal.signal(signal.SIGTERM, end)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGTERM, before)
 
 
 def _tolerant(*streams: TextIO) -> None:
@@ -162,11 +183,13 @@ def new(kind: str, output: str | None, demo: bool, seed: int, replace: bool) -> 
     With --demo it comes with invented readings and runs as it stands; the folder is KIND-demo
     unless -o names another.
     """
+    if output is None and not demo:
+        from srcfit.case.template import template
+
+        click.echo(template(kind), nl=False)
+        return
     from srcfit import start
 
-    if output is None and not demo:
-        click.echo(start.case_text(kind), nl=False)
-        return
     written = start.write(kind, output or f"{kind}-demo", demo=demo, seed=seed, replace=replace)
     for path in written:
         click.echo(path)

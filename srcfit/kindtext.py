@@ -14,6 +14,7 @@ ENDS_2 = (
     ('"fixed"', "the response is 0, or the ambient where it refers to one"),
     ('"free", "insulated", "closed"', "no flux"),
     ('"axis"', "the regular end at radius 0 (the default there)"),
+    ('"regular"', "the regular end where p falls to 0"),
     ("{ value = ... }", 'prescribed; value = "unknown" leaves it to the readings'),
     ("{ spring = ... }", "elastic: force = spring × response"),
     (
@@ -30,7 +31,7 @@ ENDS_4 = (
     ('{ kind = "pinned", settlement = ... }', 'moved; "unknown" leaves it to the readings'),
     ('{ kind = "clamped", rotation = ... }', 'a clamp that gives; "unknown" likewise'),
 )
-SPRING, TRANSFER = ENDS_2[4], ENDS_2[5]
+SPRING, TRANSFER = ENDS_2[-2:]
 GENERAL_END = ("{ a = ..., b = ... }", "a u + b (p u') = 0")
 
 

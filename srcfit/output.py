@@ -179,9 +179,9 @@ def put_file(path: str | Path, data: str | bytes, *, replace: bool = False) -> P
 
 
 def input_paths(case: Case) -> tuple[Path, ...]:
-    """Absolute paths of the case file and of the tables it names."""
+    """Absolute paths of the case file and of every file it names."""
     own = (case.path,) if case.path is not None else ()
-    paths = (*own, *(case.folder / table.file for table in case.tables))
+    paths = (*own, *case.files, *(case.folder / t.file for t in case.tables))
     return tuple(Path(os.path.abspath(p)) for p in paths)
 
 

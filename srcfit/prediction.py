@@ -109,8 +109,6 @@ def _probed(
     places = (panels[:-1, None] + np.diff(panels)[:, None] * c).ravel()
     symbol = "q" if member.kind.order == 2 else "p0"
     weights = operator(member, places)[symbol] * (np.diff(panels)[:, None] * b).ravel()
-    if not weights.any():
-        places, weights = np.zeros(0), np.zeros(0)
     sensor = next(s for s in member.kind.sensors if s.quantity == "response")
     spec = ColumnSpec(("",), sensor.name, "response", unit=sensor.unit, sd=1.0)
     table_ = TableSpec(Path(), PositionSpec("", "m"), (spec,))
