@@ -319,7 +319,8 @@ def leave_out(batch: Batch, lines: Iterable[int], twice: Mapping[int, int]) -> N
     """Readings on lines that the case excludes, and those of exact duplicates of earlier rows."""
     for k, line in twice.items():
         batch.reason.setdefault(k, f"an exact duplicate of line {line}")
-    for at in np.flatnonzero(np.isin(batch.line, list(lines))):
+    wanted = list(lines)
+    for at in np.flatnonzero(np.isin(batch.line, wanted)) if wanted else ():
         batch.reason[int(at)] = "its line is in `exclude_lines`"
 
 

@@ -135,6 +135,9 @@ def _bound(case: Case, column: ColumnSpec, batch: Batch) -> None:
     """Reasons that hang on the place: none, off the member, excluded stretches."""
     member, x, why = case.member, batch.x, batch.reason
     near = _NEAR_END * member.length
+    inside = len(x) > 0 and x.min() > member.start + near and x.max() < member.end - near
+    if inside and not column.exclude:  # false for nan as well
+        return
     for end in (member.start, member.end):
         x[np.abs(x - end) <= near] = end
     for k in np.flatnonzero((x < member.start) | (x > member.end)):
@@ -184,7 +187,9 @@ def _assemble(
         kind=_texts([columns[b.spec].kind for b in batches], sizes, order),
         unit=_texts([b.unit for b in batches], sizes, order),
         x=_joined([b.x for b in batches], order),
-        value=_joined([b.value * columns[b.spec].sign for b in batches], order).astype(kind),
+        value=_joined([_signed(b.value, columns[b.spec]) for b in batches], order).astype(
+            kind, copy=False
+        ),
         sd=_joined([b.sd for b in batches], order),
         used=used,
         reason=reason,
@@ -194,6 +199,10 @@ def _assemble(
         understood=understood,
         inputs=inputs,
     )
+
+
+def _signed(value: NDArray[Any], column: ColumnSpec) -> NDArray[Any]:
+    return value if column.sign == 1 else value * column.sign
 
 
 def _joined(parts: Sequence[NDArray[Any]], order: NDArray[np.int64] | None) -> NDArray[Any]:

@@ -103,7 +103,7 @@ def _stuck(name: str, batch: Batch) -> list[Finding]:
     """Long runs of one value in a column whose values otherwise differ."""
     keep = used_rows(batch)
     value, line = batch.raw[keep], batch.line[keep]
-    if len(value) < 2 * _RUN:
+    if len(value) < 2 * _RUN or np.count_nonzero(value[1:] == value[:-1]) < _RUN - 1:
         return []
     edges = np.flatnonzero(np.r_[True, value[1:] != value[:-1], True])
     runs = np.diff(edges)
@@ -126,11 +126,11 @@ def _marks(name: str, batch: Batch) -> list[Finding]:
     if len(shown) < 4:
         return []
     size = np.abs(shown)
-    odd = size >= 999
-    if not odd.any():
+    large = np.flatnonzero(size >= 999)
+    if not len(large):
         return []
-    odd &= np.isin(size, _MARKS) & (size > 10 * np.median(size))
-    if not odd.any() or odd.sum() > 0.3 * len(size):
+    odd = large[np.isin(size[large], _MARKS) & (size[large] > 10 * np.median(size))]
+    if not len(odd) or len(odd) > 0.3 * len(size):
         return []
     text = ", ".join(f"{v:g}" for v in np.unique(shown[odd])[:4])
     return [Finding(
