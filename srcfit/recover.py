@@ -12,12 +12,12 @@ from srcfit.answers import per
 from srcfit.balance import balance
 from srcfit.bands import undetermined
 from srcfit.case.model import Case
+from srcfit.case.vary import vary
 from srcfit.eigen import modes
 from srcfit.errors import Finding
 from srcfit.forward import along
 from srcfit.influence import at_nodes
 from srcfit.member import Array
-from srcfit.perturb import perturbed
 from srcfit.readings import read
 from srcfit.readings.model import Readings
 from srcfit.recovery import Pictures, Recovery
@@ -96,7 +96,7 @@ def _properties(solved: Solved) -> tuple[Array, Mapping[str, Array], Mapping[str
     for key in forward.case.member.uncertainty:
         up, down = (
             solve(
-                replace(forward.case, member=perturbed(forward.case.member, key, side)),
+                replace(forward.case, member=vary(forward.case.member, key, side)),
                 forward.readings,
                 criteria=False,
             )

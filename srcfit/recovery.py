@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -13,6 +14,7 @@ from srcfit.case.model import Case
 
 if TYPE_CHECKING:
     import pandas as pd
+    from matplotlib.figure import Figure
 
 Array = NDArray[np.float64]
 
@@ -99,3 +101,27 @@ class Recovery:
     def summary(self) -> dict[str, Any]:
         """The mapping written to summary.json."""
         return dict(self.facts)
+
+    def plot(self) -> Figure:
+        """Member, source and readings in one matplotlib figure."""
+        from srcfit.plots import overview
+
+        return overview(self)
+
+    def save(self, folder: str | Path, *, replace: bool = False) -> Path:
+        """Write tables, summary, page and figures into `folder`, whole or not at all.
+
+        Raises
+        ------
+        OutputError
+            When the folder exists (unless `replace`) or cannot be made.
+        """
+        from srcfit.output import save
+
+        return save(self, Path(folder), replace=replace).folder
+
+    def _repr_html_(self) -> str:
+        """Static summary for notebooks."""
+        from srcfit.report import fragment
+
+        return fragment(self)
