@@ -62,7 +62,7 @@ def draw_member(
         _support(support.at * per_metre, support.restraint.stiffness, support.word, ax)
     for hinge in member.hinges:
         ax.plot([hinge.at * per_metre], [0], "o", mfc="white", mec=BLACK, ms=7, zorder=5)
-        _label(ax, hinge.at * per_metre, "hinge", -0.52)
+        _label(ax, hinge.at * per_metre, "hinge", -0.80)
     for interface in member.interfaces:
         _interface(interface.at * per_metre, ax)
     _sensors(readings, ax)
@@ -168,7 +168,7 @@ def _support(x: float, stiffness: float, word: str, ax: Axes) -> None:
 
 def _interface(x: float, ax: Axes) -> None:
     _glyph(ax, x, 0, "gap", 34, VERMILLION)
-    _label(ax, x, "interface", -0.62, colour=VERMILLION)
+    _label(ax, x, "interface", -0.80, colour=VERMILLION)
 
 
 def _strokes() -> dict[str, tuple[list[tuple[float, float]], ...]]:

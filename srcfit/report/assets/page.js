@@ -76,11 +76,11 @@
   const steps = uPlot.paths.stepped({ align: 1 });
   const closed = (values) => [...values, values.length ? values[values.length - 1] : null];
   const line = (colour, more = {}) => ({
-    stroke: colour, width: 1.8, pxAlign: 0, points: { show: false }, spanGaps: true, ...more,
+    stroke: colour, width: 0.11 * rem(), pxAlign: 0, points: { show: false }, spanGaps: true, ...more,
   });
   const stepped = (colour, more = {}) => line(colour, { paths: steps, pxAlign: 1, ...more });
   const dots = (colour, more = {}) => ({
-    stroke: colour, paths: () => null, points: { show: true, size: 6, fill: colour, width: 0 }, ...more,
+    stroke: colour, paths: () => null, points: { show: true, size: 0.38 * rem(), fill: colour, width: 0 }, ...more,
   });
 
   /* One chart in a host; it follows the width of its column. */
@@ -264,7 +264,7 @@
     const shape = groupsOf(panel).length > 6 ? { paths: () => null, points: { show: true, size: 3 } } : {};
     return {
       scales: { x: alongX, y: { range: () => range } }, axes: [place(), yAxis()],
-      series: [{}, dots(paint.ink, { points: { show: true, size: panel.x.length > 200 ? 3 : 6, fill: paint.ink, width: 0 } }),
+      series: [{}, dots(paint.ink, { points: { show: true, size: (panel.x.length > 200 ? 0.18 : 0.38) * rem(), fill: paint.ink, width: 0 } }),
         ...Array.from({ length: count }, () => line(colour, { dash, ...shape }))],
       hooks: { draw: [bars(panel), crosses(panel)], setCursor: watch ? [(u) => pointed(u, panel)] : [] },
     };
@@ -282,7 +282,7 @@
       chart(`residuals${p}`, panelHost(host, `residual / sd, ${panel.kind}`), {
         high: 8, sync: true, plot: {
           scales: { x: alongX, y: { range: () => z } }, axes: [place(), yAxis()],
-          series: [{}, dots(paint.ink, { points: { show: true, size: panel.x.length > 200 ? 3 : 6, fill: paint.ink, width: 0 } })],
+          series: [{}, dots(paint.ink, { points: { show: true, size: (panel.x.length > 200 ? 0.18 : 0.38) * rem(), fill: paint.ink, width: 0 } })],
           hooks: { drawClear: [expected], setCursor: [(u) => pointed(u, panel)] },
         },
       }, [panel.x, panel.standardised]);
