@@ -114,7 +114,7 @@ class TimeSpec:
 
 @dataclass(frozen=True)
 class TableSpec:
-    """One file of readings."""
+    """One file of readings; `decimal` is its decimal mark where it cannot be told otherwise."""
 
     file: Path
     position: PositionSpec
@@ -123,6 +123,7 @@ class TableSpec:
     time: TimeSpec | None = None
     key: str = "readings"
     line: int = 0
+    decimal: Literal[".", ","] | None = None
 
 
 @dataclass(frozen=True)

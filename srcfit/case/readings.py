@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import replace
 from pathlib import Path as File
-from typing import Any
+from typing import Any, Literal
 
 from srcfit.case.columns import ColumnReader, check_unit, one_of, read_where
 from srcfit.case.lines import Path
@@ -35,7 +35,7 @@ def read_tables(
     if top.table is None:
         found = [_table(reader, ROOT, top, kind, driven)]
     else:
-        for key in ("file", "position", "column", "where", "time"):
+        for key in ("file", "position", "column", "where", "time", "decimal"):
             if getattr(top, key) is not None:
                 reader.wrong((*ROOT, key), f"every [[readings.table]] has its own `{key}`",
                              "move it into the tables")  # fmt: skip
@@ -71,7 +71,17 @@ def _table(
     if file is None or position is None:
         return None
     where = read_where(reader, (*path, "where"), table.where)
-    return TableSpec(file, position, tuple(columns), where, time, show(path), reader.line(path))
+    return TableSpec(
+        file, position, tuple(columns), where, time, show(path), reader.line(path),
+        _decimal(reader, (*path, "decimal"), table.decimal),
+    )  # fmt: skip
+
+
+def _decimal(reader: Reader, path: Path, value: str | None) -> Literal[".", ","] | None:
+    """The decimal mark of a file in which nothing else tells it from one between thousands."""
+    if value is not None and value not in (".", ","):
+        reader.wrong(path, f"{value!r} is no decimal mark", 'write "." or ","')
+    return "." if value == "." else "," if value == "," else None
 
 
 def _file(reader: Reader, path: Path, value: object) -> File | None:

@@ -126,6 +126,7 @@ class ReadingsTable(Table):
     position: dict[str, Any] | None = None
     where: dict[str, Any] | None = None
     time: dict[str, Any] | None = None
+    decimal: Text = None
     column: list[Any] | None = None
     table: list[Any] | None = None
 

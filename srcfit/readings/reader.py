@@ -74,7 +74,7 @@ def _file(case: Case, path: Path, key: str, files: dict[Path, File]) -> File:
 def _read_table(
     case: Case, spec: TableSpec, first: int, files: dict[Path, File]
 ) -> tuple[Table, list[Batch], list[str]]:
-    stated = getattr(spec, "decimal", None)
+    stated = spec.decimal
     source, wanted = _file(case, spec.file, f"{spec.key}.file", files), _wanted(case, spec)
     fast = fast_batches(case, spec, source, wanted, first, stated)
     if fast is not None:
