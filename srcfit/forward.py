@@ -31,7 +31,7 @@ from srcfit.member import Array, Member, Unknown
 from srcfit.problem import Grid, Problem
 from srcfit.readings.model import Readings
 from srcfit.sensors import samples, sensor_terms
-from srcfit.state import Chain, Matrix, chain, special_places
+from srcfit.state import Chain, Matrix, chain, inner_edges, special_places
 
 
 @dataclass(frozen=True)
@@ -154,7 +154,7 @@ def build(case: Case, readings: Readings) -> Forward:
 def _model(
     case: Case, grid: Grid, line: Chain, lines: Influence
 ) -> tuple[Matrix, list[Column], Matrix, Matrix]:
-    """What functionals see: of each cell, of lumped parts, of unknown amounts, and what is known."""
+    """What functionals see of each cell, lumped part and unknown amount, and what is known."""
     cells = _per_cell(line, grid, interval_integrals(lines)) * grid.free
     loads, load_columns = _lumped(case, line, lines)
     given, unknown, unknown_columns = _restraints(case, lines)
@@ -201,7 +201,8 @@ def _lines(
     """Influence lines of all used sensors and of all reactions, on one chain."""
     member = case.member
     held, modes, _ = restrained(member)
-    kinks = np.unique([*grid.edges, *(p for p, _, _ in special_places(held))])
+    jumps = [p for p, _, _ in special_places(held)]
+    kinks = np.unique([*grid.edges, *inner_edges(member), *jumps])
     spots = [
         samples(member, float(readings.x[r]), s.gauge_length, kinks)
         for r, s in zip(rows, specs, strict=True)

@@ -38,6 +38,7 @@ from srcfit.state import (
 )
 
 Source = Callable[[Array], Any]
+PANELS = 100  # a source given as a function is first looked at on so many stretches
 Row = Callable[[Member, float, dict[str, Any]], list[Any]]
 
 
@@ -281,6 +282,8 @@ def respond(
     x : (n,) places [m]; for ``quantity="reaction"`` ends or supports
     source : callable or (m,) array
         Source density (SI) as a function of an array of places, or values on m equal cells.
+        A function is sampled at 800 places and then ever closer where it bends or jumps; parts
+        narrower than a thousandth of the member are better given as `lumped`.
     lumped : sequence of (place, strength) or, for beams, (place, strength, "couple")
     quantity : str
         As in `kernel`.
@@ -370,7 +373,8 @@ def _panels(member: Member, density: Source) -> Array:
     """Edges of panels on which the source is a polynomial of degree 7, or that are tiny."""
     c, _, _ = gauss()
     lower = np.polynomial.legendre.legvander(2 * c - 1, len(c) - 1)
-    edges = np.unique([member.start, *inner_edges(member), member.end])
+    # eight samples a panel: a source narrower than that could slip through
+    edges = np.unique([*np.linspace(member.start, member.end, PANELS + 1), *inner_edges(member)])
     done: list[Array] = [edges]
     a, b = edges[:-1], edges[1:]
     largest = 0.0
