@@ -252,7 +252,7 @@ def recover(
     elif not quiet:
         from srcfit.text import recovery_text
 
-        click.echo(f"{recovery_text(summary)}\n\nWritten to {folder}")
+        click.echo(f"{recovery_text(summary, _limit_unit(case))}\n\nWritten to {folder}")
     serious = any(f["level"] == "serious" for f in summary["findings"])
     return SERIOUS if strict and serious else DONE
 
@@ -299,6 +299,13 @@ def _load(case_path: str, quiet: bool) -> tuple[Case, Readings]:
     _say(f"reading {case_path}", quiet)
     case = load_case(Path(case_path))
     return case, read(case)
+
+
+def _limit_unit(case: Case) -> str:
+    source = case.source
+    if source.limit is None:
+        return ""
+    return source.unit if source.limit.density else source.total_unit
 
 
 def _say(message: str, quiet: bool) -> None:

@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, replace
-from pathlib import Path
+from dataclasses import dataclass, fields, is_dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from srcfit.case.model import Case, ColumnSpec, Known, PositionSpec, TableSpec
+from srcfit.balance import balance
+from srcfit.case.model import Case, Known
 from srcfit.errors import MemberError
 from srcfit.forward import Forward, build
 from srcfit.grid import overlap
@@ -18,14 +18,12 @@ from srcfit.member import Array, Member, Unknown
 from srcfit.output import strict
 from srcfit.readings.model import Readings
 from srcfit.rounding import brief
-from srcfit.state import Matrix, gauss, inner_edges, operator
+from srcfit.state import Matrix
 from srcfit.text import bullets, clean, join, section, table
 from srcfit.trial import Trial
 
 if TYPE_CHECKING:
     import pandas as pd
-
-PIECES = 96
 
 
 @dataclass(frozen=True)
@@ -56,9 +54,7 @@ def predict(case: Case, readings: Readings, trial: Trial) -> Prediction:
     """Predict the used readings of a case under a source, what the case knows included.
 
     Unknown nuisances are taken at their guess; the free motion of a member that nothing holds is
-    fitted to the readings. The balance is a check of its own: reactions are
-    read from the state at supports and ends, what the member takes up along it is integrated from
-    the response.
+    fitted to the readings.
 
     Raises
     ------
@@ -66,66 +62,45 @@ def predict(case: Case, readings: Readings, trial: Trial) -> Prediction:
         When the source is out of balance on a member that nothing holds.
     """
     parts = (*case.source.known, *trial.parts)
-    bare, probed, weights = _probed(case, readings, parts)
-    forward = build(bare, probed)
+    forward = build(_prepared(case, parts), readings)
     f = _densities(forward, parts)
     _check_balance(forward, f, parts)
-    n = int(readings.used.sum())
-    guess = _guess(forward, forward.y - forward.A @ f, n)
-    residual = forward.y - forward.A @ f - forward.B @ guess
-    reactions = (
-        forward.reaction_known + forward.reaction_cells @ f + forward.reaction_columns @ guess
-    )
-    held = complex(weights @ -residual[n:])
-    spread = readings.sd[forward.rows[:n]]
-    misfit = float(np.sqrt(np.mean(np.abs(residual[:n] / spread) ** 2)))
+    beta = _amounts(forward, forward.y - forward.A @ f)
+    residual = forward.y - forward.A @ f - forward.B @ beta
+    spread = readings.sd[forward.rows]
+    misfit = float(np.sqrt(np.mean(np.abs(residual / spread) ** 2)))
     return Prediction(
         case,
-        _frame(case, readings, forward.rows[:n], residual[:n]),
-        _reactions(case, forward, reactions),
-        _balance(case, forward, reactions, held, parts),
+        _frame(case, readings, forward.rows, residual),
+        _reactions(case, forward, f, beta),
+        _sums(forward, f, beta),
         misfit if math.isfinite(misfit) else None,
         _notes(case, forward, trial),
     )
 
 
-def _probed(
-    case: Case, readings: Readings, parts: tuple[Known, ...]
-) -> tuple[Case, Readings, Matrix]:
-    """The case with cells as the parts need them, with more readings of the response.
-
-    The weights (one a further reading) turn their excess over the ambient into what the member
-    takes up along it: bedding, loss, decay, inertia.
-    """
-    member = case.member
+def _prepared(case: Case, parts: tuple[Known, ...]) -> Case:
+    """The case with cells as the stretches need them, and unknowns that need no readings."""
     edges = {e for part in parts if part.start < part.end for e in (part.start, part.end)}
     points = tuple(p for p in parts if p.start == p.end)
     source = replace(
         case.source, known=points, breaks=tuple(sorted(edges)), zones=(), lumped=(), zero=(),
         cells=1, smooth=True, background=False, total=None, limit=None, sign="any",
     )  # fmt: skip
-    panels = np.unique([*np.linspace(member.start, member.end, PIECES + 1), *inner_edges(member)])
-    c, b, _ = gauss()
-    places = (panels[:-1, None] + np.diff(panels)[:, None] * c).ravel()
-    symbol = "q" if member.kind.order == 2 else "p0"
-    weights = operator(member, places)[symbol] * (np.diff(panels)[:, None] * b).ravel()
-    sensor = next(s for s in member.kind.sensors if s.quantity == "response")
-    spec = ColumnSpec(("",), sensor.name, "response", unit=sensor.unit, sd=1.0)
-    table_ = TableSpec(Path(), PositionSpec("", "m"), (spec,))
-    more = len(places)
-    ambient = member.ambient if member.kind.relative and not member.driven else 0.0
-    wide = replace(
-        readings, file=readings.file + ("",) * more,
-        line=np.append(readings.line, np.zeros(more, dtype=np.int64)),
-        group=readings.group + (spec.group,) * more, kind=readings.kind + (spec.kind,) * more,
-        unit=readings.unit + (sensor.unit,) * more, x=np.append(readings.x, places),
-        value=np.append(readings.value, np.full(more, ambient)),
-        sd=np.append(readings.sd, np.ones(more)), used=np.append(readings.used, [True] * more),
-        reason=readings.reason + ("",) * more,
-        spec=np.append(readings.spec, np.full(more, len(case.columns))),
-        time=np.append(readings.time, np.zeros(more)),
-    )  # fmt: skip
-    return replace(case, source=source, tables=(*case.tables, table_)), wide, weights
+    member = case.member
+    held = {name: _told(getattr(member, name)) for name in ("left", "right", "supports")}
+    return replace(case, source=source, member=replace(member, **held), tables=_told(case.tables))
+
+
+def _told(value: Any) -> Any:
+    """The same with every unknown known beforehand, however vaguely: its guess will be taken."""
+    if isinstance(value, Unknown):
+        return replace(value, sd=1.0)
+    if isinstance(value, tuple):
+        return tuple(_told(v) for v in value)
+    if is_dataclass(value) and not isinstance(value, type):
+        return replace(value, **{f.name: _told(getattr(value, f.name)) for f in fields(value)})
+    return value
 
 
 def _densities(forward: Forward, parts: tuple[Known, ...]) -> Array:
@@ -137,16 +112,15 @@ def _densities(forward: Forward, parts: tuple[Known, ...]) -> Array:
     return f
 
 
-def _guess(forward: Forward, left: Matrix, n: int) -> Matrix:
-    """Amounts of the unknown columns: guesses, and a free motion fitted to the n readings."""
-    guess = np.array([c.guess for c in forward.columns], dtype=left.dtype)
+def _amounts(forward: Forward, left: Matrix) -> Matrix:
+    """Amounts of the unknown columns: guesses, and a free motion fitted to the readings."""
+    beta = np.array([c.guess for c in forward.columns], dtype=left.dtype)
     free = np.array([c.kind == "null" for c in forward.columns], dtype=bool)
     if free.any():
-        weight = 1 / np.where(np.isfinite(forward.sd[:n]), forward.sd[:n], 1.0)
-        rest = (left - forward.B @ guess)[:n] * weight
-        columns = forward.B[:n, free] * weight[:, None]
-        guess[free] = np.linalg.lstsq(columns, rest, rcond=None)[0]
-    return guess
+        weight = 1 / np.where(np.isfinite(forward.sd), forward.sd, 1.0)
+        rest = (left - forward.B @ beta) * weight
+        beta[free] = np.linalg.lstsq(forward.B[:, free] * weight[:, None], rest, rcond=None)[0]
+    return beta
 
 
 def _check_balance(forward: Forward, f: Array, parts: tuple[Known, ...]) -> None:
@@ -170,22 +144,19 @@ def _extent(member: Member, part: Known) -> float:
     return float(overlap(member, np.array([member.start, member.end]), part.start, part.end)[0])
 
 
-def _balance(
-    case: Case, forward: Forward, reactions: Matrix, held: complex, parts: tuple[Known, ...]
-) -> dict[str, float]:
+def _sums(forward: Forward, f: Array, beta: Matrix) -> dict[str, float]:
     """Source, reactions and what the member takes up, in the total's unit (real parts)."""
-    member, kind = case.member, case.member.kind
-    given = sum(p.value * _extent(member, p) for p in parts)
-    forces = [r for r, w in zip(reactions, forward.reactions, strict=True) if w.kind != "moment"]
-    total = complex(sum(forces))
-    amounts = {"source": given, "reactions": total.real, "along": held.real,
-               "difference": given - total.real - held.real}  # fmt: skip
+    case = forward.case
+    found = balance(forward, f, beta)
+    amounts = {"source": found.source, "reactions": found.reactions, "along": found.loss,
+               "difference": found.source - found.reactions - found.loss}  # fmt: skip
     unit = case.source.total_unit
-    return {k: float(shown(v, unit, kind.total_unit)) for k, v in amounts.items()}
+    return {k: float(shown(v, unit, case.member.kind.total_unit)) for k, v in amounts.items()}
 
 
-def _reactions(case: Case, forward: Forward, values: Matrix) -> list[dict[str, Any]]:
+def _reactions(case: Case, forward: Forward, f: Array, beta: Matrix) -> list[dict[str, Any]]:
     """Reactions with their places, forces and flows in the total's unit."""
+    values = forward.reaction_known + forward.reaction_cells @ f + forward.reaction_columns @ beta
     found = []
     for reaction, value in zip(forward.reactions, values, strict=True):
         moment = reaction.kind == "moment"

@@ -67,13 +67,15 @@ def join(*parts: str) -> str:
     return "\n\n".join(part for part in parts if part)
 
 
-def recovery_text(summary: Summary) -> str:
+def recovery_text(summary: Summary, limit_unit: str = "") -> str:
     """The table at the end of `srcfit recover`.
 
     Parameters
     ----------
     summary : mapping
         As in summary.json.
+    limit_unit : str
+        Unit of the limit, where one is asked about.
 
     Returns
     -------
@@ -84,7 +86,7 @@ def recovery_text(summary: Summary) -> str:
     return join(
         _opening(summary),
         _numbers(summary),
-        section("Limit", _limit(summary)),
+        section("Limit", _limit(summary, limit_unit)),
         section("Findings", findings_text(summary["findings"])),
         section("Cautions", bullets(summary["cautions"])),
     )
@@ -189,15 +191,20 @@ def _peak(peak: Mapping[str, Any], at: str, source: str) -> tuple[str, str, str,
     return "peak", place, told, interval(spread, source), ""
 
 
-def _limit(summary: Summary) -> str:
+def _limit(summary: Summary, unit: str) -> str:
     limit = summary["limit"]
     if not limit:
         return ""
     chance = limit["probability"]
-    sure = f"with probability {_percent(chance)}" if chance is not None else "cannot be said"
+    if chance is None:
+        return bullets(
+            [f"{limit['zone']} at most {brief(limit['at_most'], 6)} {unit}: {UNDETERMINED}"]
+        )
+    sure = f"with probability {_percent(chance)}"
+    amount = f"{brief(limit['at_most'], 6)} {unit}".rstrip()
+    estimate = f"{brief(limit['estimate'])} {unit}".rstrip()
     return bullets([
-        f"{limit['zone']} at most {limit['at_most']}: {limit['verdict']} "
-        f"(estimate {brief(limit['estimate'])}; kept {sure})"
+        f"{limit['zone']} at most {amount}: {limit['verdict']} (estimate {estimate}; kept {sure})"
     ])  # fmt: skip
 
 

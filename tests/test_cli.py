@@ -16,6 +16,7 @@ import pytest
 
 import srcfit
 from srcfit import cli, plots, report
+from srcfit.case.model import Limit
 from srcfit.errors import Finding, ReadingsError
 from srcfit.members import MEMBERS
 from srcfit.readings.model import Readings
@@ -197,6 +198,10 @@ def some_readings(case):
 def made(monkeypatch, tmp_path):
     """A recovery in place of the real computation, in an empty current folder."""
     recovery = fake_recovery.make("beam", 6, 12)
+    source = replace(recovery.case.source, limit=Limit("bay 1", 7e4, density=True))
+    limit = recovery.facts["limit"] | {"at_most": 70.0}
+    recovery = replace(recovery, case=replace(recovery.case, source=source),
+                       facts=recovery.facts | {"limit": limit})  # fmt: skip
     seeds = []
 
     def recover(case, readings=None, *, rng=0):
@@ -222,7 +227,8 @@ def test_recover_tells_writes_and_records(made, capsys, tmp_path):
     assert [p.name for p in tmp_path.iterdir()] == ["ground-result"]
     for words in ("918.4 ± 9.2 kN", "900.3 to 936.5 kN", "zone bay 1", "lumped bay 1",
                   "offset:levelling", "reaction support 1", "peak", "noise", "background",
-                  "bay 1 at most 70 kN/m: kept", "mainly from the prior", "rates no structure",
+                  "bay 1 at most 70 kN/m: kept (estimate 58.7 kN/m", "mainly from the prior",
+                  "rates no structure",
                   "Written to ground-result"):  # fmt: skip
         assert words in out
     assert err.startswith("srcfit: recovering")

@@ -17,9 +17,9 @@ ROOT = Path(srcfit.__file__).parent
 # a package counts as one unit; the data of a package (its `model`) may stand above the rest of it
 ORDER = (
     "errors", "unit_names", "units", "member", "members", "case.model", "readings.model",
-    "problem", "recovery", "case", "readings", "state", "influence", "kernel", "eigencount",
-    "eigen", "sensors", "grid", "forward", "priors", "solvers", "criteria", "bands", "answers",
-    "balance", "checks",
+    "problem", "recovery", "case", "readings", "state", "influence", "kernel", "eigenform",
+    "eigencount", "eigensolve", "eigen", "sensors", "grid", "forward", "priors", "solvers",
+    "criteria", "evidence", "bands", "answers", "balance", "checks", "solve", "results",
     "rounding", "frames", "output", "captions", "drawing", "plots", "report", "recover",
     "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "start",
     "plan", "rehearse", "series", "compare", "sklearn", "cli", "__main__",
@@ -78,6 +78,9 @@ def imports(path, package):
 
 def wrong_imports(unit, name, path):
     """Sentences about imports that break the layout."""
+    if unit not in (*ORDER, "__init__"):
+        yield f"{name}: it has no place in ORDER"
+        return
     for names, line, where in imports(path, name):
         for target in names:
             if target == "srcfit" or target.startswith("srcfit."):
