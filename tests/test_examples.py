@@ -1,0 +1,192 @@
+"""Every example is run from its case file, and numbers that matter lie in their intervals.
+
+The readings are random draws (one seed, `datasets/make_demo.py`), so a 95 % interval may miss its
+truth now and then; `test_examples_repeated` draws again and says how often. Widths are compared
+with independent computations on other draws, between which they vary by some 10 %.
+"""
+
+import sys
+import tomllib
+from functools import cache
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+import srcfit
+
+ROOT = Path(__file__).parent.parent
+EXAMPLES = ROOT / "examples"
+sys.path.insert(0, str(ROOT / "datasets"))
+
+import make_demo  # noqa: E402
+
+SI = {"m": 1.0, "mm": 1e-3, "K": 1.0, "degC": 1.0}
+
+
+@cache
+def summary(name):
+    return srcfit.recover(srcfit.load_case(EXAMPLES / name)).summary()
+
+
+def numbers(found):
+    """Total, zones, lumped parts, background and nuisances by name."""
+    named = [*found["zones"], *found["lumped"], *found["nuisances"]]
+    return {
+        "total": found["total"], "background": found["background"],
+        **{n["name"]: n for n in named},
+    }  # fmt: skip
+
+
+def codes(found):
+    return {f["code"] for f in found["findings"]}
+
+
+def half(number):
+    return (number["upper"] - number["lower"]) / 2
+
+
+TRUTHS = {
+    "ground_beam/case.toml": {"total": 920, "stack 1": 360, "stack 2": 380, "crane leg": 180},
+    "ground_beam_datum/bare_ground.toml": {
+        "total": 920, "stack 1": 360, "stack 2": 380, "crane leg": 180,
+        "offset:levelling": 0.35,
+    },
+    "girder_settled_pier/case.toml": {
+        "total": 844, "span 1": 192, "span 2": 460, "span 3": 192, "queue": 300,
+    },
+    "busbar_joint/case.toml": {"total": 186.1, "joint A": 28.1, "joint B": 76.4},
+    "busbar_joint/joints.toml": {
+        "total": 186.1, "joint A": 7.7, "joint B": 56.0, "background": 51.0,
+    },
+    "buried_cable/case.toml": {
+        "total": 9013, "joint bay": 171, "foreign pipe": 240, "dry stretch": 484,
+        "step:fibre@220 m": 0.6,
+    },
+    "sediment_column/case.toml": {"total": 1.540, "dark layer": 0.924},
+    # real readings: the weight is 0.500 kg
+    "cantilever_weight/case.toml": {"total": 4.905, "weight": 4.905},
+}  # fmt: skip
+OTHERS = {
+    "ground_beam_datum/case.toml", "three_bars/aluminium.toml", "three_bars/brass.toml",
+    "three_bars/iron.toml",
+}  # fmt: skip
+
+
+def test_every_example_is_run():
+    found = {p.relative_to(EXAMPLES).as_posix() for p in EXAMPLES.glob("*/*.toml")}
+    assert found == set(TRUTHS) | OTHERS
+
+
+@pytest.mark.parametrize("name", TRUTHS)
+def test_truth_lies_in_its_interval(name):
+    found = numbers(summary(name))
+    for key, truth in TRUTHS[name].items():
+        assert found[key]["lower"] <= truth <= found[key]["upper"], (key, truth, found[key])
+        assert half(found[key]) == pytest.approx(
+            (found[key]["upper"] - found[key]["value"]), rel=1e-9
+        )
+
+
+def test_ground_beam():
+    found = summary("ground_beam/case.toml")
+    assert half(found["total"]) == pytest.approx(18, rel=0.05)
+    assert found["limit"]["verdict"] == "kept"  # 60 kN/m against 70 kN/m
+    assert (found["fit"]["read"], found["fit"]["used"]) == (16, 16)
+
+
+def test_lost_datum_leaves_the_total_empty():
+    found = summary("ground_beam_datum/case.toml")
+    empty = {"value": None, "sd": None, "lower": None, "upper": None}
+    assert found["total"] == empty
+    assert all(n["value"] is None for n in (*found["zones"], *found["nuisances"]))
+    told = [f for f in found["findings"] if f["level"] == "serious"]
+    assert any("offset:levelling" in f["sentence"] and "uniform" in f["sentence"] for f in told)
+
+
+def test_settled_pier():
+    found = numbers(summary("girder_settled_pier/case.toml"))
+    settlement = found["settlement:24 m"]
+    per = SI[settlement["unit"]] / 1e-3
+    assert settlement["lower"] * per <= 9.0 <= settlement["upper"] * per
+    assert half(settlement) * per == pytest.approx(0.28, rel=0.2)  # as computed independently
+    assert half(found["total"]) == pytest.approx(57, rel=0.2)
+    assert half(found["queue"]) == pytest.approx(11, rel=0.2)
+    reactions = {r["at"]: r for r in summary("girder_settled_pier/case.toml")["reactions"]}
+    # by finite elements
+    for at, force in {0.0: 59.683, 24.0: 334.693, 54.0: 406.137, 78.0: 43.487}.items():
+        per = {"N": 1e-3, "kN": 1.0}[reactions[at]["unit"]]
+        assert reactions[at]["lower"] * per <= force <= reactions[at]["upper"] * per
+
+
+def test_hot_joint():
+    smooth = numbers(summary("busbar_joint/case.toml"))
+    assert half(smooth["joint B"]) == pytest.approx(11, rel=0.2)
+    joints = numbers(summary("busbar_joint/joints.toml"))
+    assert half(joints["joint B"]) == pytest.approx(2.1, rel=0.1)
+    assert joints["joint B"]["lower"] > 25.6  # above 10 microohm at 1600 A: outage now
+
+
+def test_sediment():
+    found = numbers(summary("sediment_column/case.toml"))
+    assert half(found["dark layer"]) == pytest.approx(0.08, rel=0.3)
+
+
+def test_hung_weight():
+    found = summary("cantilever_weight/case.toml")
+    weight = found["lumped"][0]
+    assert half(weight) < 0.15 * 4.905
+    turn = next(n for n in found["nuisances"] if n["name"] == "left.rotation")
+    assert turn["lower"] > 0  # the clamp gives
+    assert "property-dominates" in codes(found)
+
+
+# (decay per metre, temperature rise at the heater, excess of the far air over 24 degC): least
+# squares of T = air + rise exp(-m x) by hand, outside the package
+BARS = {
+    "aluminium": (3.4353, 127.265, 3.338), "brass": (4.1211, 110.112, 1.510),
+    "iron": (6.5384, 102.334, 1.927),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("bar", BARS)
+def test_heated_bars(bar):
+    with (EXAMPLES / "three_bars" / f"{bar}.toml").open("rb") as file:
+        member = tomllib.load(file)["member"]
+    conductance, loss = (float(member[k].split()[0]) for k in ("conductance", "loss"))
+    m, rise, excess = BARS[bar]
+    found = summary(f"three_bars/{bar}.toml")
+    # the case's decay is rounded to three digits
+    assert found["lumped"][0]["value"] == pytest.approx(conductance * m * rise, rel=0.004)
+    assert found["background"]["value"] == pytest.approx(loss * excess, rel=0.01)
+    assert "noise-contradicted" in codes(found)  # 0.1 K was stated, 0.2 to 0.9 K is seen
+
+
+def test_demo_readings_are_made_by_the_script(tmp_path):
+    make_demo.main(tmp_path)
+    made = sorted(p.relative_to(tmp_path) for p in tmp_path.glob("*/*.csv"))
+    assert len(made) == 7
+    for path in made:
+        ours = (EXAMPLES / path).read_text(encoding="utf-8").splitlines()
+        theirs = (tmp_path / path).read_text(encoding="utf-8").splitlines()
+        assert len(ours) == len(theirs)
+        for a, b in zip(ours, theirs, strict=True):
+            for cell, again in zip(a.split(","), b.split(","), strict=True):
+                # the last digit may round differently on another machine
+                assert cell == again or float(cell) == pytest.approx(float(again), abs=0.011)
+
+
+def test_demo_responses_are_the_stated_ones():
+    # largest deflections and temperatures of the invented cases, from an earlier independent
+    # computation
+    _, w = make_demo.ground_beam()
+    assert 1e3 * w[[0, -1]] == pytest.approx([-0.75, 0.62], abs=0.01)
+    assert 1e3 * w.max() == pytest.approx(3.97, abs=0.01)
+    _, _, _, _, girder = make_demo.girder()
+    sag = girder.at("deflection", np.linspace(0, 78, 400))
+    assert 1e3 * sag.max() == pytest.approx(23.5, abs=0.05)
+    _, T = make_demo.cable()
+    # the gauge evens out the bay's peak of 62.0 degC
+    assert [T.min(), T.max()] == pytest.approx([31.8, 61.6], abs=0.1)
+    _, C = make_demo.sediment()
+    assert C.max() == pytest.approx(10_170, rel=0.03)  # a slice of 1.5 cm sees a little less
