@@ -12,9 +12,8 @@ from srcfit.answers import detection, peak, per, verdict, zone_sizes
 from srcfit.criteria import CRITERIA
 from srcfit.forward import place_text
 from srcfit.member import Array
-from srcfit.priors import Family
 from srcfit.recovery import Number
-from srcfit.solve import Solved
+from srcfit.solve import Solved, strength_unit
 from srcfit.units import factor
 
 if TYPE_CHECKING:
@@ -175,16 +174,6 @@ def recoloured(solved: Solved, white: Array) -> Array:
 FAMILY_NAMES = {"first differences": "roughness 1"}
 
 
-def strength_unit(solved: Solved, family: Family) -> tuple[str, float]:
-    """Unit text of a family's strength, and how many of it make one SI unit."""
-    case = solved.forward.case
-    source, length = case.source.unit, case.source.position_unit
-    s, ell = per(source, case.member.kind.source_unit), per(length, "m")
-    power = {"roughness-0": -1, "roughness-1": 1, "roughness-2": 3}.get(family.base, 0)
-    head = {0: "1", 1: length, -1: f"1/{length}"}.get(power, f"{length}^{power}")
-    return f"{head}/({source})^2", ell**power / s**2
-
-
 def ladder_table(solved: Solved) -> pd.DataFrame:
     """One row per family and rung."""
     import pandas as pd
@@ -195,7 +184,7 @@ def ladder_table(solved: Solved) -> pd.DataFrame:
     if solved.ladder is not None and all(la is not solved.ladder for la, _ in ladders):
         ladders.insert(0, (solved.ladder, np.full(len(solved.ladder.strengths), np.nan)))
     for ladder, weights in ladders:
-        unit, scale = strength_unit(solved, ladder.family)
+        unit, scale = strength_unit(solved.forward.case, ladder.family)
         name = FAMILY_NAMES.get(ladder.family.name, ladder.family.name)
         averaged = len(answers.fit.ladders) > 1 and ladder is not solved.ladder
         cut = ladder.solver != "tikhonov"
@@ -289,7 +278,7 @@ def _strength_facts(solved: Solved) -> tuple[dict[str, Any], str]:
     case, choice, ladder = solved.forward.case, solved.choice, solved.ladder
     unit, scale = ("1", 1.0)
     if ladder is not None and ladder.solver == "tikhonov":
-        unit, scale = strength_unit(solved, ladder.family)
+        unit, scale = strength_unit(solved.forward.case, ladder.family)
     values = {
         name: (c.strength * scale if c.index >= 0 else None) for name, c in solved.choices.items()
     }

@@ -11,7 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from srcfit.answers import Asked, ask
+from srcfit.answers import Asked, ask, per
 from srcfit.bands import Answers, cautious, plain
 from srcfit.case.model import Case
 from srcfit.criteria import CRITERIA, Choice, choose
@@ -19,6 +19,7 @@ from srcfit.eigen import modes
 from srcfit.errors import SolveError
 from srcfit.forward import Forward, build, whitened
 from srcfit.member import Array
+from srcfit.priors import Family, family
 from srcfit.problem import Grid, Problem
 from srcfit.readings.model import Readings
 from srcfit.solvers import SOLVERS
@@ -103,7 +104,8 @@ def _ladder(case: Case, forward: Forward, problem: Problem) -> Ladder:
     if strength.solver == "eigenbasis":
         given["basis"] = mode_shapes(case, problem.grid, len(forward.rows))
     elif strength.solver == "tikhonov" and not isinstance(strength.choose, str):
-        given["strengths"] = np.array([float(strength.choose)])
+        unit = strength_unit(case, family(roughness, problem.grid))[1]
+        given["strengths"] = np.array([float(strength.choose) / unit])
     return SOLVERS[strength.solver](problem, roughness=roughness, **given)
 
 
@@ -140,3 +142,12 @@ def _choice(case: Case, ladder: Ladder, choices: Mapping[str, Choice]) -> Choice
     wanted = float(strength.choose)
     index = int(np.argmin(np.abs(ladder.strengths - wanted)))
     return Choice("stated", index, float(ladder.strengths[index]), float("nan"), True, "")
+
+
+def strength_unit(case: Case, family: Family) -> tuple[str, float]:
+    """Unit text of a family's strength, and how many of it make one SI unit."""
+    source, length = case.source.unit, case.source.position_unit
+    s, ell = per(source, case.member.kind.source_unit), per(length, "m")
+    power = {"roughness-0": -1, "roughness-1": 1, "roughness-2": 3}.get(family.base, 0)
+    head = {0: "1", 1: length, -1: f"1/{length}"}.get(power, f"{length}^{power}")
+    return f"{head}/({source})^2", ell**power / s**2
