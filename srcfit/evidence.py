@@ -20,6 +20,8 @@ from srcfit.solvers.spectrum import Base, Spectrum
 
 # an unstated noise is looked for between this part of what the unpenalised columns leave and all
 FAINTEST = 1e-6
+# questions whose smooth part is this small a part of its weight have none (balanced totals)
+SILENT = 1e-14
 
 
 @dataclass(frozen=True)
@@ -193,7 +195,8 @@ def data_share(asked: Asked, families: Sequence[Weighted]) -> Array:
             spread = w.sigma**-2 + sp.S[-1, -1] - own**2 @ square
             told = told + cross**2 / np.maximum(spread, np.finfo(float).tiny)
         share = np.full(len(prior), np.nan)
-        some = prior > 1e-12 * prior.max(initial=0.0)
+        # the square of a question's whole weight bounds its variance
+        some = prior > SILENT * np.asarray(abs(asked.G).sum(axis=1)).ravel() ** 2
         share[some] = (told[some] @ w.weights) / prior[some]
         total = total + share
     return np.clip(total, 0.0, 1.0)
