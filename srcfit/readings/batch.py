@@ -16,7 +16,7 @@ from srcfit.readings import times
 from srcfit.readings.blanks import Places, Shown
 from srcfit.readings.columns import Ask, Column, block_units, read_column, selected
 from srcfit.readings.table import Table, title
-from srcfit.readings.text import clean
+from srcfit.readings.text import clean, is_blank
 from srcfit.units import coherent
 
 Array = NDArray[np.float64]
@@ -80,6 +80,10 @@ def table_batches(
         for name in column.columns:
             kept = shown.rows(n, name, rows[n])
             batch = reader.batch(first + n, name, rows[n], kept, places, time)
+            lines = shown.empty_lines(table, n, name)
+            empty = {k: lines[i] for k, i in enumerate(kept) if i in lines}
+            batch.reason.update(empty)
+            batch.x[list(empty)] = math.nan
             _exclude(batch, spec, table, kept, column, twice)
             out.append(batch)
     return out
@@ -312,7 +316,7 @@ def _exclude(
         if spec.position.file is None:
             measured.append(spec.position.column)
         if any(_shortened(table, name) for name in measured if name):
-            why.setdefault(len(kept) - 1, UNFINISHED)
+            why[len(kept) - 1] = UNFINISHED
 
 
 def leave_out(batch: Batch, lines: Iterable[int], twice: Mapping[int, int]) -> None:
@@ -336,10 +340,13 @@ def _unfinished(batch: Batch, spec: TableSpec, table: Table) -> None:
 
 
 def _shortened(table: Table, name: str) -> bool:
-    """Whether the last number, without a line end, has fewer decimals than all others."""
+    """Whether the last number, without a line end, lacks decimals that all others have."""
     if table.cut is None or table.blocks[-1].index[title(name)] != table.cut[1]:
         return False
-    parts = [decimals(str(c)) for c in table.cells(name) if clean(c)]
+    cells = table.cells(name)
+    parts = [decimals(str(c)) for c in cells if clean(c)]
+    if is_blank(cells[-1]):
+        return True
     return len(parts) > 3 and len(set(parts[:-1])) == 1 and parts[-1] < parts[0]
 
 

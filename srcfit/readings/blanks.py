@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from srcfit.case.model import TableSpec
 from srcfit.readings.table import Table
-from srcfit.readings.text import is_blank
+from srcfit.readings.text import clean, is_blank
 
 Array = NDArray[np.float64]
 
@@ -78,9 +78,8 @@ class Shown:
         filled = np.any(own, axis=0) if own else np.zeros(size, dtype=bool)
         placed = np.zeros(size, dtype=bool)
         if places.x is not None:
-            placed = np.array(
-                [not is_blank(c) for c in table.cells(spec.position.column)], dtype=bool
-            )
+            placed[:] = True
+            placed[list(places.reason)] = False
         elif places.names is not None:
             placed = np.array([bool(n) for n in places.names], dtype=bool)
         claimed: dict[int, tuple[int, str]] = {}
@@ -89,6 +88,15 @@ class Shown:
                 if not placed[i] and not filled[i]:
                     claimed.setdefault(i, (n, column.columns[0]))
         return cls(blank, own, filled, placed, claimed)
+
+    def empty_lines(self, table: Table, n: int, name: str) -> dict[int, str]:
+        """Rows listed once in this column because they have no place and no reading."""
+        out = {}
+        for i, owner in self.claimed.items():
+            if owner == (n, name):
+                text = " ".join(t for t in map(clean, table.rows[i]) if t)
+                out[i] = f"no reading in this line ({text[:40]!r})"
+        return out
 
     def rows(self, n: int, name: str, rows: list[int]) -> list[int]:
         """The rows of one column that are listed as readings."""

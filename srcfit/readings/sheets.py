@@ -91,10 +91,10 @@ def _spreadsheet(file: File, wanted: Wanted) -> Records:
         sheets = pd.read_excel(
             io.BytesIO(file.data), sheet_name=None, header=None, dtype=object, na_filter=False
         )
-    except ImportError as error:
+    except ImportError:
         raise ReadingsError(
             "reading spreadsheets needs a further package", file.name,
-            f"install srcfit[excel] or save the sheet as CSV ({error})",
+            "install srcfit[excel] or save the sheet as CSV",
         ) from None  # fmt: skip
     except Exception as error:  # readers of damaged workbooks raise nearly anything
         raise ReadingsError(
@@ -138,10 +138,10 @@ def _parquet(file: File) -> Records:
 
     try:
         frame = pd.read_parquet(io.BytesIO(file.data))
-    except ImportError as error:
+    except ImportError:
         raise ReadingsError(
             "reading Parquet files needs a further package", file.name,
-            f"install srcfit[batch] or save the table as CSV ({error})",
+            "install srcfit[batch] or save the table as CSV",
         ) from None  # fmt: skip
     except Exception as error:
         raise ReadingsError(

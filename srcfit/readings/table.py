@@ -75,6 +75,7 @@ class Table:
     unfinished : row that the file's end cuts off between two cells, or None
     cut : (row, column) of a last cell without a line end after it, or None
     headers : every header text of the first block
+    early : lines above the header that look like rows of it
     story : what was understood, in words
     read : cells of the columns asked for so far
     """
@@ -87,6 +88,7 @@ class Table:
     unfinished: int | None
     cut: tuple[int, int] | None
     headers: tuple[str, ...]
+    early: tuple[int, ...]
     story: str
     read: dict[str, list[Cell]] = field(default_factory=dict, compare=False, repr=False)
 
@@ -193,7 +195,12 @@ def no_column(name: str, wanted: Wanted, there: Sequence[str], line: int | None)
     """
     missing = [n for n in wanted.keys if n not in there] or list(wanted.keys)
     pool = sorted({t for t in there if t and t not in wanted.keys and len(t) < 80})
-    pairs = [(n, m) for n in missing for m in difflib.get_close_matches(n, pool, 1, 0.5)]
+    lower = {t.casefold(): t for t in pool}
+    pairs = [
+        (n, lower[m])
+        for n in missing
+        for m in difflib.get_close_matches(n.casefold(), lower, 1, 0.5)
+    ]
     column, near = pairs[0] if pairs else (missing[0], "")
     hint = f" (nearest: {near!r})" if near else ""
     if not near and line:
@@ -329,8 +336,19 @@ class _Builder:
         broken |= self._misfits(rows, unfinished)
         return Table(
             self.name, tuple(self.blocks), line, rows, broken, unfinished, cut,
-            tuple(title(c) for c in found.cells[self.start]), self._story(),
+            tuple(title(c) for c in found.cells[self.start]), self._early(), self._story(),
         )  # fmt: skip
+
+    def _early(self) -> tuple[int, ...]:
+        """Lines above the header with a number in every column that measures."""
+        index, measured = self.blocks[0].index, self.wanted.measured
+        rows = enumerate(self.found.cells[: self.start])
+        return tuple(
+            self.found.line[i]
+            for i, row in rows
+            if len(_measuring(row, index, self.wanted)) == len(measured)
+            and all(map(_is_number, _measuring(row, index, self.wanted).values()))
+        )
 
     def _misfits(self, rows: list[list[Cell]], unfinished: int | None) -> dict[int, str]:
         """Rows with more cells than the header (or fewer, where blanks part the cells)."""

@@ -33,7 +33,12 @@ def lines_text(lines: Iterable[int]) -> str:
 
 def findings(table: Table, batches: Sequence[Batch]) -> list[Finding]:
     """Findings about one file."""
-    out = [*_rough(table.name, batches), *_changes(table.name, batches), *_flags(table, batches)]
+    out = [
+        *_early(table),
+        *_rough(table.name, batches),
+        *_changes(table.name, batches),
+        *_flags(table, batches),
+    ]
     for batch in batches:
         out += [*_stuck(table.name, batch), *_marks(table.name, batch)]
     return [*out, *_cut(table, batches), *_time(table.name, batches)]
@@ -44,6 +49,16 @@ def used_rows(batch: Batch) -> NDArray[np.bool_]:
     keep = np.ones(len(batch.line), dtype=bool)
     keep[list(batch.reason)] = False
     return keep
+
+
+def _early(table: Table) -> list[Finding]:
+    if not table.early:
+        return []
+    return [Finding(
+        "rows-above-header", "caution",
+        f"{table.name}: {lines_text(table.early)} above the header look like rows of the table; "
+        "what stands above the header is not read.",
+    )]  # fmt: skip
 
 
 def _rough(name: str, batches: Sequence[Batch]) -> list[Finding]:
