@@ -260,7 +260,7 @@ def recover(
 @cli.command(short_help="Predict the readings for a given source.")
 @CASE
 @click.option("--source", "source_path", metavar="FILE", type=click.Path(), required=True,
-              help="Table of the source to try.")  # fmt: skip
+              help="Table of the source to try, or a folder.")  # fmt: skip
 @click.option("-o", "--output", type=click.Path(), help="Write the predicted readings as CSV.")
 @AS_JSON
 @QUIET
@@ -273,8 +273,9 @@ def predict(
     FILE is a table with units in the brackets of its header. A row may hold a stretch
     (`from [m]`, `to [m]`, `value [kN/m]`), a lumped part (`at [m]`, `strength [kN]`), or both;
     cells that do not apply stay empty. A source.csv that `srcfit recover` wrote is read too
-    (`x [m]` and `estimate [kN/m]`, the middles of joined cells). Parts that overlap add up, and
-    so does what the case states as known; unknown nuisances are taken at their guess.
+    (`x [m]` and `estimate [kN/m]`, the middles of joined cells), and so is the whole folder it
+    wrote, with lumped parts and nuisances. Parts that overlap add up, and so does what the case
+    states as known; unknown nuisances are otherwise taken at their guess.
     """
     from srcfit import prediction
     from srcfit.trial import read_source

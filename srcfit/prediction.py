@@ -17,10 +17,11 @@ from srcfit.inspection import shown
 from srcfit.member import Array, Member, Unknown
 from srcfit.output import strict
 from srcfit.readings.model import Readings
-from srcfit.rounding import brief
+from srcfit.rounding import brief, round_like
 from srcfit.state import Matrix
 from srcfit.text import bullets, clean, join, section, table
 from srcfit.trial import Trial
+from srcfit.units import factor
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -33,7 +34,7 @@ class Prediction:
     Attributes
     ----------
     readings : DataFrame
-        Used rows: file, line, group, kind, unit, x, value, predicted, residual, standardised.
+        Used rows: file, line, group, kind, unit, x, value, predicted, residual, sd, standardised.
     reactions : list of mapping (name, at, kind, unit, value)
     balance : mapping
         source (known parts included), reactions, along (taken up by bedding, loss, decay or
@@ -53,8 +54,8 @@ class Prediction:
 def predict(case: Case, readings: Readings, trial: Trial) -> Prediction:
     """Predict the used readings of a case under a source, what the case knows included.
 
-    Unknown nuisances are taken at their guess; the free motion of a member that nothing holds is
-    fitted to the readings.
+    Unknown nuisances are taken as the trial tells them, else at their guess; the free motion of a
+    member that nothing holds is fitted to the readings.
 
     Raises
     ------
@@ -65,7 +66,7 @@ def predict(case: Case, readings: Readings, trial: Trial) -> Prediction:
     forward = build(_prepared(case, parts), readings)
     f = _densities(forward, parts)
     _check_balance(forward, f, parts)
-    beta = _amounts(forward, forward.y - forward.A @ f)
+    beta = _amounts(forward, forward.y - forward.A @ f, trial)
     residual = forward.y - forward.A @ f - forward.B @ beta
     spread = readings.sd[forward.rows]
     misfit = float(np.sqrt(np.mean(np.abs(residual / spread) ** 2)))
@@ -112,9 +113,12 @@ def _densities(forward: Forward, parts: tuple[Known, ...]) -> Array:
     return f
 
 
-def _amounts(forward: Forward, left: Matrix) -> Matrix:
-    """Amounts of the unknown columns: guesses, and a free motion fitted to the readings."""
+def _amounts(forward: Forward, left: Matrix, trial: Trial) -> Matrix:
+    """Amounts of the unknown columns: told or guessed, and a free motion fitted to readings."""
     beta = np.array([c.guess for c in forward.columns], dtype=left.dtype)
+    for i, c in enumerate(forward.columns):
+        if c.name in trial.amounts:
+            beta[i] = trial.amounts[c.name] * factor(c.unit, c.si_unit, c.name)[0] - c.shift
     free = np.array([c.kind == "null" for c in forward.columns], dtype=bool)
     if free.any():
         weight = 1 / np.where(np.isfinite(forward.sd), forward.sd, 1.0)
@@ -184,6 +188,7 @@ def _frame(case: Case, readings: Readings, rows: Any, residual: Matrix) -> pd.Da
         amounts = {
             "value": shown(value, unit, si), "predicted": shown(value - left, unit, si),
             "residual": shown(left, unit, si, difference=True),
+            "sd": shown(readings.sd[row], unit, si, difference=True),
             "standardised": left / readings.sd[row],
         }  # fmt: skip
         at = shown(readings.x[row], case.source.position_unit, "m")
@@ -193,7 +198,7 @@ def _frame(case: Case, readings: Readings, rows: Any, residual: Matrix) -> pd.Da
             f"x [{case.source.position_unit}]": at,
         } | {k: float(np.real(v)) for k, v in amounts.items()}  # fmt: skip
         if case.member.driven:
-            record |= {f"{k}_imag": float(np.imag(v)) for k, v in amounts.items()}
+            record |= {f"{k}_imag": float(np.imag(v)) for k, v in amounts.items() if k != "sd"}
         found.append(record)
     return pd.DataFrame(found)
 
@@ -202,6 +207,7 @@ def _notes(case: Case, forward: Forward, trial: Trial) -> tuple[str, ...]:
     """What the reader of a prediction must know."""
     notes = []
     nuisances = [c.name for c in forward.columns if c.kind == "nuisance"]
+    nuisances = [name for name in nuisances if name not in trial.amounts]
     if nuisances:
         notes.append(f"Unknown amounts are taken at their guess: {', '.join(nuisances)}.")
     if any(c.kind == "null" for c in forward.columns):
@@ -226,12 +232,14 @@ def facts(found: Prediction) -> dict[str, Any]:
 def text(found: Prediction) -> str:
     """A prediction as tables for a terminal."""
     frame, source = found.readings, found.case.source
-    names = ["group", "kind", f"x [{source.position_unit}]", "value", "predicted", "residual"]
+    place = f"x [{source.position_unit}]"
+    names = ["value", "predicted", "residual"]
     names += [c for c in ("predicted_imag",) if c in frame.columns]
     rows = [
-        [row[c] if isinstance(row[c], str) else brief(row[c], 5) for c in names] + [row["unit"]]
-        for row in frame.to_dict("records")
-    ]
+        (r["group"], r["kind"], brief(r[place], 6), *(round_like(r[c], r["sd"]) for c in names),
+         r["unit"]) for r in frame.to_dict("records")
+    ]  # fmt: skip
+    header = ["group", "kind", place, *names, "unit"]
     reactions = [
         (r["name"], f"{brief(r['at'], 6)} {source.position_unit}", r["kind"],
          f"{brief(r['value'], 5)} {r['unit']}") for r in found.reactions
@@ -239,7 +247,7 @@ def text(found: Prediction) -> str:
     misfit = f"Root mean square of residual/sd: {brief(found.misfit)}" if found.misfit else ""
     return join(
         clean(found.case.title),
-        section("Readings", table([*names, "unit"], rows, "llrrrr" + "r" * (len(names) - 6))),
+        section("Readings", table(header, rows, "llrrrr" + "r" * (len(names) - 3))),
         misfit,
         section("Reactions", table(("", "", "", ""), reactions, "lllr")),
         section("Balance", _balance_text(found)),

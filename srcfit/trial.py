@@ -3,16 +3,18 @@
 from __future__ import annotations
 
 import csv
+import json
 import math
 import re
-from collections.abc import Iterator
-from dataclasses import dataclass
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, field
 from pathlib import Path
 
 import numpy as np
 
-from srcfit.case.model import Case, Known
+from srcfit.case.model import Case, Known, Lumped
 from srcfit.errors import ReadingsError
+from srcfit.grid import overlap, spread
 from srcfit.member import Member
 from srcfit.units import factor
 
@@ -31,10 +33,13 @@ class Trial:
         Densities over stretches and strengths at single places (start == end).
     unread : tuple of str
         Columns of the file that were not used.
+    amounts : mapping nuisance name -> amount
+        As reported by an earlier recovery; the others are taken at their guess.
     """
 
     parts: tuple[Known, ...]
     unread: tuple[str, ...] = ()
+    amounts: Mapping[str, float] = field(default_factory=dict)
 
 
 def read_source(path: str | Path, case: Case) -> Trial:
@@ -46,6 +51,7 @@ def read_source(path: str | Path, case: Case) -> Trial:
         Its header names columns with their units in brackets: ``from [m]``, ``to [m]`` and
         ``value [kN/m]`` for stretches, ``at [m]`` and ``strength [kN]`` for lumped parts, or
         ``x [m]`` and ``estimate [kN/m]``, where x are the middles of cells that fill the member.
+        Or the folder of an earlier recovery: its smooth part, lumped parts and nuisances.
     case : Case
 
     Raises
@@ -53,6 +59,8 @@ def read_source(path: str | Path, case: Case) -> Trial:
     ReadingsError, UnitError
         Naming file, line and column of what cannot be used.
     """
+    if Path(path).is_dir():
+        return _earlier(Path(path), case)
     header, rows = _table(Path(path))
     names = {m[1]: (i, m[2] or "") for i, t in enumerate(header) if (m := HEADER.fullmatch(t))}
     cells = "estimate" if "estimate" in names else "value"
@@ -72,6 +80,37 @@ def read_source(path: str | Path, case: Case) -> Trial:
         raise ReadingsError("it has no rows with numbers", str(path), f"give {FORMS}")
     taken = {name for form in forms for name in form}
     return Trial(tuple(parts), tuple(h.strip() for h in header if _name(h) not in taken))
+
+
+def _earlier(folder: Path, case: Case) -> Trial:
+    """The source of an earlier recovery of this case, with its lumped parts and nuisances."""
+    smooth = read_source(folder / "source.csv", case)
+    place = folder / "summary.json"
+    try:
+        summary = json.loads(place.read_text(encoding="utf-8"))
+        rows = {row["name"]: row["value"] for row in summary["lumped"]}
+        amounts = {row["name"]: row["value"] for row in summary["nuisances"]}
+    except (OSError, ValueError, KeyError, TypeError) as error:
+        how = "give a folder that `srcfit recover` wrote, or a table"
+        raise ReadingsError("it is no summary of a recovery", f"source {place}", how) from error
+    unknown = [name for name, value in (rows | amounts).items() if value is None]
+    lumped = {part.name: part for part in case.source.lumped if part.at is not None}
+    if unknown or set(rows) != set(lumped):
+        odd = ", ".join(unknown or set(rows) ^ set(lumped))
+        what = f"{odd} is not determined there" if unknown else f"it differs in its parts: {odd}"
+        raise ReadingsError(what, f"source {place}", "give a table of the source instead")
+    scale = factor(case.source.total_unit, case.member.kind.total_unit, "source.total_unit")[0]
+    parts = [_lumped(case.member, lumped[name], scale * value) for name, value in rows.items()]
+    return Trial((*smooth.parts, *parts), (), amounts)
+
+
+def _lumped(member: Member, part: Lumped, strength: float) -> Known:
+    assert part.at is not None
+    if part.width == 0:
+        return Known(part.at, part.at, strength)
+    start, end = spread(part)
+    size = overlap(member, np.array([member.start, member.end]), start, end)[0]
+    return Known(start, end, strength / float(size))
 
 
 def _name(header: str) -> str:

@@ -22,6 +22,7 @@ from srcfit.members import MEMBERS
 from srcfit.readings.model import Readings
 
 ROOT = Path(srcfit.__file__).parent.parent
+LUMPED = 'lumped = [ { name = "pole", at = "5 m" } ]\n\n'
 
 
 def run(capsys, *argv):
@@ -380,3 +381,84 @@ def test_the_raw_profile_holds_used_and_rejected_rows():
     np.testing.assert_allclose(used.get_xydata(), [[1, 1], [2, 2]])
     np.testing.assert_allclose(rejected.get_xydata(), [[3, 3]])
     assert "1 rows without place or number" in figure.get_suptitle()
+
+
+# --- from nothing to the answer and back -------------------------------------------------------
+
+
+def test_new_prints_a_case_that_loads(capsys, tmp_path):
+    from srcfit.case import load_case
+
+    status, out, err = run(capsys, "new", "wall")
+    assert (status, err) == (0, "")
+    (tmp_path / "case.toml").write_text(out, "utf-8")
+    assert load_case(tmp_path / "case.toml").member.kind.name == "wall"
+
+
+@pytest.mark.parametrize("kind", MEMBERS)
+def test_a_demo_of_every_kind_shows_its_source(capsys, tmp_path, monkeypatch, kind):
+    """Readings minus what the told source predicts are noise: 24 values of the stated sd."""
+    monkeypatch.chdir(tmp_path)
+    status, out, _ = run(capsys, "new", kind, "--demo", "--seed", "5")
+    folder = Path(f"{kind}-demo")
+    assert status == 0
+    assert out.splitlines() == [
+        str(folder / n) for n in ("case.toml", "readings.csv", "truth.csv")
+    ]
+    argv = ["predict", folder / "case.toml", "--source", folder / "truth.csv", "--json"]
+    status, out, _ = run(capsys, *argv)
+    assert status == 0
+    found = json.loads(out)
+    assert len(found["readings"]) == 24
+    assert 0.6 < found["misfit"] < 1.4
+    spread = np.ptp([r["predicted"] / r["sd"] for r in found["readings"]])
+    assert spread > 10  # the source shows
+    sizes = [abs(v) for k, v in found["balance"].items() if k != "difference"]
+    assert abs(found["balance"]["difference"]) < 1e-6 * max(sizes)
+
+
+def test_where_a_new_case_is_written(capsys, tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    assert run(capsys, "new", "rod", "-o", "deep/mine.toml")[1] == "deep/mine.toml\n"
+    assert run(capsys, "new", "rod", "-o", "folder")[1] == "folder/case.toml\n"
+    assert run(capsys, "new", "rod", "-o", "deep")[1] == "deep/case.toml\n"
+    before = {p: p.stat().st_mtime_ns for p in tmp_path.rglob("*.*")}
+    for argv in (["-o", "deep/mine.toml"], ["-o", "folder"], ["-o", "folder", "--demo"]):
+        status, out, err = run(capsys, "new", "cable", *argv)
+        assert (status, out) == (3, "")
+        assert "exists already" in err
+    assert {p: p.stat().st_mtime_ns for p in tmp_path.rglob("*.*")} == before
+    assert run(capsys, "new", "cable", "-o", "deep/mine.toml", "--replace")[0] == 0
+    assert 'kind = "cable"' in Path("deep/mine.toml").read_text("utf-8")
+
+
+def test_the_seed_of_a_demo_decides_its_noise():
+    from srcfit.case.template import template
+    from srcfit.start import demo_texts
+
+    first, again, other = (demo_texts(template("rod"), seed) for seed in (1, 1, 2))
+    assert first == again
+    assert first["readings.csv"] != other["readings.csv"]
+    assert first["truth.csv"] == other["truth.csv"]
+
+
+def test_a_whole_run_and_its_prediction(capsys, tmp_path, monkeypatch):
+    """What `predict` makes of a saved result is what `recover` told of each reading."""
+    import pandas as pd
+
+    monkeypatch.chdir(tmp_path)
+    run(capsys, "new", "cable", "--demo", "-o", "job")
+    case = Path("job/case.toml")
+    text = case.read_text("utf-8").replace("[strength]", LUMPED + "[strength]")
+    text = text.replace('# offset = "unknown"', 'offset = { unknown = true, sd = "5 mm" }')
+    case.write_text(text, "utf-8")
+    status, out, err = run(capsys, "recover", case)
+    assert (status, "Traceback" in err) == (0, False)
+    assert "lumped pole" in out
+    table = pd.read_csv("case-result/readings.csv")
+    for place in ("case-result", "case-result/source.csv"):
+        status, _, _ = run(capsys, "predict", case, "--source", place, "-o", "p.csv", "--replace")
+        assert status == 0
+        found = pd.read_csv("p.csv")["predicted"]
+        agree = np.allclose(found, table["predicted"], rtol=1e-6, atol=1e-6)
+        assert agree == (place == "case-result")  # the lumped part stands in the summary only

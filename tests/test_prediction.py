@@ -1,5 +1,7 @@
 """The forward what-if against closed forms, its table of the source, its balance."""
 
+import json
+
 import numpy as np
 import pytest
 
@@ -212,3 +214,44 @@ def test_every_fault_of_the_table_is_named(tmp_path, beam, content, error, words
 def test_a_missing_table_is_named(tmp_path, beam):
     with pytest.raises(ReadingsError, match=r"cannot be read .no such file"):
         read_source(tmp_path / "none.csv", beam)
+
+
+def saved(folder, lumped, nuisances):
+    folder.mkdir()
+    (folder / "source.csv").write_text("x [m],estimate [kN/m]\n1,2\n3,4\n")
+    summary = {"lumped": lumped, "nuisances": nuisances}
+    (folder / "summary.json").write_text(json.dumps(summary))
+    return folder
+
+
+LUMPED = [{"name": "pole", "at": "1 m"}, {"name": "pallet", "at": "3 m", "width": "0.5 m"}]
+TOLD = [{"name": "pole", "value": 5.0}, {"name": "pallet", "value": 6.0}]
+
+
+def test_an_earlier_result_brings_its_lumped_parts_and_nuisances(tmp_path):
+    case = case_of(BEAM, [DEFLECTION | {"offset": "unknown"}], {"unit": "kN/m", "lumped": LUMPED})
+    nuisances = [{"name": "offset:w", "value": 0.25}]
+    trial = read_source(saved(tmp_path / "r", TOLD, nuisances), case)
+    parts = [(p.start, p.end, p.value) for p in trial.parts]
+    wanted = [(0, 2, 2e3), (2, 4, 4e3), (1, 1, 5e3), (2.75, 3.25, 12e3)]
+    np.testing.assert_allclose(parts, wanted, rtol=1e-12)
+    bare = readings_of(case, [[1.0, 2.0]])
+    shifted = predict(case, bare, trial).readings["predicted"]
+    plain = predict(case, bare, Trial(trial.parts)).readings["predicted"]
+    np.testing.assert_allclose(shifted - plain, 0.25, rtol=1e-9)
+    assert not any("guess" in n for n in predict(case, bare, trial).notes)
+
+
+@pytest.mark.parametrize(
+    ("lumped", "nuisances", "words"),
+    [
+        (TOLD[:1], [], "differs in its parts: pallet"),
+        ([TOLD[0], TOLD[1] | {"value": None}], [], "pallet is not determined"),
+        (TOLD, [{"name": "offset:w", "value": None}], "offset:w is not determined"),
+        (None, [], "no summary of a recovery"),
+    ],
+)
+def test_an_earlier_result_that_does_not_fit(tmp_path, lumped, nuisances, words):
+    case = case_of(BEAM, [DEFLECTION], {"unit": "kN/m", "lumped": LUMPED})
+    with pytest.raises(ReadingsError, match=words):
+        read_source(saved(tmp_path / "r", lumped, nuisances), case)
