@@ -7,7 +7,7 @@ each stands, so that bands can treat all of them alike.
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from srcfit.case.model import Case
-from srcfit.forward import Forward
+from srcfit.forward import Column, Forward
 from srcfit.grid import overlap, spread
 from srcfit.member import Array
 from srcfit.problem import Questions
@@ -59,14 +59,13 @@ def ask(forward: Forward) -> Asked:
     cells, columns = _zones(forward)
     parts.append(("zones", cells, columns, 0.0, total_unit, 0.0))
     parts.append(("lumped", np.zeros((len(lumped), m)), np.eye(k)[lumped], 0.0, total_unit, 0.0))
-    scale = [per(c.unit, c.si_unit, difference=not c.shift) for c in shown(forward, nuisances)]
-    shift = [c.shift for c in shown(forward, nuisances)]
+    scale, shift = _nuisance_units([forward.columns[i] for i in nuisances])
     none = np.zeros((len(nuisances), m))
     parts.append(("nuisances", none, np.eye(k)[nuisances], 0.0, scale, shift))
     level = (grid.weights * grid.free / max((grid.weights * grid.free).sum(), 1e-300))[None]
     asked = int(case.source.background and not case.source.smooth)
     parts.append(("background", level[:asked], np.zeros((asked, k)), 0.0, density_unit, 0.0))
-    units = [per(r.unit, r.unit) for r in forward.reactions]
+    units = [per(r.unit, r.si_unit) for r in forward.reactions]
     rows = forward.reaction_cells, forward.reaction_columns
     parts.append(("reactions", *rows, forward.reaction_known, units, 0.0))
     parts.append(("cells", np.eye(m), np.zeros((m, k)), 0.0, density_unit, 0.0))
@@ -87,9 +86,14 @@ def _joined(parts: list[tuple[str, Any, Any, Any, Any, Any]]) -> Asked:
     return Asked(Questions(cells, columns), blocks, *spread_out)
 
 
-def shown(forward: Forward, which: Sequence[int]) -> list[Any]:
-    """Columns by number."""
-    return [forward.columns[i] for i in which]
+def _nuisance_units(columns: list[Column]) -> tuple[list[float], list[float]]:
+    """Factor and shift of each nuisance to its reported unit."""
+    scale, shift = [], []
+    for c in columns:
+        size, zero = factor(c.unit, c.si_unit, c.name, difference=not c.absolute)
+        scale.append(1 / size)
+        shift.append(c.shift - zero)
+    return scale, shift
 
 
 def per(unit: str, si_unit: str, *, difference: bool = True) -> float:

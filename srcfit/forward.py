@@ -32,6 +32,7 @@ from srcfit.problem import Grid, Problem
 from srcfit.readings.model import Readings
 from srcfit.sensors import samples, sensor_terms
 from srcfit.state import Chain, Matrix, chain, inner_edges, special_places
+from srcfit.units import factor, multiply_text, same_dimension
 
 
 @dataclass(frozen=True)
@@ -44,9 +45,12 @@ class Column:
         As in summary.json (`offset:GROUP`, `settlement:AT`, a lumped part's name ...).
     kind : {"lumped", "nuisance", "null"}
     unit : str
-        Unit text it is reported in; `scale` reported units are one SI unit.
+        Unit text it is reported in.
+    si_unit : str
     shift : float
         Added (SI) to the coefficient to give the reported amount.
+    absolute : bool
+        Whether the amount is absolute (a temperature with its own zero), not a difference.
     guess, sd : float or None
         Knowledge about the coefficient (SI); None: nothing is known.
     """
@@ -58,16 +62,21 @@ class Column:
     shift: float = 0.0
     guess: float = 0.0
     sd: float | None = None
+    absolute: bool = False
 
 
 @dataclass(frozen=True)
 class Reaction:
-    """One force, couple or flow at an end or support that can be asked for."""
+    """One force, couple or flow at an end or support that can be asked for.
+
+    Flows of radial kinds are those through the whole area, like totals.
+    """
 
     name: str
     at: float
     kind: str
     unit: str
+    si_unit: str
 
 
 @dataclass(frozen=True)
@@ -215,31 +224,31 @@ def _lines(
         sensor_terms(line, s.kind, place, weight, s.distance)
         for s, (place, weight) in zip(specs, spots, strict=True)
     ]
-    reactions, terms = _reactions(member, line)
+    reactions, terms = _reactions(case, line)
     nulls = None if modes is None else Nulls(member, line)
     return line, influence(line, [*asked, *terms]), nulls, reactions
 
 
-def _reactions(member: Member, line: Chain) -> tuple[tuple[Reaction, ...], list[list[Term]]]:
+def _reactions(case: Case, line: Chain) -> tuple[tuple[Reaction, ...], list[list[Term]]]:
     """Every reaction, end couple and end flow that the member's restraints can carry."""
     found, terms = [], []
+    member, total = case.member, case.source.total_unit
     order, kind = member.kind.order, member.kind
-    flow = kind.flux_name or "force"
-    unit = kind.flux_unit or kind.total_unit
+    flow = "force" if order == 4 else kind.flux_name or "force"
+    units = total, kind.total_unit
+    couple = multiply_text(total, case.source.position_unit), "N*m"
     for word, end, place in (
         ("left", member.left, member.start),
         ("right", member.right, member.end),
     ):
         if end.response.stiffness != 0 and not end.axis:
-            found.append(Reaction(word, place, flow if order == 2 else "force", unit))
+            found.append(Reaction(word, place, flow, *units))
             terms.append(functional(line, "reaction", place))
         if end.rotation.stiffness != 0:
-            found.append(Reaction(word, place, "moment", "N*m"))
+            found.append(Reaction(word, place, "moment", *couple))
             terms.append(functional(line, "moment", place))
     for number, support in enumerate(member.supports, start=1):
-        found.append(
-            Reaction(f"support.{number}", support.at, "force" if order == 4 else flow, unit)
-        )
+        found.append(Reaction(f"support.{number}", support.at, flow, *units))
         terms.append(functional(line, "reaction", support.at))
     return tuple(found), terms
 
@@ -311,10 +320,18 @@ def restraint_label(case: Case, name: str) -> tuple[str, str]:
     return (name.replace("value", "settlement") if kind.order == 4 else name), kind.response_unit
 
 
+def response_unit(case: Case) -> str:
+    """Unit of the first readings of the response itself; the member's SI unit without any."""
+    kind = case.member.kind
+    for spec in case.columns:
+        unit = spec.unit
+        if unit and kind.sensor(spec.kind).quantity == "response":
+            return unit if same_dimension(unit, kind.response_unit) else kind.response_unit
+    return kind.response_unit
+
+
 def place_text(case: Case, at: float) -> str:
     """A place in the user's position unit, e.g. ``24 m``."""
-    from srcfit.units import factor
-
     unit = case.source.position_unit
     return f"{at / factor(unit, 'm', 'source.position_unit')[0]:.10g} {unit}"
 
@@ -328,9 +345,22 @@ def _restraints(case: Case, lines: Influence) -> tuple[Matrix, list[Column], Mat
     columns, rows = [], []
     for name, amount in prescribed(case.member):
         if isinstance(amount, Unknown):
-            label, unit = restraint_label(case, name)
-            shift = base if name.endswith("value") else 0.0
-            columns.append(Column(label, "nuisance", unit, unit, shift, amount.guess, amount.sd))
+            label, si_unit = restraint_label(case, name)
+            turned = name.endswith("rotation")
+            unit = si_unit if turned else response_unit(case)
+            shift = 0.0 if turned else base
+            columns.append(
+                Column(
+                    label,
+                    "nuisance",
+                    unit,
+                    si_unit,
+                    shift,
+                    amount.guess,
+                    amount.sd,
+                    case.member.kind.relative and not turned,
+                )
+            )
             rows.append(given[name])
         else:
             known = known + amount * given[name]
@@ -406,7 +436,7 @@ def _null_reads(
         )
         for r, s in zip(rows, specs, strict=True)
     ]  # fmt: skip
-    terms += _reactions(case.member, nulls.free)[1]
+    terms += _reactions(case, nulls.free)[1]
     return np.array([nulls.reading(t) for t in terms])
 
 

@@ -10,7 +10,7 @@ import numpy as np
 
 from srcfit.answers import detection, peak, per, verdict, zone_sizes
 from srcfit.criteria import CRITERIA
-from srcfit.forward import place_text
+from srcfit.forward import place_text, response_unit
 from srcfit.member import Array
 from srcfit.recovery import Number
 from srcfit.solve import Solved, strength_unit
@@ -233,7 +233,7 @@ def facts(
         "title": case.title,
         "units": {
             "position": source.position_unit, "source": source.unit, "total": source.total_unit,
-            "response": _response_unit(solved), "strength": _strength_facts(solved)[1],
+            "response": response_unit(case), "strength": _strength_facts(solved)[1],
         },
         "strength": _strength_facts(solved)[0],
         "noise": noise_facts(solved, fit["chi_square"], fit["dof"]),
@@ -263,15 +263,6 @@ def facts(
         "seed": seed,
         "cautions": list(case.member.kind.cautions),
     }  # fmt: skip
-
-
-def _response_unit(solved: Solved) -> str:
-    """Unit of the first readings of the response itself, else the SI unit."""
-    kind, readings = solved.forward.case.member.kind, solved.forward.readings
-    for unit, sensor in zip(readings.unit, readings.kind, strict=True):
-        if kind.sensor(sensor).quantity == "response" and unit:
-            return unit
-    return kind.response_unit
 
 
 def _strength_facts(solved: Solved) -> tuple[dict[str, Any], str]:
