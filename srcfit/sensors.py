@@ -58,7 +58,7 @@ def sensor_terms(
     MemberError
         When the member has no such quantity there (a reaction away from a support).
     """
-    spec = SENSORS[line.member.kind.name][kind]
+    spec = line.member.kind.sensor(kind)
     factor = (distance or 0.0) if spec.needs_distance else 1.0
     return [
         replace(term, row=term.row * (factor * weight))

@@ -48,7 +48,6 @@ ROD = MemberKind(
             "kind": "strain",
             "unit": "ue",
             "sd": "3 ue",
-            "positive": "reversed",
         },
         "source": {"unit": "kN/m", "cells": 120, "zone": ("loose layer", "3 m", "5 m")},
     },
