@@ -26,7 +26,7 @@ from srcfit.influence import (
     restrained,
     restraint_forces,
 )
-from srcfit.kernel import Nulls, functional, prescribed
+from srcfit.kernel import Nulls, functional, functionals, prescribed
 from srcfit.member import Array, Member, Unknown
 from srcfit.problem import Grid, Problem
 from srcfit.readings.model import Readings
@@ -186,7 +186,7 @@ def along(forward: Forward, quantity: str, x: Array) -> tuple[Matrix, Matrix, Ma
     of readings and null modes.
     """
     line = forward.line
-    lines = influence(line, [functional(line, quantity, float(place)) for place in x])
+    lines = influence(line, functionals(line, quantity, x))
     cells, _, columns, known = _model(forward.case, forward.grid, line, lines)
     padded = np.zeros((len(x), forward.B.shape[1] - columns.shape[1]))
     return cells, np.concatenate([columns, padded], axis=1), known

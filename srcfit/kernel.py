@@ -39,10 +39,10 @@ from srcfit.state import (
 
 Source = Callable[[Array], Any]
 PANELS = 100  # a source given as a function is first looked at on so many stretches
-Row = Callable[[Member, float, dict[str, Any]], list[Any]]
+Row = Callable[[Member, Array, dict[str, Any]], list[Any]]
 
 
-def _slope(member: Member, w: float, k: dict[str, Any]) -> list[Any]:
+def _slope(member: Member, w: Array, k: dict[str, Any]) -> list[Any]:
     if member.kind.order == 2:
         return [0.0, 1 / k["p"]]
     if "shear" not in k:
@@ -51,13 +51,13 @@ def _slope(member: Member, w: float, k: dict[str, Any]) -> list[Any]:
     return [0.0, share, 0.0, share / k["shear"]]
 
 
-def _flux(member: Member, w: float, k: dict[str, Any]) -> list[Any]:
+def _flux(member: Member, w: Array, k: dict[str, Any]) -> list[Any]:
     if member.kind.order == 4:
         return [0.0, 0.0, 0.0, 1.0]
     return [0.0, -1.0 if member.kind.name == "radial_aquifer" else -1 / w]
 
 
-def _response(member: Member, w: float, k: dict[str, Any]) -> list[Any]:
+def _response(member: Member, w: Array, k: dict[str, Any]) -> list[Any]:
     return [1.0] + [0.0] * (member.kind.order - 1)
 
 
@@ -75,17 +75,18 @@ QUANTITIES: dict[str, tuple[tuple[int, ...], Row]] = {
 }
 
 
-def functional(line: Chain, quantity: str, x: float) -> list[Term]:
-    """The functional `quantity` at the place `x`: the right limit at a jump, at the end the left.
+def functionals(line: Chain, quantity: str, x: Any) -> list[list[Term]]:
+    """The functional `quantity` at each place of `x`: the right limit, at the end the left.
 
     Raises
     ------
     MemberError
-        When the member has no such quantity, or no reaction at `x`.
+        When the member has no such quantity, or no reaction at a place.
     """
     member = line.member
+    places = np.atleast_1d(np.asarray(x, dtype=float))
     if quantity == "reaction":
-        return _reaction(line, x)
+        return [_reaction(line, float(place)) for place in places]
     orders, row = QUANTITIES.get(quantity, ((), None))
     if row is None or member.kind.order not in orders:
         known = [name for name, (has, _) in QUANTITIES.items() if member.kind.order in has]
@@ -94,14 +95,18 @@ def functional(line: Chain, quantity: str, x: float) -> list[Term]:
             "quantity",
             "choose one of " + ", ".join([*known, "reaction"]),
         )
-    node = int(line.node(np.array([x]))[0])
+    node = line.node(places)
     last = node == len(line.x) - 1
-    place = float(line.x[node])
     # coefficients jump at edges: look just inside the side that is meant
-    nudge = 1e-12 * member.length
-    inside = place - nudge if last else place + nudge
-    k = {name: v[()] for name, v in operator(member, np.array(inside)).items()}
-    return [Term(node, np.array(row(member, float(member.area(np.array(place))), k)), last)]
+    nudge = np.where(last, -1e-12, 1e-12) * member.length
+    entries = row(member, member.area(line.x[node]), operator(member, line.x[node] + nudge))
+    rows = np.stack([np.broadcast_to(np.asarray(e), places.shape) for e in entries], axis=1)
+    return [[Term(int(k), r, bool(e))] for k, r, e in zip(node, rows, last, strict=True)]
+
+
+def functional(line: Chain, quantity: str, x: float) -> list[Term]:
+    """One functional; see `functionals`."""
+    return functionals(line, quantity, x)[0]
 
 
 def _reaction(line: Chain, x: float) -> list[Term]:
@@ -188,7 +193,7 @@ def kernel(member: Member, x: Any, s: Any, quantity: str = "response") -> Matrix
     x, s = _checked(member, x, "x"), _checked(member, s, "s")
     held, modes, _ = restrained(member)
     line = chain(held, np.concatenate([x, s]))
-    lines = influence(line, [functional(line, quantity, place) for place in x])
+    lines = influence(line, functionals(line, quantity, x))
     G = at_nodes(lines, line.node(s))
     return G if modes is None else _generalised(member, line, lines, s, quantity, x, G)
 
@@ -217,7 +222,7 @@ class Nulls:
 
     def read(self, quantity: str, x: Array) -> Matrix:
         """A quantity of the null modes at places, (len(x), d)."""
-        rows = [self.reading(functional(self.free, quantity, float(place))) for place in x]
+        rows = [self.reading(terms) for terms in functionals(self.free, quantity, x)]
         return np.array(rows).reshape(len(x), len(self.states))
 
     def reading(self, terms: Sequence[Term]) -> Matrix:
@@ -257,7 +262,7 @@ def _generalised(
     t, weight = _quadrature(line.member)
     fine = chain(line.member, np.concatenate([line.x, t]))
     fine_nulls = Nulls(member, fine)
-    response = influence(fine, [functional(fine, "response", p) for p in np.concatenate([s, t])])
+    response = influence(fine, functionals(fine, "response", np.concatenate([s, t])))
     psi = fine_nulls.against(response)  # response of the held member to r phi
     psi_s, psi_t = psi[: len(s)], psi[len(s) :]
     read = nulls.read(quantity, x)
@@ -306,8 +311,8 @@ def respond(
     t, weight = _quadrature(held) if modes is not None else (np.zeros(0), np.zeros(0))
     line = chain(held, np.concatenate([x, at, edges, t]))
     f = density(line.places)
-    asked = [functional(line, quantity, place) for place in x]
-    lines = influence(line, [*asked, *(functional(line, "response", p) for p in t)])
+    asked = functionals(line, quantity, x)
+    lines = influence(line, [*asked, *functionals(line, "response", t)])
     found = interval_integrals(lines, f).sum(axis=1)
     for place, (_, strength, component) in zip(line.node(at), loads, strict=True):
         found = found + strength * at_nodes(lines, np.array([place]), component)[:, 0]

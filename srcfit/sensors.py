@@ -6,12 +6,10 @@ file (and, for a new quantity, its row to `kernel.QUANTITIES`).
 
 from __future__ import annotations
 
-from dataclasses import replace
-
 import numpy as np
 
 from srcfit.influence import Term
-from srcfit.kernel import functional
+from srcfit.kernel import functionals
 from srcfit.member import Array, Member, SensorSpec
 from srcfit.members import MEMBERS
 from srcfit.state import Chain
@@ -60,8 +58,9 @@ def sensor_terms(
     """
     spec = line.member.kind.sensor(kind)
     factor = (distance or 0.0) if spec.needs_distance else 1.0
+    found = functionals(line, spec.quantity, places)
     return [
-        replace(term, row=term.row * (factor * weight))
-        for place, weight in zip(places, weights, strict=True)
-        for term in functional(line, spec.quantity, float(place))
+        Term(term.node, term.row * (factor * weight), term.before)
+        for terms, weight in zip(found, weights, strict=True)
+        for term in terms
     ]

@@ -228,8 +228,9 @@ def _cut(member: Member, nodes: Array, mu: float) -> Array:
         parts = np.where((parts == 1) & ~_resolved(member, a, b, mu), 2, parts).astype(int)
         if (parts == 1).all():
             return nodes
-        pieces = [np.linspace(a[i], b[i], parts[i] + 1)[:-1] for i in range(len(a))]
-        nodes = np.concatenate([*pieces, b[-1:]])
+        step = np.arange(parts.sum()) - np.repeat(np.cumsum(parts) - parts, parts)
+        share = step / np.repeat(parts, parts)
+        nodes = np.append(np.repeat(a, parts) + share * np.repeat(b - a, parts), b[-1])
     raise MemberError(
         "a coefficient is not smooth enough to follow", "member", "give its jumps as steps"
     )
