@@ -230,6 +230,31 @@ def test_mixed_ends_of_general_members(side, expected):
     assert getattr(rigid, side).response.stiffness == RIGID
 
 
+@pytest.mark.parametrize(("side", "b", "slope", "start"), [("left", -2, 1 / 6, 1 / 3),
+                                                           ("right", 2, 5 / 6, 0.0)])  # fmt: skip
+def test_a_mixed_end_by_the_closed_form(side, b, slope, start):
+    # -u'' = 1 on [1, 2], u + b u' = 0 at one end, u = 0 at the other
+    other = {"left": "right", "right": "left"}[side]
+    member = make_member(
+        {"kind": "general", "order": 2, "start": 1, "end": 2, "p": 1,
+         side: {"a": 1, "b": b}, other: "fixed"}
+    )  # fmt: skip
+    x = np.array([1.0, 1.5, 2.0])
+    found = srcfit.respond(member, x, np.ones_like)
+    assert found == pytest.approx(start + slope * (x - 1) - (x - 1) ** 2 / 2, abs=1e-14)
+
+
+def test_decay_acts_on_the_concentration_itself():
+    # u'' = 4 u, u(0) = 2 (the ambient), u'(1) = 0: not a decay towards the ambient
+    member = make_member({
+        "kind": "column", "length": "1 m", "diffusivity": "1 m^2/s", "decay": "4 1/s",
+        "ambient": "2 mol/m^3", "left": "fixed", "right": "closed",
+    })  # fmt: skip
+    x = np.array([0.0, 0.5, 1.0])
+    found = srcfit.respond(member, x, np.zeros_like)
+    assert found == pytest.approx(2 * np.cosh(2 * (1 - x)) / np.cosh(2), rel=1e-12)
+
+
 def test_supports_hinges_and_interfaces_are_in_order():
     beam = make_member({
         **BEAM, "left": "free", "length": "9 m",
