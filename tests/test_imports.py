@@ -18,9 +18,9 @@ ROOT = Path(srcfit.__file__).parent
 ORDER = (
     "errors", "unit_names", "units", "member", "members", "case.model", "readings.model",
     "problem", "recovery", "case", "readings", "state", "influence", "kernel", "eigenform",
-    "eigencount", "eigensolve", "eigen", "sensors", "grid", "forward", "priors", "solvers",
+    "eigencount", "eigensolve", "eigen", "sensors", "grid", "forward", "view", "priors", "solvers",
     "criteria", "evidence", "bands", "answers", "balance", "checks", "solve", "results",
-    "rounding", "frames", "output", "captions", "drawing", "plots", "report", "recover",
+    "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report", "recover",
     "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "start",
     "plan", "rehearse", "series", "compare", "sklearn", "cli", "__main__",
 )  # fmt: skip

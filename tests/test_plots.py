@@ -16,6 +16,7 @@ from matplotlib.colors import to_hex
 from matplotlib.figure import Figure
 
 from srcfit import plots
+from srcfit.axes import name_rows
 from srcfit.captions import DESCRIPTIONS
 from srcfit.drawing import BLUE, draw_member, plain
 from srcfit.frames import header, ladder_of, numbers, pretty, unit_of
@@ -204,6 +205,11 @@ def test_the_source_is_drawn_as_it_stands_in_the_table(beam):
     assert ax.get_ylabel() == "load [kN/m]"
 
 
+def test_names_of_overlapping_zones_stand_in_rows():
+    start, end = np.array([0.0, 24.0, 54.0, 36.0, 46.0]), np.array([24.0, 54.0, 78.0, 46.0, 50.0])
+    assert name_rows(start, end) == [0, 0, 0, 1, 1]
+
+
 def test_temperatures_are_drawn_in_the_readings_unit():
     case = fake.make("conductor")
     upper, lower = axes_of(case, "readings")
@@ -262,8 +268,9 @@ def test_every_figure_has_a_text_with_numbers(drawn):
 
 
 def test_the_same_result_gives_the_same_bytes(beam, drawn, tmp_path):
-    again = plots.draw_all(beam)
+    again = plots.draw_all(replace(beam))
     assert again == drawn
+    assert plots.draw_all(beam)["source"] is drawn["source"]  # drawn once for folder and page
     paths = plots.save_figures(beam, tmp_path / "figures", drawn)
     assert sorted(p.name for p in paths) == sorted(
         f"{name}{end}" for name in plots.FIGURES for end in (".svg", ".png")

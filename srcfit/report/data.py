@@ -9,9 +9,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from srcfit.axes import fit_curve, panels
 from srcfit.captions import choices_of, extent, per_metre, source_word, unit
 from srcfit.frames import flags, ladder_of, number, numbers, pretty, texts
-from srcfit.plots import fit_curve, panels
 from srcfit.recovery import Recovery
 from srcfit.report.html import clean
 from srcfit.rounding import brief, plus_minus
@@ -131,7 +131,7 @@ def _panel(
 def _ladder(recovery: Recovery, kept: NDArray[np.int64]) -> dict[str, Any]:
     """Rungs for the slider, the L-curve and the criteria's choices on both."""
     pictures = recovery.pictures
-    strengths = np.asarray(pictures.strengths, dtype=float)
+    strengths = rung_strengths(recovery)
     row_of = {row: k for k, row in enumerate(pictures.influence_of)}
     columns = [row_of[int(i)] for i in kept if int(i) in row_of]
     fits = np.real(np.asarray(pictures.fits))
@@ -156,6 +156,14 @@ def _ladder(recovery: Recovery, kept: NDArray[np.int64]) -> dict[str, Any]:
         "marks": [{"name": clean(k), "strength": _six(v)} for k, v in choices.items()],
         "start": _start(recovery, strengths[pick], choices),
     }  # fmt: skip
+
+
+def rung_strengths(recovery: Recovery) -> Array:
+    """Strengths of `pictures.rungs` in the unit of the ladder; both begin with the same rung."""
+    own = np.asarray(recovery.pictures.strengths, dtype=float)
+    rows = numbers(ladder_of(recovery.ladder), "strength")
+    rows = rows[rows > 0]
+    return own * (rows.min() / own.min()) if len(rows) and len(own) and own.min() > 0 else own
 
 
 def _start(recovery: Recovery, strengths: Array, choices: dict[str, float]) -> int:

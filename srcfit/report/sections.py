@@ -39,7 +39,7 @@ def total_sentence(recovery: Recovery) -> str:
     x0, x1 = extent(recovery)
     where = f"between {brief(x0)} and {brief(x1)} {unit(recovery, 'position')}"
     amount = plus_minus(total, T)
-    kind = recovery.case.member.kind.title.lower()
+    kind = member_word(recovery)
     if amount == UNDETERMINED:
         return shown(
             f"These readings cannot tell the total {word} on this {clean(kind)} {where}; the "
@@ -53,6 +53,12 @@ def total_sentence(recovery: Recovery) -> str:
         return f"{lead}; there is no interval for it."
     low, high = ends.split(" to ", 1)
     return f"{lead}: with {percent(recovery)} confidence between {shown(low)} and {shown(high)}."
+
+
+def member_word(recovery: Recovery) -> str:
+    """Plain name of the member's kind for a sentence."""
+    kind = recovery.case.member.kind.name
+    return "member" if kind == "general" else kind.replace("_", " ")
 
 
 def _span(zones: Sequence[Mapping[str, Any]]) -> tuple[float, float]:
@@ -168,7 +174,12 @@ def strength(recovery: Recovery) -> str:
     facts = recovery.facts.get("strength") or {}
     value, choose = brief(facts.get("value")), str(facts.get("choose"))
     dof = brief(facts.get("effective_dof"), 3)
-    if choose == "averaged":
+    if not len(recovery.ladder):
+        lead = (
+            "Nothing was smoothed: the source has only lumped parts and a constant, and they "
+            "follow from the readings without a strength."
+        )
+    elif choose == "averaged":
         lead = (
             "The answer is <em>averaged</em>: no single strength is picked, but the estimates of "
             "all strengths and of several families of roughness are averaged, each weighted by "

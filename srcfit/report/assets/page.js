@@ -125,7 +125,7 @@
     u.ctx.restore();
   };
   const zoneMarks = (u) => {
-    const { ctx, bbox } = u;
+    const { ctx, bbox } = u, ends = [];
     for (const zone of data.source.zones) {
       for (const edge of [zone.from, zone.to]) vertical(u, edge, paint.grey, [1, 3]);
       if (zone.mean !== null) horizontal(u, zone.from, zone.to, zone.mean);
@@ -135,7 +135,11 @@
       ctx.font = `${0.75 * rem() * uPlot.pxRatio}px ${getComputedStyle(document.body).fontFamily}`;
       ctx.textAlign = "center";
       ctx.textBaseline = "top";
-      ctx.fillText(fitted(ctx, zone.name, right - left - 6), (left + right) / 2, bbox.top + 2);
+      let row = ends.findIndex((end) => zone.from >= end);
+      if (row < 0) row = ends.length;
+      ends[row] = zone.to;
+      const top = bbox.top + (2 + rem() * row) * uPlot.pxRatio;
+      ctx.fillText(fitted(ctx, zone.name, right - left - 6), (left + right) / 2, top);
       ctx.restore();
     }
     data.source.lumped.forEach((part) => vertical(u, part.at, paint.vermillion, [7, 4]));
@@ -255,34 +259,64 @@
     if (groups.length > 6) return [values];
     return groups.map((g) => values.map((v, i) => (panel.group[i] === g ? v : null)));
   };
+  const smooth = (panel) => (u) => {
+    if (!panel.curve) return;
+    u.ctx.save();
+    u.ctx.beginPath();
+    u.ctx.rect(u.bbox.left, u.bbox.top, u.bbox.width, u.bbox.height);
+    u.ctx.clip();
+    u.ctx.strokeStyle = paint.blue;
+    u.ctx.lineWidth = 0.11 * rem() * uPlot.pxRatio;
+    u.ctx.beginPath();
+    panel.curveX.forEach((x, i) => u.ctx.lineTo(u.valToPos(x, "x", true), u.valToPos(panel.curve[i], "y", true)));
+    u.ctx.stroke();
+    u.ctx.restore();
+  };
   const pointed = (u, panel) => {
     const i = u.cursor.idx;
     if (u.cursor.left >= 0 && i !== null && i !== undefined && u.cursor.event) choose(panel.rows[i]);
   };
-  const panelPlot = (panel, range, colour, dash, watch) => {
+  const readingDots = (panel) => dots(paint.ink, {
+    points: { show: true, size: (panel.x.length > 200 ? 0.18 : 0.38) * rem(), fill: paint.ink, width: 0 },
+  });
+  const rings = () => ({
+    stroke: paint.blue, paths: () => null,
+    points: { show: true, size: 0.62 * rem(), width: 0.09 * rem(), stroke: paint.blue, fill: "transparent" },
+  });
+  /* `answer`: the response as a curve with a ring where each reading is predicted; otherwise the
+     predictions alone, joined within their group. */
+  const ringed = (panel) => panel.curve !== null && panel.x.length <= 200;
+  const panelPlot = (panel, range, answer) => {
     const count = byGroup(panel, panel.predicted).length;
-    const shape = groupsOf(panel).length > 6 ? { paths: () => null, points: { show: true, size: 3 } } : {};
+    const alone = groupsOf(panel).length > 6 ? { paths: () => null, points: { show: true, size: 3 } } : {};
+    const curved = answer && ringed(panel);
+    const predicted = () => {
+      if (curved) return rings();
+      return answer ? line(paint.blue, alone) : line(paint.vermillion, { dash: [8, 4], ...alone });
+    };
     return {
       scales: { x: alongX, y: { range: () => range } }, axes: [place(), yAxis()],
-      series: [{}, dots(paint.ink, { points: { show: true, size: (panel.x.length > 200 ? 0.18 : 0.38) * rem(), fill: paint.ink, width: 0 } }),
-        ...Array.from({ length: count }, () => line(colour, { dash, ...shape }))],
-      hooks: { draw: [bars(panel), crosses(panel)], setCursor: watch ? [(u) => pointed(u, panel)] : [] },
+      series: [{}, readingDots(panel), ...Array.from({ length: count }, predicted)],
+      hooks: {
+        draw: [bars(panel), crosses(panel)], drawClear: curved ? [smooth(panel)] : [],
+        setCursor: answer ? [(u) => pointed(u, panel)] : [],
+      },
     };
   };
   const drawReadings = () => {
-    const host = open("readings", [["dot ink", "reading, bar ± 1 sd"], ["line blue", "predicted, offsets included"],
+    const host = open("readings", [["dot ink", "reading, bar ± 1 sd"], ["line blue", "response of the recovered source"], ...(data.panels.some(ringed) ? [["ring blue", "predicted, offsets included"]] : []),
       ...(data.panels.some((p) => p.off.length) ? [["cross grey", "not used"]] : [])]);
     if (!host) return;
     data.panels.forEach((panel, p) => {
-      const range = padded([panel.value, panel.predicted]);
+      const range = padded([panel.value, panel.predicted, panel.curve || []]);
       chart(`readings${p}`, panelHost(host, label(panel.kind, panel.unit)), {
-        high: 15, sync: true, plot: panelPlot(panel, range, paint.blue, undefined, true),
+        high: 15, sync: true, plot: panelPlot(panel, range, true),
       }, [panel.x, panel.value, ...byGroup(panel, panel.predicted)]);
       const z = padded([panel.standardised, [-3, 3]], 0.02);
       chart(`residuals${p}`, panelHost(host, `residual / sd, ${panel.kind}`), {
         high: 8, sync: true, plot: {
           scales: { x: alongX, y: { range: () => z } }, axes: [place(), yAxis()],
-          series: [{}, dots(paint.ink, { points: { show: true, size: (panel.x.length > 200 ? 0.18 : 0.38) * rem(), fill: paint.ink, width: 0 } })],
+          series: [{}, readingDots(panel)],
           hooks: { drawClear: [expected], setCursor: [(u) => pointed(u, panel)] },
         },
       }, [panel.x, panel.standardised]);
@@ -330,37 +364,40 @@
     return `Strength ${strength}${unit} (rung ${k + 1} of ${rungs}): total ${total} ${data.units.total}. ` +
       `The answer: ${data.source.total}.${rough}`;
   };
-  const lPoint = (k) => {
-    const c = ladder.curve;
-    if (!c.strength.length) return null;
-    const i = nearest(c.strength, ladder.strengths[k]);
-    return [c.a[i], c.b[i]];
-  };
   const letters = "abcdefghijklmnopqrstuvwxyz";
+  /* Letters go beside their mark where no other letter or mark stands yet. */
+  const AROUND = [[12, 0], [-12, 0], [0, -14], [0, 14], [12, -13], [-12, -13], [12, 13], [-12, 13],
+    [0, -27], [0, 27], [14, -26], [-14, -26], [14, 26], [-14, 26], [0, -40], [0, 40]];
+  const free = (taken, x, y) => taken.every(([a, b, r]) => Math.hypot(a - x, b - y) >= r * uPlot.pxRatio);
   const lMarks = (u) => {
-    const c = ladder.curve;
-    const put = (x, y, size, colour, fill) => {
-      u.ctx.beginPath();
-      u.ctx.arc(x, y, size * uPlot.pxRatio, 0, 2 * Math.PI);
-      u.ctx.lineWidth = 2.2 * uPlot.pxRatio;
-      u.ctx.strokeStyle = colour;
-      if (fill) { u.ctx.fillStyle = colour; u.ctx.fill(); } else u.ctx.stroke();
+    const c = ladder.curve, { ctx } = u, k = uPlot.pxRatio;
+    const dot = (x, y, size, colour, filled) => {
+      ctx.beginPath();
+      ctx.arc(x, y, size * k, 0, 2 * Math.PI);
+      ctx.lineWidth = 2.2 * k;
+      ctx.strokeStyle = ctx.fillStyle = colour;
+      if (filled) ctx.fill(); else ctx.stroke();
     };
-    u.ctx.save();
-    u.ctx.font = `${0.8 * rem() * uPlot.pxRatio}px ${getComputedStyle(document.body).fontFamily}`;
-    ladder.marks.forEach((mark, i) => {
-      const at = nearest(c.strength, mark.strength);
-      const x = u.valToPos(c.a[at], "x", true), y = u.valToPos(c.b[at], "y", true);
-      put(x, y, 3, paint.ink, true);
-      const left = i % 2 === 1;
-      u.ctx.textAlign = left ? "right" : "left";
-      u.ctx.textBaseline = "middle";
-      u.ctx.fillStyle = paint.ink;
-      u.ctx.fillText(letters[i % 26], x + (left ? -12 : 12) * uPlot.pxRatio, y);
+    const spot = (strength) => {
+      const at = nearest(c.strength, strength);
+      return [u.valToPos(c.a[at], "x", true), u.valToPos(c.b[at], "y", true), 9];
+    };
+    ctx.save();
+    ctx.font = `${0.8 * rem() * k}px ${getComputedStyle(document.body).fontFamily}`;
+    ctx.textAlign = "center";
+    ctx.textBaseline = "middle";
+    const spots = ladder.marks.map((mark) => spot(mark.strength)), taken = [...spots];
+    spots.forEach(([x, y], i) => {
+      dot(x, y, 3, paint.ink, true);
+      const [dx, dy] = AROUND.find(([a, b]) => free(taken, x + a * k, y + b * k)) || AROUND[0];
+      taken.push([x + dx * k, y + dy * k, 12]);
+      ctx.fillText(letters[i % 26], x + dx * k, y + dy * k);
     });
-    const here = lPoint(rung);
-    if (here) put(u.valToPos(here[0], "x", true), u.valToPos(here[1], "y", true), 7, paint.vermillion, false);
-    u.ctx.restore();
+    if (rungs) {
+      const [x, y] = spot(ladder.strengths[rung]);
+      dot(x, y, 7, paint.vermillion, false);
+    }
+    ctx.restore();
   };
   const powers = (_, splits) => splits.map((v) => show(10 ** v, 2));
   const decades = (u, axis, low, high) => {
@@ -429,7 +466,7 @@
       data.panels.forEach((panel, p) => {
         const range = padded([panel.value, panel.predicted], 0.15);
         chart(`rungFit${p}`, panelHost(host, label(panel.kind, panel.unit)), {
-          high: 11, sync: true, plot: panelPlot(panel, range, paint.vermillion, [8, 4], false),
+          high: 11, sync: true, plot: panelPlot(panel, range, false),
         }, [panel.x, panel.value, ...byGroup(panel, rungFit(panel, rung))]);
       });
     }
