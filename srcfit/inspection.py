@@ -3,17 +3,19 @@
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 import numpy as np
 
 from srcfit.case.model import Case, ColumnSpec, Known, Lumped
+from srcfit.kernel import prescribed
 from srcfit.member import Unknown
 from srcfit.readings.model import Readings
 from srcfit.rounding import brief
 from srcfit.text import bullets, clean, findings_text, join, section, table
 from srcfit.units import factor
+from srcfit.unknowns import restraint_label
 
 Facts = Mapping[str, Any]
 MOST_EXCLUDED = 40
@@ -39,6 +41,7 @@ def inspect(case: Case, readings: Readings) -> dict[str, Any]:
         "title": case.title,
         "case": str(case.path) if case.path is not None else None,
         "member": _plain(case.member_text),
+        "member_in_words": _member(case),
         "understood": list(readings.understood),
         "inputs": [{"file": f, "sha256": h} for f, h in readings.inputs.items()],
         "fit": {"read": len(readings), "used": int(readings.used.sum())},
@@ -54,6 +57,26 @@ def inspect(case: Case, readings: Readings) -> dict[str, Any]:
             {"code": f.code, "level": f.level, "sentence": f.sentence} for f in readings.findings
         ],
     }  # fmt: skip
+
+
+def _member(case: Case) -> str:
+    """Kind, extent, ends and what stands between them."""
+    member, at = case.member, case.source.position_unit
+    extent = " to ".join(brief(shown(x, at, "m"), 6) for x in (member.start, member.end))
+    inside = {"support": member.supports, "hinge": member.hinges, "interface": member.interfaces}
+    words = [
+        f"{member.kind.name} from {extent} {at}",
+        f"left {member.left.word}, right {member.right.word}",
+        *(f"{name}s at {_places(case, items)} {at}" for name, items in inside.items() if items),
+    ]
+    if member.driven:
+        words.append(f"driven at {brief(member.frequency, 6)} Hz")
+    return "; ".join(words)
+
+
+def _places(case: Case, items: Sequence[Any]) -> str:
+    unit = case.source.position_unit
+    return ", ".join(brief(shown(item.at, unit, "m"), 6) for item in items)
 
 
 def _plain(value: object) -> Any:
@@ -139,6 +162,8 @@ def _asks(case: Case) -> dict[str, Any]:
             "zone": limit.zone,
             "at_most": density(limit.at_most) if limit.density else total(limit.at_most),
             "unit": source.unit if limit.density else source.total_unit},
+        "unknown": [restraint_label(case, name)[0] for name, amount in prescribed(case.member)
+                    if isinstance(amount, Unknown)],
         "strength": {"solver": strength.solver, "roughness": strength.roughness,
                      "choose": strength.choose, "level": strength.level},
     }  # fmt: skip
@@ -150,7 +175,7 @@ def text(facts: Facts) -> str:
     left = fit["read"] - fit["used"]
     tally = f"{fit['used']} of {fit['read']} readings are used"
     return join(
-        clean(facts["title"]),
+        f"{clean(facts['title'])}\n{clean(facts['member_in_words'])}",
         section("Files", bullets(facts["understood"])),
         section(f"Readings: {tally}", _columns_text(facts["columns"])),
         section(f"Excluded: {left}", _excluded_text(facts)),
@@ -207,6 +232,8 @@ def _asks_text(asks: Facts) -> str:
     if asks["limit"]:
         t = asks["limit"]
         rows.append(("limit", f"{t['zone']} at most {brief(t['at_most'], 4)} {t['unit']}"))
+    if asks["unknown"]:
+        rows.append(("unknown amounts", ", ".join(asks["unknown"])))
     s = asks["strength"]
     how = f"{s['solver']}, roughness {s['roughness']}, strength {s['choose']}"
     rows.append(("method", f"{how}, {100 * s['level']:g} % intervals"))
