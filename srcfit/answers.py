@@ -15,11 +15,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from srcfit.case.model import Case
-from srcfit.forward import Column, Forward
+from srcfit.forward import Forward
 from srcfit.grid import overlap, spread
 from srcfit.member import Array
 from srcfit.problem import Questions
 from srcfit.units import factor
+from srcfit.unknowns import Column
 
 CURRIE = 1.6448536269514722  # one-sided 5 % point of the normal distribution
 

@@ -12,12 +12,13 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from srcfit.forward import Forward, restraint_label
+from srcfit.forward import Forward
 from srcfit.grid import overlap, spread
 from srcfit.influence import deflect
 from srcfit.kernel import prescribed
 from srcfit.member import Array, Unknown
 from srcfit.state import operator
+from srcfit.unknowns import restraint_label
 
 
 @dataclass(frozen=True)

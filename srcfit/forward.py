@@ -7,9 +7,7 @@ exactly along the reading's influence line. B: lumped parts, nuisances, null mod
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,66 +15,26 @@ from numpy.typing import NDArray
 from srcfit.case.model import Case, ColumnSpec
 from srcfit.errors import SolveError
 from srcfit.grid import make_grid, overlap, spread
-from srcfit.influence import (
-    Influence,
-    Term,
-    at_nodes,
-    influence,
-    interval_integrals,
-    restrained,
-    restraint_forces,
-)
+from srcfit.holds import restrained, restraint_forces
+from srcfit.influence import Influence, Term, at_nodes, influence, interval_integrals
 from srcfit.kernel import Nulls, functional, functionals, prescribed
 from srcfit.member import Array, Member, Unknown
-from srcfit.problem import Grid, Problem
+from srcfit.problem import Grid
 from srcfit.readings.model import Readings
 from srcfit.sensors import samples, sensor_terms
 from srcfit.state import Chain, Matrix, chain, inner_edges, special_places
-from srcfit.units import factor, multiply_text, same_dimension
-
-
-@dataclass(frozen=True)
-class Column:
-    """One unpenalised unknown.
-
-    Attributes
-    ----------
-    name : str
-        As in summary.json (`offset:GROUP`, `settlement:AT`, a lumped part's name ...).
-    kind : {"lumped", "nuisance", "null"}
-    unit : str
-        Unit text it is reported in.
-    si_unit : str
-    shift : float
-        Added (SI) to the coefficient to give the reported amount.
-    absolute : bool
-        Whether the amount is absolute (a temperature with its own zero), not a difference.
-    guess, sd : float or None
-        Knowledge about the coefficient (SI); None: nothing is known.
-    """
-
-    name: str
-    kind: str
-    unit: str = ""
-    si_unit: str = ""
-    shift: float = 0.0
-    guess: float = 0.0
-    sd: float | None = None
-    absolute: bool = False
-
-
-@dataclass(frozen=True)
-class Reaction:
-    """One force, couple or flow at an end or support that can be asked for.
-
-    Flows of radial kinds are those through the whole area, like totals.
-    """
-
-    name: str
-    at: float
-    kind: str
-    unit: str
-    si_unit: str
+from srcfit.units import multiply_text
+from srcfit.unknowns import (
+    Column,
+    Reaction,
+    base,
+    corrected,
+    lags,
+    reading_nuisances,
+    response_unit,
+    restraint_label,
+    stack,
+)
 
 
 @dataclass(frozen=True)
@@ -139,7 +97,7 @@ def build(case: Case, readings: Readings) -> Forward:
     n = len(rows)
     cells, columns, member_columns, known = _model(case, grid, line, lines)
     loads = len(case.source.lumped)
-    own, own_columns = _reading_nuisances(case, readings, rows, specs)
+    own, own_columns = reading_nuisances(case, readings, rows, specs)
     padded = np.zeros((len(lines) - n, own_columns.shape[1]))
     null_columns = _null_reads(nulls, readings, rows, specs, reactions, case)
     columns += own
@@ -147,15 +105,15 @@ def build(case: Case, readings: Readings) -> Forward:
     B = np.concatenate(
         [member_columns, np.concatenate([own_columns, padded]), null_columns], axis=1
     )
-    absolute = _base(case.member) * _absolute(case.member, specs)
-    y = _corrected(readings, rows, specs) - known[:n] - absolute
+    absolute = base(case.member) * _absolute(case.member, specs)
+    y = corrected(readings, rows, specs) - known[:n] - absolute
     _enough(case, n, columns)
     group_names = tuple(dict.fromkeys(s.group for s in specs))
     balance = None if nulls is None else _balance(nulls, line, grid, case, len(columns), loads)
     return Forward(
         case, readings, grid, rows, cells[:n], B[:n], y, known[:n] + absolute, readings.sd[rows],
         np.array([group_names.index(s.group) for s in specs], dtype=int), group_names,
-        _lags(specs, group_names), tuple(columns), reactions, cells[n:], B[n:], known[n:],
+        lags(specs, group_names), tuple(columns), reactions, cells[n:], B[n:], known[n:],
         balance, line, lines,
     )  # fmt: skip
 
@@ -293,15 +251,7 @@ def _lumped(case: Case, line: Chain, lines: Influence) -> tuple[list[Column], Ma
             start, end = spread(part)
             size = overlap(member, np.array([member.start, member.end]), start, end)[0]
             rows.append(_stretch(line, lines, start, end) / size)
-    return columns, _stack(rows, len(lines))
-
-
-def _stack(rows: Sequence[Matrix], n: int) -> Matrix:
-    return np.stack(rows, axis=1) if rows else np.zeros((n, 0))
-
-
-def _base(member: Member) -> float:
-    return member.ambient if member.kind.relative and not member.driven else 0.0
+    return columns, stack(rows, len(lines))
 
 
 def _absolute(member: Member, specs: list[ColumnSpec]) -> Array:
@@ -309,38 +259,11 @@ def _absolute(member: Member, specs: list[ColumnSpec]) -> Array:
     return np.array([float(member.kind.sensor(s.kind).quantity == "response") for s in specs])
 
 
-def restraint_label(case: Case, name: str) -> tuple[str, str]:
-    """(name, SI unit) under which an unknown prescribed amount is reported."""
-    kind = case.member.kind
-    if name.startswith("support."):
-        at = case.member.supports[int(name[8:]) - 1].at
-        return f"settlement:{place_text(case, at)}", kind.response_unit
-    if name.endswith("rotation"):
-        return name, "rad"
-    return (name.replace("value", "settlement") if kind.order == 4 else name), kind.response_unit
-
-
-def response_unit(case: Case) -> str:
-    """Unit of the first readings of the response itself; the member's SI unit without any."""
-    kind = case.member.kind
-    for spec in case.columns:
-        unit = spec.unit
-        if unit and kind.sensor(spec.kind).quantity == "response":
-            return unit if same_dimension(unit, kind.response_unit) else kind.response_unit
-    return kind.response_unit
-
-
-def place_text(case: Case, at: float) -> str:
-    """A place in the user's position unit, e.g. ``24 m``."""
-    unit = case.source.position_unit
-    return f"{at / factor(unit, 'm', 'source.position_unit')[0]:.10g} {unit}"
-
-
 def _restraints(case: Case, lines: Influence) -> tuple[Matrix, list[Column], Matrix]:
     """Response to known prescribed amounts; columns of the unknown ones."""
     names, forces = restraint_forces(lines)
     given = dict(zip(names, forces.T, strict=True))
-    base = _base(case.member)
+    reference = base(case.member)
     known = np.zeros(len(lines), dtype=forces.dtype)
     columns, rows = [], []
     for name, amount in prescribed(case.member):
@@ -348,7 +271,7 @@ def _restraints(case: Case, lines: Influence) -> tuple[Matrix, list[Column], Mat
             label, si_unit = restraint_label(case, name)
             turned = name.endswith("rotation")
             unit = si_unit if turned else response_unit(case)
-            shift = 0.0 if turned else base
+            shift = 0.0 if turned else reference
             columns.append(
                 Column(
                     label,
@@ -364,7 +287,7 @@ def _restraints(case: Case, lines: Influence) -> tuple[Matrix, list[Column], Mat
             rows.append(given[name])
         else:
             known = known + amount * given[name]
-    return known, columns, _stack(rows, len(lines))
+    return known, columns, stack(rows, len(lines))
 
 
 def _known_parts(case: Case, line: Chain, lines: Influence) -> Matrix:
@@ -377,48 +300,6 @@ def _known_parts(case: Case, line: Chain, lines: Influence) -> Matrix:
         )
         total = total + part.value * one
     return total
-
-
-def _reading_nuisances(
-    case: Case, readings: Readings, rows: NDArray[np.int64], specs: list[ColumnSpec]
-) -> tuple[list[Column], Matrix]:
-    """Unknown offset, drift, scale and step of each group, over the sensors."""
-    found: dict[str, tuple[Column, Array]] = {}
-    n = len(rows)
-    for i, (r, s) in enumerate(zip(rows, specs, strict=True)):
-        si = case.member.kind.sensor(s.kind).unit
-        shown = readings.unit[r] or si
-        value = float(np.real(readings.value[r]))
-        asked: list[tuple[str, float | Unknown, float, str, str, float]] = [
-            (f"offset:{s.group}", s.offset, 1.0, shown, si, 0.0),
-            (f"drift:{s.group}", s.drift, float(readings.time[r]), f"{shown}/s", f"{si}/s", 0.0),
-            (f"scale:{s.group}", s.scale, value, "1", "1", 1.0),
-        ]
-        if s.step is not None:
-            name = f"step:{s.group}@{place_text(case, s.step.at)}"
-            beyond = float(readings.x[r] > s.step.at)
-            asked.append((name, s.step.amount, beyond, shown, si, 0.0))
-        for name, amount, entry, unit, si_unit, shift in asked:
-            if isinstance(amount, Unknown):
-                guess = amount.guess - shift
-                column = Column(name, "nuisance", unit, si_unit, shift, guess, amount.sd)
-                found.setdefault(name, (column, np.zeros(n)))[1][i] = entry
-    return [c for c, _ in found.values()], _stack([v for _, v in found.values()], n)
-
-
-def _corrected(readings: Readings, rows: NDArray[np.int64], specs: list[ColumnSpec]) -> Matrix:
-    """Values less the known offsets, drifts, steps and scales."""
-    y = readings.value[rows].copy()
-    for i, (r, s) in enumerate(zip(rows, specs, strict=True)):
-        if not isinstance(s.offset, Unknown):
-            y[i] -= s.offset
-        if not isinstance(s.drift, Unknown) and s.drift:
-            y[i] -= s.drift * readings.time[r]
-        if s.step is not None and not isinstance(s.step.amount, Unknown):
-            y[i] -= s.step.amount * (readings.x[r] > s.step.at)
-        if not isinstance(s.scale, Unknown):
-            y[i] /= s.scale
-    return y
 
 
 def _null_reads(
@@ -462,59 +343,3 @@ def _balance(
             inside = (places > known.start) & (places < known.end) & (member.start <= places)
             rows[:, -1] += known.value * (density * inside).sum(axis=(1, 2))
     return rows
-
-
-def _lags(specs: list[ColumnSpec], groups: tuple[str, ...]) -> Array:
-    """Stated lag-1 correlation of each group (0 where it is to be estimated)."""
-    stated: dict[str, Any] = {s.group: s.correlation for s in specs}
-    return np.array([0.0 if stated[g] == "estimate" else float(stated[g]) for g in groups])
-
-
-def whitened(forward: Forward, sd: Array | None = None, lag: Array | None = None) -> Problem:
-    """The whitened problem with the stated noise, or with `sd` (n,) and `lag` (g,) in its place.
-
-    Unknowns with prior knowledge, and a known total, become rows after the readings.
-    """
-    sd = forward.sd if sd is None else sd
-    lag = forward.lag if lag is None else lag
-    A, B, d = forward.A, forward.B, forward.y
-    m, k = A.shape[1], B.shape[1]
-    stacked = np.concatenate([A, B, d[:, None]], axis=1) / sd[:, None]
-    stacked = _decorrelated(forward, stacked, lag)
-    extra = []
-    for j, column in enumerate(forward.columns):
-        if column.sd is not None:
-            row = np.zeros(m + k + 1)
-            row[m + j], row[-1] = 1 / column.sd, column.guess / column.sd
-            extra.append(row)
-    total = forward.case.source.total
-    if total is not None:
-        row = np.zeros(m + k + 1)
-        row[:m] = forward.grid.weights * forward.grid.free
-        row[m : m + k] = [float(c.kind == "lumped") for c in forward.columns]
-        row[-1] = total.value
-        extra.append(row / total.sd)
-    stacked = np.concatenate([stacked, *(r[None] for r in extra)])
-    source = forward.case.source
-    balance = None if forward.balance is None else forward.balance[:, :m]
-    return Problem(
-        stacked[:, :m], stacked[:, m : m + k], stacked[:, -1], forward.grid,
-        tuple(c.name for c in forward.columns),
-        constant=balance is None and (source.smooth or source.background),
-        smooth=source.smooth, balance=balance, pseudo=len(extra),
-        stated=bool(np.isfinite(forward.sd).all()),
-    )  # fmt: skip
-
-
-def _decorrelated(forward: Forward, rows: Matrix, lag: Array) -> Matrix:
-    """Rows of a first-order autoregressive group, made independent along the member."""
-    if not lag.any():
-        return rows
-    out = rows.copy()
-    x = forward.readings.x[forward.rows]
-    for g in np.flatnonzero(lag):
-        members = np.flatnonzero(forward.group == g)
-        members = members[np.argsort(x[members], kind="stable")]
-        step = rows[members[1:]] - lag[g] * rows[members[:-1]]
-        out[members[1:]] = step / np.sqrt(1 - lag[g] ** 2)
-    return out

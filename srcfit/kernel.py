@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 
 from srcfit.errors import MemberError
+from srcfit.holds import null_states, restrained, restraint_forces, support_intervals
 from srcfit.influence import (
     Influence,
     Term,
@@ -20,10 +21,6 @@ from srcfit.influence import (
     bases,
     influence,
     interval_integrals,
-    null_states,
-    restrained,
-    restraint_forces,
-    support_intervals,
 )
 from srcfit.member import Array, Member, Unknown
 from srcfit.state import (

@@ -10,11 +10,11 @@ import numpy as np
 
 from srcfit.answers import detection, peak, per, verdict, zone_sizes
 from srcfit.criteria import CRITERIA
-from srcfit.forward import place_text, response_unit
 from srcfit.member import Array
 from srcfit.recovery import Number
 from srcfit.solve import Solved, strength_unit
 from srcfit.units import factor
+from srcfit.unknowns import place_text, response_unit
 
 if TYPE_CHECKING:
     import pandas as pd

@@ -17,13 +17,14 @@ from srcfit.case.model import Case
 from srcfit.criteria import CRITERIA, Choice, choose
 from srcfit.eigen import modes
 from srcfit.errors import SolveError
-from srcfit.forward import Forward, build, whitened
-from srcfit.member import Array
+from srcfit.forward import Forward, build
+from srcfit.member import Array, Member
 from srcfit.priors import Family, family
 from srcfit.problem import Grid, Problem
 from srcfit.readings.model import Readings
 from srcfit.solvers import SOLVERS
 from srcfit.solvers.ladder import Ladder
+from srcfit.whitening import whitened
 
 MOST_MODES = 100
 
@@ -102,19 +103,19 @@ def _ladder(case: Case, forward: Forward, problem: Problem) -> Ladder:
     roughness = 1 if strength.roughness == "averaged" else strength.roughness
     given: dict[str, Any] = {}
     if strength.solver == "eigenbasis":
-        given["basis"] = mode_shapes(case, problem.grid, len(forward.rows))
+        given["basis"] = mode_shapes(case.member, problem.grid, len(forward.rows))
     elif strength.solver == "tikhonov" and not isinstance(strength.choose, str):
         unit = strength_unit(case, family(roughness, problem.grid))[1]
         given["strengths"] = np.array([float(strength.choose) / unit])
     return SOLVERS[strength.solver](problem, roughness=roughness, **given)
 
 
-def mode_shapes(case: Case, grid: Grid, readings: int) -> Array:
+def mode_shapes(member: Member, grid: Grid, readings: int) -> Array:
     """First modes times r, averaged over cells, (m, N): no more than the readings can tell."""
-    found = modes(case.member, min(readings, MOST_MODES))
+    found = modes(member, min(readings, MOST_MODES))
     x, weight = np.polynomial.legendre.leggauss(3)
     places = grid.edges[:-1, None] + grid.widths[:, None] * (x + 1) / 2
-    r = case.member.profiles.get("r")
+    r = member.profiles.get("r")
     density = np.ones(places.shape) if r is None else r(places)
     shapes = found.functions(places.ravel()).reshape(*places.shape, -1)
     averaged: Array = np.einsum("ms,msn,s->mn", density, shapes, weight / 2)
