@@ -339,7 +339,8 @@ def test_inspect_shows_what_was_read(made, capsys, tmp_path):
     assert status == 0
     for words in ("UTF-8, comma", "2 of 4 readings are used", "2/4", "1 to 2 m", "1 to 2 mm",
                   "invented.csv:4", "saturated", "invented.csv:5", "no number", "zone bay 1",
-                  "One value is rough", "in kN/m, total in kN"):  # fmt: skip
+                  "One value is rough", "in kN/m, total in kN",
+                  "beam from 0 to 30 m; left free, right clamped; supports at 18, 24 m"):  # fmt: skip
         assert words in out
     assert list(tmp_path.iterdir()) == []
     status, out, _ = run(capsys, "inspect", "a.toml", "--json")
@@ -351,6 +352,7 @@ def test_inspect_shows_what_was_read(made, capsys, tmp_path):
     np.testing.assert_allclose(column["sd"], [0.1, 0.1])
     assert column["excluded"] == {"saturated": 1, "no number": 1}
     assert [e["line"] for e in facts["excluded"]] == [4, 5]
+    assert facts["asks"]["unknown"] == []
     assert [z["name"] for z in facts["asks"]["zones"]] == ["bay 1", "bay 2"]
 
 
