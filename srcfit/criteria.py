@@ -19,7 +19,7 @@ Rows = NDArray[np.intp]
 
 # Lukas (2006) robust GCV: 1 is GCV itself, smaller guards more against too rough a source
 ROBUSTNESS = 0.3
-FOLDS = 10
+FOLDS, CROWD = 10, 10
 # ladders of this many rungs are fine enough to interpolate a score
 FINE = 100
 # a corner turns at least this sharply, and both branches span at least this ratio
@@ -92,11 +92,14 @@ def leave_one_out(ladder: Ladder) -> Array:
 
 
 def folds(ladder: Ladder) -> list[Rows]:
-    """Row numbers of each fold: runs of neighbouring readings of about equal size."""
+    """Row numbers of each fold: runs of neighbours of about equal size.
+
+    Ten folds, and more where a fold would hold more than ten readings.
+    """
     places = ladder.frame.problem.places
     n = ladder.readings
     order = np.arange(n) if places is None else np.argsort(places[:n], kind="stable")
-    return [np.asarray(part) for part in np.array_split(order, min(FOLDS, n))]
+    return [np.asarray(part) for part in np.array_split(order, min(max(FOLDS, -(-n // CROWD)), n))]
 
 
 def k_fold(ladder: Ladder) -> Array:
@@ -116,29 +119,40 @@ def k_fold(ladder: Ladder) -> Array:
 def _k_fold(ladder: Ladder, rungs: Rows) -> Array:
     """Scores at some rungs."""
     total, told = np.zeros(len(rungs)), 0
-    fill = ladder.fill[:, rungs]
-    for rows in folds(ladder):
-        Z, U = ladder.Z[rows], ladder.frame.U[rows]
-        if np.linalg.norm(U, 2) ** 2 >= 1 - ALONE:
-            continue
-        i, j = np.triu_indices(len(rows))
-        upper = (Z[i] * Z[j]) @ fill + (U[i] * U[j]).sum(axis=1)[:, None]
-        blocks = np.empty((len(rungs), len(rows), len(rows)))
-        blocks[:, i, j] = blocks[:, j, i] = -upper.T
-        total += _left_out(blocks, ladder.residuals[np.ix_(rows, rungs)].T)
-        told += len(rows)
+    fill, residuals = ladder.fill[:, rungs], ladder.residuals[:, rungs]
+    U = ladder.frame.U
+    predicted = [b for b in folds(ladder) if np.linalg.norm(U[b], 2) ** 2 < 1 - ALONE]
+    for size in {len(b) for b in predicted}:
+        rows = np.stack([b for b in predicted if len(b) == size])
+        i, j = np.triu_indices(size)
+        pairs = ladder.Z[rows[:, i]] * ladder.Z[rows[:, j]]
+        upper = pairs @ fill + (U[rows[:, i]] * U[rows[:, j]]).sum(axis=2)[:, :, None]
+        blocks = np.empty((size, size, len(rows), len(rungs)))
+        blocks[i, j] = blocks[j, i] = -upper.transpose(1, 0, 2)
+        total += _left_out(blocks, residuals[rows].transpose(1, 0, 2))
+        told += rows.size
     return total / told if told else np.full(len(total), np.nan)
 
 
 def _left_out(minus_hat: Array, residuals: Array) -> Array:
-    """Sums of squares (t,) of (I - H)^-1 r; inf where a reading is all but interpolated."""
-    own = np.arange(minus_hat.shape[1])
-    minus_hat[:, own, own] += 1 + np.finfo(float).eps
-    good = minus_hat[:, own, own].min(axis=1) > ALONE
-    out = np.full(len(minus_hat), np.inf)
-    left = np.linalg.solve(minus_hat[good], residuals[good][:, :, None])
-    out[good] = (left[:, :, 0] ** 2).sum(axis=1)
-    return out
+    """Sums of squares (t,) of (I - H)^-1 r over the blocks, (b, b, blocks, t) and (b, blocks, t).
+
+    Gauss elimination of all blocks and rungs at once; the blocks are small and positive definite.
+    inf where a reading is all but interpolated.
+    """
+    own = np.arange(len(minus_hat))
+    minus_hat[own, own] += 1
+    bad = minus_hat[own, own].min(axis=(0, 1)) <= ALONE
+    pivots = np.finfo(float).eps
+    for k in own:
+        np.maximum(minus_hat[k, k], pivots, out=minus_hat[k, k])
+        share = minus_hat[k + 1 :, k] / minus_hat[k, k]
+        minus_hat[k + 1 :, k + 1 :] -= share[:, None] * minus_hat[k, k + 1 :]
+        residuals[k + 1 :] -= share * residuals[k]
+    for k in own[::-1]:
+        residuals[k] -= (minus_hat[k, k + 1 :] * residuals[k + 1 :]).sum(axis=0)
+        residuals[k] /= minus_hat[k, k]
+    return np.where(bad, np.inf, (residuals**2).sum(axis=(0, 1)))
 
 
 def discrepancy(ladder: Ladder) -> Array:

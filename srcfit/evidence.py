@@ -196,7 +196,7 @@ def data_share(asked: Asked, families: Sequence[Weighted]) -> Array:
             told = told + cross**2 / np.maximum(spread, np.finfo(float).tiny)
         share = np.full(len(prior), np.nan)
         # the square of a question's whole weight bounds its variance
-        some = prior > SILENT * np.asarray(abs(asked.G).sum(axis=1)).ravel() ** 2
+        some = prior > SILENT * asked.size**2
         share[some] = (told[some] @ w.weights) / prior[some]
         total = total + share
     return np.clip(total, 0.0, 1.0)

@@ -35,7 +35,7 @@ def svd_cut(
     assert Wt is not None
     kept = int((s > UNSEEN * s.max(initial=0.0)).sum())
     kept = min(kept, max(fr.nu - 1, 0), DEEPEST)
-    return _cut(fr, "svd-cut", roughness, fr.Q @ V[:, :kept], S, (Wt[:kept] / s[:kept, None]).T)
+    return _cut(fr, "svd-cut", roughness, fr.rows(V[:, :kept]), S, (Wt[:kept] / s[:kept, None]).T)
 
 
 def eigenbasis(
@@ -69,7 +69,7 @@ def eigenbasis(
     use = use[:most]
     P, R = np.linalg.qr(F[:, use])
     right = solve_triangular(R, np.eye(len(use))) if len(use) else np.zeros((0, 0))
-    return _cut(fr, "eigenbasis", roughness, fr.Q @ P, shapes[:, use], right)
+    return _cut(fr, "eigenbasis", roughness, fr.rows(P), shapes[:, use], right)
 
 
 def _cut(

@@ -26,6 +26,42 @@ UNIFORM = "uniform source"
 
 
 @dataclass(frozen=True)
+class Complement:
+    """Basis Q of all rows orthogonal to r columns, kept as r reflectors (I - Y T Y').
+
+    Source: Schreiber & Van Loan (1989), SIAM J. Sci. Stat. Comput. 10, 53 (compact WY form).
+    """
+
+    Y: Array
+    T: Array
+
+    def lift(self, parts: Array) -> Array:
+        """Q parts, (n, ...)."""
+        r, n = len(self.T), len(self.Y)
+        full = np.zeros((n, *parts.shape[1:]))
+        full[r:] = parts
+        return np.asarray(full - self.Y @ (self.T @ (self.Y[r:].T @ parts)))
+
+    def drop(self, rows: Array) -> Array:
+        """Q' rows, (n - r, ...)."""
+        r = len(self.T)
+        return np.asarray(rows[r:] - self.Y[r:] @ (self.T.T @ (self.Y.T @ rows)))
+
+
+def complement(U: Array) -> Complement:
+    """Reflectors of orthonormal columns U (n, r)."""
+    r = U.shape[1]
+    if r == 0:
+        return Complement(np.zeros((len(U), 0)), np.zeros((0, 0)))
+    h, tau = np.linalg.qr(U, mode="raw")
+    Y = np.tril(h.T, -1) + np.eye(len(U), r)
+    T = np.diag(tau)
+    for i in range(1, r):
+        T[:i, i] = -tau[i] * (T[:i, :i] @ (Y[:, :i].T @ Y[:, i]))
+    return Complement(Y, T)
+
+
+@dataclass(frozen=True)
 class Frame:
     """A problem with its unpenalised columns projected out.
 
@@ -41,8 +77,9 @@ class Frame:
         where `own` is true.
     own : bool
         Whether the constant adds a direction of its own to the other columns.
-    Q : (n, v)
-        Orthonormal basis of all else that the source can reach (v = n - r unless n > m' + r).
+    basis : Complement or (n, v)
+        Orthonormal basis Q of all else that the source can reach (v = n - r unless
+        n > m' + r), see `rows`.
     QA, Qd : (v, m'), (v,)
     UA, Ud : (r, m'), (r,)
     solve : (k', r)
@@ -65,7 +102,7 @@ class Frame:
     free: np.ndarray[tuple[int], np.dtype[np.intp]]
     U: Array
     own: bool
-    Q: Array
+    basis: Complement | Array
     QA: Array
     Qd: Array
     UA: Array
@@ -83,6 +120,12 @@ class Frame:
         """Number of rows that are readings (the others are knowledge)."""
         return len(self.problem.d) - self.problem.pseudo
 
+    def rows(self, parts: Array) -> Array:
+        """Q parts: from the basis (v, ...) back to the rows (n, ...)."""
+        if isinstance(self.basis, Complement):
+            return self.basis.lift(parts)
+        return np.asarray(self.basis @ parts)
+
 
 @dataclass(frozen=True)
 class Asked:
@@ -94,12 +137,15 @@ class Asked:
         Weights of the free cells, balanced where the member is.
     H : (q, r)
         Weights of the unpenalised directions.
+    size : (q,)
+        Sum of the absolute weights of the free cells.
     determined : (q,) bool
         False where the readings cannot tell the question's unpenalised part.
     """
 
     G: csr_array | Array
     H: Array
+    size: Array
     determined: np.ndarray[tuple[int], np.dtype[np.bool_]]
 
 
@@ -133,21 +179,23 @@ def frame(problem: Problem, extra: Array | None = None) -> Frame:
     balanced = _balanced(problem, free)
     A = problem.A[:, free] if balanced is None else problem.A[:, free] @ balanced
     UA, Ud = U.T @ A, U.T @ problem.d
-    left_d = problem.d - U @ Ud
+    beyond = problem.d - U @ Ud
+    basis: Complement | Array
     if n - U.shape[1] <= len(free):
-        Q = np.linalg.qr(U, mode="complete")[0][:, U.shape[1] :] if U.size else np.eye(n)
-        QA = Q.T @ A
+        basis = complement(U)
+        QA, Qd = basis.drop(A), basis.drop(beyond)
+        rest = np.zeros(n)
     else:
         # more readings than cells: only the directions that the source can reach
-        Q = np.linalg.qr(np.hstack([U, A]))[0][:, U.shape[1] :]
-        QA = Q.T @ A
-    Qd = Q.T @ left_d
+        basis = np.linalg.qr(np.hstack([U, A]))[0][:, U.shape[1] :]
+        QA, Qd = basis.T @ A, basis.T @ beyond
+        rest = beyond - basis @ Qd
     return Frame(
         problem=problem,
         free=free,
         U=U,
         own=own,
-        Q=Q,
+        basis=basis,
         QA=QA,
         Qd=Qd,
         UA=UA,
@@ -155,7 +203,7 @@ def frame(problem: Problem, extra: Array | None = None) -> Frame:
         solve=solve,
         reach=Rt,
         norms=norms,
-        rest=left_d - Q @ Qd,
+        rest=rest,
         nu=n - U.shape[1],
         extra=np.zeros((len(free), 0)) if extra is None else extra,
         balanced=balanced,
@@ -210,6 +258,6 @@ def ask(fr: Frame, questions: Questions) -> Asked:
     scaled = b / fr.norms
     off = np.linalg.norm(scaled - (scaled @ fr.reach.T) @ fr.reach, axis=1)
     determined = off <= REACHED * np.linalg.norm(scaled, axis=1)
-    G: csr_array | Array = np.asarray(questions.cells)[:, fr.free]
-    G = csr_array(G) if fr.balanced is None else G @ fr.balanced
-    return Asked(G=G, H=b @ fr.solve, determined=determined)
+    dense = np.asarray(questions.cells)[:, fr.free]
+    G = csr_array(dense) if fr.balanced is None else dense @ fr.balanced
+    return Asked(G, b @ fr.solve, np.abs(dense).sum(axis=1), determined)

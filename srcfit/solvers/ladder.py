@@ -40,8 +40,8 @@ class Ladder:
         Modes; `y` (c,) the readings' part in them, `rest` (n,) what lies beyond.
     fill : (c, t)
         Fitted part of each mode.
-    shapes : ((m', j), (j, c))
-        Two factors whose product gives the source per amount of each mode.
+    shapes : tuple of matrices
+        Factors whose product (m', c) gives the source per amount of each mode.
     amounts : (c, t)
         Amounts of each mode in the source.
     roughness : (t,)
@@ -58,7 +58,7 @@ class Ladder:
     y: Array
     rest: Array
     fill: Array
-    shapes: tuple[Array, Array]
+    shapes: tuple[Array, ...]
     amounts: Array
     roughness: Array
     log_evidence: Array
@@ -110,17 +110,22 @@ class Ladder:
     @cached_property
     def variation(self) -> Array:
         """Source about its unpenalised part on the free cells, (m', t)."""
-        left, right = self.shapes
-        f = left @ (right @ self.amounts)
+        f = self.unbalanced
         return f if self.frame.balanced is None else self.frame.balanced @ f
+
+    @cached_property
+    def unbalanced(self) -> Array:
+        """The same before it is projected onto balanced sources, (m', t)."""
+        f = self.amounts
+        for factor in reversed(self.shapes):
+            f = factor @ f
+        return f
 
     @cached_property
     def unpenalised(self) -> Array:
         """Amounts of the unpenalised columns (constant, further shapes, B), (k', t)."""
         fr = self.frame
-        left, right = self.shapes
-        f = left @ (right @ self.amounts)
-        return np.asarray(fr.solve @ (fr.Ud[:, None] - fr.UA @ f))
+        return np.asarray(fr.solve @ (fr.Ud[:, None] - fr.UA @ self.unbalanced))
 
     @property
     def columns(self) -> Array:
@@ -143,10 +148,8 @@ class Ladder:
 
     def answers(self, questions: Questions) -> Array:
         """Values of linear questions at every rung, (q, t)."""
-        asked = ask(self.frame, questions)
-        left, right = self.shapes
-        f = left @ (right @ self.amounts)
-        fr = self.frame
+        fr, f = self.frame, self.unbalanced
+        asked = ask(fr, questions)
         return np.asarray(asked.G @ f + asked.H @ (fr.Ud[:, None] - fr.UA @ f))
 
 
@@ -162,7 +165,7 @@ def filtered(
     lam: Array,
     Z: Array,
     y: Array,
-    shapes: tuple[Array, Array],
+    shapes: tuple[Array, ...],
     strengths: Array,
 ) -> Ladder:
     """Ladder of penalised estimates from modes Z with variances lam; `shapes` give A'Z in C."""
@@ -170,7 +173,7 @@ def filtered(
     amounts = 1 / (lam[:, None] + strengths)
     fill = lam[:, None] * amounts
     amounts *= y[:, None]
-    rest = fr.rest + fr.Q @ fr.Qd - Z @ y
+    rest = fr.rest + fr.rows(fr.Qd) - Z @ y
     return Ladder(
         solver="tikhonov",
         family=family,

@@ -152,9 +152,9 @@ def spectrum(
         F = np.hstack([np.sqrt(family.scale) * base.TL[:size], seen[:size]])
         V, s, Wt = thin_svd(F, right=right)
         lam = s**2
-    Z = fr.Q @ V
+    Z = fr.rows(V)
     y = V.T @ fr.Qd
-    rest = fr.rest if V.shape[1] == size else fr.rest + fr.Q @ (fr.Qd - V @ y)
+    rest = fr.rest if V.shape[1] == size else fr.rest + fr.rows(fr.Qd - V @ y)
     return Spectrum(fr, family, base, steps, lam, V, Z, y, rest, K, S, Wt)
 
 

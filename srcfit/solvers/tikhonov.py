@@ -49,7 +49,7 @@ def tikhonov(
     F = _times(fr.QA, S, chosen.base)
     V, s, _ = thin_svd(F, right=False)
     tau = _strengths(s**2, fr.nu) if strengths is None else np.asarray(strengths, dtype=float)
-    return filtered(fr, chosen, s**2, fr.Q @ V, V.T @ fr.Qd, (S, F.T @ V), tau)
+    return filtered(fr, chosen, s**2, fr.rows(V), V.T @ fr.Qd, (S, F.T, V), tau)
 
 
 def _times(A: Array, S: Array, base: str) -> Array:
