@@ -61,7 +61,7 @@ NUMBERS = [
     ("thousands by comma", 'x,w\n0.5,"1,600"\n1.5,"12"\n', [1.6, 0.012]),
     ("thousands by apostrophe", "x;w\n0.5;1'234.5\n1;12.5\n", [1.2345, 0.0125]),
     ("thousands by blank", "x;w\n0,5;1 234,5\n1;1\u00a0234\n2;-12,5\n", [1.2345, 1.234, -0.0125]),
-    ("point of three places", "x;w\n1.000;2.125\n2.000;3.250\n", [2.125 * MM, 3.25 * MM]),
+    ("point of three places", "x,w\n1.000,2.125\n2.000,3.250\n", [2.125 * MM, 3.25 * MM]),
     ("exponents", "x;w\n0;1.5E+00\n1;-2,5e1\n2;1D2\n", [1.5 * MM, -0.025, 0.1]),
     ("signs", "x;w\n0;+1.5\n1;−2.5\n2; 3.5 \n", [1.5 * MM, -2.5 * MM, 3.5 * MM]),
     ("bare points", "x;w\n0;.5\n1;5.\n", [0.5 * MM, 5 * MM]),

@@ -70,7 +70,8 @@ HEADERS = [
     ("x;w\n-1;2\n-2;2\n", "t.csv: ", "(2 times: off the member)", "`reversed`"),
     ("x;w\n0;1,234\n1;2,345\n", "t.csv, line 2, column 'w': ", "'1,234'", "set `decimal`"),
     ('x,w\n0.250,"1,234"\n"1,5","2,345"\n', "t.csv, line 2, column 'w'", "'1,234'", "`decimal`"),
-    ("x;w\n0;1.234\n1;950\n", "t.csv, line 2, column 'w': ", "'1.234'", "set `decimal`"),
+    ("x;w\n0;1.234\n1;2.345\n", "t.csv, line 2, column 'w': ", "'1.234'", "set `decimal`"),
+    ("x,w\n0,1.234\n1,950\n", "t.csv, line 2, column 'w': ", "'1.234'", "set `decimal`"),
     ("x;w\nm;in\n1;2\n", "t.csv: ", "the units row in line 2 states 'in'", "readings.column[1]"),
     ("x;w\nm;kN\n1;2\n", "t.csv, line 2: ", "the unit 'kN' of 'w'", "readings.column[1]"),
 ]

@@ -58,10 +58,13 @@ class Dialect:
 @st.composite
 def dialects(draw):
     decimal = draw(st.sampled_from(".,"))
-    others = {".": ["", ",", "'", " ", "\u00a0"], ",": ["", ".", "'", " ", "\u202f"]}
+    delimiter = draw(st.sampled_from(";\t,|"))
+    others = {".": ["", ",", "'", " ", "\u00a0"], ",": ["", "'", " ", "\u202f"]}
+    if delimiter != ",":  # between commas a lone point is taken for the decimal mark
+        others[","].append(".")
     return Dialect(
         encoding=draw(st.sampled_from(["utf-8", "utf-8-sig", "utf-16", "utf-16-le"])),
-        delimiter=draw(st.sampled_from(";\t,|")),
+        delimiter=delimiter,
         decimal=decimal,
         thousands=draw(st.sampled_from(others[decimal])),
         end=draw(st.sampled_from(["\n", "\r\n", "\r"])),

@@ -82,26 +82,41 @@ class Ask:
     plain: bool = False
 
 
-def decimal_of(cells: Iterable[Cell]) -> tuple[set[str], str]:
+@dataclass(frozen=True)
+class Marks:
+    """What the numbers of a column tell of their decimal mark.
+
+    Attributes
+    ----------
+    proven : decimal marks that some number proves
+    unclear : a number that can be read in two ways, empty when there is none
+    fixed : whether every number may have a point and three digits after it
+    """
+
+    proven: frozenset[str]
+    unclear: str
+    fixed: bool
+
+
+def decimal_of(cells: Iterable[Cell]) -> Marks:
     """Decimal marks that a column's numbers prove, and one that can be read in two ways."""
     marks: set[str] = set()
-    unclear, whole = "", False
+    unclear, fixed = "", True
     for cell in cells:
         if isinstance(cell, float):
             continue
-        if "," not in cell and (cell.count(".") == 1 if "." in marks else False):
+        if "," not in cell and "." in marks and cell.count(".") == 1:
             continue  # proves no more than is known
         if "." not in cell and "," not in cell:
-            whole = whole or (len(cell.strip(" +-0")) in (1, 2, 3) and cell.strip(" +-").isdigit())
+            fixed = fixed and not cell.strip(" +-").isdigit()
             continue
         mark = mark_of(normal(cell))
         if mark[:1] == "?":
-            unclear = unclear if "," in unclear else cell.strip()
+            unclear = unclear or cell.strip()
+            fixed = fixed and mark == "?."
         elif mark:
             marks.add(mark)
-    if unclear and "," not in unclear and not whole:
-        return marks, "." + unclear
-    return marks, unclear
+    return Marks(frozenset(marks), unclear, fixed)
 
 
 def settle(table: Table, header: str, stated: str | None) -> str:
@@ -114,21 +129,22 @@ def settle(table: Table, header: str, stated: str | None) -> str:
     """
     if stated:
         return stated
-    marks, unclear = decimal_of(table.cells(header))
-    if len(marks) == 1:
-        return marks.pop()
-    if marks:
+    own = decimal_of(table.cells(header))
+    if len(own.proven) == 1:
+        return next(iter(own.proven))
+    if own.proven:
         return "both"
-    if not unclear:
+    if not own.unclear:
         return ""
-    everywhere = set[str]()
+    everywhere: frozenset[str] = frozenset()
     for column in zip(*_square(table), strict=True):
-        everywhere |= decimal_of(column)[0]
+        everywhere |= decimal_of(column).proven
     if len(everywhere) == 1:
-        return everywhere.pop()
-    if unclear[0] == "." and not everywhere:  # every number has three digits after its point
+        return next(iter(everywhere))
+    # tables with commas or blanks between their cells hardly ever part thousands by points
+    if own.fixed and not everywhere and table.delimiter in (",", " ", "  "):
         return "."
-    raise _two_ways(table, header, unclear.lstrip(".") if unclear[0] == "." else unclear)
+    raise _two_ways(table, header, own.unclear)
 
 
 def _two_ways(table: Table, header: str, shown: str) -> ReadingsError:

@@ -125,11 +125,11 @@ def _mark(data: bytes, head: _Head, wanted: Wanted, stated: str | None) -> str |
     if stated:
         return stated if stated != head.delimiter else None
     proven = [decimal_of(head.table.cells(name)) for name in wanted.keys]
-    marks: set[str] = set().union(*(m for m, _ in proven))
-    if len(marks) > 1 or any(unclear and not m for m, unclear in proven):
+    marks = frozenset[str]().union(*(m.proven for m in proven))
+    if len(marks) > 1 or any(m.unclear and not m.proven for m in proven):
         return None
     if marks:
-        mark = marks.pop()
+        mark = next(iter(marks))
         return None if mark == head.delimiter else mark
     others = {b"."} if head.delimiter == "," else {b".", b","}
     return None if any(data.find(m, head.start) >= 0 for m in others) else "."

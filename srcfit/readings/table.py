@@ -77,6 +77,7 @@ class Table:
     headers : every header text of the first block
     early : lines above the header that look like rows of it
     story : what was understood, in words
+    delimiter : what parts the cells; empty for spreadsheets and Parquet files
     read : cells of the columns asked for so far
     """
 
@@ -90,6 +91,7 @@ class Table:
     headers: tuple[str, ...]
     early: tuple[int, ...]
     story: str
+    delimiter: str = ""
     read: dict[str, list[Cell]] = field(default_factory=dict, compare=False, repr=False)
 
     def cells(self, name: str) -> list[Cell]:
@@ -337,6 +339,7 @@ class _Builder:
         return Table(
             self.name, tuple(self.blocks), line, rows, broken, unfinished, cut,
             tuple(title(c) for c in found.cells[self.start]), self._early(), self._story(),
+            found.delimiter,
         )  # fmt: skip
 
     def _early(self) -> tuple[int, ...]:
