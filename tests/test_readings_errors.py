@@ -52,7 +52,12 @@ def test_a_missing_file_names_the_nearest(tmp_path):
 
 HEADERS = [
     ("pos;w\n1;2\n", "t.csv, line 1: ", "'x' is missing", "set readings.position.column"),
-    ("Position [m];Weg\n1;2\n", "t.csv: ", "'x' is missing", "set readings.position.column"),
+    (
+        "Position [m];Weg\n1;2\n",
+        "t.csv: ",
+        "'w' is missing (nearest: 'Weg')",
+        "readings.column[1]",
+    ),
     (
         "a\nx;W\n1;2\n",
         "t.csv, line 2: ",

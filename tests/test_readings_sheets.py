@@ -59,7 +59,7 @@ def test_a_spreadsheet(tmp_path):
 
 def test_a_spreadsheet_without_the_columns(tmp_path):
     workbook(tmp_path / "t.xlsx", [["x", "weg"], [1, 2]])
-    with pytest.raises(ReadingsError, match="line 1: .*'w' is missing"):
+    with pytest.raises(ReadingsError, match=r"line 1: .*'w' is missing"):
         read(case(tmp_path, "t.xlsx"))
     workbook(tmp_path / "t.xlsx", [[None]], ())
     with pytest.raises(ReadingsError, match=r"t\.xlsx: the spreadsheet is empty"):
