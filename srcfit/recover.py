@@ -33,7 +33,7 @@ from srcfit.results import (
     source_table,
     zones_table,
 )
-from srcfit.solve import Solved, solve
+from srcfit.solve import Solved, solve, strength_unit
 
 PICTURED_MODES = 6
 PICTURED_RUNGS = 60
@@ -198,7 +198,9 @@ def _pictures(solved: Solved) -> Pictures:
         )
     else:
         pick = np.unique(np.linspace(0, len(ladder.strengths) - 1, PICTURED_RUNGS).astype(int))
-        strengths = ladder.strengths[pick]
+        cut = ladder.solver != "tikhonov"
+        size = 1.0 if cut else strength_unit(case, ladder.family)[1]
+        strengths = ladder.strengths[pick] * size
         rungs = ladder.estimates[:, pick].T * unit
         totals = (
             ladder.answers(solved.asked.questions)[0, pick] + solved.asked.constant[0]

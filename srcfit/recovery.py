@@ -41,7 +41,8 @@ class Pictures:
     influence_of : tuple of n row numbers into `Recovery.readings`
     modes : (g, c) first modes, `eigenvalues` (c,)
     rungs : (t, m) estimates of the roughness-1 ladder (thinned) in the user's source unit,
-        `strengths` (t,), `totals` (t,), `fits` (t, n) predicted used readings in their own units
+        `strengths` (t,) in the ladder's unit, `totals` (t,), `fits` (t, n) predicted used readings
+        in their own units
     """
 
     x: Array

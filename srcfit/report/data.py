@@ -159,11 +159,8 @@ def _ladder(recovery: Recovery, kept: NDArray[np.int64]) -> dict[str, Any]:
 
 
 def rung_strengths(recovery: Recovery) -> Array:
-    """Strengths of `pictures.rungs` in the unit of the ladder; both begin with the same rung."""
-    own = np.asarray(recovery.pictures.strengths, dtype=float)
-    rows = numbers(ladder_of(recovery.ladder), "strength")
-    rows = rows[rows > 0]
-    return own * (rows.min() / own.min()) if len(rows) and len(own) and own.min() > 0 else own
+    """Strengths of `pictures.rungs` in the unit of the ladder."""
+    return np.asarray(recovery.pictures.strengths, dtype=float)
 
 
 def _start(recovery: Recovery, strengths: Array, choices: dict[str, float]) -> int:
