@@ -1,0 +1,159 @@
+"""Noise that the readings must tell: standard deviations by group, correlation of neighbours.
+
+Both maximise the restricted likelihood of the whitened rows under a few families of the source.
+Source: Harville (1977), J. Am. Stat. Assoc. 72, 320 (the fixed point for variances); Prais &
+Winsten (1954) for the whitening of first-order autoregressive noise.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from srcfit.evidence import FAINTEST, Weighted, grid, weigh
+from srcfit.priors import SCALE, SMOOTH, STEPPED, Family, pieces
+from srcfit.problem import Array, Problem
+from srcfit.solvers.frame import Frame, frame, unpenalised
+from srcfit.solvers.ladder import penalised
+from srcfit.solvers.spectrum import bases, route, spectrum
+
+Groups = NDArray[np.intp]
+
+ROUNDS, CLOSE = 40, 5e-3
+# a group needs this many readings beyond what the fit spends on it
+FEWEST = 2.0
+LAGS = (0.0, 0.15, 0.3, 0.45, 0.6, 0.75, 0.9)
+
+
+def estimate_noise(problem: Problem, groups: Groups) -> Array:
+    """Standard deviation of each group's whitened rows.
+
+    The fixed point s_g**2 = sum of squared residuals / (readings - their hat values) of the
+    restricted likelihood, averaged over rungs by evidence.
+
+    Parameters
+    ----------
+    problem : Problem
+        Rows of the groups in question whitened by any first guess, the others by their noise.
+    groups : (n,) int
+        Group of each row, 0, 1, 2 ...; -1 for rows whose noise is stated and for knowledge.
+
+    Returns
+    -------
+    (g,) factors of the first guess; nan for a group too small to tell.
+    """
+    count = int(groups.max(initial=-1)) + 1
+    factors = np.full(count, _first_guess(problem, groups))
+    told = np.ones(count, dtype=bool)
+    for _ in range(ROUNDS):
+        before = factors.copy()
+        squares, spent = _residuals(rescaled(problem, groups, factors))
+        for g in range(count):
+            rows = groups[: len(squares)] == g
+            left = float(rows.sum() - spent[rows].sum())
+            told[g] = left >= FEWEST
+            if told[g]:
+                factors[g] *= max(float(np.sqrt(squares[rows].sum() / left)), FAINTEST)
+        if np.abs(np.log(factors / before)).max(initial=0.0) < CLOSE:
+            break
+    return np.where(told, factors, np.nan)
+
+
+def rescaled(problem: Problem, groups: Groups, factors: Array) -> Problem:
+    """The problem with each group's rows divided by its factor, the noise taken as stated."""
+    by = np.where(groups < 0, 1.0, np.append(factors, 1.0)[groups])[:, None]
+    d = problem.d / by[:, 0]
+    return replace(problem, A=problem.A / by, B=problem.B / by, d=d, stated=True)
+
+
+def estimate_lag(
+    whiten: Callable[[Array], Problem], sizes: NDArray[np.intp], unknown: NDArray[np.bool_]
+) -> Array:
+    """Lag-1 correlation of neighbours in each group whose correlation is unknown.
+
+    Parameters
+    ----------
+    whiten : callable
+        Problem whitened with the (g,) lag-1 correlations it is given.
+    sizes : (g,) int
+        Readings of each group.
+    unknown : (g,) bool
+
+    Returns
+    -------
+    (g,) correlations, 0 where they are not asked for; never negative.
+    """
+    lags = np.zeros(len(sizes))
+
+    def score(g: int, lag: float) -> float:
+        trial = lags.copy()
+        trial[g] = lag
+        volume = 0.5 * float((sizes - 1) @ np.log1p(-(trial**2)))
+        return restricted(whiten(trial)) - volume
+
+    for g in map(int, np.flatnonzero(unknown & (sizes >= 3))):
+        scores = [score(g, lag) for lag in LAGS]
+        best = int(np.argmax(scores))
+        lags[g] = LAGS[best]
+        if 0 < best < len(LAGS) - 1:
+            lags[g] = _vertex(LAGS[best - 1 : best + 2], scores[best - 1 : best + 2])
+    return lags
+
+
+def _vertex(x: tuple[float, ...], y: list[float]) -> float:
+    """Place of the vertex of the parabola through three equally spaced points."""
+    bend = y[0] - 2 * y[1] + y[2]
+    return x[1] if bend >= 0 else x[1] + (x[1] - x[0]) * (y[0] - y[2]) / (2 * bend)
+
+
+def restricted(problem: Problem) -> float:
+    """Log restricted likelihood of the whitened rows, averaged over families and strengths.
+
+    Comparable between whitenings W of the same readings once ln|det W| is added.
+    """
+    fr, found = _weighed(problem)
+    best = max(float(w.log_evidence.max()) for w in found)
+    average = sum(float(np.exp(w.log_evidence - best).sum()) for w in found)
+    N = unpenalised(problem) / fr.norms
+    sizes = np.linalg.svd(N, compute_uv=False)[: fr.U.shape[1]]
+    return float(best + np.log(average) - np.log(sizes).sum() - np.log(fr.norms).sum())
+
+
+def _families(problem: Problem) -> tuple[tuple[Family, ...], Array]:
+    drawn = pieces(problem.grid, zones=True)
+    return (SMOOTH[0], STEPPED[0]) if drawn.shape[1] else (SMOOTH[0], SMOOTH[1]), drawn
+
+
+def _weighed(problem: Problem) -> tuple[Frame, list[Weighted]]:
+    fr = frame(problem)
+    families, drawn = _families(problem)
+    keys = [SCALE, *((f.base, f.length) for f in families)]
+    products = bases(fr, keys, route(fr))
+    spectra = [spectrum(fr, f, products, drawn) for f in families]
+    return fr, weigh(spectra, grid(fr, products))
+
+
+def _residuals(problem: Problem) -> tuple[Array, Array]:
+    """Evidence-averaged squared residuals and hat values of the readings."""
+    fr, found = _weighed(problem)
+    squares, spent = np.zeros(fr.readings), np.zeros(fr.readings)
+    for w in found:
+        ladder = penalised(w.spectrum, w.sigma**-2.0)
+        squares = squares + ladder.residuals**2 @ w.weights
+        spent = spent + ladder.hat @ w.weights
+    return squares, spent
+
+
+def _first_guess(problem: Problem, groups: Groups) -> float:
+    """One common factor: the noise of the groups' rows alone, integrated over all strengths."""
+    own = np.flatnonzero(groups >= 0)
+    A, B, d = problem.A[own], problem.B[own], problem.d[own]
+    alone = replace(problem, A=A, B=B, d=d, pseudo=0, stated=False, places=None)
+    fr = frame(alone)
+    if fr.nu < 3 or not len(fr.free) or not alone.d.any():
+        return 1.0
+    _, found = _weighed(alone)
+    return float(np.sqrt(sum(float(w.weights @ w.noise) for w in found)))
