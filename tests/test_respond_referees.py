@@ -128,3 +128,24 @@ def test_flux_and_dipole_are_reciprocal():
     G = srcfit.kernel(member, s, nodes)
     slopes = [np.polynomial.Chebyshev.fit(nodes, row, 7).deriv()(0.7) for row in G]
     close(srcfit.kernel(member, [0.7], s, "flux")[0], -0.4 * np.array(slopes), 1e-8)
+
+
+def test_springs_of_radial_members_are_per_area():
+    member = srcfit.make_member({
+        "kind": "cylinder", "inner_radius": "0.02 m", "outer_radius": "0.07 m",
+        "conductivity": "15 W/(m*K)", "ambient": "20 degC", "left": "insulated",
+        "right": {"transfer": "200 W/(m^2*K)", "ambient": "20 degC"},
+        "support": [{"at": "0.04 m", "kind": "spring", "stiffness": "90 W/(m^2*K)"}],
+    })  # fmt: skip
+    pull = 90 * 2 * np.pi * 0.04  # the referee's inner springs are per metre of height
+    line = second_order.Line(
+        0.02, 0.07, 15.0, right=(200.0, 0.0), supports=((0.04, pull, 0.0),), geometry="cylinder"
+    )
+    r = np.array([0.02, 0.05, 0.07])
+    solved = second_order.settle(line, [(0.02, 0.07, 1e5)], degree=14, places=r)
+    found = srcfit.respond(member, r, lambda r: 1e5 + 0 * r)
+    close(found - 293.15, solved.at("response", r), 1e-10)
+    # what the spring and the surface carry is the whole heat, per metre of height
+    carried = srcfit.respond(member, [0.04, 0.07], lambda r: 1e5 + 0 * r, quantity="reaction")
+    close(carried, [solved.reactions[0.04], solved.reactions[0.07]], 1e-10)
+    assert carried.sum() == pytest.approx(1e5 * np.pi * (0.07**2 - 0.02**2), rel=1e-10)
