@@ -177,3 +177,13 @@ def test_input_files_stay_untouched(tmp_path):
     before = {p: p.read_bytes() for p in tmp_path.iterdir()}
     srcfit.recover(case).save(tmp_path / "out")
     assert all(p.read_bytes() == text for p, text in before.items())
+
+
+def test_pictured_rungs_are_the_ladders(tmp_path):
+    """Strengths and totals of the pictured rungs are those of the ladder, in its unit."""
+    recovery = solve(tmp_path)
+    rough = recovery.ladder[recovery.ladder["family"] == "roughness 1"]
+    strengths = recovery.pictures.strengths
+    assert np.isin(np.round(np.log(strengths), 9), np.round(np.log(rough["strength"]), 9)).all()
+    cells = recovery.pictures.rungs @ np.diff(recovery.pictures.x)
+    np.testing.assert_allclose(cells, recovery.pictures.totals, rtol=1e-9, atol=1e-9)
