@@ -172,6 +172,21 @@ def test_bare_degrees_in_a_header_of_temperatures(tmp_path):
     np.testing.assert_allclose(found.value, [373.15, 273.15], rtol=1e-12)
 
 
+NAMES = [
+    ("T (F)", "temperature", "conductor", 5 / 9), ("T [°C]", "temperature", "conductor", 1),
+    ("r [Grad]", "rotation", "beam", math.pi / 180), ("w [in.]", "deflection", "beam", 0.0254),
+    ("e [µStrain]", "strain", "beam", 1e-6), ("c [kBq/m³]", "concentration", "column", 1e3),
+]  # fmt: skip
+
+
+@pytest.mark.parametrize(("header", "kind", "of", "scale"), NAMES)
+def test_names_of_units_in_headers(tmp_path, header, kind, of, scale):
+    text = f"x;{header}\n0.1;100\n0.2;101\n"
+    spec = column(header, kind, None, sd=1.0, distance=1.0)
+    found = read(table_case(tmp_path, text, spec, of=member(of)))
+    np.testing.assert_allclose(found.value[1] - found.value[0], scale, rtol=1e-9)
+
+
 @pytest.mark.parametrize("header", ["w (3)", "w (A)", "w (min)", "w (left)", "w [raw]", "w (s)"])
 def test_brackets_that_hold_no_unit(tmp_path, header):
     same(read(table_case(tmp_path, f"x;{header}\n0;1\n", column(header))), [(2, 0, MM)])

@@ -126,6 +126,22 @@ def test_what_is_not_plain_is_read_the_careful_way(tmp_path, monkeypatch, twist)
     assert len(quick) >= ROWS
 
 
+def test_no_line_end_and_quoted_names_are_plain_enough(tmp_path, monkeypatch):
+    data = text(head='"n","x [m]","w","s"\n')[:-1]
+    quick, careful, taken = both(tmp_path, monkeypatch, data)
+    assert taken
+    equal(quick, careful)
+    quick, careful, taken = both(tmp_path, monkeypatch, data, column("s", "rotation", "mrad"))
+    assert taken
+    equal(quick, careful)
+    assert [f.code for f in quick.findings] == ["no-line-end"]
+    rows = "n,x [m],w\n" + "".join(f"{i},{i % 29}.5,{i % 7}.25\n" for i in range(ROWS))
+    quick, careful, taken = both(tmp_path, monkeypatch, rows[:-2])
+    assert not taken
+    equal(quick, careful)
+    assert quick.reason[-1] == "unfinished last line"
+
+
 def test_whole_numbers_and_temperatures(tmp_path, monkeypatch):
     rows = "".join(f"{i % 30},{i % 101 - 900 * (i == 9)},{i}\n" for i in range(ROWS))
     spec = column("T", "temperature", "degF", sd=0.1)

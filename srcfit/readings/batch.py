@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from typing import Any
 
@@ -16,7 +16,7 @@ from srcfit.readings import times
 from srcfit.readings.blanks import Places, Shown
 from srcfit.readings.columns import Ask, Column, block_units, read_column, selected
 from srcfit.readings.table import Table, title
-from srcfit.readings.text import clean, is_blank
+from srcfit.readings.text import Cell, clean, is_blank
 from srcfit.units import coherent
 
 Array = NDArray[np.float64]
@@ -277,7 +277,7 @@ def saturated(
     shown = raw.imag if column.component == "imaginary" else shown
     if column.range is not None:
         low, high = column.range
-        near = 1e-9 * (high - low)
+        near = 1e-9 * (high - low) if np.isfinite(high - low) else 0.0
         for i in np.flatnonzero((shown <= low + near) | (shown >= high - near)):
             end = "lower" if shown[i] <= low + near else "upper"
             reason.setdefault(int(i), f"at or beyond the {end} end of `range`")
@@ -343,7 +343,11 @@ def _shortened(table: Table, name: str) -> bool:
     """Whether the last number, without a line end, lacks decimals that all others have."""
     if table.cut is None or table.blocks[-1].index[title(name)] != table.cut[1]:
         return False
-    cells = table.cells(name)
+    return shortened(table.cells(name))
+
+
+def shortened(cells: Sequence[Cell]) -> bool:
+    """Whether the last cell is empty, or lacks decimals that all others have."""
     parts = [decimals(str(c)) for c in cells if clean(c)]
     if is_blank(cells[-1]):
         return True

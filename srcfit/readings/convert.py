@@ -10,8 +10,14 @@ from srcfit.errors import ReadingsError, UnitError
 from srcfit.units import factor
 
 _BRACKETS = re.compile(r"[\[(]([^\[\]()]*)[\])]")
-_TEMPERATURE = {"f": "degF", "c": "degC", "k": "K", "deg f": "degF", "deg c": "degC",
-                "grad c": "degC", "℃": "degC", "℉": "degF", "cel": "degC"}  # fmt: skip
+# what tables call a unit beyond the names of `units`, by the SI unit of the quantity
+_ALSO = {
+    "K": {"f": "degF", "c": "degC", "k": "K", "deg f": "degF", "deg c": "degC", "deg. c": "degC",
+          "deg. f": "degF", "grad c": "degC", "celsius": "degC", "fahrenheit": "degF"},
+    "rad": {"grad": "deg", "degrees": "deg"},
+    "m": {"in.": "in", "ft.": "ft"},
+}  # fmt: skip
+_GRADIAN = "grad"  # written small it may be a hundredth of a right angle: left to `units`
 
 
 @dataclass(frozen=True)
@@ -33,10 +39,8 @@ def find(text: str, si: str, difference: bool = False) -> Unit | None:
     """The unit named by a text of a table; None when it is none of that dimension."""
     if not text or len(text) > 40:
         return None
-    names = [text]
-    if si == "K":  # in tables of temperatures a bare F or C is a degree
-        names = [n for n in (_TEMPERATURE.get(text.lower()), text) if n]
-    for name in names:
+    also = "" if text == _GRADIAN else _ALSO.get(si, {}).get(text.lower(), "")
+    for name in (also, text) if also else (text,):
         try:
             scale, offset = factor(name, si, text, difference=difference)
         except UnitError:

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 from srcfit.case.model import Case, ColumnSpec, TableSpec
 from srcfit.errors import ReadingsError
-from srcfit.readings.batch import Batch, leave_out, saturated, table_batches
+from srcfit.readings.batch import Batch, leave_out, saturated, shortened, table_batches
 from srcfit.readings.columns import Ask, decimal_of, row_units
 from srcfit.readings.places import row_places, turned
 from srcfit.readings.sheets import File, text_table
@@ -30,13 +30,14 @@ Array = NDArray[np.float64]
 Bytes = NDArray[np.uint8]
 SMALLEST = 400_000
 _HEAD = 32_768
-_ODD = bytes([*range(9), 11, 12, *range(14, 32), 34, 127])  # control characters and quotes
+_ODD = bytes([*range(9), 11, 12, *range(14, 32), 127])  # control characters
 
 
 @dataclass(frozen=True)
 class _Head:
-    """The first part of a file, and where its rows begin."""
+    """Bytes of a file (with a line end at last), its first part read, where its rows begin."""
 
+    data: bytes
     table: Table
     start: int
     delimiter: str
@@ -63,17 +64,19 @@ def fast_batches(
         small = table_batches(case, spec, head.table, places, first, stated)
     except ReadingsError:
         return None  # the careful way says it, with the whole file in view
-    mark = _mark(file.data, head, wanted, stated)
+    mark = _mark(head, wanted, stated)
     if mark is None or any(b.rough or b.changes or not isinstance(b.unit, str) for b in small):
         return None
-    numbers = _numbers(file.data, head, wanted, mark)
+    numbers = _numbers(head, wanted, mark)
     if numbers is None:
         return None
     columns, starts = numbers
     count = len(starts)
     line = head.table.line[0] + np.arange(count, dtype=np.int64)
-    twice = _duplicates(file.data, columns, starts, int(line[0]))
+    twice = _duplicates(head.data, columns, starts, int(line[0]))
     table = replace(head.table, line=range(int(line[0]), int(line[0]) + count), rows=[], read={})
+    if not file.data.endswith(b"\n"):
+        table = replace(table, cut=(count - 1, table.blocks[0].width - 1))
     builder = _Builder(case, spec, head.table, columns, line, stated)
     out = [builder.batch(b, case.columns[b.spec]) for b in small]
     for batch in out:
@@ -97,7 +100,10 @@ def _head(file: File, wanted: Wanted) -> _Head | None:
     if len(data.translate(None, _ODD)) != len(data):
         return None
     crlf = data.count(b"\r\n") if b"\r" in data else 0
-    if not data.endswith(b"\n") or (crlf and data.count(b"\r") != crlf):
+    whole = data.endswith(b"\n")
+    if (crlf and data.count(b"\r") != crlf) or (not crlf and b"\r" in data):
+        return None
+    if crlf and data.count(b"\n") != crlf:
         return None
     if data.isascii():
         encoding, part = "ASCII", data[: data.rfind(b"\n", 0, _HEAD) + 1].decode()
@@ -105,22 +111,32 @@ def _head(file: File, wanted: Wanted) -> _Head | None:
         text, encoding = decode(data, file.name)
         part = text[: text.rfind("\n", 0, _HEAD) + 1]
     ends = ends_in_words(crlf, 0, 0) if crlf else "LF"
-    if crlf and data.count(b"\n") != crlf:
-        return None
     rows = part.replace("\r\n", "\n").split("\n")[:-1]
     table, delimiter = text_table(Lines(rows, encoding, ends, True), wanted, file.name)
-    whole = {len(r) for r in table.rows} == {table.blocks[0].width} and not table.broken
-    together = list(table.line) == list(range(table.line[0], len(rows) + 1)) if whole else False
+    fit = {len(r) for r in table.rows} == {table.blocks[0].width} and not table.broken
+    together = list(table.line) == list(range(table.line[0], len(rows) + 1)) if fit else False
     flagged = status_columns(table.headers)  # only the careful way looks at flags
     if flagged or not together or len(table.blocks) != 1 or delimiter not in (";", "\t", ",", "|"):
         return None
     start = 0
     for _ in range(table.line[0] - 1):
         start = data.index(b"\n", start) + 1
-    return _Head(table, start, delimiter)
+    if data.find(b'"', start) >= 0 or not (whole or _uncut(data, table, delimiter)):
+        return None
+    return _Head(data if whole else data + b"\n", table, start, delimiter)
 
 
-def _mark(data: bytes, head: _Head, wanted: Wanted, stated: str | None) -> str | None:
+def _uncut(data: bytes, table: Table, delimiter: str) -> bool:
+    """Whether a last line without a line end is surely no shorter than the first rows."""
+    last = data[data.rfind(b"\n") + 1 :].decode(errors="replace").split(delimiter)
+    index = table.blocks[0].index
+    names = [n for n, i in index.items() if i == table.blocks[0].width - 1]
+    return len(last) == table.blocks[0].width and not any(
+        shortened([*table.cells(n), last[-1]]) for n in names
+    )
+
+
+def _mark(head: _Head, wanted: Wanted, stated: str | None) -> str | None:
     """The one decimal mark of all needed columns; None where the first rows do not prove it."""
     if stated:
         return stated if stated != head.delimiter else None
@@ -132,20 +148,20 @@ def _mark(data: bytes, head: _Head, wanted: Wanted, stated: str | None) -> str |
         mark = next(iter(marks))
         return None if mark == head.delimiter else mark
     others = {b"."} if head.delimiter == "," else {b".", b","}
-    return None if any(data.find(m, head.start) >= 0 for m in others) else "."
+    return None if any(head.data.find(m, head.start) >= 0 for m in others) else "."
 
 
 def _numbers(
-    data: bytes, head: _Head, wanted: Wanted, mark: str
+    head: _Head, wanted: Wanted, mark: str
 ) -> tuple[dict[str, Array], NDArray[np.int64]] | None:
     """Needed columns as numbers and where each row begins; None where a row does not fit."""
     import pandas as pd
 
     index = {name: head.table.blocks[0].index[name] for name in wanted.keys}
-    starts = _row_starts(data, head)
+    starts = _row_starts(head)
     if starts is None:
         return None
-    buffer = io.BytesIO(data)
+    buffer = io.BytesIO(head.data)
     buffer.seek(head.start)
     exact: dict[str, Any] = {}
     if tuple(int(p) for p in pd.__version__.split(".")[:2]) < (3, 1):
@@ -166,9 +182,9 @@ def _numbers(
     return out, starts
 
 
-def _row_starts(data: bytes, head: _Head) -> NDArray[np.int64] | None:
+def _row_starts(head: _Head) -> NDArray[np.int64] | None:
     """Where each row begins, if every row has as many delimiters as the header; else None."""
-    body: Bytes = np.frombuffer(data, dtype=np.uint8, offset=head.start)
+    body: Bytes = np.frombuffer(head.data, dtype=np.uint8, offset=head.start)
     at = np.flatnonzero((body == 10) | (body == ord(head.delimiter)))
     width = head.table.blocks[0].width
     if len(at) % width:
