@@ -17,10 +17,10 @@ ROOT = Path(srcfit.__file__).parent
 # a package counts as one unit; the data of a package (its `model`) may stand above the rest of it
 ORDER = (
     "errors", "unit_names", "units", "member", "members", "case.model", "readings.model",
-    "problem", "recovery", "case", "readings", "state", "influence", "holds", "kernel", "eigenform",
-    "eigencount", "eigensolve", "eigen", "sensors", "grid", "unknowns", "forward", "view",
-    "whitening", "priors", "solvers",
-    "criteria", "evidence", "bands", "answers", "balance", "checks", "solve", "results",
+    "problem", "recovery", "case", "readings", "state", "influence", "holds", "kernel",
+    "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen", "sensors", "grid",
+    "unknowns", "forward", "view", "whitening", "priors", "solvers", "criteria", "evidence",
+    "noise", "bands", "answers", "balance", "checks", "solve", "results",
     "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report", "recover",
     "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "start",
     "plan", "rehearse", "series", "compare", "sklearn", "cli", "__main__",
@@ -34,8 +34,6 @@ LAZY = {"__init__", "cli"}
 SLOW = {"pandas", "matplotlib", "sklearn", "pint", "threadpoolctl", "openpyxl", "pyarrow", "numba",
         "distributed", "scipy.optimize", "scipy.stats", "scipy.interpolate", "scipy.integrate",
         "scipy.sparse", "scipy.signal", "scipy.special"}  # fmt: skip
-# quick, but needed only where they stand
-SOMETIMES = {"click", "pydantic", "difflib", "unicodedata"}
 
 
 def modules():
@@ -83,7 +81,7 @@ def wrong_imports(unit, name, path):
         yield f"{name}: it has no place in ORDER"
         return
     for names, line, where in imports(path, name):
-        for target in names:
+        for target in dict.fromkeys(names):
             if target == "srcfit" or target.startswith("srcfit."):
                 other = unit_of(target.removeprefix("srcfit").lstrip(".") or "__init__")
                 yield from wrong_inner(unit, other, f"{name}:{line}", where)
@@ -121,7 +119,8 @@ def test_every_module_has_its_place():
 
 
 def test_no_import_runs_upwards():
-    found = [w for unit, name, path in modules() for w in wrong_imports(unit, name, path)]
+    every = (w for unit, name, path in modules() for w in wrong_imports(unit, name, path))
+    found = list(dict.fromkeys(every))
     assert not found, "\n".join(found)
 
 
