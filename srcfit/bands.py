@@ -212,7 +212,8 @@ def undetermined(problem: Problem) -> tuple[tuple[str, ...], ...]:
     The source's own constant is called "uniform source". A tuple of one name: no reading sees it.
     """
     U = unpenalised(problem)
-    names = ([UNIFORM] if problem.constant else []) + list(problem.names)
+    constants = [UNIFORM] * problem.grid.parts if problem.constant else []
+    names = [*constants, *problem.names]
     fr = frame(problem)
     rank = fr.U.shape[1]
     if rank == len(names):
@@ -223,7 +224,8 @@ def undetermined(problem: Problem) -> tuple[tuple[str, ...], ...]:
     for j, column in enumerate(mixed.T):
         alike = [int(order[i]) for i in np.flatnonzero(np.abs(column) > 1e-6)]
         found.append(tuple(names[i] for i in sorted([int(order[rank + j]), *alike])))
-    return tuple(found)
+    # the two parts of a complex amplitude have one name
+    return tuple(dict.fromkeys(tuple(dict.fromkeys(group)) for group in found))
 
 
 def _cautious(
@@ -253,12 +255,17 @@ def _density(fr: Frame, variation: Array) -> Array:
     f = variation if fr.balanced is None else fr.balanced @ variation
     if not fr.problem.constant:
         return f
-    return np.asarray(f + (fr.solve @ (fr.Ud - fr.UA @ variation))[0])
+    constants = fr.problem.grid.constants
+    amounts = fr.solve @ (fr.Ud - fr.UA @ variation)
+    return np.asarray(f + constants @ amounts[: constants.shape[1]])
 
 
 def _mean_level(fr: Frame, density: Array) -> float:
-    weights = fr.problem.grid.weights[fr.free]
-    return float(np.abs(density) @ weights / weights.sum())
+    """Mean of |source| over the free cells; of complex amplitudes the moduli."""
+    grid = fr.problem.grid
+    weights = grid.weights[grid.free]
+    size = np.linalg.norm(density.reshape(grid.parts, -1), axis=0)
+    return float(size @ weights / weights.sum())
 
 
 def _noise(ladder: Ladder, at: int) -> float:
@@ -275,18 +282,16 @@ def _averaged_fit(families: Sequence[Weighted]) -> Fit:
     weights = tuple(w.weights for w in families)
 
     def average(name: str) -> Array:
-        parts = (_times(getattr(la, name), w) for la, w in zip(ladders, weights, strict=True))
-        return np.asarray(sum(parts))
+        values = np.hstack([getattr(la, name) for la in ladders])
+        known = np.isfinite(values) * np.concatenate(weights)
+        told = known.sum(axis=1)
+        # nan where most of the weight lies on rungs that cannot tell the row
+        told[told < 0.5] = np.nan
+        return np.asarray((np.nan_to_num(values) * known).sum(axis=1) / told)
 
     noise = float(np.sqrt(sum(float(w.weights @ w.noise) for w in families)))
     residual, left, hat = (average(name) for name in ("residuals", "leave_one_out", "hat"))
     return Fit(residual, left, hat, noise, ladders, weights)
-
-
-def _times(values: Array, weights: Array) -> Array:
-    """Values @ weights over the rungs that carry weight (others may be nan)."""
-    used = weights > 0
-    return np.asarray(values[:, used] @ weights[used])
 
 
 def _rung_fit(ladder: Ladder, at: int) -> Fit:
@@ -352,6 +357,7 @@ def _without_source(fr: Frame, asked: Asked, level: float) -> Answers:
     free = np.where(1 - hat > ALONE, 1 - hat, np.nan)
     value = asked.H @ fr.Ud
     sd = noise * np.linalg.norm(asked.H, axis=1)
-    uniform = abs(float((fr.solve @ fr.Ud)[0])) if fr.problem.constant else 0.0
+    constants = (fr.solve @ fr.Ud)[: fr.problem.grid.parts]
+    uniform = float(np.linalg.norm(constants)) if fr.problem.constant else 0.0
     parts = (value, sd, value, value, sd, np.full(len(value), np.nan))
     return _answers(fr, asked, parts, Fit(residual, residual / free, hat, noise), uniform, level)

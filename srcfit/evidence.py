@@ -54,8 +54,10 @@ def level_scale(fr: Frame, products: Mapping[tuple[str, float], Base]) -> float:
     spread = float(np.trace(base.S[:size, :size]))
     energy = float(fr.Qd @ fr.Qd + fr.rest @ fr.rest)
     if fr.own:
-        energy += float(fr.Ud[-1] ** 2)
-        spread += float(base.S[-1, -1] + fr.UA[-1].sum() ** 2)
+        own = slice(-fr.own, None)
+        energy += float(fr.Ud[own] @ fr.Ud[own])
+        level = fr.UA[own] @ fr.problem.grid.constants
+        spread += float(np.trace(base.S[own, own]) + (level**2).sum())
     if spread <= 0:
         return 1.0
     # readings that are exactly 0: the noise takes the place of the signal
@@ -190,13 +192,24 @@ def data_share(asked: Asked, families: Sequence[Weighted]) -> Array:
         T = asked.G @ (sp.K[:, :size] @ sp.V)
         told = T**2 @ square
         if fr.own:
-            own = sp.S[-1, :size] @ sp.V
-            cross = (asked.G @ sp.K[:, -1])[:, None] - (T * own) @ square
-            spread = w.sigma**-2 + sp.S[-1, -1] - own**2 @ square
-            told = told + cross**2 / np.maximum(spread, np.finfo(float).tiny)
+            told = told + _by_constants(asked, sp, T, w.sigma, square)
         share = np.full(len(prior), np.nan)
         # the square of a question's whole weight bounds its variance
         some = prior > SILENT * asked.size**2
         share[some] = (told[some] @ w.weights) / prior[some]
         total = total + share
     return np.clip(total, 0.0, 1.0)
+
+
+def _by_constants(asked: Asked, sp: Spectrum, T: Array, sigma: Array, square: Array) -> Array:
+    """What the readings tell of G f through the constants' own directions, (q, t)."""
+    own, size = slice(-sp.frame.own, None), len(sp.V)
+    seen = sp.S[own, :size] @ sp.V
+    cross = np.asarray(asked.G @ sp.K[:, own]).T[:, :, None]
+    cross = cross - np.stack([(T * row) @ square for row in seen])
+    spread = sp.S[own, own][:, :, None] - np.einsum("ic,jc,ct->ijt", seen, seen, square)
+    spread = spread + np.eye(len(seen))[:, :, None] * sigma**-2
+    if len(seen) == 1:
+        return np.asarray(cross[0] ** 2 / np.maximum(spread[0, 0], np.finfo(float).tiny))
+    solved = np.linalg.solve(spread.transpose(2, 0, 1), cross.transpose(2, 0, 1))
+    return np.asarray(np.einsum("iqt,tiq->qt", cross, solved))

@@ -94,8 +94,9 @@ def family(roughness: int | float | str, grid: Grid) -> Family:
 def covariance(base: str, length: float, grid: Grid) -> Array:
     """Covariance (m', m') of the base kernel between the middles of the m' free cells.
 
-    Roughness orders give the covariance whose inverse is the penalty, up to its null space, which
-    is carried by unpenalised columns.
+    Here and below m' counts the free cells of every part; parts are independent. Roughness orders
+    give the covariance whose inverse is the penalty, up to its null space, which is carried by
+    unpenalised columns.
     """
     x = grid.middles[grid.free]
     if base.startswith("roughness"):
@@ -103,9 +104,9 @@ def covariance(base: str, length: float, grid: Grid) -> Array:
         return np.asarray(S @ S.T, dtype=float)
     r = np.abs(x[:, None] - x[None, :]) / (length * grid.widths[grid.free].sum())
     if base == "markov":
-        return np.asarray(np.exp(-r))
+        return grid.per_part(np.asarray(np.exp(-r)))
     r *= np.sqrt(3.0)
-    return np.asarray((1 + r) * np.exp(-r))
+    return grid.per_part(np.asarray((1 + r) * np.exp(-r)))
 
 
 def factor(base: str, length: float, grid: Grid) -> Array:
@@ -116,15 +117,15 @@ def factor(base: str, length: float, grid: Grid) -> Array:
     """
     x, h = grid.middles[grid.free], grid.widths[grid.free]
     if base == "roughness-0":
-        return np.diag(1 / np.sqrt(h))
+        return grid.per_part(np.diag(1 / np.sqrt(h)))
     gaps = np.diff(x)
     if base == "roughness-1":
-        return np.asarray(np.tri(len(x), len(x) - 1, -1) * np.sqrt(gaps))
+        return grid.per_part(np.asarray(np.tri(len(x), len(x) - 1, -1) * np.sqrt(gaps)))
     if base == "roughness-2":
         inner = x[1:-1]
         mean_gap = (gaps[1:] + gaps[:-1]) / 2
         ramp = np.maximum(x[:, None] - inner[None, :], 0.0)
-        return np.asarray(ramp * np.sqrt(mean_gap))
+        return grid.per_part(np.asarray(ramp * np.sqrt(mean_gap)))
     return np.asarray(np.linalg.cholesky(covariance(base, length, grid)), dtype=float)
 
 
@@ -143,8 +144,8 @@ def null_columns(base: str, grid: Grid) -> Array:
     """Shapes (m', j) beyond the constant that the penalty does not see."""
     x = grid.middles[grid.free]
     if base != "roughness-2" or not len(x):
-        return np.zeros((len(x), 0))
-    return np.asarray(((x - x.mean()) / max(np.ptp(x), np.finfo(float).tiny))[:, None])
+        return np.zeros((grid.parts * len(x), 0))
+    return grid.per_part(((x - x.mean()) / max(np.ptp(x), np.finfo(float).tiny))[:, None])
 
 
 def pieces(grid: Grid, *, zones: bool) -> Array:
@@ -163,7 +164,7 @@ def pieces(grid: Grid, *, zones: bool) -> Array:
     for piece in found:
         if piece.any() and not any(np.array_equal(piece, u) for u in unique):
             unique.append(piece)
-    return np.stack(unique, axis=1) if unique else np.zeros((len(x), 0))
+    return grid.per_part(np.stack(unique, axis=1) if unique else np.zeros((len(x), 0)))
 
 
 def _stretches(grid: Grid) -> list[Array]:

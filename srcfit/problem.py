@@ -29,6 +29,9 @@ class Grid:
         Declared zones [m] (questions; the source may jump near their edges).
     breaks : tuple of float
         Places where the source is known to jump [m].
+    parts : {1, 2}
+        2 where the source is a complex amplitude: cells of the real part come first, then those
+        of the imaginary part, alike and independent beforehand.
     """
 
     edges: Array
@@ -36,6 +39,7 @@ class Grid:
     free: NDArray[np.bool_]
     zones: tuple[tuple[float, float], ...] = ()
     breaks: tuple[float, ...] = ()
+    parts: int = 1
 
     @property
     def middles(self) -> Array:
@@ -47,10 +51,27 @@ class Grid:
         """Cell lengths [m], (m,)."""
         return np.diff(self.edges)
 
+    @property
+    def unknown(self) -> NDArray[np.bool_]:
+        """Columns of `Problem.A` that carry a smooth part, (parts * m,)."""
+        return np.tile(self.free, self.parts)
+
+    @property
+    def constants(self) -> Array:
+        """Constant of each part over the free cells, (parts * m', parts)."""
+        return self.per_part(np.ones((int(self.free.sum()), 1)))
+
+    def per_part(self, matrix: Array) -> Array:
+        """The same matrix for each part, the rest 0."""
+        return matrix if self.parts == 1 else np.asarray(np.kron(np.eye(self.parts), matrix))
+
 
 @dataclass(frozen=True)
 class Problem:
     """Whitened linear problem, n rows (readings and pseudo-readings), m cells, k columns.
+
+    Of a source with two parts (complex amplitudes) m counts the cells of both, and rows and
+    columns of complex readings and unknowns stand once for each of their parts.
 
     Attributes
     ----------
@@ -65,7 +86,8 @@ class Problem:
     names : tuple of str, length k
     constant : bool
         Whether the smooth part has its own unpenalised constant (A 1 is then one more
-        unpenalised column); False on balanced members and where `smooth = false`.
+        unpenalised column, one for each part); False on balanced members and where
+        `smooth = false`.
     smooth : bool
         False: no smooth part at all (bands and solvers use `B` and the constant only).
     balance : (m,) or (j, m) float or None

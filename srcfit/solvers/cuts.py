@@ -58,7 +58,10 @@ def eigenbasis(
     if basis is None:
         raise SolveError("the eigenbasis solver needs the member's modes", "strength.solver")
     fr = frame(problem)
-    shapes = np.asarray(basis)[fr.free]
+    parts = problem.grid.parts
+    # real and imaginary part of one mode stand side by side
+    pairs = np.kron(np.asarray(basis)[problem.grid.free], np.eye(parts))
+    shapes: Array = np.concatenate([pairs[part::parts] for part in range(parts)])
     F = fr.QA @ shapes
     size = np.linalg.norm(F, axis=0)
     norms = np.where(size > 0, size, 1.0)
@@ -75,9 +78,9 @@ def eigenbasis(
 def _cut(
     fr: Frame, solver: str, roughness: int | float | str, Z: Array, left: Array, right: Array
 ) -> Ladder:
-    """Ladder that keeps the first 0, 1, 2 ... columns of orthonormal modes Z."""
+    """Ladder that keeps the first 0, 1, 2 ... columns (pairs for two parts) of modes Z."""
     y = Z.T @ fr.problem.d
-    kept = np.arange(Z.shape[1] + 1)
+    kept = np.arange(0, Z.shape[1] + 1, fr.problem.grid.parts)
     fill = (np.arange(len(y))[:, None] < kept[None, :]).astype(float)
     left_over = fr.problem.d - fr.U @ fr.Ud
     measure = family(roughness, fr.problem.grid)
@@ -86,7 +89,7 @@ def _cut(
         solver=solver,
         family=measure,
         frame=fr,
-        strengths=kept.astype(float),
+        strengths=kept / fr.problem.grid.parts,
         Z=Z,
         y=y,
         rest=left_over - Z @ y,
@@ -103,6 +106,6 @@ def _roughness(fr: Frame, base: str, length: float, f: Array) -> Array:
     if not len(f):
         return np.zeros(f.shape[1])
     S = factor(base, length, fr.problem.grid)
-    null = np.hstack([np.ones((len(f), 1)), null_columns(base, fr.problem.grid)])
+    null = np.hstack([fr.problem.grid.constants, null_columns(base, fr.problem.grid)])
     z = np.linalg.lstsq(np.hstack([S, null]), f, rcond=None)[0]
     return np.asarray(np.linalg.norm(z[: S.shape[1]], axis=0))

@@ -1,6 +1,7 @@
 """What every solver and family shares: the unpenalised columns projected out, once.
 
-    d = A f + N beta + e,    N = [A 1, B] (A 1 only where the source has its own constant)
+    d = A f + N beta + e,    N = [A 1, B] (A 1 only where the source has its own constant, one
+                                          column for each part of the source)
 
 The rows are turned into an orthonormal basis [Q, U]: `U` holds the columns N, Q the rest.
 Questions b'beta + g'f are answered by h = N+' b and the rest of g, see `ask`.
@@ -73,10 +74,10 @@ class Frame:
     free : (m',) int
         Numbers of the cells that carry the smooth part (empty where there is none).
     U : (n, r)
-        Orthonormal basis of the unpenalised columns; the constant's own direction is the last
-        where `own` is true.
-    own : bool
-        Whether the constant adds a direction of its own to the other columns.
+        Orthonormal basis of the unpenalised columns; the constants' own directions are the last
+        `own` of them.
+    own : int
+        How many directions of their own the constants add to the other columns.
     basis : Complement or (n, v)
         Orthonormal basis Q of all else that the source can reach (v = n - r unless
         n > m' + r), see `rows`.
@@ -101,7 +102,7 @@ class Frame:
     problem: Problem
     free: np.ndarray[tuple[int], np.dtype[np.intp]]
     U: Array
-    own: bool
+    own: int
     basis: Complement | Array
     QA: Array
     Qd: Array
@@ -150,10 +151,11 @@ class Asked:
 
 
 def unpenalised(problem: Problem, extra: Array | None = None) -> Array:
-    """Columns N (n, k'): the constant's response first (if any), `extra` shapes, then B."""
-    parts = [problem.A[:, problem.grid.free].sum(axis=1)[:, None]] if problem.constant else []
+    """Columns N (n, k'): the constants' response first (if any), `extra` shapes, then B."""
+    on_free = problem.A[:, problem.grid.unknown]
+    parts = [on_free @ problem.grid.constants] if problem.constant else []
     if extra is not None and extra.shape[1]:
-        parts.append(problem.A[:, problem.grid.free] @ extra)
+        parts.append(on_free @ extra)
     return np.hstack([*parts, problem.B])
 
 
@@ -167,12 +169,12 @@ def frame(problem: Problem, extra: Array | None = None) -> Frame:
         Further unpenalised shapes on the free cells (null space of a roughness order).
     """
     n = len(problem.d)
-    free = np.flatnonzero(problem.grid.free) if problem.smooth else np.zeros(0, dtype=np.intp)
+    free = np.flatnonzero(problem.grid.unknown) if problem.smooth else np.zeros(0, dtype=np.intp)
     N = unpenalised(problem, extra)
     norms = np.linalg.norm(N, axis=0)
     norms[norms == 0] = 1.0
     N = N / norms
-    U, own = _span(N, problem.constant)
+    U, own = _span(N, problem.grid.parts if problem.constant else 0)
     R = U.T @ N
     P, s, Rt = np.linalg.svd(R, full_matrices=False)
     solve = (Rt.T / s) @ P.T / norms[:, None] if len(s) else np.zeros((N.shape[1], 0))
@@ -210,18 +212,18 @@ def frame(problem: Problem, extra: Array | None = None) -> Frame:
     )
 
 
-def _span(N: Array, constant: bool) -> tuple[Array, bool]:
-    """Orthonormal basis of unit columns N, the direction that only the first adds put last."""
-    others = N[:, 1:] if constant else N
-    basis = _basis(others)
-    if not constant:
-        return basis, False
-    first = N[:, 0] - basis @ (basis.T @ N[:, 0])
-    first = first - basis @ (basis.T @ first)
-    size = float(np.linalg.norm(first))
-    if size <= RANK:
-        return basis, False
-    return np.hstack([basis, first[:, None] / size]), True
+def _span(N: Array, constants: int) -> tuple[Array, int]:
+    """Orthonormal basis of unit columns N, the directions that only the first add put last."""
+    basis = _basis(N[:, constants:])
+    own = 0
+    for column in N[:, :constants].T:
+        beyond = column - basis @ (basis.T @ column)
+        beyond = beyond - basis @ (basis.T @ beyond)
+        size = float(np.linalg.norm(beyond))
+        if size > RANK:
+            basis = np.hstack([basis, beyond[:, None] / size])
+            own += 1
+    return basis, own
 
 
 def _basis(N: Array) -> Array:
@@ -241,7 +243,7 @@ def _balanced(problem: Problem, free: np.ndarray[tuple[int], np.dtype[np.intp]])
     if problem.balance is None or not len(free):
         return None
     rows = np.atleast_2d(problem.balance)[:, free]
-    modes = (rows / problem.grid.weights[free]).T
+    modes = (rows / np.tile(problem.grid.weights, problem.grid.parts)[free]).T
     return np.asarray(np.eye(len(free)) - modes @ np.linalg.solve(rows @ modes, rows))
 
 
@@ -250,8 +252,8 @@ def ask(fr: Frame, questions: Questions) -> Asked:
     from scipy.sparse import csr_array
 
     problem = fr.problem
-    on_free = np.asarray(questions.cells)[:, problem.grid.free]
-    parts = [on_free.sum(axis=1)[:, None]] if problem.constant else []
+    on_free = np.asarray(questions.cells)[:, problem.grid.unknown]
+    parts = [on_free @ problem.grid.constants] if problem.constant else []
     if fr.extra.shape[1]:
         parts.append(on_free @ fr.extra)
     b = np.hstack([*parts, questions.columns])

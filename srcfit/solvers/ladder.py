@@ -137,12 +137,11 @@ class Ladder:
     def estimates(self) -> Array:
         """Source density on every cell, constant included, (m, t)."""
         problem = self.frame.problem
-        out = np.zeros((len(problem.grid.free), len(self.strengths)))
+        out = np.zeros((len(problem.grid.unknown), len(self.strengths)))
         f = self.variation.copy()
         if problem.constant:
-            f += self.unpenalised[0]
-            j = self.frame.extra.shape[1]
-            f += self.frame.extra @ self.unpenalised[1 : 1 + j]
+            shapes = np.hstack([problem.grid.constants, self.frame.extra])
+            f += shapes @ self.unpenalised[: shapes.shape[1]]
         out[self.frame.free] = f
         return out
 
@@ -201,7 +200,8 @@ def log_evidence(fr: Frame, lam: Array, y: Array, beyond: float, strengths: Arra
     volume = -0.5 * np.log1p(lam[:, None] / strengths).sum(axis=0)
     if fr.problem.stated:
         return np.asarray(volume - 0.5 * energy)
-    return np.asarray(volume - 0.5 * fr.nu * np.log(energy))
+    # readings without any noise at all: as good as the smallest number
+    return np.asarray(volume - 0.5 * fr.nu * np.log(np.maximum(energy, np.finfo(float).tiny)))
 
 
 def misfit(lam: Array, y: Array, beyond: float, strengths: Array) -> Array:

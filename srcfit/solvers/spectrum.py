@@ -160,6 +160,8 @@ def spectrum(
 
 def thin_svd(F: Array, *, right: bool) -> tuple[Array, Array, Array | None]:
     """Thin SVD of a (usually wide) matrix; the right vectors only where they are asked for."""
+    if F.size == 0:
+        return np.zeros((len(F), 0)), np.zeros(0), np.zeros((0, F.shape[1]))
     if F.shape[1] <= F.shape[0]:
         V, s, Wt = svd(F, full_matrices=False, check_finite=False)
         return V, s, Wt if right else None

@@ -46,7 +46,7 @@ def tikhonov(
     chosen = family(roughness, problem.grid)
     fr = frame(problem, null_columns(chosen.base, problem.grid))
     S = factor(chosen.base, chosen.length, problem.grid)
-    F = _times(fr.QA, S, chosen.base)
+    F = _times(fr.QA, S, chosen.base if problem.grid.parts == 1 else "")
     V, s, _ = thin_svd(F, right=False)
     tau = _strengths(s**2, fr.nu) if strengths is None else np.asarray(strengths, dtype=float)
     return filtered(fr, chosen, s**2, fr.rows(V), V.T @ fr.Qd, (S, F.T, V), tau)
