@@ -204,7 +204,7 @@ def plain(text):
 
 
 def check_damaged(data):
-    found, error = attempt(read_text, data, column("w", unit=None), PositionSpec("x", None))
+    found, error = attempt(read_text, data, column("w"), PositionSpec("x", "m"))
     if error is not None:
         assert str(error).endswith(".")
         return
