@@ -85,9 +85,7 @@ def outliers(forward: Forward, standardised: Array) -> list[Finding]:
     if not len(far):
         return []
     readings = forward.readings
-    lines = ", ".join(
-        f"{readings.file[r]} line {readings.line[r]}" for r in forward.rows[far][:8]
-    )
+    lines = ", ".join(f"{readings.file[r]} line {readings.line[r]}" for r in forward.rows[far][:8])
     more = f" and {len(far) - 8} more" if len(far) > 8 else ""
     return [
         Finding(

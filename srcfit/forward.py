@@ -17,9 +17,11 @@ from srcfit.errors import SolveError
 from srcfit.grid import make_grid, overlap, spread
 from srcfit.holds import restrained, restraint_forces
 from srcfit.influence import Influence, Term, at_nodes, influence, interval_integrals
-from srcfit.kernel import Nulls, functional, functionals, prescribed
+from srcfit.kernel import prescribed
 from srcfit.member import Array, Member, Unknown
+from srcfit.nulls import Nulls
 from srcfit.problem import Grid
+from srcfit.quantities import functional, functionals
 from srcfit.readings.model import Readings
 from srcfit.sensors import samples, sensor_terms
 from srcfit.state import Chain, Matrix, chain, inner_edges, special_places
@@ -52,7 +54,9 @@ class Forward:
     order : (n,) position of each reading in its group's sequence along the member
     reactions : tuple of q Reaction; `reaction_cells` (q, m), `reaction_columns` (q, k),
         `reaction_known` (q,)
-    balance : (d, m) and `balance_columns` (d, k): zero for balanced sources; None when regular
+    balance : (d, m + k + 1) rows over densities, columns and 1 that vanish for balanced sources;
+        None when regular
+    nulls : null modes of a singular member, None when regular
     line, lines : Chain and Influence (sensors first, then reactions)
     """
 
@@ -74,8 +78,14 @@ class Forward:
     reaction_columns: Matrix
     reaction_known: Matrix
     balance: Matrix | None
+    nulls: Nulls | None
     line: Chain
     lines: Influence
+
+    @property
+    def driven(self) -> bool:
+        """Whether everything is a complex amplitude (kernels may be real all the same)."""
+        return self.case.member.driven
 
     def specs(self) -> list[ColumnSpec]:
         """The column spec of each used reading."""
@@ -93,13 +103,11 @@ def build(case: Case, readings: Readings) -> Forward:
     rows = np.flatnonzero(readings.used)
     grid = make_grid(case)
     specs = [case.columns[readings.spec[r]] for r in rows]
-    line, lines, nulls, reactions = _lines(case, readings, rows, specs, grid)
-    n = len(rows)
+    line, asked, nulls, reactions, null_columns = _lines(case, readings, rows, specs, grid)
+    lines, n = influence(line, asked), len(rows)
     cells, columns, member_columns, known = _model(case, grid, line, lines)
-    loads = len(case.source.lumped)
     own, own_columns = reading_nuisances(case, readings, rows, specs)
     padded = np.zeros((len(lines) - n, own_columns.shape[1]))
-    null_columns = _null_reads(nulls, readings, rows, specs, reactions, case)
     columns += own
     columns += [Column(f"null mode {i + 1}", "null") for i in range(null_columns.shape[1])]
     B = np.concatenate(
@@ -109,12 +117,12 @@ def build(case: Case, readings: Readings) -> Forward:
     y = corrected(readings, rows, specs) - known[:n] - absolute
     _enough(case, n, columns)
     group_names = tuple(dict.fromkeys(s.group for s in specs))
-    balance = None if nulls is None else _balance(nulls, line, grid, case, len(columns), loads)
+    balance = None if nulls is None else _balance(nulls, grid, case, len(columns))
     return Forward(
         case, readings, grid, rows, cells[:n], B[:n], y, known[:n] + absolute, readings.sd[rows],
         np.array([group_names.index(s.group) for s in specs], dtype=int), group_names,
         lags(specs, group_names), tuple(columns), reactions, cells[n:], B[n:], known[n:],
-        balance, line, lines,
+        balance, nulls, line, lines,
     )  # fmt: skip
 
 
@@ -132,6 +140,8 @@ def _model(
 def along(forward: Forward, quantity: str, x: Array) -> tuple[Matrix, Matrix, Matrix]:
     """A quantity along the member as rows over cells and columns, and its known part.
 
+    Free motions of a member that nothing holds are columns too; nuisances of readings are 0.
+
     Parameters
     ----------
     quantity : str
@@ -140,14 +150,16 @@ def along(forward: Forward, quantity: str, x: Array) -> tuple[Matrix, Matrix, Ma
 
     Returns
     -------
-    cells (g, m), columns (g, k), known (g,), in SI; the ambient is left out, and so are nuisances
-    of readings and null modes.
+    cells (g, m), columns (g, k), known (g,), in SI; the ambient is left out.
     """
     line = forward.line
     lines = influence(line, functionals(line, quantity, x))
     cells, _, columns, known = _model(forward.case, forward.grid, line, lines)
-    padded = np.zeros((len(x), forward.B.shape[1] - columns.shape[1]))
-    return cells, np.concatenate([columns, padded], axis=1), known
+    null = np.zeros((len(x), 0))
+    if forward.nulls is not None:
+        null = forward.nulls.read(quantity, x)
+    padded = np.zeros((len(x), forward.B.shape[1] - columns.shape[1] - null.shape[1]))
+    return cells, np.concatenate([columns, padded, null], axis=1), known
 
 
 def _enough(case: Case, n: int, columns: list[Column]) -> None:
@@ -164,8 +176,8 @@ def _enough(case: Case, n: int, columns: list[Column]) -> None:
 
 def _lines(
     case: Case, readings: Readings, rows: NDArray[np.int64], specs: list[ColumnSpec], grid: Grid
-) -> tuple[Chain, Influence, Nulls | None, tuple[Reaction, ...]]:
-    """Influence lines of all used sensors and of all reactions, on one chain."""
+) -> tuple[Chain, list[list[Term]], Nulls | None, tuple[Reaction, ...], Matrix]:
+    """Functionals of all used sensors and of all reactions on one chain, what they read of nulls."""
     member = case.member
     held, modes, _ = restrained(member)
     jumps = [p for p, _, _ in special_places(held)]
@@ -178,13 +190,20 @@ def _lines(
     known = [e for part in case.source.known for e in (part.start, part.end)]
     points = np.concatenate([grid.edges, loads, known, *(place for place, _ in spots)])
     line = chain(held, points)
-    asked = [
-        sensor_terms(line, s.kind, place, weight, s.distance)
-        for s, (place, weight) in zip(specs, spots, strict=True)
-    ]
-    reactions, terms = _reactions(case, line)
-    nulls = None if modes is None else Nulls(member, line)
-    return line, influence(line, [*asked, *terms]), nulls, reactions
+
+    def asked(line: Chain) -> list[list[Term]]:
+        sensors = [
+            sensor_terms(line, s.kind, place, weight, s.distance)
+            for s, (place, weight) in zip(specs, spots, strict=True)
+        ]
+        return [*sensors, *_reactions(case, line)[1]]
+
+    found, reactions = asked(line), _reactions(case, line)[0]
+    if modes is None:
+        return line, found, None, reactions, np.zeros((len(found), 0))
+    nulls = Nulls(member, line)
+    reads = np.array([nulls.reading(terms) for terms in asked(nulls.free)])
+    return line, found, nulls, reactions, reads
 
 
 def _reactions(case: Case, line: Chain) -> tuple[tuple[Reaction, ...], list[list[Term]]]:
@@ -302,44 +321,26 @@ def _known_parts(case: Case, line: Chain, lines: Influence) -> Matrix:
     return total
 
 
-def _null_reads(
-    nulls: Nulls | None, readings: Readings, rows: NDArray[np.int64], specs: list[ColumnSpec],
-    reactions: tuple[Reaction, ...], case: Case,
-) -> Matrix:  # fmt: skip
-    """What sensors and reactions read of the null modes, (n + q, d)."""
-    if nulls is None:
-        return np.zeros((len(rows) + len(reactions), 0))
-    kinks = nulls.free.x
-    terms = [
-        sensor_terms(
-            nulls.free, s.kind, *samples(case.member, float(readings.x[r]), s.gauge_length, kinks),
-            s.distance,
-        )
-        for r, s in zip(rows, specs, strict=True)
-    ]  # fmt: skip
-    terms += _reactions(case, nulls.free)[1]
-    return np.array([nulls.reading(t) for t in terms])
-
-
-def _balance(
-    nulls: Nulls, line: Chain, grid: Grid, case: Case, k: int, loads: int
-) -> Matrix:  # fmt: skip
+def _balance(nulls: Nulls, grid: Grid, case: Case, k: int) -> Matrix:
     """Rows over (cells, columns, 1) that vanish for balanced sources, (d, m + k + 1)."""
-    member = case.member
+    m, source = len(grid.free), case.source
     middle = (nulls.free.x[1:] + nulls.free.x[:-1]) / 2
-    cell = np.clip(np.searchsorted(grid.edges, middle) - 1, 0, len(grid.free) - 1)
-    density = nulls.at * nulls.free.weights
-    rows = np.zeros((len(nulls.at), len(grid.free) + k + 1))
-    for d, part in enumerate(density.sum(axis=2)):
-        np.add.at(rows[d], cell, part)
-    rows[:, : len(grid.free)] *= grid.free
-    for j, part in enumerate(case.source.lumped[:loads]):
-        rows[:, len(grid.free) + j] = nulls.value(np.array([part.at or 0.0]))[:, 0]
-    places = nulls.free.places
-    for known in case.source.known:
+    cell = np.clip(np.searchsorted(grid.edges, middle) - 1, 0, m - 1)
+    rows = np.zeros((len(nulls.at), m + k + 1))
+    for d, part in enumerate((nulls.at * nulls.free.weights).sum(axis=2)):
+        np.add.at(rows[d, :m], cell, part)
+    rows[:, :m] *= grid.free
+    for j, lump in enumerate(source.lumped):
+        assert lump.at is not None
+        if lump.width == 0:
+            rows[:, m + j] = nulls.value(np.array([lump.at]))[:, 0]
+        else:
+            rows[:, m + j] = nulls.mean(*spread(lump))
+    for known in source.known:
         if known.start == known.end:
             rows[:, -1] += known.value * nulls.value(np.array([known.start]))[:, 0]
         else:
-            inside = (places > known.start) & (places < known.end) & (member.start <= places)
-            rows[:, -1] += known.value * (density * inside).sum(axis=(1, 2))
+            ends = np.array([case.member.start, case.member.end])
+            size = overlap(case.member, ends, known.start, known.end)[0]
+            rows[:, -1] += known.value * size * nulls.mean(known.start, known.end)
     return rows

@@ -13,117 +13,15 @@ from typing import Any
 import numpy as np
 
 from srcfit.errors import MemberError
-from srcfit.holds import null_states, restrained, restraint_forces, support_intervals
-from srcfit.influence import (
-    Influence,
-    Term,
-    at_nodes,
-    bases,
-    influence,
-    interval_integrals,
-)
+from srcfit.holds import restrained, restraint_forces
+from srcfit.influence import Influence, at_nodes, influence, interval_integrals
 from srcfit.member import Array, Member, Unknown
-from srcfit.state import (
-    Chain,
-    Matrix,
-    chain,
-    gauss,
-    inner_edges,
-    operator,
-    profile,
-    special_places,
-)
+from srcfit.nulls import Nulls
+from srcfit.quantities import functionals
+from srcfit.state import Chain, Matrix, chain, gauss, inner_edges, profile, special_places
 
 Source = Callable[[Array], Any]
 PANELS = 100  # a source given as a function is first looked at on so many stretches
-Row = Callable[[Member, Array, dict[str, Any]], list[Any]]
-
-
-def _slope(member: Member, w: Array, k: dict[str, Any]) -> list[Any]:
-    if member.kind.order == 2:
-        return [0.0, 1 / k["p"]]
-    if "shear" not in k:
-        return [0.0, 1.0, 0.0, 0.0]
-    share = 1 / (1 + k["p1"] / k["shear"])
-    return [0.0, share, 0.0, share / k["shear"]]
-
-
-def _flux(member: Member, w: Array, k: dict[str, Any]) -> list[Any]:
-    if member.kind.order == 4:
-        return [0.0, 0.0, 0.0, 1.0]
-    return [0.0, -1.0 if member.kind.name == "radial_aquifer" else -1 / w]
-
-
-def _response(member: Member, w: Array, k: dict[str, Any]) -> list[Any]:
-    return [1.0] + [0.0] * (member.kind.order - 1)
-
-
-QUANTITIES: dict[str, tuple[tuple[int, ...], Row]] = {
-    # name: (orders that have it, row on the state)
-    "response": ((2, 4), _response),
-    "slope": ((2, 4), _slope),
-    "rotation": ((4,), lambda member, w, k: [0.0, 1.0, 0.0, 0.0]),
-    "curvature": ((4,), lambda member, w, k: [0.0, 0.0, 1 / k["p2"], 0.0]),
-    "moment": ((4,), lambda member, w, k: [0.0, 0.0, 1.0, 0.0]),
-    "shear": ((4,), lambda member, w, k: [0.0, 0.0, 0.0, 1.0]),
-    "flux": ((2, 4), _flux),
-    "force": ((2,), lambda member, w, k: [0.0, 1.0]),
-    "torque": ((2,), lambda member, w, k: [0.0, 1.0]),
-}
-
-
-def functionals(line: Chain, quantity: str, x: Any) -> list[list[Term]]:
-    """The functional `quantity` at each place of `x`: the right limit, at the end the left.
-
-    Raises
-    ------
-    MemberError
-        When the member has no such quantity, or no reaction at a place.
-    """
-    member = line.member
-    places = np.atleast_1d(np.asarray(x, dtype=float))
-    if quantity == "reaction":
-        return [_reaction(line, float(place)) for place in places]
-    orders, row = QUANTITIES.get(quantity, ((), None))
-    if row is None or member.kind.order not in orders:
-        known = [name for name, (has, _) in QUANTITIES.items() if member.kind.order in has]
-        raise MemberError(
-            f"a {member.kind.name} has no quantity {quantity!r}",
-            "quantity",
-            "choose one of " + ", ".join([*known, "reaction"]),
-        )
-    node = line.node(places)
-    last = node == len(line.x) - 1
-    # coefficients jump at edges: look just inside the side that is meant
-    nudge = np.where(last, -1e-12, 1e-12) * member.length
-    entries = row(member, member.area(line.x[node]), operator(member, line.x[node] + nudge))
-    rows = np.stack([np.broadcast_to(np.asarray(e), places.shape) for e in entries], axis=1)
-    return [[Term(int(k), r, bool(e))] for k, r, e in zip(node, rows, last, strict=True)]
-
-
-def functional(line: Chain, quantity: str, x: float) -> list[Term]:
-    """One functional; see `functionals`."""
-    return functionals(line, quantity, x)[0]
-
-
-def _reaction(line: Chain, x: float) -> list[Term]:
-    """Reaction at an end or a support: the jump of the last state component there."""
-    member, last = line.member, line.order - 1
-    unit = np.zeros(line.order)
-    unit[last] = 1.0
-    near = 1e-9 * member.length
-    if abs(x - member.start) <= near and not member.left.axis:
-        return [Term(0, unit, True)]
-    if abs(x - member.end) <= near and not member.right.axis:
-        return [Term(len(line.x) - 1, -unit)]
-    for support, interval in zip(member.supports, support_intervals(line), strict=True):
-        if abs(x - support.at) <= near:
-            return [Term(interval + 1, unit), Term(interval, -unit)]
-    places = ", ".join(f"{s.at:g}" for s in member.supports) or "none"
-    raise MemberError(
-        f"there is no support at x = {x:g} m", "quantity 'reaction'",
-        f"ask at an end or at a support (supports: {places})",
-    )  # fmt: skip
 
 
 def prescribed(member: Member) -> list[tuple[str, float | Unknown]]:
@@ -193,52 +91,6 @@ def kernel(member: Member, x: Any, s: Any, quantity: str = "response") -> Matrix
     lines = influence(line, functionals(line, quantity, x))
     G = at_nodes(lines, line.node(s))
     return G if modes is None else _generalised(member, line, lines, s, quantity, x, G)
-
-
-class Nulls:
-    """Null modes of a singular member on the chain of the held one, orthonormal with r w."""
-
-    def __init__(self, member: Member, line: Chain) -> None:
-        free = chain(member, line.x)
-        self.line, self.free = line, free
-        states = null_states(free, bases(free))
-        self.density = profile(member, "r", free.places, 1.0)
-        self.spread = self.density * free.weights
-        at = np.einsum("ksd,jkd->jks", free.stages, states[:, :-1])
-        gram = np.einsum("iks,ks,jks->ij", at.conj(), self.spread, at)
-        root = np.linalg.inv(np.linalg.cholesky(gram))
-        self.states, self.at = (
-            np.einsum("ij,jkd->ikd", root, states),
-            np.einsum("ij,jks->iks", root, at),
-        )
-
-    def value(self, x: Array) -> Matrix:
-        """Null modes at places, (d, len(x))."""
-        found: Matrix = self.states[:, self.free.node(x), 0] * self.free.scale[0]
-        return found
-
-    def read(self, quantity: str, x: Array) -> Matrix:
-        """A quantity of the null modes at places, (len(x), d)."""
-        rows = [self.reading(terms) for terms in functionals(self.free, quantity, x)]
-        return np.array(rows).reshape(len(x), len(self.states))
-
-    def reading(self, terms: Sequence[Term]) -> Matrix:
-        """A functional of the null modes, its terms on the chain `free`, (d,)."""
-        total = np.zeros(len(self.states), dtype=self.states.dtype)
-        for term in terms:
-            total = total + (self.states[:, term.node] * self.free.scale) @ term.row
-        return total
-
-    def against(self, lines: Influence) -> Matrix:
-        """Integrals of r w phi times influence lines, (n, d)."""
-        real = np.diff(self.line.x) > 0
-        mine = np.diff(self.free.x) > 0
-        found = []
-        for phi in self.at:
-            density = np.zeros(self.line.weights.shape, dtype=phi.dtype)
-            density[real] = (phi * self.density)[mine]
-            found.append(interval_integrals(lines, density).sum(axis=1))
-        return np.stack(found, axis=1)
 
 
 def _quadrature(member: Member) -> tuple[Array, Array]:

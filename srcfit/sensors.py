@@ -1,7 +1,7 @@
 """Sensor kinds: what each reads of the state, at a point or over a gauge length.
 
 `SENSORS` is gathered from the member kinds: to add a sensor kind, add its `SensorSpec` to a member
-file (and, for a new quantity, its row to `kernel.QUANTITIES`).
+file (and, for a new quantity, its row to `quantities.QUANTITIES`).
 """
 
 from __future__ import annotations
@@ -9,9 +9,9 @@ from __future__ import annotations
 import numpy as np
 
 from srcfit.influence import Term
-from srcfit.kernel import functionals
 from srcfit.member import Array, Member, SensorSpec
 from srcfit.members import MEMBERS
+from srcfit.quantities import functionals
 from srcfit.state import Chain
 
 SENSORS: dict[str, dict[str, SensorSpec]] = {

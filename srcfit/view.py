@@ -14,10 +14,12 @@ from srcfit.errors import ReadingsError
 from srcfit.grid import cell_weights
 from srcfit.holds import restrained, restraint_forces
 from srcfit.influence import influence, interval_integrals
-from srcfit.kernel import Nulls, functionals, prescribed
+from srcfit.kernel import prescribed
 from srcfit.member import RIGID, Array, End, Member, Profile, Restraint, Unknown
 from srcfit.members import MEMBERS
+from srcfit.nulls import Nulls
 from srcfit.problem import Grid, Problem
+from srcfit.quantities import functionals
 from srcfit.state import chain
 
 BEYOND = 0.05  # how far the plain string reaches beyond the places, in units of their span

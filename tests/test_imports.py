@@ -17,8 +17,8 @@ ROOT = Path(srcfit.__file__).parent
 # a package counts as one unit; the data of a package (its `model`) may stand above the rest of it
 ORDER = (
     "errors", "unit_names", "units", "member", "members", "case.model", "readings.model",
-    "problem", "recovery", "case", "readings", "state", "influence", "holds", "kernel",
-    "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen", "sensors", "grid",
+    "problem", "recovery", "case", "readings", "state", "influence", "holds", "quantities",
+    "nulls", "kernel", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen", "sensors", "grid",
     "unknowns", "forward", "view", "whitening", "priors", "solvers", "criteria", "evidence",
     "noise", "bands", "answers", "balance", "checks", "solve", "results",
     "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report", "recover",

@@ -11,10 +11,10 @@ import srcfit
 from srcfit.case import load_case, make_member
 from srcfit.case.template import template
 from srcfit.errors import CaseError
-from srcfit.kernel import QUANTITIES
 from srcfit.member import RIGID, Member, Unknown
 from srcfit.members import MEMBERS
 from srcfit.members.general import GENERAL_4
+from srcfit.quantities import QUANTITIES
 
 KINDS = [*MEMBERS.values(), GENERAL_4]
 
