@@ -20,6 +20,8 @@ Rows = NDArray[np.intp]
 # Lukas (2006) robust GCV: 1 is GCV itself, smaller guards more against too rough a source
 ROBUSTNESS = 0.3
 FOLDS, CROWD = 10, 10
+# folds worked on at a time, for the sake of memory
+BATCH = 50
 # ladders of this many rungs are fine enough to interpolate a score
 FINE = 100
 # a corner turns at least this sharply, and both branches span at least this ratio
@@ -123,14 +125,15 @@ def _k_fold(ladder: Ladder, rungs: Rows) -> Array:
     U = ladder.frame.U
     predicted = [b for b in folds(ladder) if np.linalg.norm(U[b], 2) ** 2 < 1 - ALONE]
     for size in {len(b) for b in predicted}:
-        rows = np.stack([b for b in predicted if len(b) == size])
+        alike = np.stack([b for b in predicted if len(b) == size])
         i, j = np.triu_indices(size)
-        pairs = ladder.Z[rows[:, i]] * ladder.Z[rows[:, j]]
-        upper = pairs @ fill + (U[rows[:, i]] * U[rows[:, j]]).sum(axis=2)[:, :, None]
-        blocks = np.empty((size, size, len(rows), len(rungs)))
-        blocks[i, j] = blocks[j, i] = -upper.transpose(1, 0, 2)
-        total += _left_out(blocks, residuals[rows].transpose(1, 0, 2))
-        told += rows.size
+        for rows in np.array_split(alike, -(-len(alike) // BATCH)):
+            pairs = ladder.Z[rows[:, i]] * ladder.Z[rows[:, j]]
+            upper = pairs @ fill + (U[rows[:, i]] * U[rows[:, j]]).sum(axis=2)[:, :, None]
+            blocks = np.empty((size, size, len(rows), len(rungs)))
+            blocks[i, j] = blocks[j, i] = -upper.transpose(1, 0, 2)
+            total += _left_out(blocks, residuals[rows].transpose(1, 0, 2))
+        told += alike.size
     return total / told if told else np.full(len(total), np.nan)
 
 

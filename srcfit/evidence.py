@@ -198,7 +198,7 @@ def data_share(asked: Asked, families: Sequence[Weighted]) -> Array:
         some = prior > SILENT * asked.size**2
         share[some] = (told[some] @ w.weights) / prior[some]
         total = total + share
-    return np.clip(total, 0.0, 1.0)
+    return np.asarray(np.clip(total, 0.0, 1.0))
 
 
 def _by_constants(asked: Asked, sp: Spectrum, T: Array, sigma: Array, square: Array) -> Array:

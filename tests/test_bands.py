@@ -421,6 +421,41 @@ def test_readings_of_zero():
     assert (a.sd > 0).all()
 
 
+@pytest.mark.parametrize("stated", [True, False])
+def test_readings_without_noise(stated):
+    """Readings that the unpenalised columns explain exactly."""
+    pb, q = small(stated=stated)
+    a = cautious(replace(pb, d=pb.A.sum(axis=1) * 3 + pb.B @ [1.0, 2.0]), q)
+    np.testing.assert_allclose(a.value[2:], [3, 3, 1, 2], rtol=1e-5)
+    assert np.isfinite(a.sd).all()
+
+
+@pytest.mark.parametrize("cells", [1, 2, 3])
+def test_few_free_cells(cells):
+    pb, q = small()
+    free = np.zeros(CELLS, dtype=bool)
+    free[7 : 7 + cells] = True
+    few = replace(pb, A=pb.A * free, grid=replace(pb.grid, free=free, zones=(), breaks=()))
+    a = cautious(few, q)
+    assert np.isfinite(a.value).all()
+    assert (a.sd > 0)[[0, 1, 2, 4, 5]].all()
+    for order in (0, 1, 2):
+        ladder = SOLVERS["tikhonov"](few, roughness=order)
+        assert np.isfinite(ladder.estimates).all()
+
+
+def test_reading_that_alone_tells_an_unknown():
+    pb, q = small()
+    B = np.column_stack([pb.B, np.eye(len(pb.d))[3]])
+    a = cautious(
+        replace(pb, B=B, names=(*pb.names, "step")),
+        Questions(q.cells, np.column_stack([q.columns, np.zeros(6)])),
+    )
+    assert np.flatnonzero(np.isnan(a.fit.leave_one_out)).tolist() == [3]
+    assert np.flatnonzero(np.isnan(a.fit.standardised)).tolist() == [3]
+    assert a.fit.residual[3] == pytest.approx(0, abs=1e-9)
+
+
 def test_more_readings_than_cells():
     pb, q = small(n=80)
     fam, sigma = SMOOTH[1], 1.3

@@ -71,7 +71,9 @@ def eigenbasis(
     use = np.flatnonzero((seen > UNSEEN) & (size[: len(seen)] > UNSEEN * size.max(initial=0.0)))
     use = use[:most]
     P, R = np.linalg.qr(F[:, use])
-    right = solve_triangular(R, np.eye(len(use))) if len(use) else np.zeros((0, 0))
+    right: Array = np.zeros((0, 0))
+    if len(use):
+        right = np.asarray(solve_triangular(R, np.eye(len(use))), dtype=float)
     return _cut(fr, "eigenbasis", roughness, fr.rows(P), shapes[:, use], right)
 
 
