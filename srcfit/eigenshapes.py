@@ -132,8 +132,32 @@ def coefficients(member: Member, x: Array) -> tuple[Fields, Fields]:
     Raises
     ------
     MemberError
-        Where p, p2, shear or r is not positive.
+        Where p, p2, shear or r is not positive, or compression exceeds the shear stiffness.
     """
+    energy, weight = _plain(member, x)
+    if "shear" in energy:
+        excess = -energy["slope"] >= energy["shear"]
+        if excess.any():
+            raise MemberError(
+                f"compression exceeds the shear stiffness at {float(x[excess].ravel()[0]):.6g} m, "
+                "so the member buckles in ever shorter waves and has no lowest mode",
+                "member",
+                "check tension and shear_stiffness",
+            )
+    return energy, weight
+
+
+def compression(member: Member, x: Array) -> tuple[Fields, Fields]:
+    """Coefficients of the energy without compression, and of the compression, per field."""
+    energy, _ = _plain(member, x)
+    push = np.maximum(-energy["slope"], 0.0)
+    # a trace of foundation keeps movements apart that nothing resists and compression ignores
+    trace = 1e-12 * float(energy["bend"].mean()) / member.length**4
+    kept = {**energy, "slope": np.maximum(energy["slope"], 0.0), "u": energy["u"] + trace}
+    return kept, {"slope": push}
+
+
+def _plain(member: Member, x: Array) -> tuple[Fields, Fields]:
     k = operator(member, x)
     r = profile(member, "r", x, 1.0) * member.area(x)
     if member.kind.order == 2:
@@ -152,16 +176,6 @@ def coefficients(member: Member, x: Array) -> tuple[Fields, Fields]:
                 "give a positive one",
             )
     return energy, {"u": r}
-
-
-def compression(member: Member, x: Array) -> tuple[Fields, Fields]:
-    """Coefficients of the energy without compression, and of the compression, per field."""
-    energy, _ = coefficients(member, x)
-    push = np.maximum(-energy["slope"], 0.0)
-    # a trace of foundation keeps movements apart that nothing resists and compression ignores
-    trace = 1e-12 * float(energy["bend"].mean()) / member.length**4
-    kept = {**energy, "slope": np.maximum(energy["slope"], 0.0), "u": energy["u"] + trace}
-    return kept, {"slope": push}
 
 
 def smooth_edges(member: Member) -> Array:

@@ -20,6 +20,7 @@ HIGHEST = 32  # degree beyond which an element is halved instead
 LEFT_OVER = 1e-17  # share of a mode's energy allowed in the two highest polynomials of an element
 ROUNDED = 1e-14  # share that is taken for rounding when refinement does not halve it
 ROUNDS = 40
+MOST = 30_000  # unknowns
 DENSE = 600  # unknowns above which the matrices are sparse
 SHIFT = 1e-4  # shift in units of the highest eigenvalue: keeps high modes apart
 NEIGHBOURS = 1e-5  # relative gap of modes that are separated together
@@ -54,6 +55,8 @@ def solve(
     before = np.inf
     for _ in range(ROUNDS):
         form = build(member, mesh, what)
+        if form.size > MOST:
+            break
         amounts, shift = _lowest(form, count, shift)
         amounts, value, size = _polished(form, amounts)
         left_over = _left_over(form, amounts, size + low)
