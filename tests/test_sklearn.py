@@ -22,7 +22,9 @@ from sklearn.utils.estimator_checks import estimator_checks_generator
 import srcfit
 import srcfit.sklearn
 from srcfit.errors import MemberError, ReadingsError, SolveError
+from srcfit.holds import restrained
 from srcfit.sklearn import SourceRegressor
+from srcfit.view import look
 
 WIRE = {"kind": "cable", "length": "10 m", "tension": "50 N", "left": "fixed", "right": "fixed"}
 BEAM = {
@@ -343,6 +345,20 @@ def test_a_member_that_nothing_holds_keeps_its_free_motion():
     np.testing.assert_allclose(
         model.source_, 1e4 * np.cos(2 * pi * middles(model) / 10), atol=300
     )  # fmt: skip
+
+
+def test_free_motions_are_measured_by_the_response_at_two_places():
+    """A rigid line through 1 at one place and 0 at the other, whatever else is asked."""
+    free = srcfit.make_member(
+        {"kind": "beam", "length": "10 m", "bending_stiffness": "30 MN*m^2", "left": "free",
+         "right": "free"}
+    )  # fmt: skip
+    view = look(free, "response", 20)
+    a, b = (s.at for s in restrained(free)[0].supports)
+    x = np.linspace(0, 10, 7)
+    lines = np.column_stack([(x - b) / (a - b), (x - a) / (b - a)])
+    np.testing.assert_allclose(view.rows(x)[1], lines, atol=1e-10)
+    np.testing.assert_allclose(view.rows(x[3:4])[1], lines[3:4], atol=1e-10)
 
 
 def test_a_settled_pin_of_a_beam_that_can_still_turn_stays_where_it_is():
