@@ -15,14 +15,18 @@ import numpy as np
 from numpy.typing import NDArray
 
 from srcfit.case.model import Case
+from srcfit.elimination import Elimination, eliminate
 from srcfit.forward import Forward
 from srcfit.grid import overlap, spread
 from srcfit.member import Array
-from srcfit.problem import Questions
+from srcfit.problem import Grid, Questions
+from srcfit.state import Matrix
 from srcfit.units import factor
 from srcfit.unknowns import Column
 
 CURRIE = 1.6448536269514722  # one-sided 5 % point of the normal distribution
+RAYLEIGH = 2.447746830680816  # 5 % point of the modulus of two normal errors
+RICE = 3.9297882418563925  # modulus that exceeds RAYLEIGH with 95 % probability
 
 
 @dataclass(frozen=True)
@@ -31,26 +35,45 @@ class Asked:
 
     Attributes
     ----------
-    questions : Questions, q rows
+    questions : Questions
+        q rows; of complex amplitudes 2 q: those of the real parts, then those of the imaginary.
     blocks : mapping block name -> slice (total, zones, lumped, nuisances, background, reactions,
-        cells)
-    constant : (q,) known part (SI) added to each answer
+        nulls, cells), within the first q rows
+    constant : (q,) known part (SI) added to each answer, complex for complex amplitudes
     factor, shift : (q,) user unit = (SI + shift) * factor
     """
 
     questions: Questions
     blocks: Mapping[str, slice]
-    constant: Array
+    constant: Matrix
     factor: Array
     shift: Array
 
+    @property
+    def parts(self) -> int:
+        """Rows of each question: 2 for complex amplitudes."""
+        return len(self.questions.cells) // len(self.constant)
 
-def ask(forward: Forward) -> Asked:
-    """Line up every question of the case."""
+    def together(self, values: Array) -> Matrix:
+        """Values of all rows as one number a question, the known part left out."""
+        if self.parts == 1:
+            return values
+        real, imaginary = values.reshape(2, -1)
+        return np.asarray(real + 1j * imaginary)
+
+    def widest(self, values: Array) -> Array:
+        """The larger one of both parts (an sd), (q,)."""
+        return np.asarray(values.reshape(self.parts, -1).max(axis=0))
+
+
+def ask(forward: Forward, balanced: Elimination | None = None) -> Asked:
+    """Line up every question of the case; `balanced` is what `eliminate` gives."""
+    balanced = eliminate(forward) if balanced is None else balanced
     case, grid = forward.case, forward.grid
     m, k = forward.A.shape[1], forward.B.shape[1]
     lumped = [i for i, c in enumerate(forward.columns) if c.kind == "lumped"]
     nuisances = [i for i, c in enumerate(forward.columns) if c.kind == "nuisance"]
+    nulls = [i for i, c in enumerate(forward.columns) if c.kind == "null"]
     total_unit = per(case.source.total_unit, case.member.kind.total_unit)
     density_unit = per(case.source.unit, case.member.kind.source_unit)
     parts: list[tuple[str, Any, Any, Any, Any, Any]] = []
@@ -69,22 +92,34 @@ def ask(forward: Forward) -> Asked:
     units = [per(r.unit, r.si_unit) for r in forward.reactions]
     rows = forward.reaction_cells, forward.reaction_columns
     parts.append(("reactions", *rows, forward.reaction_known, units, 0.0))
+    parts.append(("nulls", np.zeros((len(nulls), m)), np.eye(k)[nulls], 0.0, 1.0, 0.0))
     parts.append(("cells", np.eye(m), np.zeros((m, k)), 0.0, density_unit, 0.0))
-    return _joined(parts)
+    return _joined(parts, balanced, forward.grid)
 
 
-def _joined(parts: list[tuple[str, Any, Any, Any, Any, Any]]) -> Asked:
+def _joined(
+    parts: list[tuple[str, Any, Any, Any, Any, Any]], balanced: Elimination, grid: Grid
+) -> Asked:
     blocks, start = {}, 0
     for name, cells, *_ in parts:
         blocks[name] = slice(start, start + len(cells))
         start += len(cells)
-    spread_out = [
-        np.concatenate([np.broadcast_to(np.asarray(p[i], float), len(p[1])) for p in parts])
+    constant, size, shift = (
+        np.concatenate([np.broadcast_to(np.asarray(p[i]), len(p[1])) for p in parts])
         for i in (3, 4, 5)
-    ]
-    cells = np.concatenate([p[1] for p in parts])
-    columns = np.concatenate([p[2] for p in parts])
-    return Asked(Questions(cells, columns), blocks, *spread_out)
+    )
+    cells, columns = (np.concatenate([p[i] for p in parts]) for i in (1, 2))
+    cells, columns, known = balanced.apply(cells, columns)
+    constant = constant + known
+    if grid.parts == 2:
+        constant = constant.astype(complex)
+        cells, columns = _both(cells), _both(columns)
+    return Asked(Questions(cells, columns), blocks, constant, np.real(size), np.real(shift))
+
+
+def _both(rows: Matrix) -> Array:
+    """Rows on complex amplitudes as rows on their real and imaginary parts."""
+    return np.asarray(np.block([[rows.real, -rows.imag], [rows.imag, rows.real]]))
 
 
 def _nuisance_units(columns: list[Column]) -> tuple[list[float], list[float]]:
@@ -158,17 +193,20 @@ def peak(middles: Array, estimate: Array, lower: Array, upper: Array, free: NDAr
     }
 
 
-def detection(name: str, value: float | None, sd: float | None) -> dict[str, Any]:
+def detection(
+    name: str, value: float | None, sd: float | None, imaginary: float | None = None
+) -> dict[str, Any]:
     """Critical level and detection limit of one part, 5 % error of either kind.
 
+    Of a complex amplitude the modulus is judged (Rayleigh and Rice distributions).
     Source: Currie (1968), Analytical Chemistry 40, 586; ISO 11929.
     """
     if value is None or sd is None:
         return {"name": name, "critical": None, "limit": None, "detected": None}
-    critical = CURRIE * sd
-    return {
-        "name": name, "critical": critical, "limit": 2 * critical, "detected": value > critical,
-    }  # fmt: skip
+    critical, limit, size = CURRIE * sd, 2 * CURRIE * sd, value
+    if imaginary is not None:
+        critical, limit, size = RAYLEIGH * sd, RICE * sd, float(np.hypot(value, imaginary))
+    return {"name": name, "critical": critical, "limit": limit, "detected": size > critical}
 
 
 def verdict(kept: float, level: float) -> str:

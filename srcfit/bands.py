@@ -251,13 +251,16 @@ def _cautious(
 
 
 def _density(fr: Frame, variation: Array) -> Array:
-    """Source density on the free cells, the constant included."""
+    """Source density on the free cells, the constant and what balances the rest included."""
     f = variation if fr.balanced is None else fr.balanced @ variation
-    if not fr.problem.constant:
-        return f
-    constants = fr.problem.grid.constants
-    amounts = fr.solve @ (fr.Ud - fr.UA @ variation)
-    return np.asarray(f + constants @ amounts[: constants.shape[1]])
+    amounts, along = fr.solve @ (fr.Ud - fr.UA @ variation), fr.problem.along
+    if along is not None:
+        k = along.shape[1] - 1
+        f = f + (along[:, :-1] @ amounts[len(amounts) - k :] + along[:, -1])[fr.free]
+    if fr.problem.constant:
+        constants = fr.problem.grid.constants
+        f = f + constants @ amounts[: constants.shape[1]]
+    return np.asarray(f)
 
 
 def _mean_level(fr: Frame, density: Array) -> float:

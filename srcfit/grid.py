@@ -39,6 +39,7 @@ def make_grid(case: Case) -> Grid:
         free,
         tuple((z.start, z.end) for z in source.zones),
         source.breaks,
+        2 if member.driven else 1,
     )
 
 

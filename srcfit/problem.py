@@ -98,6 +98,9 @@ class Problem:
         True when the noise is stated; False: s is unknown and integrated out.
     places : (n,) or None
         Place of each row along the member [m], for folds of neighbours (None: row order).
+    along : (m, k + 1) or None
+        Density that each column of `B`, and at last what is known, adds to the source to balance
+        it (singular members); `B` and `d` hold its response already.
     """
 
     A: Array
@@ -111,6 +114,7 @@ class Problem:
     pseudo: int = 0
     stated: bool = True
     places: Array | None = None
+    along: Array | None = None
 
 
 @dataclass(frozen=True)

@@ -19,7 +19,7 @@ ORDER = (
     "errors", "unit_names", "units", "member", "members", "case.model", "readings.model",
     "problem", "recovery", "case", "readings", "state", "influence", "holds", "quantities",
     "nulls", "kernel", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen", "sensors", "grid",
-    "unknowns", "forward", "view", "whitening", "priors", "solvers", "criteria", "evidence",
+    "unknowns", "forward", "view", "elimination", "whitening", "priors", "solvers", "criteria", "evidence",
     "noise", "bands", "answers", "balance", "checks", "solve", "results",
     "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report", "recover",
     "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "start",

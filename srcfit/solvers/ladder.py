@@ -142,6 +142,8 @@ class Ladder:
         if problem.constant:
             shapes = np.hstack([problem.grid.constants, self.frame.extra])
             f += shapes @ self.unpenalised[: shapes.shape[1]]
+        if problem.along is not None:
+            f += (problem.along[:, :-1] @ self.columns + problem.along[:, -1:])[self.frame.free]
         out[self.frame.free] = f
         return out
 
