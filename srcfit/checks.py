@@ -18,6 +18,7 @@ from srcfit.member import Array
 SURE = 0.001  # probability below which a residual pattern is called more than chance
 DISAGREE = 30.0  # ratio of strengths between criteria that is worth a sentence
 TOLD = 0.5  # share of the answer that the readings should tell
+BLURRED = 20.0  # how much worse a nuisance is told than with the source known
 CLOSED = 1e-6  # relative gap of the balance that is rounding
 
 
@@ -50,8 +51,11 @@ def noise(chi_square: float, dof: float, stated: bool) -> list[Finding]:
     return []
 
 
-def correlated(forward: Forward, standardised: Array) -> list[Finding]:
-    """Lag-1 correlation of the standardised residuals along the member, group by group."""
+def correlated(forward: Forward, standardised: Array, lag: Array) -> list[Finding]:
+    """Lag-1 correlation of the standardised residuals along the member, group by group.
+
+    `lag` is what the noise was already modelled with; the residuals are whitened by it.
+    """
     found = []
     x = forward.readings.x[forward.rows]
     for g, name in enumerate(forward.groups):
@@ -61,15 +65,15 @@ def correlated(forward: Forward, standardised: Array) -> list[Finding]:
         n = len(e)
         if n < 10 or not e.any():
             continue
-        lag = float((e[1:] * e[:-1]).sum() / (e**2).sum())
-        if lag > 3.1 / np.sqrt(n):  # one-sided, one in a thousand for independent noise
+        seen = float((e[1:] * e[:-1]).sum() / (e**2).sum())
+        if seen > 3.1 / np.sqrt(n):  # one-sided, one in a thousand for independent noise
             found.append(
                 Finding(
                     "residuals-correlated", "caution",
                     f"Neighbouring residuals of {name!r} resemble each other (lag-1 correlation "
-                    f"{lag:.2f} over {n} readings): independent noise is a poor description and "
-                    "the intervals are too narrow; state `correlation` for the group, or look for "
-                    "something the member lacks.",
+                    f"{seen:.2f} over {n} readings, beyond the {lag[g]:.2f} that was modelled): "
+                    "the intervals are too narrow; give the group `correlation = \"estimate\"`, "
+                    "or look for something the member lacks.",
                 )
             )  # fmt: skip
     return found
@@ -91,7 +95,9 @@ def outliers(forward: Forward, standardised: Array) -> list[Finding]:
         Finding(
             "outlier", "caution",
             f"{len(far)} of {n} readings lie more than {bound:.1f} standard deviations from the "
-            f"fit ({lines}{more}): look at them and exclude what is not a reading.",
+            f"fit ({lines}{more}): look at them; exclude what is not a reading, but a source "
+            "sharper than the smooth part allows looks the same and wants a lumped part or "
+            "breaks there.",
         )
     ]  # fmt: skip
 
@@ -164,6 +170,32 @@ def inseparable(forward: Forward, groups: Sequence[Sequence[str]]) -> list[Findi
     ]  # fmt: skip
 
 
+def nearly_inseparable(
+    names: Sequence[str], sd: Sequence[float | None], alone: Sequence[float]
+) -> list[Finding]:
+    """Nuisances that the readings tell far worse than they would if the source were known.
+
+    `sd` is that of the answer, `alone` that with the source known; both in one unit.
+    """
+    weak = [
+        f"{name} (known to {own:.2g} of what it is told to now)"
+        for name, own in (
+            (n, a / s) for n, s, a in zip(names, sd, alone, strict=True) if s is not None and s > 0
+        )
+        if own < 1 / BLURRED
+    ]
+    if not weak:
+        return []
+    return [
+        Finding(
+            "nearly-inseparable", "caution",
+            "Nearly inseparable from the source: " + _listed(weak) + "; with the source known the "
+            "readings would tell it at least that much better, so part of it may stand in the "
+            "source and the other way round; state it, or add a reading that sees only one.",
+        )
+    ]  # fmt: skip
+
+
 def _listed(names: Sequence[str]) -> str:
     words = list(names)
     return words[0] if len(words) == 1 else ", ".join(words[:-1]) + " and " + words[-1]
@@ -203,7 +235,8 @@ def exclusions(forward: Forward) -> list[Finding]:
     reasons: dict[str, int] = {}
     for used, reason in zip(forward.readings.used, forward.readings.reason, strict=True):
         if not used:
-            reasons[reason] = reasons.get(reason, 0) + 1
+            kind = reason.partition(" (")[0]
+            reasons[kind] = reasons.get(kind, 0) + 1
     if not reasons:
         return []
     total = sum(reasons.values())

@@ -50,7 +50,7 @@ class Forward:
     known : (n,) response to ambient, prescribed amounts and known parts
     sd : (n,) stated standard deviation, nan where it is to be estimated
     group : (n,) number of each reading's group in `groups`
-    lag : (g,) lag-1 correlation of each group
+    lag : (g,) lag-1 correlation of each group, nan where it is to be estimated
     order : (n,) position of each reading in its group's sequence along the member
     reactions : tuple of q Reaction; `reaction_cells` (q, m), `reaction_columns` (q, k),
         `reaction_known` (q,)
@@ -86,6 +86,11 @@ class Forward:
     def driven(self) -> bool:
         """Whether everything is a complex amplitude (kernels may be real all the same)."""
         return self.case.member.driven
+
+    @property
+    def places(self) -> Array:
+        """Place of each used reading [m], (n,)."""
+        return np.asarray(self.readings.x[self.rows], dtype=float)
 
     def specs(self) -> list[ColumnSpec]:
         """The column spec of each used reading."""

@@ -110,7 +110,7 @@ class Support:
 
 @dataclass(frozen=True)
 class Hinge:
-    """A hinge (order 4): moment = spring * jump of the rotation."""
+    """A hinge (order 4): moment = -spring * jump of the rotation (sagging positive)."""
 
     at: float
     spring: float = 0.0

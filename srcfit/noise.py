@@ -115,8 +115,14 @@ def restricted(problem: Problem) -> float:
     Comparable between whitenings W of the same readings once ln|det W| is added.
     """
     fr, found = _weighed(problem)
-    best = max(float(w.log_evidence.max()) for w in found)
-    average = sum(float(np.exp(w.log_evidence - best).sum()) for w in found)
+    if found:
+        best = max(float(w.log_evidence.max()) for w in found)
+        average = sum(float(np.exp(w.log_evidence - best).sum()) for w in found)
+    else:
+        left = problem.d - fr.U @ fr.Ud
+        energy = float(left @ left)
+        best = -0.5 * (energy if problem.stated else fr.nu * float(np.log(energy)))
+        average = 1.0
     N = unpenalised(problem) / fr.norms
     sizes = np.linalg.svd(N, compute_uv=False)[: fr.U.shape[1]]
     return float(best + np.log(average) - np.log(sizes).sum() - np.log(fr.norms).sum())
@@ -128,7 +134,10 @@ def _families(problem: Problem) -> tuple[tuple[Family, ...], Array]:
 
 
 def _weighed(problem: Problem) -> tuple[Frame, list[Weighted]]:
+    """The problem under a few families; none where it has no smooth part."""
     fr = frame(problem)
+    if not len(fr.free):
+        return fr, []
     families, drawn = _families(problem)
     keys = [SCALE, *((f.base, f.length) for f in families)]
     products = bases(fr, keys, route(fr))
@@ -139,6 +148,9 @@ def _weighed(problem: Problem) -> tuple[Frame, list[Weighted]]:
 def _residuals(problem: Problem) -> tuple[Array, Array]:
     """Evidence-averaged squared residuals and hat values of the readings."""
     fr, found = _weighed(problem)
+    if not found:
+        left = (problem.d - fr.U @ fr.Ud)[: fr.readings]
+        return left**2, (fr.U[: fr.readings] ** 2).sum(axis=1)
     squares, spent = np.zeros(fr.readings), np.zeros(fr.readings)
     for w in found:
         ladder = penalised(w.spectrum, w.sigma**-2.0)

@@ -131,7 +131,7 @@ def _findings(
         found += checks.noise(fit["chi_square"], fit["dof"], solved.problem.stated)
     told = np.where(np.isfinite(answers.fit.standardised), answers.fit.standardised, 0.0)
     found += checks.outliers(forward, told)
-    found += checks.correlated(forward, told)
+    found += checks.correlated(forward, told, solved.lag)
     if (
         solved.choice is not None
         and solved.ladder is not None
@@ -143,6 +143,7 @@ def _findings(
         found += checks.disagreement(
             {name: known(c.strength) for name, c in solved.choices.items() if c.index >= 0}
         )
+    found += _nuisances(solved)
     names = [z.name for z in case.source.zones]
     found += checks.told(
         names, shown.shares("zones") if solved.problem.smooth else [None] * len(names)
@@ -167,6 +168,15 @@ def estimate(solved: Solved) -> tuple[Array | None, Array]:
         beta[where] = solved.answers.value[blocks[block]]
     told = np.isfinite(f).all() and np.isfinite(beta).all()
     return (f if told else None), beta
+
+
+def _nuisances(solved: Solved) -> list[Finding]:
+    """Nuisances that the source blurs."""
+    where = [i for i, c in enumerate(solved.forward.columns) if c.kind == "nuisance"]
+    sd = solved.answers.sd[solved.asked.blocks["nuisances"]]
+    alone = 1 / np.linalg.norm(solved.problem.B[:, where], axis=0) * solved.answers.fit.noise
+    names = [solved.forward.columns[i].name for i in where]
+    return checks.nearly_inseparable(names, [known(v) for v in sd], list(alone))
 
 
 def _balance(solved: Solved) -> list[Finding]:

@@ -159,13 +159,13 @@ def reading_units(solved: Solved) -> tuple[Array, Array]:
 
 def recoloured(solved: Solved, white: Array) -> Array:
     """Residuals in SI from whitened ones: the correlation put back."""
-    forward, out = solved.forward, white.copy()
+    forward, lag, out = solved.forward, solved.lag, white.copy()
     x = forward.readings.x[forward.rows]
-    for g in np.flatnonzero(forward.lag):
+    for g in np.flatnonzero(lag):
         members = np.flatnonzero(forward.group == g)
         members = members[np.argsort(x[members], kind="stable")]
         for before, here in pairwise(members):
-            keep = forward.lag[g]
+            keep = lag[g]
             out[here] = keep * out[before] + np.sqrt(1 - keep**2) * white[here]
     result: Array = out * solved.sd
     return result
@@ -305,14 +305,15 @@ def noise_facts(solved: Solved, chi_square: float | None, dof: float | None) -> 
         members = np.flatnonzero(forward.group == g)
         row = forward.rows[members[0]]
         estimated = bool(~np.isfinite(forward.sd[members]).all())
-        sd = float(np.median(solved.sd[members])) * scale[row]
+        sd = float(np.median(solved.sd[members]) * scale[row])
         groups.append(
             {
                 "group": name,
                 "kind": forward.readings.kind[row],
-                "sd": sd * (solved.answers.fit.noise if not solved.problem.stated else 1.0),
+                "sd": sd * (1.0 if solved.problem.stated else float(solved.answers.fit.noise)),
                 "unit": forward.readings.unit[row],
                 "estimated": estimated,
+                "correlation": float(solved.lag[g]),
             }
         )
     ratio = None
@@ -375,7 +376,7 @@ def _limit(solved: Solved, shown: Shown) -> dict[str, Any] | None:
         return facts | {"estimate": None, "probability": None, "verdict": None}
     size = zone_sizes(case)[index] if limit.density else 1.0
     per_size = per(unit, si) / per(source.total_unit, kind.total_unit) / size
-    estimate, sd = n.value * per_size, n.sd * per_size
+    estimate, sd = float(n.value * per_size), float(n.sd * per_size)
     from scipy.special import ndtr, stdtr
 
     ratio = (at_most - estimate) / sd

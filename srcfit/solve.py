@@ -19,6 +19,7 @@ from srcfit.eigen import modes
 from srcfit.errors import SolveError
 from srcfit.forward import Forward, build
 from srcfit.member import Array, Member
+from srcfit.noise import estimate_lag, estimate_noise
 from srcfit.priors import Family, family
 from srcfit.problem import Grid, Problem
 from srcfit.readings.model import Readings
@@ -35,7 +36,8 @@ class Solved:
 
     Attributes
     ----------
-    sd : (n,) standard deviation of each used reading that the problem was whitened with (SI)
+    sd, lag : (n,), (g,) standard deviation of each used reading (SI) and lag-1 correlation of each
+        group that the problem was whitened with
     asked, answers : the questions and their answers (SI)
     ladder : Ladder of the chosen solver, roughness 1 where it is averaged; None without a
         smooth part
@@ -46,6 +48,7 @@ class Solved:
     forward: Forward
     problem: Problem
     sd: Array
+    lag: Array
     asked: Asked
     answers: Answers
     ladder: Ladder | None
@@ -67,8 +70,8 @@ def solve(case: Case, readings: Readings, *, criteria: bool = True) -> Solved:
         When there are too few readings, or the chosen criterion has nothing to say.
     """
     forward = build(case, readings)
-    sd = noise_sd(forward)
-    problem = whitened(forward, sd)
+    sd, lag = noise_of(forward)
+    problem = whitened(forward, sd, lag)
     asked = ask(forward)
     strength = case.strength
     smooth = problem.smooth and bool(problem.grid.free.any())
@@ -85,17 +88,35 @@ def solve(case: Case, readings: Readings, *, criteria: bool = True) -> Solved:
     else:
         centre = None if choice is None or ladder is None else (ladder, choice.index)
         answers = cautious(problem, asked.questions, level=strength.level, centre=centre)
-    return Solved(forward, problem, sd, asked, answers, ladder, choices, choice)
+    return Solved(forward, problem, sd, lag, asked, answers, ladder, choices, choice)
 
 
-def noise_sd(forward: Forward) -> Array:
-    """Standard deviation of each reading: stated, or a first guess where it is to be estimated."""
-    sd = forward.sd.copy()
+def noise_of(forward: Forward) -> tuple[Array, Array]:
+    """Standard deviations (n,) and lag-1 correlations (g,) to whiten with: stated or estimated.
+
+    Where one common sd is all that is unknown, any first guess serves: bands integrate it out.
+    """
+    sd, lag = forward.sd.copy(), forward.lag.copy()
     unknown = ~np.isfinite(sd)
     if unknown.any():
         size = np.abs(forward.y[unknown])
         sd[unknown] = max(float(np.median(size)), float(size.max()) * 1e-3) or 1.0
-    return sd
+    numbers = np.unique(forward.group[unknown])
+    asked = np.isnan(lag)
+    lag[asked] = 0.0
+    if len(numbers) > 1 or (len(numbers) == 1 and not unknown.all()):
+        problem = whitened(forward, sd, lag)
+        rows = np.full(len(problem.d), -1, dtype=np.intp)
+        rows[: len(sd)] = np.where(unknown, np.searchsorted(numbers, forward.group), -1)
+        factors = estimate_noise(problem, rows)
+        found = factors[np.clip(rows[: len(sd)], 0, None)]
+        sd = np.where(unknown & np.isfinite(found), sd * found, sd)
+    if asked.any():
+        sizes = np.bincount(forward.group, minlength=len(lag)).astype(np.intp)
+        lag = np.where(
+            asked, estimate_lag(lambda trial: whitened(forward, sd, trial), sizes, asked), lag
+        )
+    return sd, lag
 
 
 def _ladder(case: Case, forward: Forward, problem: Problem) -> Ladder:

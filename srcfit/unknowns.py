@@ -140,6 +140,6 @@ def stack(rows: Sequence[Matrix], n: int) -> Matrix:
 
 
 def lags(specs: list[ColumnSpec], groups: tuple[str, ...]) -> Array:
-    """Stated lag-1 correlation of each group (0 where it is to be estimated)."""
+    """Stated lag-1 correlation of each group, nan where it is to be estimated, (g,)."""
     stated: dict[str, Any] = {s.group: s.correlation for s in specs}
-    return np.array([0.0 if stated[g] == "estimate" else float(stated[g]) for g in groups])
+    return np.array([np.nan if stated[g] == "estimate" else float(stated[g]) for g in groups])
