@@ -18,12 +18,12 @@ ROOT = Path(srcfit.__file__).parent
 ORDER = (
     "errors", "unit_names", "units", "member", "members", "case.model", "readings.model",
     "problem", "recovery", "case", "readings", "state", "influence", "holds", "quantities",
-    "nulls", "kernel", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen", "sensors", "grid",
-    "unknowns", "forward", "view", "elimination", "whitening", "priors", "solvers", "criteria", "evidence",
-    "noise", "bands", "answers", "balance", "checks", "solve", "results",
+    "nulls", "kernel", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen", "sensors",
+    "grid", "unknowns", "forward", "view", "elimination", "whitening", "priors", "solvers",
+    "criteria", "evidence", "noise", "bands", "answers", "balance", "checks", "solve", "results",
     "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report", "recover",
-    "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "start",
-    "plan", "rehearse", "series", "compare", "sklearn", "cli", "__main__",
+    "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "start", "plan",
+    "rehearse", "series", "compare", "sklearn", "cli", "__main__",
 )  # fmt: skip
 
 # rooms that a module below them in the list may open inside a function
