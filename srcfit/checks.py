@@ -171,27 +171,25 @@ def inseparable(forward: Forward, groups: Sequence[Sequence[str]]) -> list[Findi
 
 
 def nearly_inseparable(
-    names: Sequence[str], sd: Sequence[float | None], alone: Sequence[float]
+    names: Sequence[str], units: Sequence[str], sd: Sequence[float | None], alone: Sequence[float]
 ) -> list[Finding]:
     """Nuisances that the readings tell far worse than they would if the source were known.
 
-    `sd` is that of the answer, `alone` that with the source known; both in one unit.
+    `sd` is that of the answer, `alone` that with the source known; both in the unit given.
     """
     weak = [
-        f"{name} (known to {own:.2g} of what it is told to now)"
-        for name, own in (
-            (n, a / s) for n, s, a in zip(names, sd, alone, strict=True) if s is not None and s > 0
-        )
-        if own < 1 / BLURRED
+        f"{name} (sd {s:.2g} {unit}; {a:.1g} {unit} if the source were known)"
+        for name, unit, s, a in zip(names, units, sd, alone, strict=True)
+        if s is not None and s > BLURRED * a
     ]
     if not weak:
         return []
     return [
         Finding(
             "nearly-inseparable", "caution",
-            "Nearly inseparable from the source: " + _listed(weak) + "; with the source known the "
-            "readings would tell it at least that much better, so part of it may stand in the "
-            "source and the other way round; state it, or add a reading that sees only one.",
+            "Nearly inseparable from the source: " + _listed(weak) + "; part of it may stand in "
+            "the source, and the other way round, so state it or add a reading that sees only one "
+            "of them.",
         )
     ]  # fmt: skip
 

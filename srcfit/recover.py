@@ -143,7 +143,7 @@ def _findings(
         found += checks.disagreement(
             {name: known(c.strength) for name, c in solved.choices.items() if c.index >= 0}
         )
-    found += _nuisances(solved)
+    found += _nuisances(solved, shown)
     names = [z.name for z in case.source.zones]
     found += checks.told(
         names, shown.shares("zones") if solved.problem.smooth else [None] * len(names)
@@ -170,13 +170,20 @@ def estimate(solved: Solved) -> tuple[Array | None, Array]:
     return (f if told else None), beta
 
 
-def _nuisances(solved: Solved) -> list[Finding]:
+def _nuisances(solved: Solved, shown: Shown) -> list[Finding]:
     """Nuisances that the source blurs."""
-    where = [i for i, c in enumerate(solved.forward.columns) if c.kind == "nuisance"]
-    sd = solved.answers.sd[solved.asked.blocks["nuisances"]]
-    alone = 1 / np.linalg.norm(solved.problem.B[:, where], axis=0) * solved.answers.fit.noise
-    names = [solved.forward.columns[i].name for i in where]
-    return checks.nearly_inseparable(names, [known(v) for v in sd], list(alone))
+    columns = [c for c in solved.forward.columns if c.kind == "nuisance"]
+    by_name = dict(zip(solved.problem.names, solved.problem.B.T, strict=False))
+    factor = np.abs(solved.asked.factor[solved.asked.blocks["nuisances"]])
+    noise = solved.answers.fit.noise
+    alone = [
+        f * noise / max(float(np.linalg.norm(by_name[c.name])), 1e-300)
+        for c, f in zip(columns, factor, strict=True)
+    ]
+    sd = [n.sd for n in shown.numbers("nuisances")]
+    return checks.nearly_inseparable(
+        [c.name for c in columns], [c.unit for c in columns], sd, alone
+    )
 
 
 def _balance(solved: Solved) -> list[Finding]:
