@@ -301,6 +301,19 @@ def test_errors(member, count, words):
         srcfit.modes(member, count)
 
 
+def test_a_missed_mode_is_noticed(monkeypatch):
+    from srcfit import eigen
+
+    def careless(member, count, what, finer):
+        form, value, amounts = whole(member, count + 1, what, finer)
+        return form, np.delete(value, 3), np.delete(amounts, 3, axis=1)
+
+    whole = eigen.solve
+    monkeypatch.setattr(eigen, "solve", careless)
+    with pytest.raises(MemberError, match="the first 6 modes could not be found for certain"):
+        srcfit.modes(unit_beam("clamped", "free"), 6)
+
+
 def test_places_off_the_member():
     with pytest.raises(MemberError, match=r"x = 1\.5 m is not on the member"):
         srcfit.modes(unit_beam("free", "free"), 3).functions(np.array([0.2, 1.5]))
