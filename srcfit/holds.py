@@ -11,6 +11,7 @@ from srcfit.member import RIGID, Member, Restraint, Support
 from srcfit.state import Chain, Matrix, chain, operator
 
 SINGULAR = 1e-9
+ADDED = "hold"  # word of a support that was added to a member nothing holds
 
 
 def null_states(line: Chain, both: Bases) -> Matrix:
@@ -63,7 +64,11 @@ def restraint_forces(lines: Influence) -> tuple[list[str], Matrix]:
         if end.rotation.stiffness != 0:
             names.append(f"{word}.rotation")
             columns.append(-side * state[:, 2])
-    for number, interval in enumerate(support_intervals(lines.chain), start=1):
+    number = 0
+    for support, interval in zip(member.supports, support_intervals(lines.chain), strict=True):
+        if support.word == ADDED:  # carries nothing and is nobody's question
+            continue
+        number += 1
         names.append(f"support.{number}")
         inside = np.array([interval]), np.array([interval + 1])
         step = lines.ahead(inside[1])[0] - lines.after(inside[0])[0]
@@ -140,6 +145,6 @@ def restrained(member: Member) -> tuple[Member, Matrix | None, Chain | None]:
         column = left[:, best]
         left = left - np.outer(column, column.conj() @ left) / (np.abs(column) ** 2).sum()
         added.append(float(line.x[best]))
-    held = tuple(Support(at, "hold", Restraint(RIGID)) for at in added)
+    held = tuple(Support(at, ADDED, Restraint(RIGID)) for at in added)
     supports = tuple(sorted((*member.supports, *held), key=lambda s: s.at))
     return replace(member, supports=supports), modes, line

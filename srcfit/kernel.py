@@ -167,7 +167,7 @@ def respond(
         found = found + strength * at_nodes(lines, np.array([place]), component)[:, 0]
     names, columns = restraint_forces(lines)
     given = dict(prescribed(member))
-    for name, column in zip(*_own(member, held, names, columns), strict=True):
+    for name, column in zip(names, columns.T, strict=True):
         found = found + _known(given[name]) * column
     if modes is not None:
         found = _complement(member, line, found, f, loads, at, (quantity, x, t, weight))
@@ -176,21 +176,6 @@ def respond(
         result = result + member.ambient
     answer: Matrix = result
     return answer
-
-
-def _own(member: Member, held: Member, names: list[str], columns: Matrix) -> tuple[list[str], Any]:
-    """Restraint columns of the member's own supports, renumbered without the added holds."""
-    own, kept, number = [], [], 0
-    for name, column in zip(names, columns.T, strict=True):
-        if name.startswith("support."):
-            support = held.supports[int(name[8:]) - 1]
-            if support not in member.supports:
-                continue
-            number += 1
-            name = f"support.{number}"
-        own.append(name)
-        kept.append(column)
-    return own, kept
 
 
 def _load(member: Member, item: tuple[Any, ...]) -> tuple[float, Any, int]:

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from srcfit.errors import ReadingsError
 from srcfit.grid import cell_weights
-from srcfit.holds import restrained, restraint_forces
+from srcfit.holds import ADDED, restrained, restraint_forces
 from srcfit.influence import influence, interval_integrals
 from srcfit.kernel import prescribed
 from srcfit.member import RIGID, Array, End, Member, Profile, Restraint, Unknown
@@ -63,19 +63,16 @@ class View:
         lines = influence(line, functionals(line, self.quantity, x))
         cells = np.add.reduceat(interval_integrals(lines), self._first(line.x), axis=1)
         known, columns = np.zeros(len(x)), [np.zeros((len(x), 0))]
-        names, forces = restraint_forces(lines)
-        # holds that were added to a free member carry no force
-        holds = {f"support.{i}": s.at for i, s in enumerate(held.supports, 1)
-                 if s not in self.member.supports}  # fmt: skip
-        own = forces[:, [name not in holds for name in names]]
-        for (_, amount), column in zip(prescribed(self.member), own.T, strict=True):
+        forces = restraint_forces(lines)[1]
+        for (_, amount), column in zip(prescribed(self.member), forces.T, strict=True):
             if isinstance(amount, Unknown):
                 columns.append(column[:, None])
             else:
                 known += amount * column
         if modes is not None:
             nulls = Nulls(self.member, line)
-            at = nulls.value(np.array(list(holds.values())))
+            holds = [s.at for s in held.supports if s.word == ADDED]
+            at = nulls.value(np.array(holds))
             columns.append(nulls.read(self.quantity, x) @ np.linalg.inv(at).T)
         return cells, np.hstack(columns), known
 

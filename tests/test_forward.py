@@ -233,3 +233,17 @@ def test_convergence_of_stepped_sources(tmp_path):
         errors.append(np.abs(found - exact).max())
     rates = np.log2(np.array(errors[:-1]) / np.array(errors[1:]))
     assert (np.abs(rates - 2) < 0.15).all(), (errors, rates)
+
+
+def test_settled_pin_of_a_turning_beam(tmp_path):
+    """A beam on one pin can turn: its settled pin is still the one that is settled."""
+    member = {
+        "kind": "beam", "length": "12 m", "bending_stiffness": "20 MN*m^2", "left": "free",
+        "right": "free", "support": [{"at": "8 m", "kind": "pinned", "settlement": "30 mm"}],
+    }  # fmt: skip
+    columns = [{"column": "w", "kind": "deflection", "unit": "mm", "sd": "0.1 mm"}]
+    rows = [(x, 1.0) for x in (1.0, 3.0, 8.0, 9.5, 11.0)]
+    case = case_of(tmp_path, member, columns, rows, {"unit": "kN/m", "cells": 12})
+    forward = build(case, srcfit.read(case))
+    at = list(forward.readings.x[forward.rows]).index(8.0)
+    assert forward.known[at] == pytest.approx(0.03, rel=1e-12)
