@@ -489,7 +489,7 @@ def test_small_simulation_holds():
         "step at the middle",
     ]
     found = {
-        member: simulation.simulate(member, 12, 12, rng, shapes)
+        member: simulation.simulate(member, 12, 8, rng, shapes)
         for member in ("conductor mL = 4", "pinned beam")
     }
     for tallies in found.values():

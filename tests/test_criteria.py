@@ -132,7 +132,7 @@ def test_discrepancy_is_silent_when_the_noise_is_out_of_reach():
 def test_risk_estimates_the_risk_without_bias():
     """Mean over draws of the unbiased risk against the mean squared error of the fit."""
     estimated, true = [], []
-    for seed in range(200):
+    for seed in range(100):
         pb = cable(seed, nuisance=False)
         clean = cable(seed, noise=1e-12, nuisance=False)
         u = clean.d * np.abs(clean.A).max() ** -1 * np.abs(pb.A).max()
@@ -140,7 +140,7 @@ def test_risk_estimates_the_risk_without_bias():
         estimated.append(CRITERIA["risk"](la))
         fit = pb.d[:, None] - la.residuals
         true.append(((fit - u[:, None]) ** 2).sum(axis=0))
-    spread = np.std(np.array(estimated) - true, axis=0) / np.sqrt(200)
+    spread = np.std(np.array(estimated) - true, axis=0) / np.sqrt(100)
     difference = np.mean(np.array(estimated) - true, axis=0)
     assert (np.abs(difference) < 4 * spread).all()
 
