@@ -166,16 +166,20 @@ def zone_sizes(case: Case) -> Array:
     return np.array(sizes, dtype=float)
 
 
-def peak(middles: Array, estimate: Array, lower: Array, upper: Array, free: NDArray[np.bool_]) -> (
-    dict[str, float] | None
-):  # fmt: skip
+def peak(
+    middles: Array, estimate: Array, lower: Array, upper: Array, free: NDArray[np.bool_],
+    imaginary: Array | None = None,
+) -> dict[str, float] | None:  # fmt: skip
     """Peak of the smooth part: largest |estimate|, interval [largest lower, largest upper].
 
     Its places are all x whose upper bound reaches the largest lower bound. All in one unit;
-    None where there is no smooth part or no band.
+    None where there is no smooth part or no band. Of complex amplitudes the places are judged by
+    the modulus, and the interval is that of either part.
     """
     if not free.any() or not np.isfinite(lower[free]).all():
         return None
+    if imaginary is not None:
+        return _complex_peak(middles[free], estimate[free], imaginary[free], upper[free])
     x, f = middles[free], estimate[free]
     best = int(np.argmax(np.abs(f)))
     turn = -1.0 if f[best] < 0 else 1.0
@@ -187,6 +191,21 @@ def peak(middles: Array, estimate: Array, lower: Array, upper: Array, free: NDAr
         "value": float(f[best]),
         "lower": float(bound[0]),
         "upper": float(bound[1]),
+        "position": float(x[best]),
+        "position_lower": float(places.min()),
+        "position_upper": float(places.max()),
+    }
+
+
+def _complex_peak(x: Array, real: Array, imaginary: Array, upper: Array) -> dict[str, float]:
+    half, size = upper - real, np.hypot(real, imaginary)
+    best = int(np.argmax(size))
+    places = x[size + half >= (size - half).max()]
+    return {
+        "value": float(real[best]),
+        "lower": float(real[best] - half[best]),
+        "upper": float(real[best] + half[best]),
+        "imaginary": float(imaginary[best]),
         "position": float(x[best]),
         "position_lower": float(places.min()),
         "position_upper": float(places.max()),

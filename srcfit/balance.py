@@ -16,22 +16,25 @@ from srcfit.forward import Forward
 from srcfit.grid import overlap, spread
 from srcfit.influence import deflect
 from srcfit.kernel import prescribed
-from srcfit.member import Array, Unknown
-from srcfit.state import operator
+from srcfit.member import Unknown
+from srcfit.state import Matrix, operator
 from srcfit.unknowns import restraint_label
 
 
 @dataclass(frozen=True)
 class Balance:
-    """Source, reactions and loss in SI total units; `gap` is relative to the largest of them."""
+    """Source, reactions and loss in SI total units; `gap` is relative to the largest of them.
 
-    source: float
-    reactions: float
-    loss: float
+    Complex amplitudes where the member is driven; the loss is then what bedding and inertia take.
+    """
+
+    source: Any
+    reactions: Any
+    loss: Any
     gap: float
 
 
-def balance(forward: Forward, f: Array, beta: Array) -> Balance:
+def balance(forward: Forward, f: Matrix, beta: Matrix) -> Balance:
     """Sum up what a source f (m,) with unknowns beta (k,) does to the member (SI)."""
     line, member = forward.line, forward.case.member
     u = _response(forward, f, beta)
@@ -39,14 +42,18 @@ def balance(forward: Forward, f: Array, beta: Array) -> Balance:
     rate = (k["q"] if "q" in k else k["p0"]) / np.where(
         line.weights > 0, member.area(line.places), 1
     )
-    loss = float(np.real((line.weights * rate * u).sum()))
-    put_in = float((forward.grid.weights * f).sum()) + _known_total(forward)
+    loss = (line.weights * rate * u).sum()
+    put_in = (forward.grid.weights * f).sum() + _known_total(forward)
     put_in += sum(b for b, c in zip(beta, forward.columns, strict=True) if c.kind == "lumped")
     every = forward.reaction_cells @ f + forward.reaction_columns @ beta + forward.reaction_known
     held = [r.kind != "moment" for r in forward.reactions]
-    out = float(np.real(every[held].sum()))
-    size = max(abs(put_in), abs(out), abs(loss), 1e-300)
-    return Balance(put_in, out, loss, abs(put_in - out - loss) / size)
+    out = every[held].sum()
+    if not forward.driven:
+        put_in, out, loss = (float(np.real(v)) for v in (put_in, out, loss))
+    # what cancels in sums is measured by what goes into them
+    size = float((forward.grid.weights * np.abs(f)).sum()) + abs(_known_total(forward))
+    size = max(abs(put_in), abs(out), abs(loss), size, 1e-300)
+    return Balance(put_in, out, loss, float(abs(put_in - out - loss) / size))
 
 
 def _known_total(forward: Forward) -> float:
@@ -61,14 +68,14 @@ def _known_total(forward: Forward) -> float:
     )
 
 
-def _response(forward: Forward, f: Array, beta: Array) -> NDArray[Any]:
-    """Response less the ambient at the Gauss places of the chain, null modes left out."""
+def _response(forward: Forward, f: Matrix, beta: Matrix) -> NDArray[Any]:
+    """Response less the ambient at the Gauss places of the chain, free motions included."""
     case, line = forward.case, forward.line
     member = case.member
     amount = {c.name: b for c, b in zip(forward.columns, beta, strict=True)}
     middle = (line.x[1:] + line.x[:-1]) / 2
     cell = np.clip(np.searchsorted(forward.grid.edges, middle) - 1, 0, len(f) - 1)
-    density = f[cell].astype(np.result_type(f, float))
+    density = f[cell].astype(np.result_type(f, beta, float))
     points: list[tuple[float, Any]] = []
     for part in case.source.known:
         if part.start == part.end:
@@ -89,6 +96,14 @@ def _response(forward: Forward, f: Array, beta: Array) -> NDArray[Any]:
     states = states + _held(forward, amount)
     own = np.einsum("kij,kj->ki", line.inner, spread_out)
     found: NDArray[Any] = np.einsum("ksd,kd->ks", line.stages, states) + own
+    if forward.nulls is not None:
+        motion = np.array([b for b, c in zip(beta, forward.columns, strict=True)
+                           if c.kind == "null"])  # fmt: skip
+        # the free member has no node pairs where the other one is held
+        mine = np.diff(forward.nulls.free.x) > 0
+        own = np.einsum("d,dks->ks", motion, forward.nulls.at[:, mine])
+        found = found.astype(np.result_type(found, own))
+        found[np.diff(line.x) > 0] += own
     return found
 
 

@@ -14,6 +14,7 @@ from srcfit.balance import Balance
 from srcfit.errors import Finding
 from srcfit.forward import Forward
 from srcfit.member import Array
+from srcfit.state import Matrix
 
 SURE = 0.001  # probability below which a residual pattern is called more than chance
 DISAGREE = 30.0  # ratio of strengths between criteria that is worth a sentence
@@ -51,7 +52,7 @@ def noise(chi_square: float, dof: float, stated: bool) -> list[Finding]:
     return []
 
 
-def correlated(forward: Forward, standardised: Array, lag: Array) -> list[Finding]:
+def correlated(forward: Forward, standardised: Matrix, lag: Array) -> list[Finding]:
     """Lag-1 correlation of the standardised residuals along the member, group by group.
 
     `lag` is what the noise was already modelled with; the residuals are whitened by it.
@@ -62,10 +63,10 @@ def correlated(forward: Forward, standardised: Array, lag: Array) -> list[Findin
         members = np.flatnonzero(forward.group == g)
         members = members[np.argsort(x[members], kind="stable")]
         e = standardised[members]
-        n = len(e)
+        n = len(e) * (2 if forward.driven else 1)
         if n < 10 or not e.any():
             continue
-        seen = float((e[1:] * e[:-1]).sum() / (e**2).sum())
+        seen = float((e[1:] * e[:-1].conj()).real.sum() / (np.abs(e) ** 2).sum())
         if seen > 3.1 / np.sqrt(n):  # one-sided, one in a thousand for independent noise
             found.append(
                 Finding(

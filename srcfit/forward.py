@@ -182,7 +182,7 @@ def _enough(case: Case, n: int, columns: list[Column]) -> None:
 def _lines(
     case: Case, readings: Readings, rows: NDArray[np.int64], specs: list[ColumnSpec], grid: Grid
 ) -> tuple[Chain, list[list[Term]], Nulls | None, tuple[Reaction, ...], Matrix]:
-    """Functionals of all used sensors and of all reactions on one chain, what they read of nulls."""
+    """Functionals of all used sensors and of all reactions, and what they read of null modes."""
     member = case.member
     held, modes, _ = restrained(member)
     jumps = [p for p, _, _ in special_places(held)]

@@ -245,7 +245,7 @@ def _split(both: Bases, node: NDArray[np.int64], jumps: Matrix) -> tuple[Matrix,
         half = both.Y.shape[2]
         return np.zeros((0, half)), np.zeros((0, half))
     system = np.concatenate([both.W[node], -both.Y[node]], axis=2)
-    found = np.linalg.solve(system, jumps[:, :, None].astype(system.dtype))[:, :, 0]
+    found = np.linalg.solve(system, jumps[:, :, None])[:, :, 0]
     half = both.Y.shape[2]
     return found[:, :half], found[:, half:]
 

@@ -154,8 +154,8 @@ def _sums(forward: Forward, f: Array, beta: Matrix) -> dict[str, float]:
     found = balance(forward, f, beta)
     amounts = {"source": found.source, "reactions": found.reactions, "along": found.loss,
                "difference": found.source - found.reactions - found.loss}  # fmt: skip
-    unit = case.source.total_unit
-    return {k: float(shown(v, unit, case.member.kind.total_unit)) for k, v in amounts.items()}
+    unit, si = case.source.total_unit, case.member.kind.total_unit
+    return {k: float(shown(np.real(v), unit, si)) for k, v in amounts.items()}
 
 
 def _reactions(case: Case, forward: Forward, f: Array, beta: Matrix) -> list[dict[str, Any]]:

@@ -15,6 +15,7 @@ from srcfit.case.model import Case
 from srcfit.case.vary import vary
 from srcfit.eigen import modes
 from srcfit.errors import Finding
+from srcfit.facts import facts, fit_facts
 from srcfit.forward import along
 from srcfit.influence import at_nodes
 from srcfit.member import Array
@@ -23,8 +24,6 @@ from srcfit.readings.model import Readings
 from srcfit.recovery import Pictures, Recovery
 from srcfit.results import (
     Shown,
-    facts,
-    fit_facts,
     known,
     ladder_table,
     reading_units,
@@ -34,6 +33,8 @@ from srcfit.results import (
     zones_table,
 )
 from srcfit.solve import Solved, solve, strength_unit
+from srcfit.state import Matrix
+from srcfit.whitening import together
 
 PICTURED_MODES = 6
 PICTURED_RUNGS = 60
@@ -113,7 +114,9 @@ def _properties(solved: Solved) -> tuple[Array, Mapping[str, Array], Mapping[str
 
 def _all(solved: Solved) -> Array:
     """Answers in SI, known parts included."""
-    values: Array = solved.answers.value + solved.asked.constant
+    constant = solved.asked.constant
+    both = [constant.real, constant.imag][: solved.asked.parts]
+    values: Array = solved.answers.value + np.concatenate(both)
     return values
 
 
@@ -129,8 +132,8 @@ def _findings(
         found += checks.few(len(forward.rows), len(forward.columns) + int(solved.problem.constant))
     if fit["chi_square"] is not None and fit["dof"] is not None:
         found += checks.noise(fit["chi_square"], fit["dof"], solved.problem.stated)
-    told = np.where(np.isfinite(answers.fit.standardised), answers.fit.standardised, 0.0)
-    found += checks.outliers(forward, told)
+    told = together(forward, np.nan_to_num(answers.fit.standardised))
+    found += checks.outliers(forward, np.maximum(np.abs(told.real), np.abs(told.imag)))
     found += checks.correlated(forward, told, solved.lag)
     if (
         solved.choice is not None
@@ -158,14 +161,15 @@ def _findings(
     return found
 
 
-def estimate(solved: Solved) -> tuple[Array | None, Array]:
+def estimate(solved: Solved) -> tuple[Matrix | None, Matrix]:
     """Densities (m,) and unknowns (k,) of the estimate in SI; None where undetermined."""
     forward, blocks = solved.forward, solved.asked.blocks
-    f = np.where(forward.grid.free, solved.answers.value[blocks["cells"]], 0.0)
-    beta = np.zeros(len(forward.columns))
-    for block, kind in (("lumped", "lumped"), ("nuisances", "nuisance")):
+    value = solved.asked.together(solved.answers.value) + solved.asked.constant
+    f = np.where(forward.grid.free, value[blocks["cells"]], 0.0)
+    beta = np.zeros(len(forward.columns), dtype=value.dtype)
+    for block, kind in (("lumped", "lumped"), ("nuisances", "nuisance"), ("nulls", "null")):
         where = [i for i, c in enumerate(forward.columns) if c.kind == kind]
-        beta[where] = solved.answers.value[blocks[block]]
+        beta[where] = value[blocks[block]]
     told = np.isfinite(f).all() and np.isfinite(beta).all()
     return (f if told else None), beta
 
@@ -189,7 +193,7 @@ def _nuisances(solved: Solved, shown: Shown) -> list[Finding]:
 def _balance(solved: Solved) -> list[Finding]:
     forward = solved.forward
     f, beta = estimate(solved)
-    if f is None or forward.balance is not None:
+    if f is None:
         return []
     source = forward.case.source
     scale = per(source.total_unit, forward.case.member.kind.total_unit)
@@ -218,9 +222,10 @@ def _pictures(solved: Solved) -> Pictures:
         cut = ladder.solver != "tikhonov"
         size = 1.0 if cut else strength_unit(case, ladder.family)[1]
         strengths = ladder.strengths[pick] * size
-        rungs = ladder.estimates[:, pick].T * unit
+        cells = len(forward.grid.free)
+        rungs = ladder.estimates[:cells, pick].T * unit
         totals = (
-            ladder.answers(solved.asked.questions)[0, pick] + solved.asked.constant[0]
+            ladder.answers(solved.asked.questions)[0, pick] + solved.asked.constant[0].real
         ) * total
         fits = np.zeros((len(pick), len(forward.rows)))
         for i, rung in enumerate(pick):
@@ -251,11 +256,11 @@ def _predicted(solved: Solved, residual: Array) -> Array:
 def _curves(solved: Solved) -> dict[str, Array]:
     """Predicted reading of each used sensor kind along the member (SI); datum offsets left out.
 
-    Empty where the readings do not determine the source, and on members with null modes.
+    Empty where the readings do not determine the source; real parts of complex amplitudes.
     """
     forward = solved.forward
     f, beta = estimate(solved)
-    if f is None or forward.balance is not None:
+    if f is None:
         return {}
     member, curves = forward.case.member, {}
     for spec in {s.kind: s for s in forward.specs()}.values():

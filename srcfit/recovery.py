@@ -21,12 +21,17 @@ Array = NDArray[np.float64]
 
 @dataclass(frozen=True)
 class Number:
-    """A value with its standard deviation and interval, in the user's unit; None: undetermined."""
+    """A value with its standard deviation and interval, in the user's unit; None: undetermined.
+
+    Of a driven member `value` is the real part; sd and the interval's half-width hold for either.
+    """
 
     value: float | None
     sd: float | None
     lower: float | None
     upper: float | None
+    imaginary: float | None = None
+    driven: bool = False
 
 
 @dataclass(frozen=True)

@@ -16,6 +16,7 @@ from srcfit.bands import Answers, cautious, plain
 from srcfit.case.model import Case
 from srcfit.criteria import CRITERIA, Choice, choose
 from srcfit.eigen import modes
+from srcfit.elimination import eliminate
 from srcfit.errors import SolveError
 from srcfit.forward import Forward, build
 from srcfit.member import Array, Member
@@ -25,7 +26,7 @@ from srcfit.problem import Grid, Problem
 from srcfit.readings.model import Readings
 from srcfit.solvers import SOLVERS
 from srcfit.solvers.ladder import Ladder
-from srcfit.whitening import whitened
+from srcfit.whitening import parts_of, sequences, whitened
 
 MOST_MODES = 100
 
@@ -55,6 +56,11 @@ class Solved:
     choices: Mapping[str, Choice]
     choice: Choice | None
 
+    @property
+    def readings(self) -> int:
+        """Number of rows that are readings: complex ones count twice."""
+        return len(self.problem.d) - self.problem.pseudo
+
 
 def solve(case: Case, readings: Readings, *, criteria: bool = True) -> Solved:
     """Invert a case.
@@ -70,9 +76,10 @@ def solve(case: Case, readings: Readings, *, criteria: bool = True) -> Solved:
         When there are too few readings, or the chosen criterion has nothing to say.
     """
     forward = build(case, readings)
+    balanced = eliminate(forward)
     sd, lag = noise_of(forward)
-    problem = whitened(forward, sd, lag)
-    asked = ask(forward)
+    problem = whitened(forward, sd, lag, balanced)
+    asked = ask(forward, balanced)
     strength = case.strength
     smooth = problem.smooth and bool(problem.grid.free.any())
     wanted = criteria or strength.choose != "averaged" or strength.solver != "tikhonov"
@@ -106,13 +113,18 @@ def noise_of(forward: Forward) -> tuple[Array, Array]:
     lag[asked] = 0.0
     if len(numbers) > 1 or (len(numbers) == 1 and not unknown.all()):
         problem = whitened(forward, sd, lag)
+        group = np.where(unknown, np.searchsorted(numbers, forward.group), -1)
         rows = np.full(len(problem.d), -1, dtype=np.intp)
-        rows[: len(sd)] = np.where(unknown, np.searchsorted(numbers, forward.group), -1)
+        reading = parts_of(forward)[0]
+        rows[: len(reading)] = group[reading]
         factors = estimate_noise(problem, rows)
-        found = factors[np.clip(rows[: len(sd)], 0, None)]
+        found = factors[np.clip(group, 0, None)]
         sd = np.where(unknown & np.isfinite(found), sd * found, sd)
     if asked.any():
-        sizes = np.bincount(forward.group, minlength=len(lag)).astype(np.intp)
+        sizes = np.ones(len(lag), dtype=np.intp)  # one more than there are pairs of neighbours
+        for g, members in sequences(forward):
+            whole = forward.driven and forward.specs()[members[0]].component is None
+            sizes[g] += (len(members) - 1) * (2 if whole else 1)
         lag = np.where(
             asked, estimate_lag(lambda trial: whitened(forward, sd, trial), sizes, asked), lag
         )

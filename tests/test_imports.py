@@ -21,8 +21,8 @@ ORDER = (
     "nulls", "kernel", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen", "sensors",
     "grid", "unknowns", "forward", "view", "elimination", "whitening", "priors", "solvers",
     "criteria", "evidence", "noise", "bands", "answers", "balance", "checks", "solve", "results",
-    "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report", "recover",
-    "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "start", "plan",
+    "facts", "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report",
+    "recover", "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "start", "plan",
     "rehearse", "series", "compare", "sklearn", "cli", "__main__",
 )  # fmt: skip
 

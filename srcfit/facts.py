@@ -1,0 +1,201 @@
+"""The mapping of summary.json, in the user's units."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+import numpy as np
+
+from srcfit.answers import detection, peak, per, verdict, zone_sizes
+from srcfit.results import Shown, known, number_map, position_scale, reading_units
+from srcfit.solve import Solved, strength_unit
+from srcfit.unknowns import place_text, response_unit
+
+
+def facts(
+    solved: Solved, shown: Shown, findings: Sequence[Mapping[str, str]], seed: Any, version: str
+) -> dict[str, Any]:
+    """The mapping of summary.json."""
+    forward = solved.forward
+    case = forward.case
+    source = case.source
+    fit = fit_facts(solved)
+    lumped: list[dict[str, Any]] = [
+        {"name": c.name, "at": None if p.at is None else p.at * position_scale(solved)}
+        | dict[str, Any](number_map(n))
+        for c, p, n in zip(
+            [c for c in forward.columns if c.kind == "lumped"], source.lumped,
+            shown.numbers("lumped"), strict=True,
+        )
+    ]  # fmt: skip
+    zones = zone_facts(solved, shown)
+    readings = forward.readings
+    return {
+        "schema": 1,
+        "version": version,
+        "title": case.title,
+        "units": {
+            "position": source.position_unit, "source": source.unit, "total": source.total_unit,
+            "response": response_unit(case), "strength": _strength_facts(solved)[1],
+        },
+        "strength": _strength_facts(solved)[0],
+        "noise": noise_facts(solved, fit["chi_square"], fit["dof"]),
+        "fit": fit,
+        "total": number_map(shown.numbers("total")[0]),
+        "zones": zones,
+        "background": next((number_map(n) for n in shown.numbers("background")), None),
+        "peak": _peak(solved, shown),
+        "lumped": lumped,
+        "nuisances": [
+            {"name": c.name} | number_map(n) | {"unit": c.unit}
+            for c, n in zip(
+                [c for c in forward.columns if c.kind == "nuisance"], shown.numbers("nuisances"),
+                strict=True,
+            )
+        ],
+        "reactions": reaction_facts(solved, shown),
+        "limit": _limit(solved, shown),
+        "detection": [
+            detection(p["name"], p["value"], p["sd"], p.get("imaginary"))
+            for p in [*lumped, *zones]
+        ],
+        "findings": list(findings),
+        "excluded": [
+            {"file": readings.file[i], "line": int(readings.line[i]), "reason": readings.reason[i]}
+            for i in np.flatnonzero(~readings.used)
+        ],
+        "inputs": [{"file": f, "sha256": h} for f, h in readings.inputs.items()],
+        "level": case.strength.level,
+        "seed": seed,
+        "cautions": list(case.member.kind.cautions),
+    }  # fmt: skip
+
+
+def _strength_facts(solved: Solved) -> tuple[dict[str, Any], str]:
+    case, choice, ladder = solved.forward.case, solved.choice, solved.ladder
+    unit, scale = ("1", 1.0)
+    if ladder is not None and ladder.solver == "tikhonov":
+        unit, scale = strength_unit(solved.forward.case, ladder.family)
+    values = {
+        name: (c.strength * scale if c.index >= 0 else None) for name, c in solved.choices.items()
+    }
+    return {
+        "solver": case.strength.solver,
+        "choose": case.strength.choose,
+        "value": None if choice is None else choice.strength * scale,
+        "effective_dof": known(solved.answers.fit.effective_dof),
+        "choices": values,
+    }, unit
+
+
+def fit_facts(solved: Solved) -> dict[str, Any]:
+    """How many readings, and how they fit."""
+    forward = solved.forward
+    chi_square = float((np.abs(solved.answers.fit.residual) ** 2).sum())
+    if not solved.problem.stated:
+        chi_square /= solved.answers.fit.noise**2 if solved.answers.fit.noise else 1.0
+    return {
+        "read": len(forward.readings),
+        "used": len(forward.rows),
+        "chi_square": known(chi_square),
+        # of a complex reading both parts count
+        "dof": known(solved.readings - solved.answers.fit.effective_dof),
+    }
+
+
+def noise_facts(solved: Solved, chi_square: float | None, dof: float | None) -> dict[str, Any]:
+    """Stated or estimated noise, group by group, in the readings' units."""
+    forward = solved.forward
+    scale, _ = reading_units(solved)
+    groups = []
+    for g, name in enumerate(forward.groups):
+        members = np.flatnonzero(forward.group == g)
+        row = forward.rows[members[0]]
+        estimated = bool(~np.isfinite(forward.sd[members]).all())
+        sd = float(np.median(solved.sd[members]) * scale[row])
+        groups.append(
+            {
+                "group": name,
+                "kind": forward.readings.kind[row],
+                "sd": sd * (1.0 if solved.problem.stated else float(solved.answers.fit.noise)),
+                "unit": forward.readings.unit[row],
+                "estimated": estimated,
+                "correlation": float(solved.lag[g]),
+            }
+        )
+    ratio = None
+    if chi_square is not None and dof is not None and dof > 0:
+        ratio = float(np.sqrt(chi_square / dof))
+    return {"stated": solved.problem.stated, "scale": ratio, "groups": groups}
+
+
+def zone_facts(solved: Solved, shown: Shown) -> list[dict[str, Any]]:
+    """Zones as in summary.json."""
+    scale = position_scale(solved)
+    return [
+        {"name": z.name, "from": z.start * scale, "to": z.end * scale}
+        | number_map(n)
+        | {"data_share": share}
+        for z, n, share in zip(
+            solved.forward.case.source.zones, shown.numbers("zones"), shown.shares("zones"),
+            strict=True,
+        )
+    ]  # fmt: skip
+
+
+def reaction_facts(solved: Solved, shown: Shown) -> list[dict[str, Any]]:
+    """Reactions and end flows as in summary.json."""
+    case, scale = solved.forward.case, position_scale(solved)
+    facts = []
+    for r, n in zip(solved.forward.reactions, shown.numbers("reactions"), strict=True):
+        name = r.name
+        if name.startswith("support."):
+            name = f"support:{place_text(case, r.at)}"
+        facts.append(
+            {"name": name, "at": r.at * scale, "kind": r.kind, "unit": r.unit} | number_map(n)
+        )
+    return facts
+
+
+def _peak(solved: Solved, shown: Shown) -> dict[str, float] | None:
+    if not solved.problem.smooth:
+        return None
+    value, _, lower, upper, _ = shown.block("cells")
+    grid = solved.forward.grid
+    twin = shown.twin("cells", "imaginary").get("imaginary")
+    return peak(grid.middles * position_scale(solved), value, lower, upper, grid.free, twin)
+
+
+def _limit(solved: Solved, shown: Shown) -> dict[str, Any] | None:
+    """Verdict on the limit: `probability` is that of the limit being kept."""
+    case = solved.forward.case
+    limit = case.source.limit
+    if limit is None:
+        return None
+    index = [z.name for z in case.source.zones].index(limit.zone)
+    n = shown.numbers("zones")[index]
+    kind, source = case.member.kind, case.source
+    unit, si = (
+        (source.unit, kind.source_unit) if limit.density else (source.total_unit, kind.total_unit)
+    )
+    at_most = limit.at_most * per(unit, si)
+    facts: dict[str, Any] = {"zone": limit.zone, "at_most": at_most}
+    if n.value is None or n.sd is None:
+        return facts | {"estimate": None, "probability": None, "verdict": None}
+    size = zone_sizes(case)[index] if limit.density else 1.0
+    per_size = per(unit, si) / per(source.total_unit, kind.total_unit) / size
+    estimate, sd = float(n.value * per_size), float(n.sd * per_size)
+    from scipy.special import chndtr, ndtr, stdtr
+
+    ratio = (at_most - estimate) / sd
+    dof = solved.readings - solved.answers.fit.effective_dof
+    chance = float(ndtr(ratio) if solved.problem.stated else stdtr(max(dof, 1.0), ratio))
+    if n.imaginary is not None:  # the modulus is judged
+        other = n.imaginary * per_size
+        chance = float(chndtr((at_most / sd) ** 2, 2, (estimate**2 + other**2) / sd**2))
+        facts |= {"imaginary": other}
+    return facts | {
+        "estimate": estimate, "probability": chance,
+        "verdict": verdict(chance, case.strength.level),
+    }  # fmt: skip
