@@ -11,15 +11,18 @@ from collections.abc import Mapping, Sequence
 import numpy as np
 
 from srcfit.balance import Balance
+from srcfit.eigen import modes
+from srcfit.eigencount import number_below
 from srcfit.errors import Finding
 from srcfit.forward import Forward
-from srcfit.member import Array
+from srcfit.member import Array, Member
 from srcfit.state import Matrix
 
 SURE = 0.001  # probability below which a residual pattern is called more than chance
 DISAGREE = 30.0  # ratio of strengths between criteria that is worth a sentence
 TOLD = 0.5  # share of the answer that the readings should tell
 BLURRED = 20.0  # how much worse a nuisance is told than with the source known
+CLOSE = 0.05  # relative distance of eigenvalues (twice that of frequencies) worth a sentence
 CLOSED = 1e-6  # relative gap of the balance that is rounding
 
 
@@ -204,13 +207,78 @@ def singular(forward: Forward) -> list[Finding]:
     """The operator has null modes."""
     if forward.balance is None:
         return []
-    order4 = forward.case.member.kind.order == 4
-    how = "move as a rigid body" if order4 else "drift to any level"
+    member = forward.case.member
+    if member.driven or member.lam:
+        return _at_eigenvalue(member)
+    how = "move as a rigid body" if member.kind.order == 4 else "drift to any level"
+    weights = forward.grid.weights * forward.grid.free
+    rows = forward.balance[:, : len(weights)]
+    off = weights - np.linalg.lstsq(rows.T, weights, rcond=None)[0] @ rows
+    total = "it does no work on that motion"
+    if np.abs(off).max() <= 1e-9 * weights.max():
+        beyond = any(part.value for part in forward.case.source.known)
+        total = "its total balances the known parts" if beyond else "its total is zero"
     return [
         Finding(
             "singular-member", "caution",
-            f"Nothing holds the member, which can {how}: the source was taken as balanced (its "
-            "total is zero), and the level of the response was fitted as unknown.",
+            f"Nothing holds the member, which can {how}: the source was taken as balanced "
+            f"({total}), and the level of the response was fitted as unknown.",
+        )
+    ]  # fmt: skip
+
+
+def _at_eigenvalue(member: Member) -> list[Finding]:
+    if member.driven:
+        return [
+            Finding(
+                "resonance", "caution",
+                f"The member is driven at a natural frequency of its own, {member.frequency:.10g} "
+                "Hz, without damping: a steady response exists only where the source does no work "
+                "on that mode. The source was taken so, and the mode's amplitude was fitted as "
+                "unknown; state `damping`, or read at another frequency, to learn that part.",
+            )
+        ]  # fmt: skip
+    return [
+        Finding(
+            "singular-member", "caution",
+            f"lambda = {member.lam:.10g} is an eigenvalue of the member: a response exists only "
+            "for sources without a share in its mode. The source was taken so, and the mode's "
+            "amplitude was fitted as unknown.",
+        )
+    ]  # fmt: skip
+
+
+def resonance(forward: Forward) -> list[Finding]:
+    """A natural frequency (or an eigenvalue) close to the one at which the member is driven."""
+    member = forward.case.member
+    oscillating = member.driven and member.kind.drive == "inertia" and "r" in member.profiles
+    target = member.omega**2 if oscillating else member.lam
+    if forward.balance is not None or target == 0:
+        return []
+    reach = CLOSE * abs(target)
+    count = number_below(member, target + 1.0001 * reach)
+    values = modes(member, max(count, 1)).eigenvalues
+    near = values[np.argmin(np.abs(values - target))]
+    off = abs(float(near / target) - 1)
+    if off > CLOSE:
+        return []
+    if not oscillating:
+        return [
+            Finding(
+                "near-eigenvalue", "caution",
+                f"lambda = {target:.6g} lies within {off:.1%} of the eigenvalue {near:.6g}: an "
+                "error of the coefficients as large as that turns the answer over.",
+            )
+        ]  # fmt: skip
+    gain = 1 / np.hypot(off, member.damping)
+    damped = "the loss factor" if member.damping > off else "that distance"
+    return [
+        Finding(
+            "near-resonance", "caution",
+            f"{member.frequency:.6g} Hz is close to the member's natural frequency "
+            f"{np.sqrt(near) / (2 * np.pi):.6g} Hz: one mode answers about {gain:.2g} times as "
+            f"strongly as at rest, and {damped} sets how much; small errors of mass, stiffness or "
+            "damping there weigh as much in the answer.",
         )
     ]  # fmt: skip
 

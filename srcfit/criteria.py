@@ -146,9 +146,10 @@ def _left_out(minus_hat: Array, residuals: Array) -> Array:
     own = np.arange(len(minus_hat))
     minus_hat[own, own] += 1
     bad = minus_hat[own, own].min(axis=(0, 1)) <= ALONE
-    pivots = np.finfo(float).eps
     for k in own:
-        np.maximum(minus_hat[k, k], pivots, out=minus_hat[k, k])
+        alone = minus_hat[k, k] <= ALONE
+        bad |= alone.any(axis=0)
+        minus_hat[k, k][alone] = 1.0
         share = minus_hat[k + 1 :, k] / minus_hat[k, k]
         minus_hat[k + 1 :, k + 1 :] -= share[:, None] * minus_hat[k, k + 1 :]
         residuals[k + 1 :] -= share * residuals[k]

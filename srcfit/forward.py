@@ -341,6 +341,13 @@ def _balance(nulls: Nulls, grid: Grid, case: Case, k: int) -> Matrix:
             rows[:, m + j] = nulls.value(np.array([lump.at]))[:, 0]
         else:
             rows[:, m + j] = nulls.mean(*spread(lump))
+    unknown = m + len(source.lumped)
+    for force, (_, amount) in zip(nulls.forces().T, prescribed(case.member), strict=True):
+        if isinstance(amount, Unknown):
+            rows[:, unknown] = force
+            unknown += 1
+        else:
+            rows[:, -1] += amount * force
     for known in source.known:
         if known.start == known.end:
             rows[:, -1] += known.value * nulls.value(np.array([known.start]))[:, 0]

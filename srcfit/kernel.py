@@ -243,6 +243,8 @@ def _complement(
     for place, (_, strength, component) in zip(nulls.free.node(at), loads, strict=True):
         part = strength * nulls.states[:, place, component] * nulls.free.scale[component]
         balance, size = balance + part, size + np.abs(part)
+    for force, (_, value) in zip(nulls.forces().T, prescribed(member), strict=True):
+        balance, size = balance + _known(value) * force, size + np.abs(_known(value) * force)
     if (np.abs(balance) > 1e-8 * np.maximum(size, 1e-300)).any():
         raise MemberError(
             "the member is free to move or drift as a whole and the source is not balanced, so "

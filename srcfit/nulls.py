@@ -6,7 +6,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from srcfit.holds import null_states
+from srcfit.holds import null_states, support_intervals
 from srcfit.influence import Influence, Term, bases, interval_integrals
 from srcfit.member import Array, Member
 from srcfit.quantities import functionals
@@ -64,3 +64,22 @@ class Nulls:
             density[real] = (phi * self.density)[mine]
             found.append(interval_integrals(lines, density).sum(axis=1))
         return np.stack(found, axis=1)
+
+    def forces(self) -> Matrix:
+        """Reactions of the null modes at restraints, (d, k), in the order of `kernel.prescribed`.
+
+        What a unit amount prescribed there does to the balance of the source.
+        """
+        member, scale = self.free.member, self.free.scale
+        last, found = len(scale) - 1, []
+        for end, node, side in ((member.left, 0, 1.0), (member.right, -1, -1.0)):
+            state = self.states[:, node] * scale
+            if end.response.stiffness != 0 and not end.axis:
+                found.append(side * state[:, last])
+            if end.rotation.stiffness != 0:
+                found.append(-side * state[:, 2])
+        for interval in support_intervals(self.free):
+            step = self.states[:, interval + 1, last] - self.states[:, interval, last]
+            found.append(step * scale[last])
+        empty = np.zeros((len(self.states), 0))
+        return np.stack(found, axis=1) if found else empty

@@ -127,6 +127,7 @@ def _findings(
     fit = fit_facts(solved)
     found = [*forward.readings.findings, *checks.exclusions(forward)]
     found += checks.singular(forward)
+    found += checks.resonance(forward)
     found += checks.inseparable(forward, undetermined(solved.problem))
     if answers.reason:
         found += checks.few(len(forward.rows), len(forward.columns) + int(solved.problem.constant))

@@ -115,7 +115,11 @@ def bend(beam, density=(), lumped=(), couples=(), degree=9, size=None, places=()
         for e in range(count - 1)
     ])  # fmt: skip
     total = first + (count - 1) * inner
-    K, F = np.zeros((total, total)), np.zeros(total)
+    middles = (nodes[1:] + nodes[:-1]) / 2
+    kind = np.result_type(float, *(
+        np.asarray(lookup(k, x)) for k in (beam.stiffness, beam.foundation) for x in middles
+    ), *(np.asarray(v(nodes)) for _, _, v in density if callable(v)))  # fmt: skip
+    K, F = np.zeros((total, total), dtype=kind), np.zeros(total, dtype=kind)
     for e, (a, b) in enumerate(itertools.pairwise(nodes)):
         here, middle, half = numbers[e], (a + b) / 2, (b - a) / 2
         x, w = gauss(a, b, degree + 1)
