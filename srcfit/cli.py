@@ -176,13 +176,25 @@ def kinds(kind: str | None, as_json: bool) -> None:
 @click.option("-o", "--output", type=click.Path(), help="A .toml file or a folder to write.")
 @click.option("--demo", is_flag=True, help="Add invented readings, so that the case runs.")
 @click.option("--seed", type=click.IntRange(min=0), default=0, help="Seed of the demo's noise.")
+@click.option("--from", "table", metavar="FILE", type=click.Path(),
+              help="Draft the case from this table of readings.")  # fmt: skip
 @REPLACE
-def new(kind: str, output: str | None, demo: bool, seed: int, replace: bool) -> None:
+def new(
+    kind: str, output: str | None, demo: bool, seed: int, table: str | None, replace: bool
+) -> None:
     """Write a commented case of this KIND to fill in (on the screen without -o).
 
     With --demo it comes with invented readings and runs as it stands; the folder is KIND-demo
     unless -o names another.
+
+    With --from FILE the columns, units and sensor kinds are guessed from a table of readings,
+    each guess marked in a remark, and what remains to fill in is listed. The table is left where
+    it is and named by its path from the case.
     """
+    if table is not None:
+        if demo:
+            raise click.UsageError("--demo and --from exclude each other")
+        return _new_from(kind, table, output, replace)
     if output is None and not demo:
         from srcfit.case.template import template
 
@@ -193,6 +205,22 @@ def new(kind: str, output: str | None, demo: bool, seed: int, replace: bool) -> 
     written = start.write(kind, output or f"{kind}-demo", demo=demo, seed=seed, replace=replace)
     for path in written:
         click.echo(path)
+
+
+def _new_from(kind: str, table: str, output: str | None, replace: bool) -> None:
+    from srcfit import draft, start
+
+    place = Path(output) if output is not None else Path()
+    folder = place.parent if place.suffix == ".toml" else place
+    found = draft.draft(kind, table, folder)
+    if output is None:
+        click.echo(found.text, nl=False)
+    else:
+        for path in start.write_text(found.text, output, replace=replace):
+            click.echo(path)
+    click.echo("Remains to fill in:", err=output is None)
+    for item in found.remaining:
+        click.echo(f"  - {item}", err=output is None)
 
 
 @cli.command(short_help="Show what a case reads and asks; solve nothing.")

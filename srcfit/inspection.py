@@ -187,13 +187,19 @@ def text(facts: Facts) -> str:
 
 def _columns_text(columns: list[Facts]) -> str:
     rows = [
-        (c["group"], c["column"], c["kind"], f"{c['used']}/{c['read']}",
+        (c["group"], _short(c["column"]), c["kind"], f"{c['used']}/{c['read']}",
          f"{_ends(c['x'])} {c['position_unit']}", f"{_ends(c['value'])} {c['unit']}",
          f"{_ends(c['sd']) if c['sd'] else 'estimated'}", c["positive"] or "",
          ", ".join(c["unknown"])) for c in columns
     ]  # fmt: skip
     header = ("group", "column", "kind", "used", "places", "values", "sd", "positive", "unknown")
     return table(header, rows, "lllrrrr")
+
+
+def _short(names: str) -> str:
+    """Names of a column, or the first and the last of many."""
+    parts = names.split(", ")
+    return names if len(parts) < 4 else f"{parts[0]} .. {parts[-1]} ({len(parts)})"
 
 
 def _ends(pair: list[float] | None) -> str:

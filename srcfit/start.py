@@ -61,6 +61,19 @@ def write(
     texts = {place.name if single else "case.toml": template(kind)}
     if demo:
         texts |= demo_texts(template(kind), seed)
+    return _written(texts, folder, single, replace)
+
+
+def write_text(text: str, place: str | Path, *, replace: bool = False) -> list[Path]:
+    """Write the text of a case to a file or into a folder, as `write` does."""
+    place = Path(place)
+    single = place.suffix == ".toml"
+    name = place.name if single else "case.toml"
+    return _written({name: text}, place.parent if single else place, single, replace)
+
+
+def _written(texts: Mapping[str, str], folder: Path, single: bool, replace: bool) -> list[Path]:
+    """Write all files or none."""
     if not single and not folder.exists():
         put(folder, lambda new: [(new / name).write_text(t, "utf-8") for name, t in texts.items()])
         return [folder / name for name in texts]

@@ -22,7 +22,8 @@ ORDER = (
     "grid", "unknowns", "forward", "view", "elimination", "whitening", "priors", "solvers",
     "criteria", "evidence", "noise", "bands", "answers", "balance", "checks", "solve", "results",
     "facts", "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report",
-    "recover", "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "start", "plan",
+    "recover", "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "draft", "start",
+    "plan",
     "rehearse", "series", "compare", "sklearn", "cli", "__main__",
 )  # fmt: skip
 

@@ -49,6 +49,11 @@ def find(text: str, si: str, difference: bool = False) -> Unit | None:
     return None
 
 
+def case_name(text: str, si: str) -> str:
+    """The name that a case file takes for a unit text of a table."""
+    return _ALSO.get(si, {}).get(text.lower(), text)
+
+
 @lru_cache(maxsize=4096)
 def known(text: str) -> bool:
     """Whether a text is a unit of any dimension (channel letters and "min" do not count)."""

@@ -11,7 +11,15 @@ from typing import Any
 
 from srcfit.errors import ReadingsError
 from srcfit.readings.table import Table, Wanted, build, matches, sniff
-from srcfit.readings.text import Cell, Lines, Records, declared_delimiter, lines_of, text_records
+from srcfit.readings.text import (
+    DELIMITERS,
+    Cell,
+    Lines,
+    Records,
+    declared_delimiter,
+    lines_of,
+    text_records,
+)
 
 _PACKED = {b"\x1f\x8b": "gzip", b"BZh": "bzip2", b"\xfd7zXZ": "xz", b"7z\xbc\xaf": "7z",
            b"%PDF": "PDF", b"\x89PNG": "PNG", b"Rar!": "RAR"}  # fmt: skip
@@ -63,18 +71,36 @@ def open_table(file: File, wanted: Wanted) -> Table:
     ReadingsError
         Not a table, or no header line with all named columns.
     """
+    whole = _whole(file, wanted)
+    if whole is not None:
+        return build(whole, wanted, file.name)
+    return text_table(lines_of(file.data, file.name), wanted, file.name)[0]
+
+
+def manners(file: File, most: int = 400) -> list[Records]:
+    """The first `most` lines of a file, parted in every way that its kind allows."""
+    whole = _whole(file, Wanted({}))
+    if whole is not None:
+        return [whole]
+    lines = lines_of(file.data, file.name)
+    head = Lines(lines.text[:most], lines.encoding, lines.ends, finished=True)
+    stated = declared_delimiter(head.text)
+    return [text_records(head, d) for d in ([stated] if stated else DELIMITERS)]
+
+
+def _whole(file: File, wanted: Wanted) -> Records | None:
+    """Records of a spreadsheet or a Parquet file; None for a text file."""
     data = file.data
     if data.startswith(b"PK\x03\x04") or data.startswith(b"\xd0\xcf\x11\xe0"):
-        return build(_spreadsheet(file, wanted), wanted, file.name)
+        return _spreadsheet(file, wanted)
     if data.startswith(b"PAR1"):
-        return build(_parquet(file), wanted, file.name)
+        return _parquet(file)
     packed = next((word for head, word in _PACKED.items() if data.startswith(head)), "")
     if packed:
         raise ReadingsError(
             f"the file is {packed}, not a table", file.name, "unpack it or export it as text (CSV)"
         )
-    lines = lines_of(data, file.name)
-    return text_table(lines, wanted, file.name)[0]
+    return None
 
 
 def text_table(lines: Lines, wanted: Wanted, name: str) -> tuple[Table, str]:

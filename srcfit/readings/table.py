@@ -234,7 +234,8 @@ def _measuring(cells: Sequence[Cell], index: Mapping[str, int], wanted: Wanted) 
     return {n: text for n, text in pairs if text}
 
 
-def _is_number(text: str) -> bool:
+def is_number(text: str) -> bool:
+    """Whether a text is a number or a place with either decimal mark."""
     for decimal in ".,":
         try:
             amount(normal(text), decimal, place=True)
@@ -247,7 +248,7 @@ def _is_number(text: str) -> bool:
 def heading(cells: Sequence[Cell], index: Mapping[str, int], wanted: Wanted) -> bool:
     """Whether a row below the names still belongs to the header block."""
     texts = _measuring(cells, index, wanted)
-    if not texts or any(_is_number(t) for t in texts.values()):
+    if not texts or any(is_number(t) for t in texts.values()):
         return False
     if any(_unit_like(t, wanted.measured[n]) for n, t in texts.items()):
         return True
@@ -350,7 +351,7 @@ class _Builder:
             self.found.line[i]
             for i, row in rows
             if len(_measuring(row, index, self.wanted)) == len(measured)
-            and all(map(_is_number, _measuring(row, index, self.wanted).values()))
+            and all(map(is_number, _measuring(row, index, self.wanted).values()))
         )
 
     def _misfits(self, rows: list[list[Cell]], unfinished: int | None) -> dict[int, str]:
