@@ -150,26 +150,62 @@ def cautious(
     fr = frame(problem)
     asked = ask(fr, questions)
     if not len(fr.free) or fr.nu == 0:
-        return _without_source(fr, asked, level)
-    drawn, known = pieces(problem.grid, zones=True), pieces(problem.grid, zones=False)
+        return without_source(fr, asked, level)
+    ground = weighed(fr)
+    if centre is None:
+        f = mean_source(ground.averaged)
+        value, fit = means(fr, asked, f), averaged_fit(ground.averaged)
+        size = mean_level(fr, _density(fr, f))
+    else:
+        ladder, at = centre
+        value, fit = ladder.answers(questions)[:, at], rung_fit(ladder, at)
+        size = mean_level(fr, ladder.estimates[fr.free, at])
+    m_c, s_c, m_0, share = _cautious(fr, asked, ground, size)
+    off = np.maximum(np.abs(value - m_c), np.abs(value - m_0))
+    parts = (value, np.sqrt(s_c**2 + off**2), m_c, m_0, s_c, share)
+    return assembled(fr, asked, parts, fit, size, level)
+
+
+@dataclass(frozen=True)
+class Ground:
+    """Families of one problem, weighed by evidence.
+
+    Attributes
+    ----------
+    averaged : list of Weighted
+        Those that the estimate is averaged over.
+    products : of `spectrum.bases`, for these and for the cautious families
+    sigma : (t,)
+    drawn, known : (m', j)
+        Pieces within which the source may step: at all edges, and at the known breaks only.
+    """
+
+    averaged: list[Weighted]
+    products: dict[tuple[str, float], Base]
+    sigma: Array
+    drawn: Array
+    known: Array
+
+
+def weighed(fr: Frame) -> Ground:
+    """Weigh the families of the estimate."""
+    cells = fr.problem.grid
+    drawn, known = pieces(cells, zones=True), pieces(cells, zones=False)
     families = estimate_families(drawn)
     keys = [SCALE, *((f.base, f.length) for f in (*families, *CAUTIOUS))]
     products = bases(fr, keys, route(fr))
     sigma = grid(fr, products)
-    if centre is None:
-        averaged = weigh([spectrum(fr, f, products, drawn) for f in families], sigma)
-        f = mean_source(averaged)
-        value, density = means(fr, asked, f), _density(fr, f)
-        fit = _averaged_fit(averaged)
-    else:
-        ladder, at = centre
-        value, density = ladder.answers(questions)[:, at], ladder.estimates[fr.free, at]
-        fit = _rung_fit(ladder, at)
-    mean_level = _mean_level(fr, density)
-    m_c, s_c, m_0, share = _cautious(fr, asked, products, sigma, mean_level, drawn, known)
-    off = np.maximum(np.abs(value - m_c), np.abs(value - m_0))
-    parts = (value, np.sqrt(s_c**2 + off**2), m_c, m_0, s_c, share)
-    return _answers(fr, asked, parts, fit, mean_level, level)
+    averaged = weigh([spectrum(fr, f, products, drawn) for f in families], sigma)
+    return Ground(averaged, products, sigma, drawn, known)
+
+
+def wary(fr: Frame, ground: Ground, size: float, steps: Array, *, spread: bool) -> list[Weighted]:
+    """The cautious families over steps within pieces, weighed above the floor of a mean level.
+
+    `spread`: with all that variances and covariances need.
+    """
+    spectra = [spectrum(fr, f, ground.products, steps, right=spread) for f in CAUTIOUS]
+    return weigh(spectra, ground.sigma, size)
 
 
 def plain(
@@ -190,7 +226,7 @@ def plain(
     ladder = tikhonov(problem, roughness=roughness)
     fr, asked = ladder.frame, ask(ladder.frame, questions)
     if not len(fr.free) or fr.nu == 0:
-        return _without_source(fr, asked, level)
+        return without_source(fr, asked, level)
     choice = choose(ladder, choose_by)
     if choice.index < 0:
         how = "choose another criterion or leave strength.choose out"
@@ -198,12 +234,12 @@ def plain(
     at, fam = choice.index, ladder.family
     products = bases(fr, [(fam.base, fam.length)], "svd")
     sp = spectrum(fr, fam, products, np.zeros((len(fr.free), 0)), right=True)
-    one = at_one(sp, choice.strength, _noise(ladder, at) ** 2)
+    one = at_one(sp, choice.strength, noise_at(ladder, at) ** 2)
     value, variance = (part[:, 0] for part in conditional(asked, one))
     sd = np.sqrt(variance)
     parts = (value, sd, value, value, sd, data_share(asked, [one]))
-    mean_level = _mean_level(fr, ladder.estimates[fr.free, at])
-    return _answers(fr, asked, parts, _rung_fit(ladder, at), mean_level, level, choice)
+    size = mean_level(fr, ladder.estimates[fr.free, at])
+    return assembled(fr, asked, parts, rung_fit(ladder, at), size, level, choice)
 
 
 def undetermined(problem: Problem) -> tuple[tuple[str, ...], ...]:
@@ -229,24 +265,14 @@ def undetermined(problem: Problem) -> tuple[tuple[str, ...], ...]:
 
 
 def _cautious(
-    fr: Frame,
-    asked: Asked,
-    products: dict[tuple[str, float], Base],
-    sigma: Array,
-    mean_level: float,
-    drawn: Array,
-    known: Array,
+    fr: Frame, asked: Asked, ground: Ground, size: float
 ) -> tuple[Array, Array, Array, Array]:
     """m_c, s_c, m_0 and the data share of each question."""
-
-    def under(steps: Array, *, spread: bool) -> list[Weighted]:
-        spectra = [spectrum(fr, f, products, steps, right=spread) for f in CAUTIOUS]
-        return weigh(spectra, sigma, mean_level)
-
-    families = under(drawn, spread=True)
+    families = wary(fr, ground, size, ground.drawn, spread=True)
     m_c, variance = moments(asked, families)
-    same = drawn.shape == known.shape
-    m_0 = m_c if same else means(fr, asked, mean_source(under(known, spread=False)))
+    m_0 = m_c
+    if ground.drawn.shape != ground.known.shape:
+        m_0 = means(fr, asked, mean_source(wary(fr, ground, size, ground.known, spread=False)))
     return m_c, np.sqrt(variance), m_0, data_share(asked, families)
 
 
@@ -263,7 +289,7 @@ def _density(fr: Frame, variation: Array) -> Array:
     return np.asarray(f)
 
 
-def _mean_level(fr: Frame, density: Array) -> float:
+def mean_level(fr: Frame, density: Array) -> float:
     """Mean of |source| over the free cells; of complex amplitudes the moduli."""
     grid = fr.problem.grid
     weights = grid.weights[grid.free]
@@ -271,7 +297,7 @@ def _mean_level(fr: Frame, density: Array) -> float:
     return float(size @ weights / weights.sum())
 
 
-def _noise(ladder: Ladder, at: int) -> float:
+def noise_at(ladder: Ladder, at: int) -> float:
     """Sd of the whitened noise at one rung: 1 where it is stated."""
     if ladder.frame.problem.stated:
         return 1.0
@@ -279,7 +305,7 @@ def _noise(ladder: Ladder, at: int) -> float:
     return float(ladder.residual_norms[at] / np.sqrt(left)) if left > ALONE else float("nan")
 
 
-def _averaged_fit(families: Sequence[Weighted]) -> Fit:
+def averaged_fit(families: Sequence[Weighted]) -> Fit:
     """Fit of the average over families and rungs."""
     ladders = tuple(penalised(w.spectrum, w.sigma**-2.0) for w in families)
     weights = tuple(w.weights for w in families)
@@ -297,19 +323,19 @@ def _averaged_fit(families: Sequence[Weighted]) -> Fit:
     return Fit(residual, left, hat, noise, ladders, weights)
 
 
-def _rung_fit(ladder: Ladder, at: int) -> Fit:
+def rung_fit(ladder: Ladder, at: int) -> Fit:
     """Fit of one rung."""
     weights = np.eye(len(ladder.strengths))[at]
     three = (ladder.residuals[:, at], ladder.leave_one_out[:, at], ladder.hat[:, at])
-    return Fit(*three, _noise(ladder, at), (ladder,), (weights,))
+    return Fit(*three, noise_at(ladder, at), (ladder,), (weights,))
 
 
-def _answers(
+def assembled(
     fr: Frame,
     asked: Asked,
     parts: tuple[Array, Array, Array, Array, Array, Array],
     fit: Fit,
-    mean_level: float,
+    size: float,
     level: float,
     choice: Choice | None = None,
 ) -> Answers:
@@ -321,7 +347,7 @@ def _answers(
         reason = f"only {fr.nu} readings beyond the unpenalised unknowns"
         sd = np.full(len(value), np.nan)
     dof = None if fr.problem.stated else fr.readings - fit.effective_dof
-    quantile = _quantile(level, dof)
+    quantile = quantile_of(level, dof)
     return Answers(
         value=value,
         sd=sd,
@@ -333,14 +359,14 @@ def _answers(
         data_share=share,
         determined=told,
         reason=reason,
-        level=mean_level,
+        level=size,
         quantile=quantile,
         fit=fit,
         choice=choice,
     )
 
 
-def _quantile(level: float, dof: float | None) -> float:
+def quantile_of(level: float, dof: float | None) -> float:
     """Two-sided normal quantile, or Student's with `dof` degrees of freedom (at least one)."""
     from scipy.special import ndtri, stdtrit
 
@@ -348,7 +374,7 @@ def _quantile(level: float, dof: float | None) -> float:
     return float(ndtri(p) if dof is None else stdtrit(max(dof, 1.0), p))
 
 
-def _without_source(fr: Frame, asked: Asked, level: float) -> Answers:
+def without_source(fr: Frame, asked: Asked, level: float) -> Answers:
     """Least squares for the unpenalised columns alone: no smooth part, or nothing left for it."""
     n = fr.readings
     residual = (fr.problem.d - fr.U @ fr.Ud)[:n]
@@ -363,4 +389,4 @@ def _without_source(fr: Frame, asked: Asked, level: float) -> Answers:
     constants = (fr.solve @ fr.Ud)[: fr.problem.grid.parts]
     uniform = float(np.linalg.norm(constants)) if fr.problem.constant else 0.0
     parts = (value, sd, value, value, sd, np.full(len(value), np.nan))
-    return _answers(fr, asked, parts, Fit(residual, residual / free, hat, noise), uniform, level)
+    return assembled(fr, asked, parts, Fit(residual, residual / free, hat, noise), uniform, level)
