@@ -56,15 +56,13 @@ def balance(forward: Forward, f: Matrix, beta: Matrix) -> Balance:
     return Balance(put_in, out, loss, float(abs(put_in - out - loss) / size))
 
 
-def _known_total(forward: Forward) -> float:
+def _known_total(forward: Forward) -> Any:
     member = forward.case.member
     ends = np.array([member.start, member.end])
-    return float(
-        sum(
-            part.value
-            * (1.0 if part.start == part.end else overlap(member, ends, part.start, part.end)[0])
-            for part in forward.case.source.known
-        )
+    return sum(
+        part.value
+        * (1.0 if part.start == part.end else overlap(member, ends, part.start, part.end)[0])
+        for part in forward.case.source.known
     )
 
 

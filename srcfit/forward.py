@@ -331,7 +331,8 @@ def _balance(nulls: Nulls, grid: Grid, case: Case, k: int) -> Matrix:
     m, source = len(grid.free), case.source
     middle = (nulls.free.x[1:] + nulls.free.x[:-1]) / 2
     cell = np.clip(np.searchsorted(grid.edges, middle) - 1, 0, m - 1)
-    rows = np.zeros((len(nulls.at), m + k + 1))
+    kind = np.result_type(float, *(part.value for part in source.known))
+    rows = np.zeros((len(nulls.at), m + k + 1), dtype=kind)
     for d, part in enumerate((nulls.at * nulls.free.weights).sum(axis=2)):
         np.add.at(rows[d, :m], cell, part)
     rows[:, :m] *= grid.free

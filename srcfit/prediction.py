@@ -107,7 +107,7 @@ def _told(value: Any) -> Any:
 def _densities(forward: Forward, parts: tuple[Known, ...]) -> Array:
     """Density on each cell (m,): stretches that overlap add up."""
     middle = forward.grid.middles
-    f = np.zeros(len(middle))
+    f = np.zeros(len(middle), dtype=np.result_type(float, *(part.value for part in parts)))
     for part in parts:
         f += np.where((middle > part.start) & (middle < part.end), part.value, 0.0)
     return f

@@ -9,6 +9,7 @@ import re
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -20,6 +21,7 @@ from srcfit.units import factor
 
 NEAR = 1e-6
 HEADER = re.compile(r"\s*([A-Za-z_]+)\s*(?:\[([^\]]*)\])?\s*")
+Amount = complex | None
 FORMS = "`from`, `to`, `value`; `at`, `strength`; or `x`, `estimate` of a source.csv"
 
 
@@ -39,11 +41,14 @@ class Trial:
 
     parts: tuple[Known, ...]
     unread: tuple[str, ...] = ()
-    amounts: Mapping[str, float] = field(default_factory=dict)
+    amounts: Mapping[str, complex] = field(default_factory=dict)
 
 
 def read_source(path: str | Path, case: Case) -> Trial:
     """Read a trial source from a comma-separated table in UTF-8.
+
+    Of a driven member ``value_imag [kN/m]`` (strength_imag, estimate_imag) beside the last of
+    these columns adds the imaginary part.
 
     Parameters
     ----------
@@ -73,12 +78,18 @@ def read_source(path: str | Path, case: Case) -> Trial:
     kind = case.member.kind
     si = {"value": kind.source_unit, "estimate": kind.source_unit, "strength": kind.total_unit}
     parts: list[Known] = []
+    twins: set[str] = set()
     for form in forms:
         columns = [_column(path, rows, name, *names[name], si.get(name, "m")) for name in form]
+        twin = f"{form[-1]}_imag"
+        if case.member.driven and twin in names:
+            imaginary = _column(path, rows, twin, *names[twin], si[form[-1]])
+            columns[-1] = [_complex(*z) for z in zip(columns[-1], imaginary, strict=True)]
+            twins.add(twin)
         parts += _parts(str(path), case.member, form, [n for n, _ in rows], columns)
     if not parts:
         raise ReadingsError("it has no rows with numbers", str(path), f"give {FORMS}")
-    taken = {name for form in forms for name in form}
+    taken = {name for form in forms for name in form} | twins
     return Trial(tuple(parts), tuple(h.strip() for h in header if _name(h) not in taken))
 
 
@@ -88,8 +99,7 @@ def _earlier(folder: Path, case: Case) -> Trial:
     place = folder / "summary.json"
     try:
         summary = json.loads(place.read_text(encoding="utf-8"))
-        rows = {row["name"]: row["value"] for row in summary["lumped"]}
-        amounts = {row["name"]: row["value"] for row in summary["nuisances"]}
+        rows, amounts = (_amounts(summary[key]) for key in ("lumped", "nuisances"))
     except (OSError, ValueError, KeyError, TypeError) as error:
         how = "give a folder that `srcfit recover` wrote, or a table"
         raise ReadingsError("it is no summary of a recovery", f"source {place}", how) from error
@@ -104,7 +114,16 @@ def _earlier(folder: Path, case: Case) -> Trial:
     return Trial((*smooth.parts, *parts), (), amounts)
 
 
-def _lumped(member: Member, part: Lumped, strength: float) -> Known:
+def _amounts(rows: list[dict[str, Any]]) -> dict[str, Any]:
+    return {row["name"]: _complex(row["value"], row.get("imaginary")) for row in rows}
+
+
+def _complex(real: Amount, imaginary: Amount) -> Amount:
+    """One complex amount of two parts; the real one alone where there is no other."""
+    return real if real is None or imaginary is None else real + 1j * imaginary
+
+
+def _lumped(member: Member, part: Lumped, strength: complex) -> Known:
     assert part.at is not None
     if part.width == 0:
         return Known(part.at, part.at, strength)
@@ -137,13 +156,13 @@ def _table(path: Path) -> tuple[list[str], list[tuple[int, list[str]]]]:
 
 def _column(
     path: str | Path, rows: list[tuple[int, list[str]]], name: str, place: int, unit: str, si: str
-) -> list[float | None]:
+) -> list[Amount]:
     """Cells of a column in SI; None where empty."""
     if not unit:
         how = f'write the unit in brackets, as in "{name} [{si}]"'
         raise ReadingsError(f'the column "{name}" has no unit', f"{path}:1", how)
     scale, offset = factor(unit, si, f'{path}:1: column "{name} [{unit}]"')
-    found: list[float | None] = []
+    found: list[Amount] = []
     for line, row in rows:
         text = row[place].strip() if place < len(row) else ""
         try:
@@ -159,10 +178,10 @@ def _column(
 
 def _parts(
     path: str, member: Member, form: tuple[str, ...], lines: list[int],
-    columns: list[list[float | None]],
+    columns: list[list[Amount]],
 ) -> Iterator[Known]:  # fmt: skip
     """Parts of one form, each row whole or empty; places checked against the member."""
-    whole: list[tuple[int, list[float]]] = []
+    whole: list[tuple[int, list[Any]]] = []
     for line, cells in zip(lines, zip(*columns, strict=True), strict=True):
         given = [c for c in cells if c is not None]
         if given and len(given) < len(form):
@@ -175,7 +194,7 @@ def _parts(
     return (_part(path, member, line, row) for line, row in whole)
 
 
-def _part(path: str, member: Member, line: int, row: list[float]) -> Known:
+def _part(path: str, member: Member, line: int, row: list[Any]) -> Known:
     start, end, value = (row[0], row[-2], row[-1])
     slack = NEAR * member.length
     if min(start, end) < member.start - slack or max(start, end) > member.end + slack:
@@ -187,7 +206,7 @@ def _part(path: str, member: Member, line: int, row: list[float]) -> Known:
     return Known(start, end, value)
 
 
-def _cells(path: str, member: Member, rows: list[tuple[int, list[float]]]) -> Iterator[Known]:
+def _cells(path: str, member: Member, rows: list[tuple[int, list[Any]]]) -> Iterator[Known]:
     """Cells whose middles are given; they have to fill the member."""
     edge = member.start
     for line, (middle, value) in rows:

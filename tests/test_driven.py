@@ -25,7 +25,7 @@ from srcfit.prediction import predict
 from srcfit.problem import Questions
 from srcfit.recover import estimate
 from srcfit.solve import solve
-from srcfit.trial import Trial
+from srcfit.trial import Trial, read_source
 from srcfit.whitening import parts_of, whitened
 
 EXPORTS = Path(__file__).parent / "exports"
@@ -326,10 +326,18 @@ def test_cuts_on_driven_members(tmp_path, solver):
 
 
 def test_predict_reads_both_parts(tmp_path):
-    case = beam_case(tmp_path, noise=0.01)
+    lumped = [{"name": "p", "at": "3 m"}]
+    case = beam_case(tmp_path, noise=0.01, lumped=lumped)
     found = predict(case, srcfit.read(case), Trial(()))
     assert (found.readings["predicted"] == 0).all()
     assert set(found.balance) == {"source", "reactions", "along", "difference"}
+    earlier = srcfit.recover(case)
+    folder = earlier.save(tmp_path / "out")
+    again = predict(case, srcfit.read(case), read_source(folder, case))
+    for name in ("predicted", "predicted_imag"):
+        wanted = earlier.readings[name]
+        np.testing.assert_allclose(again.readings[name], wanted, atol=1e-6 * wanted.abs().max())
+    assert not any("not used" in note for note in again.notes)
 
 
 # --- resonance ----------------------------------------------------------------------------------

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Literal
+from typing import Any, Literal
 
 from srcfit.member import Member, Unknown
 
@@ -147,11 +147,14 @@ class Lumped:
 
 @dataclass(frozen=True)
 class Known:
-    """A known part: a density over [start, end), or a strength at one place (start == end)."""
+    """A known part: a density over [start, end), or a strength at one place (start == end).
+
+    A real number in a case; complex where a source is tried on a driven member.
+    """
 
     start: float
     end: float
-    value: float
+    value: Any
 
 
 @dataclass(frozen=True)
