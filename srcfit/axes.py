@@ -148,6 +148,21 @@ def plot_readings(recovery: Recovery, axes: Sequence[Sequence[Axes]]) -> None:
         _legend(axes[0][0], 2)
 
 
+def plot_panel(recovery: Recovery, ax: Axes) -> None:
+    """Readings of the first kind and unit against the fit."""
+    for kind, unit_text in panels(recovery)[:1]:
+        _panel(recovery, kind, unit_text, ax)
+        ax.tick_params(labelbottom=True)
+    ax.set_xlabel(labelled("x", unit(recovery, "position")))
+    _legend(ax)
+
+
+def plot_residuals(recovery: Recovery, ax: Axes) -> None:
+    """Standardised residuals of the readings of the first kind and unit."""
+    for kind, unit_text in panels(recovery)[:1]:
+        _residuals(recovery, kind, unit_text, ax)
+
+
 def _here(recovery: Recovery, kind: str, unit_text: str) -> NDArray[np.bool_]:
     frame = recovery.readings
     pairs = zip(texts(frame, "kind"), texts(frame, "unit"), strict=True)

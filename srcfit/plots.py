@@ -17,7 +17,9 @@ from srcfit.axes import (
     plot_l_curve,
     plot_member,
     plot_modes,
+    plot_panel,
     plot_readings,
+    plot_residuals,
     plot_source,
 )
 from srcfit.captions import DESCRIPTIONS
@@ -29,8 +31,9 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
 __all__ = [
-    "FIGURES", "Drawn", "draw_all", "draw_member", "overview", "plot_influence", "plot_l_curve",
-    "plot_member", "plot_modes", "plot_readings", "plot_source", "save_figures",
+    "FIGURES", "IN_AXES", "Drawn", "draw_all", "draw_in", "draw_member", "overview",
+    "plot_influence", "plot_l_curve", "plot_member", "plot_modes", "plot_readings", "plot_source",
+    "save_figures",
 ]  # fmt: skip
 WIDTH = 7.2  # inches, all figures
 
@@ -105,6 +108,25 @@ def overview(recovery: Recovery) -> Figure:
     plot_readings(recovery, [(figure.add_subplot(inner[0]), figure.add_subplot(inner[1]))])
     figure.suptitle(plain(short(recovery.case.title, 80)), fontsize=11)
     return _tidy(figure)
+
+
+IN_AXES: dict[str, Callable[[Recovery, Axes], None]] = {
+    "member": plot_member,
+    "source": plot_source,
+    "readings": plot_panel,
+    "residuals": plot_residuals,
+    "l-curve": plot_l_curve,
+    "influence": plot_influence,
+    "modes": plot_modes,
+}
+
+
+def draw_in(recovery: Recovery, ax: Axes, what: str = "source") -> Axes:
+    """Draw one thing (a key of `IN_AXES`) into given axes and return them."""
+    if what not in IN_AXES:
+        raise ValueError(f"there is no plot of {what!r}; choose one of {', '.join(IN_AXES)}")
+    IN_AXES[what](recovery, ax)
+    return ax
 
 
 FIGURES: dict[str, Callable[[Recovery], Figure]] = {

@@ -14,6 +14,7 @@ from srcfit.case.model import Case
 
 if TYPE_CHECKING:
     import pandas as pd
+    from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
 Array = NDArray[np.float64]
@@ -108,11 +109,30 @@ class Recovery:
         """The mapping written to summary.json."""
         return dict(self.facts)
 
-    def plot(self) -> Figure:
-        """Member, source and readings in one matplotlib figure."""
-        from srcfit.plots import overview
+    def plot(self, ax: Axes | None = None, what: str = "source") -> Axes | Figure:
+        """Draw into matplotlib axes, or a figure of member, source and readings.
 
-        return overview(self)
+        Parameters
+        ----------
+        ax : Axes, optional
+            Axes to draw in.
+        what : str
+            What goes into `ax`: member, source, readings (of the first kind and unit),
+            residuals, l-curve, influence or modes.
+
+        Returns
+        -------
+        Axes or Figure
+            `ax` as it was given; without it a new figure, its axes in ``figure.axes``.
+
+        Raises
+        ------
+        ValueError
+            When `what` is none of these.
+        """
+        from srcfit.plots import draw_in, overview
+
+        return overview(self) if ax is None else draw_in(self, ax, what)
 
     def save(self, folder: str | Path, *, replace: bool = False) -> Path:
         """Write tables, summary, page and figures into `folder`, whole or not at all.

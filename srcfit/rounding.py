@@ -66,6 +66,17 @@ def plus_minus(number: Mapping[str, Any], unit: str = "") -> str:
     return minus(" ".join(t for t in (value, f"± {sd}" if sd else "", unit) if t))
 
 
+def twin(number: Mapping[str, Any], unit: str = "") -> str:
+    """Text like ``i(0.54 ± 0.98 kN)`` of a driven member's imaginary part; empty without one.
+
+    The standard uncertainty of either part is the same.
+    """
+    part = number.get("imaginary")
+    if _real(part) is None or isinstance(part, Mapping):
+        return ""
+    return f"i({plus_minus({'value': part, 'sd': number.get('sd')}, unit)})"
+
+
 def interval(number: Mapping[str, Any], unit: str = "") -> str:
     """Text like ``900.3 to 936.5 kN`` of a mapping with lower and upper."""
     sd, value = number.get("sd"), number.get("value")

@@ -7,7 +7,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 from unicodedata import category, east_asian_width
 
-from srcfit.rounding import UNDETERMINED, brief, interval, plus_minus
+from srcfit.rounding import UNDETERMINED, brief, interval, plus_minus, twin
 
 WIDTH = 96
 LEVELS = ("serious", "caution", "note")
@@ -154,17 +154,10 @@ def _numbers(summary: Summary) -> str:
 def _cells(number: Mapping[str, Any], unit: str) -> tuple[str, str]:
     told = plus_minus(number, unit)
     bounds = interval(number, unit)
-    imaginary = number.get("imaginary")
-    if imaginary is not None and told != UNDETERMINED:
-        told += f" {_twin(imaginary, unit)}"
+    beside = twin(number, unit)
+    if beside and told != UNDETERMINED:
+        told += f" and {beside}"
     return told, bounds
-
-
-def _twin(imaginary: object, unit: str) -> str:
-    """The imaginary part of a driven member's number, beside its real part."""
-    if isinstance(imaginary, Mapping):
-        return f"and i({plus_minus(imaginary, unit)})"
-    return f"and i({brief(imaginary, 4)} {unit})"
 
 
 def _at(place: float | None, unit: str) -> str:

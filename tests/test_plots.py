@@ -331,3 +331,20 @@ def test_driven_members_show_real_parts():
     upper = axes_of(replace(case, pictures=turned, readings=readings), "readings")[0]
     curve = next(line for line in upper.get_lines() if to_hex(line.get_color()) == BLUE)
     np.testing.assert_allclose(curve.get_ydata(), case.pictures.fit["deflection"] * 1e3)
+
+
+@pytest.mark.parametrize("what", plots.IN_AXES)
+def test_axes_in_and_out(beam, what):
+    from matplotlib.figure import Figure
+
+    left, right = Figure().subplots(1, 2)
+    assert beam.plot(left, what) is left
+    assert left.has_data()
+    assert not right.has_data()
+    assert left.get_xlabel() or what == "member"
+    with pytest.raises(ValueError, match="there is no plot of 'sauce'; choose one of member"):
+        beam.plot(right, "sauce")
+
+
+def test_without_axes_a_figure_comes_out(beam):
+    assert len(beam.plot().axes) == 4

@@ -2,6 +2,7 @@
 
 import hashlib
 import json
+import re
 from collections import Counter
 from pathlib import Path
 
@@ -13,7 +14,7 @@ from srcfit.readings import read
 
 EXPORTS = Path(__file__).parent / "exports"
 WANT = json.loads((EXPORTS / "want.json").read_text())
-FINDINGS = {"02": {"unit-change"}}
+FINDINGS = {"02": {"unit-change"}, "07": {"near-places"}}
 
 
 def number(value):
@@ -72,3 +73,22 @@ def test_what_was_understood_is_stated():
         "UTF-8 with a byte-order mark, LF, cells parted by commas",
     ):
         assert words in said
+
+
+def test_a_place_read_twice_with_a_slip_is_pointed_out():
+    found = read(load_case(EXPORTS / "07.toml"))
+    (finding,) = found.findings
+    a, b = map(int, re.search(r"lines (\d+) and (\d+) \(0.4 mm\)", finding.sentence).groups())
+    x = {int(n): v for n, v in zip(found.line, found.x, strict=True)}
+    assert abs(x[a] - x[b]) == pytest.approx(0.4e-3, rel=1e-6)
+
+
+@pytest.mark.parametrize("name", WANT)
+def test_every_line_with_readings_is_used_or_excluded(name):
+    """Lines that hold a reading, counted from the file itself, against the table of readings."""
+    want = WANT[name]
+    found = read(load_case(EXPORTS / f"{name}.toml"))
+    used = {int(n) for n in found.line[found.used]}
+    left = {int(n) for n in found.line[~found.used]}
+    assert len(found) == int(found.used.sum()) + sum(bool(r) for r in found.reason)
+    assert used | left == {line for line, *_ in want["used"]} | {n for n, _ in want["rejected"]}

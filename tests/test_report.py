@@ -251,7 +251,11 @@ def test_very_many_readings_are_thinned_and_said():
     assert len(data["panels"][0]["rows"]) == 4000
     assert len(data["influence"]["rows"]) == 1000
     assert len(data["ladder"]["strengths"]) * len(data["ladder"]["rows"]) <= 120_000
-    assert "the first 2000 of 6000 rows" in SECTIONS["readings"](many)
+    said = SECTIONS["readings"](many)
+    assert "the first 2000 of 6000 rows" in said
+    assert re.search(r"the charts show 4000 of \d+ used readings, evenly picked", said)
+    assert "influence lines are kept for 1000 of them" in said
+    assert "evenly picked" not in SECTIONS["readings"](fake.make("conductor", 300, 50))
 
 
 def test_figures_inside_the_page_have_no_styles_and_follow_the_theme(drawn):

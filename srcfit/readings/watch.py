@@ -21,6 +21,7 @@ _STATUS = frozenset((
 _MARKS = np.array([7999, 9999, 99999, 999999, 999.9, 999.99, 9999.9, 6999, 8888, 32767, 32768,
                    65535, 1e30, 1e20, 999])  # fmt: skip
 _RUN = 5
+_NEAR = 0.01  # of the usual distance between neighbours
 
 
 def lines_text(lines: Iterable[int]) -> str:
@@ -41,6 +42,7 @@ def findings(table: Table, batches: Sequence[Batch]) -> list[Finding]:
     ]
     for batch in batches:
         out += [*_stuck(table.name, batch), *_marks(table.name, batch)]
+        out += _near(table.name, batch)
     return [*out, *_cut(table, batches), *_time(table.name, batches)]
 
 
@@ -131,6 +133,34 @@ def _stuck(name: str, batch: Batch) -> list[Finding]:
         "stuck-readings", "caution",
         f"{name}: {batch.name!r} keeps one value in {', '.join(parts)}; check whether the channel "
         "was stuck, and leave these lines out with `exclude_lines` if so.",
+    )]  # fmt: skip
+
+
+def _near(name: str, batch: Batch) -> list[Finding]:
+    """Places that differ by far less than neighbours do: perhaps one place, measured twice."""
+    keep = used_rows(batch) & np.isfinite(batch.x)
+    x, line = batch.x[keep], batch.line[keep]
+    if len(x) < 4:
+        return []
+    order = np.argsort(x, kind="stable") if np.any(np.diff(x) < 0) else np.arange(len(x))
+    gap = np.diff(x[order])
+    apart = gap > 1e-12 * np.abs(x).max()
+    if not apart.any():
+        return []
+    close = np.flatnonzero(apart & (gap < _NEAR * np.median(gap[apart])))
+    if not len(close):
+        return []
+    parts = [
+        f"lines {min(pair)} and {max(pair)} ({1000 * gap[k]:.3g} mm)"
+        for k in close[:4]
+        for pair in [(int(line[order[k]]), int(line[order[k + 1]]))]
+    ]
+    more = f" and {len(close) - 4} more" if len(close) > 4 else ""
+    return [Finding(
+        "near-places", "note",
+        f"{name}: {batch.name!r} has readings at nearly the same place: {', '.join(parts)}{more}; "
+        "all are used as they stand. If one is a copy with a mistyped place, leave it out with "
+        "`exclude_lines`.",
     )]  # fmt: skip
 
 

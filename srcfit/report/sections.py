@@ -9,14 +9,15 @@ import numpy as np
 
 from srcfit.captions import extent, percent, source_word, unit
 from srcfit.case.model import ColumnSpec
-from srcfit.frames import number, pretty
+from srcfit.frames import flags, number, pretty
 from srcfit.member import Unknown
 from srcfit.recovery import Recovery
 from srcfit.report import tables
+from srcfit.report.data import LINES, READINGS
 from srcfit.report.html import clean, figure, listing, name, nested, safe, section
 from srcfit.report.method import CAUTIONS, method_text
 from srcfit.report.numbers import interval, minus, plus_minus, shown
-from srcfit.rounding import NO_INTERVAL, UNDETERMINED, brief
+from srcfit.rounding import NO_INTERVAL, UNDETERMINED, brief, twin
 
 LEVELS = ("serious", "caution", "note")
 
@@ -48,11 +49,15 @@ def total_sentence(recovery: Recovery) -> str:
     known = " beyond the known parts" if recovery.case.source.known else ""
     lead = f"The total {word} on this {safe(kind)} {shown(where)}{known} is "
     lead += f"<strong>{shown(amount)}</strong>"
+    if twin(total, T):
+        lead += f" in phase and <strong>{shown(twin(total, T))}</strong> a quarter cycle ahead"
     ends = interval(total, T)
     if ends == NO_INTERVAL:
         return f"{lead}; there is no interval for it."
     low, high = ends.split(" to ", 1)
-    return f"{lead}: with {percent(recovery)} confidence between {shown(low)} and {shown(high)}."
+    part = "the part in phase lies " if twin(total, T) else ""
+    where = f"{part}between {shown(low)} and {shown(high)}"
+    return f"{lead}: with {percent(recovery)} confidence {where}."
 
 
 def member_word(recovery: Recovery) -> str:
@@ -93,7 +98,7 @@ def _strip(zone: Mapping[str, Any], scale: tuple[float, float]) -> str:
 def _zone(recovery: Recovery, zone: Mapping[str, Any], scale: tuple[float, float]) -> str:
     T, P = unit(recovery, "total"), unit(recovery, "position")
     place = shown(minus(f"{brief(zone.get('from'))} to {brief(zone.get('to'))} {P}"))
-    amount = shown(plus_minus(zone, T))
+    amount = shown(f"{plus_minus(zone, T)} {twin(zone, T)}".rstrip())
     ends = interval(zone, T)
     share = number(zone.get("data_share"))
     weak = np.isfinite(share) and share < 0.5
@@ -150,9 +155,17 @@ def source(recovery: Recovery) -> str:
     """Source with its band, zones and lumped parts."""
     lead = (
         f"<p>The estimate, and the band that holds the source at any one place with "
-        f"{percent(recovery)} confidence. Dotted lines are the edges of zones.</p>"
+        f"{percent(recovery)} confidence. Dotted lines are the edges of zones."
+        f"{_driven(recovery)}</p>"
     )
     return section("source", "Source", lead + figure("source") + tables.cells(recovery))
+
+
+def _driven(recovery: Recovery) -> str:
+    """What the charts of a driven member show."""
+    if not recovery.case.member.driven:
+        return ""
+    return " The charts show real parts, in phase with the reference; the tables have both."
 
 
 def readings(recovery: Recovery) -> str:
@@ -165,8 +178,22 @@ def readings(recovery: Recovery) -> str:
             f" Their residuals are {shown(brief(scale, 3))} times as large as the noise "
             "lets expect (1 is just right)."
         )
+    lead += _thinned(recovery)
     tail = tables.noise(recovery) + tables.excluded(recovery) + tables.readings(recovery)
     return section("readings", "Readings and fit", f"<p>{lead}</p>{figure('readings')}{tail}")
+
+
+def _thinned(recovery: Recovery) -> str:
+    """What the live charts leave out of very many readings."""
+    used = int(flags(recovery.readings).sum())
+    parts = []
+    if used > READINGS:
+        parts.append(f"the charts show {READINGS} of {used} used readings, evenly picked")
+    if used > LINES:
+        parts.append(f"influence lines are kept for {LINES} of them")
+    if not parts:
+        return ""
+    return f" To keep this page small, {' and '.join(parts)}; the tables on disk have all."
 
 
 def strength(recovery: Recovery) -> str:

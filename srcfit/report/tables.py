@@ -15,6 +15,7 @@ from srcfit.report.html import Num, name, num, safe, table
 from srcfit.rounding import UNDETERMINED, brief, round_like, round_pair
 
 Row = list[str | Num]
+IMAGINARY = ("value_imag", "predicted_imag", "residual_imag")  # driven members
 
 
 def with_unit(text: str, unit_text: str) -> str:
@@ -23,19 +24,28 @@ def with_unit(text: str, unit_text: str) -> str:
     return f"{text} [{shown}]" if shown else text
 
 
-def estimate(row: Mapping[str, Any]) -> list[Num]:
-    """Cells of value, standard uncertainty and both ends of the interval, rounded together."""
+def estimate(row: Mapping[str, Any], driven: bool = False) -> list[Num]:
+    """Cells of value, standard uncertainty and both ends of the interval, rounded together.
+
+    Of a driven member the value's imaginary part stands after its real part.
+    """
     value, sd = round_pair(row.get("value"), row.get("sd"))
     cells = [num(row.get("value"), value or UNDETERMINED), num(row.get("sd"), sd)]
     for key in ("lower", "upper"):
         cells.append(num(row.get(key), round_like(row.get(key), row.get("sd"), row.get("value"))))
+    if driven:
+        part = row.get("imaginary")
+        cells.insert(1, num(part, round_like(part, row.get("sd"), row.get("value"))))
     return cells
 
 
 def estimate_heads(recovery: Recovery, unit_text: str) -> list[str]:
     """Headers of the cells of `estimate`."""
     level = percent(recovery)
-    return [with_unit("value", unit_text), "standard uncertainty", f"{level} from", f"{level} to"]
+    values = [with_unit("value", unit_text)]
+    if recovery.case.member.driven:
+        values = [with_unit("real part", unit_text), with_unit("imaginary part", unit_text)]
+    return [*values, "standard uncertainty", f"{level} from", f"{level} to"]
 
 
 def share(value: Any) -> Num:
@@ -46,16 +56,16 @@ def share(value: Any) -> Num:
 
 def zones(recovery: Recovery) -> str:
     """Zones, the whole and the background."""
-    facts, P = recovery.facts, unit(recovery, "position")
+    facts, P, driven = recovery.facts, unit(recovery, "position"), recovery.case.member.driven
     means = dict(zip(texts(recovery.zones, "name"), numbers(recovery.zones, "mean"), strict=True))
     rows: list[Row] = [
-        [name(z.get("name")), num(z.get("from")), num(z.get("to")), *estimate(z),
+        [name(z.get("name")), num(z.get("from")), num(z.get("to")), *estimate(z, driven),
          num(means.get(str(z.get("name")))), share(z.get("data_share"))]
         for z in facts.get("zones") or []
     ]  # fmt: skip
     blank: list[Num] = [num(None)] * 2
     rows.append(
-        ["whole member", *blank, *estimate(facts.get("total") or {}), num(None), num(None)]
+        ["whole member", *blank, *estimate(facts.get("total") or {}, driven), num(None), num(None)]
     )
     heads = ["zone", with_unit("from", P), with_unit("to", P)]
     heads += estimate_heads(recovery, unit(recovery, "total"))
@@ -68,14 +78,16 @@ def background(recovery: Recovery) -> str:
     row = recovery.facts.get("background")
     if not row or row.get("value") is None:
         return ""
+    driven = recovery.case.member.driven
     heads = ["part", *estimate_heads(recovery, unit(recovery, "source"))]
-    return table("table-background", "Background", heads, [["background", *estimate(row)]])
+    return table("table-background", "Background", heads, [["background", *estimate(row, driven)]])
 
 
 def lumped(recovery: Recovery) -> str:
     """Lumped parts with their places."""
+    driven = recovery.case.member.driven
     rows: list[Row] = [
-        [name(r.get("name")), num(r.get("at")), *estimate(r)]
+        [name(r.get("name")), num(r.get("at")), *estimate(r, driven)]
         for r in recovery.facts.get("lumped") or []
     ]
     heads = ["lumped part", with_unit("at", unit(recovery, "position"))]
@@ -85,11 +97,12 @@ def lumped(recovery: Recovery) -> str:
 
 def with_own_units(recovery: Recovery, key: str, caption: str, first: Sequence[str]) -> str:
     """A table of estimates that carry their own unit: nuisances, reactions."""
+    driven = recovery.case.member.driven
     rows: list[Row] = []
     for r in recovery.facts.get(key) or []:
         lead: Row = [name(r.get(first[0]))]
         lead += [num(r.get(k)) if k == "at" else safe(r.get(k)) for k in first[1:]]
-        rows.append([*lead, *estimate(r), safe(pretty(str(r.get("unit") or "")))])
+        rows.append([*lead, *estimate(r, driven), safe(pretty(str(r.get("unit") or "")))])
     heads = [with_unit(k, unit(recovery, "position")) if k == "at" else k for k in first]
     return table(
         f"table-{key}", caption, [*heads, *estimate_heads(recovery, ""), "unit"], rows
@@ -117,7 +130,7 @@ def detection(recovery: Recovery) -> str:
 def cells(recovery: Recovery) -> str:
     """The source cell by cell."""
     frame = recovery.source
-    names = [n for n in ("x", "estimate", "sd", "lower", "upper", "data_share")
+    names = [n for n in ("x", "estimate", "estimate_imag", "sd", "lower", "upper", "data_share")
              if header(frame, n)]  # fmt: skip
     columns = [numbers(frame, n) for n in names]
     sd = numbers(frame, "sd")
@@ -127,12 +140,13 @@ def cells(recovery: Recovery) -> str:
         for key, column in zip(names, columns, strict=True):
             if key == "data_share":
                 row.append(share(column[i]))
-            elif key in ("estimate", "lower", "upper"):
+            elif key in ("estimate", "estimate_imag", "lower", "upper"):
                 row.append(num(column[i], round_like(column[i], sd[i])))
             else:
                 row.append(num(column[i], digits=5 if key == "x" else 2))
         rows.append(row)
     heads = [pretty_header(header(frame, n) or n).replace("_", " ") for n in names]
+    heads = [h.replace("estimate imag", "imaginary part") for h in heads]
     return table("table-source", "Source, cell by cell", heads, rows, fold=True)
 
 
@@ -146,6 +160,8 @@ def readings(recovery: Recovery) -> str:
     amounts = ("value", "predicted", "residual", "leave_one_out")
     columns = {k: numbers(frame, k) for k in amounts}
     z = numbers(frame, "standardised")
+    twins = [n for n in IMAGINARY if header(frame, n)]
+    beside = [numbers(frame, n) for n in twins]
     rows: list[Row] = []
     for i in range(len(frame)):
         row: Row = [safe(words["line"][i])]
@@ -157,6 +173,7 @@ def readings(recovery: Recovery) -> str:
             num(columns[k][i], round_like(columns[k][i], sd[i])) for k in ("predicted", "residual")
         ]
         row += [num(z[i], digits=2), num(columns["leave_one_out"][i], digits=3)]
+        row += [num(part[i], round_like(part[i], sd[i])) for part in beside]
         rows.append(row)
     heads = ["line", *(["file"] if several else []), "group", "kind", "unit"]
     heads += [
@@ -168,6 +185,7 @@ def readings(recovery: Recovery) -> str:
         "residual",
     ]
     heads += ["residual / sd", "leave-one-out residual"]
+    heads += [f"{n.removesuffix('_imag')}, imaginary part" for n in twins]
     return table("table-readings", "Every reading", heads, rows, fold=True)
 
 
