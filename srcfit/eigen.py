@@ -78,6 +78,20 @@ def modes(member: Member, count: int) -> Modes:
     MemberError
         When `count` is not a positive whole number, a coefficient cannot be used, or the count of
         eigenvalues shows that some are missing and refinement does not find them.
+
+    Examples
+    --------
+    A taut string: the eigenvalues are T (n pi / L)^2, the modes sqrt(2 / L) sin(n pi x / L).
+
+    >>> import numpy as np
+    >>> from srcfit import make_member, modes
+    >>> string = make_member({"kind": "cable", "length": "2 m", "tension": "50 N",
+    ...                       "left": "fixed", "right": "fixed"})
+    >>> found = modes(string, 3)
+    >>> (found.eigenvalues / (50 * (np.pi / 2) ** 2)).round(9)
+    array([1., 4., 9.])
+    >>> np.abs(found.functions([0.5, 1.0])[:, 1]).round(9)
+    array([1., 0.])
     """
     if count != int(count) or count < 1:
         raise MemberError(
@@ -153,18 +167,53 @@ def critical_compression(member: Member) -> float | None:
     MemberError
         When a coefficient cannot be used.
     """
-    member = bare(member)
-    profile = member.profiles.get("p1") if member.kind.order == 4 else None
-    if profile is None:
-        return None
-    edges = np.array(profile.edges)
-    x = (edges[:-1, None] + np.diff(edges)[:, None] * np.linspace(1e-9, 1 - 1e-9, 65)).ravel()
-    largest = float(np.max(-profile(x)))
-    if largest <= 0:
+    member, largest = bare(member), largest_compression(member)
+    if largest == 0:
         return None
     _, factor, _ = solve(member, 1, compression, 1.0)
     first = float(factor[0])
     return max(first, 0.0) * largest if first > SAME * characteristic(member, compression) else 0.0
+
+
+def largest_compression(member: Member) -> float:
+    """Largest compression [N] along a member of order 4, 0 without any."""
+    profile = member.profiles.get("p1") if member.kind.order == 4 else None
+    if profile is None:
+        return 0.0
+    edges = np.array(profile.edges)
+    x = (edges[:-1, None] + np.diff(edges)[:, None] * np.linspace(1e-9, 1 - 1e-9, 65)).ravel()
+    return max(float(np.max(-profile(x))), 0.0)
+
+
+def refuse_buckled(member: Member) -> None:
+    """Refuse a beam whose compression is critical or beyond; `general` may be indefinite.
+
+    Raises
+    ------
+    MemberError
+        Naming the critical compression.
+    """
+    largest = largest_compression(member)
+    if largest == 0 or member.kind.name == "general":
+        return
+    still = bare(member)
+    if number_below(still, SAME * characteristic(still, coefficients)) == 0:
+        return  # every mode resists; finding the critical load would take far longer
+    critical = critical_compression(still) or 0.0
+    if largest < critical * (1 - SAME):
+        return
+    at_most = f"the critical compression is {_newtons(critical)}"
+    if not critical:
+        at_most = "as it is held, it buckles under any compression"
+    raise MemberError(
+        f"the beam buckles under its compression of {_newtons(largest)}: {at_most}",
+        "member.tension",
+        "lower the compression, or hold the beam more firmly",
+    )
+
+
+def _newtons(force: float) -> str:
+    return f"{force / 1e3:.6g} kN" if force >= 1e3 else f"{force:.6g} N"
 
 
 def _values(form: Form, amounts: Array, x: Array) -> Array:

@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from srcfit.case.model import Case, ColumnSpec
+from srcfit.eigen import refuse_buckled
 from srcfit.errors import SolveError
 from srcfit.grid import make_grid, overlap, spread
 from srcfit.holds import restrained, restraint_forces
@@ -104,7 +105,10 @@ def build(case: Case, readings: Readings) -> Forward:
     ------
     SolveError
         When there are fewer used readings than unknown nuisances + 1.
+    MemberError
+        When a beam buckles under its compression.
     """
+    refuse_buckled(case.member)
     rows = np.flatnonzero(readings.used)
     grid = make_grid(case)
     specs = [case.columns[readings.spec[r]] for r in rows]

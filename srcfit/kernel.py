@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 
+from srcfit.eigen import refuse_buckled
 from srcfit.errors import MemberError
 from srcfit.holds import restrained, restraint_forces
 from srcfit.influence import Influence, at_nodes, influence, interval_integrals
@@ -83,8 +84,22 @@ def kernel(member: Member, x: Any, s: Any, quantity: str = "response") -> Matrix
     Raises
     ------
     MemberError
-        For places off the member and for quantities it does not have.
+        For places off the member, quantities it does not have, and a beam that buckles.
+
+    Examples
+    --------
+    The sag in the middle of a 4 m beam for a force of 1 N there is L^3 / (48 EI):
+
+    >>> from srcfit import kernel, make_member
+    >>> beam = make_member({"kind": "beam", "length": "4 m", "bending_stiffness": "1.68 MN*m^2",
+    ...                     "left": "pinned", "right": "pinned"})
+    >>> round(float(kernel(beam, [2.0], [2.0])[0, 0]) * 48 * 1.68e6 / 4**3, 9)
+    1.0
+    >>> kernel(beam, [1.0, 2.0], [2.0], "moment").round(9)
+    array([[0.5],
+           [1. ]])
     """
+    refuse_buckled(member)
     x, s = _checked(member, x, "x"), _checked(member, s, "s")
     held, modes, _ = restrained(member)
     line = chain(held, np.concatenate([x, s]))
@@ -149,9 +164,22 @@ def respond(
     Raises
     ------
     MemberError
-        For places off the member, quantities it does not have, and an unbalanced source on a
-        singular member.
+        For places off the member, quantities it does not have, an unbalanced source on a
+        singular member, and a beam that buckles.
+
+    Examples
+    --------
+    A bar whose ends are held at 20 degC, heated by 100 W/m: 20 degC + f x (L - x) / (2 k A).
+
+    >>> from srcfit import make_member, respond
+    >>> bar = make_member({"kind": "conductor", "length": "2 m", "conductance": "0.5 W*m/K",
+    ...                    "ambient": "20 degC", "left": "fixed", "right": "fixed"})
+    >>> (respond(bar, [0.0, 1.0], lambda x: 100.0 + 0.0 * x) - 273.15).round(6)
+    array([ 20., 120.])
+    >>> respond(bar, [0.0], [0.0], lumped=[(0.5, 8.0)], quantity="flux").round(6)
+    array([-6.])
     """
+    refuse_buckled(member)
     x = _checked(member, x, "x")
     loads = [_load(member, item) for item in lumped]
     at = _checked(member, [p for p, _, _ in loads], "lumped place") if loads else np.zeros(0)

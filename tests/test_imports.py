@@ -18,7 +18,7 @@ ROOT = Path(srcfit.__file__).parent
 ORDER = (
     "errors", "unit_names", "units", "member", "members", "case.model", "readings.model",
     "problem", "recovery", "case", "readings", "state", "influence", "holds", "quantities",
-    "nulls", "kernel", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen", "sensors",
+    "nulls", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen", "kernel", "sensors",
     "grid", "unknowns", "forward", "view", "elimination", "whitening", "priors", "solvers",
     "criteria", "evidence", "noise", "bands", "answers", "balance", "checks", "solve", "results",
     "facts", "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report",
