@@ -43,7 +43,7 @@ PICTURED_RUNGS = 60
 def recover(
     case: Case, readings: Readings | None = None, *, rng: int | np.random.SeedSequence = 0
 ) -> Recovery:
-    """Recover the source of a case from its readings.
+    r"""Recover the source of a case from its readings.
 
     Parameters
     ----------
@@ -62,6 +62,29 @@ def recover(
     ------
     SrcfitError
         When the member, the readings or the question cannot be used as given.
+
+    Examples
+    --------
+    A cable that sags under 20 N/m over its 10 m, read at nine places:
+
+    >>> from pathlib import Path
+    >>> from tempfile import TemporaryDirectory
+    >>> from srcfit import make_case, recover
+    >>> with TemporaryDirectory() as folder:
+    ...     rows = [f"{x},{1000 * 20 * x * (10 - x) / (2 * 5000):.2f}" for x in range(1, 10)]
+    ...     _ = (Path(folder) / "w.csv").write_text("\n".join(["x [m],w [mm]", *rows, ""]))
+    ...     found = recover(make_case({
+    ...         "member": {"kind": "cable", "length": "10 m", "tension": "5 kN", "left": "fixed",
+    ...                    "right": "fixed"},
+    ...         "readings": {"file": "w.csv", "position": {"column": "x [m]", "unit": "m"},
+    ...                      "column": [{"column": "w [mm]", "kind": "deflection",
+    ...                                  "sd": "0.1 mm"}]},
+    ...         "source": {"unit": "N/m", "cells": 50},
+    ...     }, folder))
+    >>> found.total["lower"] < 200 < found.total["upper"]
+    True
+    >>> round(found.total["value"])
+    200
     """
     from threadpoolctl import threadpool_limits
 

@@ -36,6 +36,19 @@ def load_case(path: str | File) -> Case:
     ------
     CaseError
         Naming file, line and key of everything that cannot be used.
+
+    Examples
+    --------
+    >>> from pathlib import Path
+    >>> from tempfile import TemporaryDirectory
+    >>> from srcfit import load_case
+    >>> from srcfit.case.template import template
+    >>> with TemporaryDirectory() as folder:
+    ...     path = Path(folder) / "case.toml"
+    ...     _ = path.write_text(template("beam"), "utf-8")  # what `srcfit new beam` prints
+    ...     case = load_case(path)
+    >>> case.member.kind.name, case.member.length, case.columns[0].kind
+    ('beam', 9.0, 'deflection')
     """
     file = File(path)
     text = _text(file)
@@ -67,6 +80,20 @@ def make_case(mapping: Mapping[str, Any], folder: str | File = ".") -> Case:
     ------
     CaseError
         Naming the key of everything that cannot be used.
+
+    Examples
+    --------
+    >>> from srcfit import make_case
+    >>> case = make_case({
+    ...     "member": {"kind": "rod", "length": "3 m", "axial_stiffness": "20 MN", "left": "fixed",
+    ...                "right": "free"},
+    ...     "readings": {"file": "pile.csv", "position": {"column": "x", "unit": "m"},
+    ...                  "column": [{"column": "strain", "kind": "strain", "unit": "ue",
+    ...                              "sd": "2 ue"}]},
+    ...     "source": {"unit": "kN/m"},
+    ... })
+    >>> case.columns[0].sd, case.source.total_unit
+    (2e-06, 'kN')
     """
     return _case(Reader(File(folder)), as_toml(mapping), None)
 

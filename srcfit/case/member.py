@@ -57,6 +57,14 @@ def make_member(mapping: Mapping[str, Any]) -> Member:
     ------
     CaseError
         Naming every key that cannot be used, and why.
+
+    Examples
+    --------
+    >>> from srcfit import make_member
+    >>> beam = make_member({"kind": "beam", "length": "4 m", "bending_stiffness": "1.68 MN*m^2",
+    ...                     "left": "pinned", "right": "pinned"})
+    >>> beam.kind.name, beam.length
+    ('beam', 4.0)
     """
     reader = Reader(File())
     data = as_toml(mapping)

@@ -26,7 +26,7 @@ OFF = "off the member"
 
 
 def read(case: Case) -> Readings:
-    """Read every table that a case names.
+    r"""Read every table that a case names.
 
     Parameters
     ----------
@@ -44,6 +44,26 @@ def read(case: Case) -> Readings:
     ReadingsError
         A file is missing, empty or no table; a named column is missing or stands twice; units
         contradict each other; something can be read in two ways; no reading is left.
+
+    Examples
+    --------
+    >>> from pathlib import Path
+    >>> from tempfile import TemporaryDirectory
+    >>> from srcfit import make_case, read
+    >>> with TemporaryDirectory() as folder:
+    ...     text = "x;w\nm;mm\n1,0;2,5\n2,0;---\n3,0;4,1\n4,0;2,2\n"
+    ...     _ = (Path(folder) / "w.csv").write_text(text)
+    ...     readings = read(make_case({
+    ...         "member": {"kind": "cable", "length": "5 m", "tension": "2 kN", "left": "fixed",
+    ...                    "right": "fixed"},
+    ...         "readings": {"file": "w.csv", "position": {"column": "x", "unit": "m"},
+    ...                      "column": [{"column": "w", "kind": "deflection", "sd": "0.1 mm"}]},
+    ...         "source": {"unit": "N/m"},
+    ...     }, folder))
+    >>> readings.value[readings.used]
+    array([0.0025, 0.0041, 0.0022])
+    >>> int(readings.line[1]), readings.reason[1]
+    (4, "'---' marks a missing value")
     """
     files: dict[Path, File] = {}
     out: list[tuple[str, Sequence[Batch]]] = []
