@@ -166,6 +166,15 @@ class Knowledge:
 
 
 @dataclass(frozen=True)
+class Monotone:
+    """A stretch on which the density beyond `known` rises (or falls) with x."""
+
+    start: float
+    end: float
+    rising: bool
+
+
+@dataclass(frozen=True)
 class Limit:
     """A limit asked about: of the zone's mean density, or of its integral."""
 
@@ -176,7 +185,11 @@ class Limit:
 
 @dataclass(frozen=True)
 class SourceSpec:
-    """What is asked of the source, in SI."""
+    """What is asked of the source, in SI.
+
+    `sign` holds for every part, `ceiling` (the largest density) and `monotone` for the smooth part
+    and a background; all of them for what acts beyond `known`.
+    """
 
     unit: str
     total_unit: str
@@ -192,6 +205,8 @@ class SourceSpec:
     sign: Sign = "any"
     total: Knowledge | None = None
     limit: Limit | None = None
+    ceiling: float | None = None
+    monotone: tuple[Monotone, ...] = ()
 
 
 @dataclass(frozen=True)

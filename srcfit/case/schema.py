@@ -232,6 +232,8 @@ class SourceTable(Table):
     known: list[Any] | None = None
     zero: list[Any] | None = None
     sign: Text = None
+    ceiling: Quantity = None
+    monotone: list[Any] | None = None
     total: dict[str, Any] | None = None
     limit: dict[str, Any] | None = None
 
@@ -263,6 +265,15 @@ class KnownTable(Table):
     to: Quantity = None
     at: Quantity = None
     value: Quantity = None
+
+
+class MonotoneTable(Table):
+    """One of `monotone`."""
+
+    needed = ("from", "to", "trend")
+    start: Quantity = Field(default=None, alias="from")
+    to: Quantity = None
+    trend: Text = None
 
 
 class TotalTable(Table):

@@ -17,6 +17,7 @@ from srcfit.case.model import (
     Known,
     Limit,
     Lumped,
+    Monotone,
     Sign,
     SourceSpec,
     StrengthSpec,
@@ -28,6 +29,7 @@ from srcfit.case.schema import (
     KnownTable,
     LimitTable,
     LumpedTable,
+    MonotoneTable,
     SourceTable,
     StrengthTable,
     TotalTable,
@@ -73,6 +75,12 @@ def read_source(
     ask = _Asked(reader, kind, span)
     zones = ask.zones(table.zones)
     sign = _sign(reader, table.sign, driven)
+    ceiling = _ceiling(reader, table.ceiling, kind, sign)
+    monotone = ask.monotone(table.monotone)
+    for key, given in (("ceiling", ceiling is not None), ("monotone", bool(monotone))):
+        if driven and given:
+            reader.wrong((*ROOT, key), "the amplitudes of a driven member have no order",
+                         "leave it out")  # fmt: skip
     total = ask.total(table.total)
     if total is not None:
         _contradiction(reader, sign, total)
@@ -91,6 +99,8 @@ def read_source(
         sign=sign,
         total=total,
         limit=ask.limit(table.limit, zones),
+        ceiling=ceiling,
+        monotone=monotone,
     )
     _something_left(reader, found, table, span)
     return found
@@ -131,6 +141,17 @@ def _sign(reader: Reader, given: str | None, driven: bool) -> Sign:
         reader.wrong((*ROOT, "sign"), "the amplitudes of a driven member have no sign",
                      'write "any", or leave it out')  # fmt: skip
     return next(w for w in words if w == given)
+
+
+def _ceiling(reader: Reader, given: object, kind: MemberKind, sign: Sign) -> float | None:
+    """The largest density that is possible."""
+    if given is None:
+        return None
+    found = reader.quantity((*ROOT, "ceiling"), given, kind.source_unit)
+    if sign == "nonnegative" and found <= 0:
+        reader.wrong((*ROOT, "ceiling"), f"{given!r} leaves nothing to a source that cannot be "
+                     "negative", "make it positive")  # fmt: skip
+    return found
 
 
 def _background(reader: Reader, given: str | None) -> bool:
@@ -274,6 +295,18 @@ class _Asked:
 
     def zero(self, value: object) -> tuple[tuple[float, float], ...]:
         found: Any = each(self.reader, (*ROOT, "zero"), value, self.pair)
+        return tuple(found)
+
+    def monotone(self, value: object) -> tuple[Monotone, ...]:
+        def one(path: Path, data: object) -> Monotone:
+            table = check(self.reader, MonotoneTable, data, path)
+            start, end = self.stretch(path, table.start, table.to)
+            if table.trend is not None:
+                words = ("rising", "falling")
+                self.reader.choose((*path, "trend"), table.trend, words, "trend")
+            return Monotone(start, end, table.trend == "rising")
+
+        found: Any = each(self.reader, (*ROOT, "monotone"), value, one)
         return tuple(found)
 
     def total(self, data: object) -> Knowledge | None:
