@@ -31,6 +31,7 @@ from srcfit.evidence import (
     conditional,
     data_share,
     grid,
+    mean_noise,
     mean_source,
     means,
     moments,
@@ -107,6 +108,8 @@ class Answers:
     fit : Fit
     choice : Choice or None
         The plain band's choice.
+    low, high : (q,) or None
+        What each question can be at all, where constraints say so: intervals end there.
     """
 
     value: Array
@@ -123,6 +126,8 @@ class Answers:
     quantile: float
     fit: Fit
     choice: Choice | None = None
+    low: Array | None = None
+    high: Array | None = None
 
 
 def cautious(
@@ -202,10 +207,11 @@ def weighed(fr: Frame) -> Ground:
 def wary(fr: Frame, ground: Ground, size: float, steps: Array, *, spread: bool) -> list[Weighted]:
     """The cautious families over steps within pieces, weighed above the floor of a mean level.
 
-    `spread`: with all that variances and covariances need.
+    A source that may be rough would take an unstated noise for its own: the noise is that of the
+    estimate. `spread`: with all that variances and covariances need.
     """
     spectra = [spectrum(fr, f, ground.products, steps, right=spread) for f in CAUTIOUS]
-    return weigh(spectra, ground.sigma, size)
+    return weigh(spectra, ground.sigma, size, mean_noise(ground.averaged))
 
 
 def plain(
@@ -318,7 +324,7 @@ def averaged_fit(families: Sequence[Weighted]) -> Fit:
         told[told < 0.5] = np.nan
         return np.asarray((np.nan_to_num(values) * known).sum(axis=1) / told)
 
-    noise = float(np.sqrt(sum(float(w.weights @ w.noise) for w in families)))
+    noise = float(np.sqrt(mean_noise(families)))
     residual, left, hat = (average(name) for name in ("residuals", "leave_one_out", "hat"))
     return Fit(residual, left, hat, noise, ladders, weights)
 

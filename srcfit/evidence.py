@@ -75,7 +75,12 @@ def grid(fr: Frame, products: Mapping[tuple[str, float], Base]) -> Array:
     return np.geomspace(low, high, int(np.ceil(np.log(high / low) / per_rung)) + 1)
 
 
-def weigh(spectra: Sequence[Spectrum], sigma: Array, level: float | None = None) -> list[Weighted]:
+def weigh(
+    spectra: Sequence[Spectrum],
+    sigma: Array,
+    level: float | None = None,
+    noise: float | None = None,
+) -> list[Weighted]:
     """Evidence weights of some families over one grid, summing to 1 over all of them.
 
     Parameters
@@ -84,8 +89,12 @@ def weigh(spectra: Sequence[Spectrum], sigma: Array, level: float | None = None)
     sigma : (t,)
     level : float, optional
         Mean level of the source: sigmas under the cautious floor are left out.
+    noise : float, optional
+        Variance of the whitened noise where it is known from elsewhere.
     """
-    raw = [_rungs(sp, sigma * natural(sp.family.base, sp.frame.problem.grid)) for sp in spectra]
+    raw = [
+        _rungs(sp, sigma * natural(sp.family.base, sp.frame.problem.grid), noise) for sp in spectra
+    ]
     kept = [
         np.ones(len(sigma), dtype=bool)
         if level is None
@@ -101,20 +110,27 @@ def weigh(spectra: Sequence[Spectrum], sigma: Array, level: float | None = None)
     return [replace(w, weights=part / total) for w, part in zip(raw, weights, strict=True)]
 
 
-def _rungs(sp: Spectrum, sigma: Array) -> Weighted:
+def _rungs(sp: Spectrum, sigma: Array, given: float | None) -> Weighted:
     """One family on its grid, not yet weighed against others."""
     fr, tau, beyond = sp.frame, sigma**-2.0, float(sp.rest @ sp.rest)
-    noise = np.ones(len(sigma))
-    if not fr.problem.stated:
-        noise = misfit(sp.lam, sp.y, beyond, tau) / fr.nu
-    evidence = log_evidence(fr, sp.lam, sp.y, beyond, tau)
+    if fr.problem.stated:
+        given = 1.0
+    noise = misfit(sp.lam, sp.y, beyond, tau) / fr.nu
+    if given:
+        noise = np.full(len(sigma), given)
+    evidence = log_evidence(fr, sp.lam, sp.y, beyond, tau, given)
     shrink = 1 / (1 + sp.lam[:, None] * sigma**2)
     return Weighted(sp, sigma, noise, evidence, np.ones(len(sigma)), shrink)
 
 
+def mean_noise(families: Sequence[Weighted]) -> float:
+    """Evidence-averaged variance of the whitened noise."""
+    return sum(float(w.weights @ w.noise) for w in families)
+
+
 def at_one(sp: Spectrum, strength: float, noise: float) -> Weighted:
     """One family at one strength, with all the weight and a given variance of the noise."""
-    return replace(_rungs(sp, np.array([strength**-0.5])), noise=np.array([noise]))
+    return _rungs(sp, np.array([strength**-0.5]), noise)
 
 
 def mean_source(families: Sequence[Weighted]) -> Array:

@@ -13,7 +13,7 @@ from dataclasses import replace
 import numpy as np
 from numpy.typing import NDArray
 
-from srcfit.evidence import FAINTEST, Weighted, grid, weigh
+from srcfit.evidence import FAINTEST, Weighted, grid, mean_noise, weigh
 from srcfit.priors import SCALE, SMOOTH, STEPPED, Family, pieces
 from srcfit.problem import Array, Problem
 from srcfit.solvers.frame import Frame, frame, unpenalised
@@ -168,4 +168,4 @@ def _first_guess(problem: Problem, groups: Groups) -> float:
     if fr.nu < 3 or not len(fr.free) or not alone.d.any():
         return 1.0
     _, found = _weighed(alone)
-    return float(np.sqrt(sum(float(w.weights @ w.noise) for w in found)))
+    return float(np.sqrt(mean_noise(found)))

@@ -176,6 +176,22 @@ def test_unstated_noise_is_integrated_out():
     assert scaled.fit.noise == pytest.approx(7 * answers.fit.noise, rel=1e-7)
 
 
+def test_unstated_noise_is_never_less_than_that_of_the_estimate():
+    """Totals on a foundation beam follow the noise: 12 readings, 12 draws of four sources."""
+    rng = np.random.default_rng(4)
+    fine, middles, blank, q = simulation.layout("foundation beam 5", 12)
+    total = Questions(q.cells[5:6], q.columns[5:6])
+    held = []
+    for shape in ("constant", "two blocks", "half wave", "saw"):
+        f = simulation.SHAPES[shape](middles)
+        u = fine @ f
+        for _ in range(12):
+            d = u + 0.005 * np.abs(u).max() * rng.normal(size=12)
+            a = cautious(replace(blank, d=d, stated=False), total)
+            held.append(a.lower[0] < f.mean() < a.upper[0])
+    assert np.mean(held) >= 0.88
+
+
 def test_average_is_the_mixture_of_dense_rungs():
     pb, q = small()
     fr, steps = frame(pb), pieces(pb.grid, zones=True)

@@ -191,17 +191,24 @@ def filtered(
     )
 
 
-def log_evidence(fr: Frame, lam: Array, y: Array, beyond: float, strengths: Array) -> Array:
+def log_evidence(
+    fr: Frame,
+    lam: Array,
+    y: Array,
+    beyond: float,
+    strengths: Array,
+    noise: float | None = None,
+) -> Array:
     """Restricted log likelihood at each strength, up to a constant shared by all families, (t,).
 
-    With an unstated noise the sd s is integrated out under a prior uniform in ln s. `beyond` is
-    the sum of squares that no mode reaches.
+    `beyond` is the sum of squares that no mode reaches, `noise` a known variance of the whitened
+    noise; an unstated one that is not given is integrated out under a prior uniform in ln s.
     Source: Harville (1977); Wahba (1985), Ann. Stat. 13, 1378.
     """
     energy = misfit(lam, y, beyond, strengths)
     volume = -0.5 * np.log1p(lam[:, None] / strengths).sum(axis=0)
-    if fr.problem.stated:
-        return np.asarray(volume - 0.5 * energy)
+    if fr.problem.stated or noise:
+        return np.asarray(volume - 0.5 * energy / (noise or 1.0))
     # readings without any noise at all: as good as the smallest number
     return np.asarray(volume - 0.5 * fr.nu * np.log(np.maximum(energy, np.finfo(float).tiny)))
 
