@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
@@ -113,10 +114,55 @@ def _legend(ax: Axes, columns: int = 2, rise: float = 1.0, **place: Any) -> None
 
 
 def panels(recovery: Recovery) -> list[tuple[str, str]]:
-    """Sensor kind and unit of each panel of readings, in order of appearance."""
+    """Sensor kind and unit of each panel of readings, in order of appearance.
+
+    Readings of one kind share a panel in the unit that most of them have, if theirs can be
+    turned into it.
+    """
+    return list(dict.fromkeys(p for p in _panel_of(recovery) if p[0]))
+
+
+def _panel_of(recovery: Recovery) -> list[tuple[str, str]]:
+    """Kind and unit of the panel of each row."""
     frame = recovery.readings
-    pairs = zip(texts(frame, "kind"), texts(frame, "unit"), strict=True)
-    return list(dict.fromkeys(p for p in pairs if p[0]))
+    pairs = list(zip(texts(frame, "kind"), texts(frame, "unit"), strict=True))
+    if len(set(pairs)) == len({kind for kind, _ in pairs}):
+        return pairs
+    count = Counter(pairs)
+    home = {
+        kind: max((p for p in count if p[0] == kind), key=lambda p: count[p])[1]
+        for kind, _ in count
+    }
+    to = {p: (p[0], home[p[0]]) for p in count if _turn(recovery, *p, home[p[0]]) is not None}
+    return [to.get(p, p) for p in pairs]
+
+
+def _turn(recovery: Recovery, kind: str, unit_text: str, other: str) -> tuple[float, float] | None:
+    """(scale, shift) from a unit to another one of the same kind; None if it cannot be done."""
+    if unit_text == other:
+        return 1.0, 0.0
+    si = {s.name: s.unit for s in recovery.case.member.kind.sensors}.get(kind, "1")
+    driven = recovery.case.member.driven
+    try:
+        (a, b), (c, d) = (factor(u, si, "unit", difference=driven) for u in (unit_text, other))
+    except UnitError:
+        return None
+    return a / c, (b - d) / c
+
+
+def turned(recovery: Recovery) -> tuple[Array, Array]:
+    """Scale and shift (n,) of every row from its own unit into that of its panel."""
+    frame = recovery.readings
+    pairs = zip(texts(frame, "kind"), texts(frame, "unit"), _panel_of(recovery), strict=True)
+    known: dict[tuple[str, str, str], tuple[float, float]] = {}
+    out = []
+    for kind, own, (_, home) in pairs:
+        key = (kind, own, home)
+        if key not in known:
+            known[key] = _turn(recovery, *key) or (1.0, 0.0)
+        out.append(known[key])
+    both = np.array(out, dtype=float).reshape(-1, 2)
+    return both[:, 0], both[:, 1]
 
 
 def fit_curve(recovery: Recovery, kind: str, unit_text: str) -> Array | None:
@@ -163,17 +209,17 @@ def plot_residuals(recovery: Recovery, ax: Axes) -> None:
         _residuals(recovery, kind, unit_text, ax)
 
 
-def _here(recovery: Recovery, kind: str, unit_text: str) -> NDArray[np.bool_]:
-    frame = recovery.readings
-    pairs = zip(texts(frame, "kind"), texts(frame, "unit"), strict=True)
-    return np.array([p == (kind, unit_text) for p in pairs], dtype=bool)
+def here(recovery: Recovery, kind: str, unit_text: str) -> NDArray[np.bool_]:
+    """Rows (n,) that stand in a panel."""
+    return np.array([p == (kind, unit_text) for p in _panel_of(recovery)], dtype=bool)
 
 
 def _panel(recovery: Recovery, kind: str, unit_text: str, ax: Axes) -> None:
-    frame, here = recovery.readings, _here(recovery, kind, unit_text)
-    x, value, sd = (numbers(frame, c) for c in ("x", "value", "sd"))
-    predicted, used = numbers(frame, "predicted"), flags(frame)
-    good, bad = here & used, here & ~used
+    frame, rows = recovery.readings, here(recovery, kind, unit_text)
+    scale, shift = turned(recovery)
+    x, sd, used = numbers(frame, "x"), scale * numbers(frame, "sd"), flags(frame)
+    value, predicted = (scale * numbers(frame, c) + shift for c in ("value", "predicted"))
+    good, bad = rows & used, rows & ~used
     many = int(good.sum()) > 200
     curve = fit_curve(recovery, kind, unit_text)
     if curve is not None:
@@ -196,8 +242,8 @@ def _panel(recovery: Recovery, kind: str, unit_text: str, ax: Axes) -> None:
 
 def _residuals(recovery: Recovery, kind: str, unit_text: str, ax: Axes) -> None:
     frame = recovery.readings
-    here = _here(recovery, kind, unit_text) & flags(frame)
-    x, z = numbers(frame, "x")[here], numbers(frame, "standardised")[here]
+    rows = here(recovery, kind, unit_text) & flags(frame)
+    x, z = numbers(frame, "x")[rows], numbers(frame, "standardised")[rows]
     ax.axhspan(-2, 2, color="#eef0f2", lw=0, zorder=0)
     ax.axhline(0, color=GREY, lw=0.6)
     if len(x) > 200:

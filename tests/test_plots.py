@@ -15,12 +15,13 @@ from hypothesis import strategies as st
 from matplotlib.colors import to_hex
 from matplotlib.figure import Figure
 
-from srcfit import plots
+from srcfit import axes, plots
 from srcfit.axes import name_rows
 from srcfit.captions import DESCRIPTIONS
 from srcfit.drawing import BLUE, draw_member, plain
 from srcfit.frames import header, ladder_of, numbers, pretty, unit_of
 from srcfit.member import RIGID, End, Member, Restraint, Unknown
+from srcfit.report.data import chart_data
 from srcfit.rounding import brief, interval, minus, plus_minus, round_pair
 
 KINDS = ("beam", "conductor", "cylinder")
@@ -348,3 +349,20 @@ def test_axes_in_and_out(beam, what):
 
 def test_without_axes_a_figure_comes_out(beam):
     assert len(beam.plot().axes) == 4
+
+
+def test_readings_of_one_kind_in_several_units_share_a_panel(beam):
+    readings = beam.readings.copy()
+    rows = np.flatnonzero((readings["kind"] == "deflection").to_numpy())[:3]
+    for name in ("value", "sd", "predicted", "residual"):
+        readings[name] = readings[name].astype(float)
+        readings.iloc[rows, readings.columns.get_loc(name)] /= 25.4
+    readings.iloc[rows, readings.columns.get_loc("unit")] = "in"
+    mixed = replace(beam, readings=readings)
+    assert axes.panels(mixed) == axes.panels(beam)
+    for before, after in zip(axes_of(beam, "readings"), axes_of(mixed, "readings"), strict=True):
+        for one, two in zip(before.get_lines(), after.get_lines(), strict=True):
+            np.testing.assert_allclose(one.get_xydata(), two.get_xydata(), rtol=1e-9)
+    own, turned = (chart_data(r)["panels"][0] for r in (beam, mixed))
+    np.testing.assert_allclose(turned["value"], own["value"], rtol=1e-5)
+    np.testing.assert_allclose(turned["sd"], own["sd"], rtol=1e-5)

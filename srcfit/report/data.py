@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from srcfit.axes import fit_curve, panels
+from srcfit.axes import fit_curve, here, panels, turned
 from srcfit.captions import choices_of, extent, per_metre, source_word, unit
 from srcfit.frames import flags, ladder_of, number, numbers, pretty, texts
 from srcfit.recovery import Recovery
@@ -102,27 +102,24 @@ def _panel(
     recovery: Recovery, kind: str, unit_text: str, kept: NDArray[np.int64]
 ) -> dict[str, Any]:
     frame = recovery.readings
-    used = flags(frame)
-    kinds, units, x = texts(frame, "kind"), texts(frame, "unit"), numbers(frame, "x")
-    rows = np.array(
-        [i for i in kept if (kinds[i], units[i]) == (kind, unit_text) and np.isfinite(x[i])],
-        dtype=int,
-    )
+    used, x = flags(frame), numbers(frame, "x")
+    inside = here(recovery, kind, unit_text)
+    scale, shift = turned(recovery)
+    rows = np.array([i for i in kept if inside[i] and np.isfinite(x[i])], dtype=int)
     rows = rows[np.argsort(x[rows], kind="stable")]
     curve = fit_curve(recovery, kind, unit_text)
     lines, groups = texts(frame, "line"), texts(frame, "group")
-    off = [
-        (x[i], v)
-        for i, v in enumerate(numbers(frame, "value"))
-        if not used[i] and (kinds[i], units[i]) == (kind, unit_text) and np.isfinite(x[i] + v)
-    ]
+    value, predicted = (scale * numbers(frame, k) + shift for k in ("value", "predicted"))
+    shown = {"value": value, "sd": scale * numbers(frame, "sd"), "predicted": predicted,
+             "standardised": numbers(frame, "standardised")}  # fmt: skip
+    left = np.flatnonzero(inside & ~used & np.isfinite(x + value))
+    off = [(x[i], value[i]) for i in left]
     return {
         "off": [[_six(a), _six(b)] for a, b in off[:READINGS]],
         "kind": clean(kind), "unit": clean(pretty(unit_text)), "rows": [int(i) for i in rows],
         "x": _list(x[rows]), "line": [lines[i] for i in rows],
         "group": [clean(groups[i]) for i in rows],
-        **{k: _list(numbers(frame, k)[rows])
-           for k in ("value", "sd", "predicted", "standardised")},
+        **{k: _list(column[rows]) for k, column in shown.items()},
         "curve": None if curve is None else _list(curve),
         "curveX": None if curve is None else _list(recovery.pictures.x * per_metre(recovery)),
     }  # fmt: skip
@@ -140,6 +137,9 @@ def _ladder(recovery: Recovery, kept: NDArray[np.int64]) -> dict[str, Any]:
     if len(pick) > most:
         pick = np.unique(np.linspace(0, len(strengths) - 1, most).astype(int))
     complete = fits.ndim == 2 and fits.shape == (len(strengths), len(pictures.influence_of))
+    if complete:
+        scale, shift = (part[list(pictures.influence_of)] for part in turned(recovery))
+        fits = scale * fits + shift
     rows = ladder_of(recovery.ladder)
     strength, a, b = (numbers(rows, k) for k in ("strength", "residual_norm", "roughness_norm"))
     good = (strength > 0) & (a > 0) & (b > 0)
