@@ -21,7 +21,7 @@ _STATUS = frozenset((
 _MARKS = np.array([7999, 9999, 99999, 999999, 999.9, 999.99, 9999.9, 6999, 8888, 32767, 32768,
                    65535, 1e30, 1e20, 999])  # fmt: skip
 _RUN = 5
-_NEAR = 0.01  # of the usual distance between neighbours
+_NEAR = 0.1  # places at random come so near by chance in fewer than one table of ten
 
 
 def lines_text(lines: Iterable[int]) -> str:
@@ -147,7 +147,7 @@ def _near(name: str, batch: Batch) -> list[Finding]:
     apart = gap > 1e-12 * np.abs(x).max()
     if not apart.any():
         return []
-    close = np.flatnonzero(apart & (gap < _NEAR * np.median(gap[apart])))
+    close = np.flatnonzero(apart & (gap < _NEAR / len(x) * np.median(gap[apart])))
     if not len(close):
         return []
     parts = [
