@@ -187,3 +187,22 @@ def test_pictured_rungs_are_the_ladders(tmp_path):
     assert np.isin(np.round(np.log(strengths), 9), np.round(np.log(rough["strength"]), 9)).all()
     cells = recovery.pictures.rungs @ np.diff(recovery.pictures.x)
     np.testing.assert_allclose(cells, recovery.pictures.totals, rtol=1e-9, atol=1e-9)
+
+
+@pytest.mark.parametrize("roughness", [0, 1, 2])
+def test_estimates_explain_the_residuals_on_a_free_member(roughness):
+    """An insulated wall: claimed residuals are those of the estimate itself."""
+    from srcfit.solvers import SOLVERS
+    from srcfit.view import look
+
+    member = srcfit.make_member(
+        {"kind": "wall", "length": "1 m", "conductivity": "2 W/(m*K)", "ambient": "300 K",
+         "left": "insulated", "right": "insulated"}
+    )  # fmt: skip
+    x = np.linspace(0.05, 0.95, 12)
+    y = srcfit.respond(member, x, lambda x: 100 * (x - 0.5)) + 4.0
+    nothing = np.zeros((len(x), 0))
+    problem = look(member, "temperature", 30).problem(x, y, nothing, np.ones(len(x)), 0.01)
+    ladder = SOLVERS["tikhonov"](problem, roughness=roughness)
+    left = problem.d[:, None] - problem.A @ ladder.estimates - problem.B @ ladder.columns
+    np.testing.assert_allclose(left, ladder.all_residuals, atol=1e-6 * np.abs(problem.d).max())

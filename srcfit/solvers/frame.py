@@ -23,6 +23,7 @@ if TYPE_CHECKING:
 # columns are scaled to unit norm before the rank test, so this is free of units
 RANK = 1e-7
 REACHED = 1e-6
+ROUNDED = 1e-10
 UNIFORM = "uniform source"
 
 
@@ -170,6 +171,11 @@ def frame(problem: Problem, extra: Array | None = None) -> Frame:
     """
     n = len(problem.d)
     free = np.flatnonzero(problem.grid.unknown) if problem.smooth else np.zeros(0, dtype=np.intp)
+    balanced = _balanced(problem, free)
+    if extra is not None and balanced is not None:
+        # shapes that are no more than a null mode have nothing left
+        left = balanced @ extra
+        extra = left[:, np.linalg.norm(left, axis=0) > RANK * np.linalg.norm(extra, axis=0)]
     N = unpenalised(problem, extra)
     norms = np.linalg.norm(N, axis=0)
     norms[norms == 0] = 1.0
@@ -178,7 +184,6 @@ def frame(problem: Problem, extra: Array | None = None) -> Frame:
     R = U.T @ N
     P, s, Rt = np.linalg.svd(R, full_matrices=False)
     solve = (Rt.T / s) @ P.T / norms[:, None] if len(s) else np.zeros((N.shape[1], 0))
-    balanced = _balanced(problem, free)
     A = problem.A[:, free] if balanced is None else problem.A[:, free] @ balanced
     UA, Ud = U.T @ A, U.T @ problem.d
     beyond = problem.d - U @ Ud
@@ -247,13 +252,19 @@ def _balanced(problem: Problem, free: np.ndarray[tuple[int], np.dtype[np.intp]])
     return np.asarray(np.eye(len(free)) - modes @ np.linalg.solve(rows @ modes, rows))
 
 
+def _sums(rows: Array, constants: Array) -> Array:
+    """Rows times constants; 0 where they cancel but for rounding, as moments of a level load do."""
+    sums, size = rows @ constants, np.abs(rows) @ constants
+    return np.where(np.abs(sums) > ROUNDED * size, sums, 0.0)
+
+
 def ask(fr: Frame, questions: Questions) -> Asked:
     """Bring questions into the frame: unpenalised weights b become h = N+' b."""
     from scipy.sparse import csr_array
 
     problem = fr.problem
     on_free = np.asarray(questions.cells)[:, problem.grid.unknown]
-    parts = [on_free @ problem.grid.constants] if problem.constant else []
+    parts = [_sums(on_free, problem.grid.constants)] if problem.constant else []
     if fr.extra.shape[1]:
         parts.append(on_free @ fr.extra)
     b = np.hstack([*parts, questions.columns])

@@ -139,9 +139,10 @@ class Ladder:
         problem = self.frame.problem
         out = np.zeros((len(problem.grid.unknown), len(self.strengths)))
         f = self.variation.copy()
+        shapes = self.frame.extra
         if problem.constant:
-            shapes = np.hstack([problem.grid.constants, self.frame.extra])
-            f += shapes @ self.unpenalised[: shapes.shape[1]]
+            shapes = np.hstack([problem.grid.constants, shapes])
+        f += shapes @ self.unpenalised[: shapes.shape[1]]
         if problem.along is not None:
             f += (problem.along[:, :-1] @ self.columns + problem.along[:, -1:])[self.frame.free]
         out[self.frame.free] = f
