@@ -16,12 +16,12 @@ from numpy.typing import NDArray
 
 from srcfit.case.model import Case
 from srcfit.elimination import Elimination, eliminate
-from srcfit.forward import Forward
+from srcfit.forward import Forward, along
 from srcfit.grid import overlap, spread
 from srcfit.member import Array
 from srcfit.problem import Grid, Questions
 from srcfit.state import Matrix
-from srcfit.units import factor
+from srcfit.units import factor, multiply_text, same_dimension
 from srcfit.unknowns import Column
 
 CURRIE = 1.6448536269514722  # one-sided 5 % point of the normal distribution
@@ -38,7 +38,7 @@ class Asked:
     questions : Questions
         q rows; of complex amplitudes 2 q: those of the real parts, then those of the imaginary.
     blocks : mapping block name -> slice (total, zones, lumped, nuisances, background, reactions,
-        nulls, cells), within the first q rows
+        nulls, section quantities, cells), within the first q rows
     constant : (q,) known part (SI) added to each answer, complex for complex amplitudes
     factor, shift : (q,) user unit = (SI + shift) * factor
     """
@@ -93,8 +93,45 @@ def ask(forward: Forward, balanced: Elimination | None = None) -> Asked:
     rows = forward.reaction_cells, forward.reaction_columns
     parts.append(("reactions", *rows, forward.reaction_known, units, 0.0))
     parts.append(("nulls", np.zeros((len(nulls), m)), np.eye(k)[nulls], 0.0, 1.0, 0.0))
+    for force in section_forces(case):
+        found = along(forward, force.quantity, section_places(forward))
+        parts.append((force.name, *found, per(force.unit, force.si_unit), 0.0))
     parts.append(("cells", np.eye(m), np.zeros((m, k)), 0.0, density_unit, 0.0))
     return _joined(parts, balanced, forward.grid)
+
+
+@dataclass(frozen=True)
+class SectionForce:
+    """A force, couple or flow inside the member, reported along it in `unit`."""
+
+    name: str
+    quantity: str
+    unit: str
+    si_unit: str
+
+
+def section_forces(case: Case) -> tuple[SectionForce, ...]:
+    """Moment and shear of a beam; of other members what their flow or force is called."""
+    kind, total = case.member.kind, case.source.total_unit
+    if kind.order == 4:
+        couple = multiply_text(total, case.source.position_unit)
+        si = multiply_text(kind.total_unit, "m")
+        return (SectionForce("moment", "moment", couple, si),
+                SectionForce("shear", "shear", total, kind.total_unit))  # fmt: skip
+    sensor = next(s for s in kind.sensors if s.quantity in ("flux", "force", "torque"))
+    unit = total if same_dimension(total, sensor.unit) else sensor.unit
+    return (SectionForce(sensor.name, sensor.quantity, unit, sensor.unit),)
+
+
+def section_places(forward: Forward) -> Array:
+    """Places of the section forces [m], ascending: cell edges, supports, forces at one place."""
+    member, source = forward.case.member, forward.case.source
+    inner = [s.at for s in member.supports]
+    inner += [p.at for p in source.lumped if p.at is not None and p.width == 0]
+    inner += [p.start for p in source.known if p.start == p.end]
+    places: Array = np.unique(np.concatenate([forward.grid.edges, inner]))
+    apart: Array = places[np.append(True, np.diff(places) > 1e-9 * member.length)]
+    return apart
 
 
 def _joined(

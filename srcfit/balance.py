@@ -18,6 +18,7 @@ from srcfit.influence import deflect
 from srcfit.kernel import prescribed
 from srcfit.member import Unknown
 from srcfit.state import Matrix, operator
+from srcfit.units import factor
 from srcfit.unknowns import restraint_label
 
 
@@ -54,6 +55,15 @@ def balance(forward: Forward, f: Matrix, beta: Matrix) -> Balance:
     size = float((forward.grid.weights * np.abs(f)).sum()) + abs(_known_total(forward))
     size = max(abs(put_in), abs(out), abs(loss), size, 1e-300)
     return Balance(put_in, out, loss, float(abs(put_in - out - loss) / size))
+
+
+def balance_facts(forward: Forward, found: Balance) -> dict[str, float]:
+    """A balance in the total's unit: source, reactions, along and difference (real parts)."""
+    source = forward.case.source
+    size = factor(source.total_unit, forward.case.member.kind.total_unit, "source.total_unit")[0]
+    amounts = {"source": found.source, "reactions": found.reactions, "along": found.loss,
+               "difference": found.source - found.reactions - found.loss}  # fmt: skip
+    return {name: float(np.real(amount) / size) for name, amount in amounts.items()}
 
 
 def _known_total(forward: Forward) -> Any:

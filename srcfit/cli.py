@@ -280,7 +280,8 @@ def recover(
     elif not quiet:
         from srcfit.text import recovery_text
 
-        click.echo(f"{recovery_text(summary, _limit_unit(case))}\n\nWritten to {folder}")
+        told = recovery_text(summary, _limit_unit(case), found.balance)
+        click.echo(f"{told}\n\nWritten to {folder}")
     serious = any(f["level"] == "serious" for f in summary["findings"])
     return SERIOUS if strict and serious else DONE
 

@@ -24,7 +24,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
 DIGITS = 10
-TABLES = ("source", "zones", "readings", "ladder")
+TABLES = ("source", "zones", "readings", "ladder", "section")
 NAMES = (*(f"{name}.csv" for name in TABLES), "summary.json", "report.html", "figures")
 
 NUMBER = ("value", "sd", "lower", "upper")
@@ -71,7 +71,7 @@ def save(recovery: Recovery, folder: str | Path, *, replace: bool = False) -> Sa
     recovery : Recovery
     folder : path
         Folder to make, with its parents. Holds afterwards source.csv, zones.csv, readings.csv,
-        ladder.csv, summary.json, report.html and figures/.
+        ladder.csv, section.csv, summary.json, report.html and figures/.
     replace : bool
         Allow an existing folder to be replaced. Files in it that srcfit did not write are moved
         to a folder beside it.
@@ -186,9 +186,11 @@ def input_paths(case: Case) -> tuple[Path, ...]:
 
 
 def write_tables(recovery: Recovery, folder: Path) -> None:
-    """Write the four tables of a recovery as CSV files with ten significant digits."""
+    """Write the tables of a recovery as CSV files with ten significant digits."""
     for name in TABLES:
-        frame: pd.DataFrame = getattr(recovery, name)
+        frame: pd.DataFrame | None = getattr(recovery, name)
+        if frame is None:
+            continue
         text = csv_text(frame)
         (folder / f"{name}.csv").write_text(text, encoding="utf-8", newline="")
 

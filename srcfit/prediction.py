@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from srcfit.balance import balance
+from srcfit.balance import balance, balance_facts
 from srcfit.case.model import Case, Known
 from srcfit.errors import MemberError
 from srcfit.forward import Forward, build
@@ -19,7 +19,7 @@ from srcfit.output import strict
 from srcfit.readings.model import Readings
 from srcfit.rounding import brief, round_like
 from srcfit.state import Matrix
-from srcfit.text import bullets, clean, join, section, table
+from srcfit.text import balance_text, bullets, clean, join, section, table
 from srcfit.trial import Trial
 from srcfit.units import factor
 
@@ -74,7 +74,7 @@ def predict(case: Case, readings: Readings, trial: Trial) -> Prediction:
         case,
         _frame(case, readings, forward.rows, residual),
         _reactions(case, forward, f, beta),
-        _sums(forward, f, beta),
+        balance_facts(forward, balance(forward, f, beta)),
         misfit if math.isfinite(misfit) else None,
         _notes(case, forward, trial),
     )
@@ -146,16 +146,6 @@ def _extent(member: Member, part: Known) -> float:
     if part.start == part.end:
         return 1.0
     return float(overlap(member, np.array([member.start, member.end]), part.start, part.end)[0])
-
-
-def _sums(forward: Forward, f: Array, beta: Matrix) -> dict[str, float]:
-    """Source, reactions and what the member takes up, in the total's unit (real parts)."""
-    case = forward.case
-    found = balance(forward, f, beta)
-    amounts = {"source": found.source, "reactions": found.reactions, "along": found.loss,
-               "difference": found.source - found.reactions - found.loss}  # fmt: skip
-    unit, si = case.source.total_unit, case.member.kind.total_unit
-    return {k: float(shown(np.real(v), unit, si)) for k, v in amounts.items()}
 
 
 def _reactions(case: Case, forward: Forward, f: Array, beta: Matrix) -> list[dict[str, Any]]:
@@ -250,16 +240,6 @@ def text(found: Prediction) -> str:
         section("Readings", table(header, rows, "llrrrr" + "r" * (len(names) - 3))),
         misfit,
         section("Reactions", table(("", "", "", ""), reactions, "lllr")),
-        section("Balance", _balance_text(found)),
+        section("Balance", balance_text(found.balance, source.total_unit)),
         bullets(found.notes),
     )
-
-
-def _balance_text(found: Prediction) -> str:
-    unit = found.case.source.total_unit
-    words = {"source": "source", "reactions": "ends and supports", "along": "along the member",
-             "difference": "difference"}  # fmt: skip
-    size = max(abs(v) for v in found.balance.values())
-    shares = {k: v if abs(v) > 1e-9 * size else 0.0 for k, v in found.balance.items()}
-    rows = [(words[k], f"{brief(v, 6)} {unit}") for k, v in shares.items()]
-    return table(("", ""), rows, "lr")

@@ -9,7 +9,7 @@ import numpy as np
 
 from srcfit import __version__, checks
 from srcfit.answers import per
-from srcfit.balance import balance
+from srcfit.balance import Balance, balance, balance_facts
 from srcfit.bands import undetermined
 from srcfit.case.model import Case
 from srcfit.case.vary import vary
@@ -29,6 +29,7 @@ from srcfit.results import (
     reading_units,
     readings_table,
     recoloured,
+    section_table,
     source_table,
     zones_table,
 )
@@ -93,7 +94,8 @@ def recover(
         solved = solve(case, readings)
         extra, shares, bent = _properties(solved)
         shown = Shown(solved, extra)
-        found = [asdict(f) for f in _findings(solved, shown, shares, bent)]
+        sums = _sums(solved)
+        found = [asdict(f) for f in _findings(solved, shown, shares, bent, sums)]
         seed = rng.entropy if isinstance(rng, np.random.SeedSequence) else int(rng)
         summary = facts(solved, shown, found, seed, __version__)
         return Recovery(
@@ -104,6 +106,8 @@ def recover(
             ladder=ladder_table(solved),
             pictures=_pictures(solved),
             facts=summary,
+            section=section_table(solved, shown),
+            balance=None if sums is None else balance_facts(solved.forward, sums),
         )
 
 
@@ -144,8 +148,9 @@ def _all(solved: Solved) -> Array:
 
 
 def _findings(
-    solved: Solved, shown: Shown, shares: Mapping[str, Array], bent: Mapping[str, float]
-) -> list[Finding]:
+    solved: Solved, shown: Shown, shares: Mapping[str, Array], bent: Mapping[str, float],
+    sums: Balance | None,
+) -> list[Finding]:  # fmt: skip
     forward, answers, case = solved.forward, solved.answers, solved.forward.case
     fit = fit_facts(solved)
     found = [*forward.readings.findings, *checks.exclusions(forward)]
@@ -175,7 +180,9 @@ def _findings(
     found += checks.told(
         names, shown.shares("zones") if solved.problem.smooth else [None] * len(names)
     )
-    found += _balance(solved)
+    if sums is not None:
+        total = case.source.total_unit
+        found += checks.balanced(sums, total, per(total, case.member.kind.total_unit))
     for key, share in shares.items():
         own = float(share[0])
         variance = own + float(answers.sd[0] ** 2)
@@ -214,14 +221,10 @@ def _nuisances(solved: Solved, shown: Shown) -> list[Finding]:
     )
 
 
-def _balance(solved: Solved) -> list[Finding]:
-    forward = solved.forward
+def _sums(solved: Solved) -> Balance | None:
+    """Equilibrium of the estimate; None where it is not determined."""
     f, beta = estimate(solved)
-    if f is None:
-        return []
-    source = forward.case.source
-    scale = per(source.total_unit, forward.case.member.kind.total_unit)
-    return checks.balanced(balance(forward, f, beta), source.total_unit, scale)
+    return None if f is None else balance(solved.forward, f, beta)
 
 
 def _pictures(solved: Solved) -> Pictures:

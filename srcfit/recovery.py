@@ -70,13 +70,18 @@ class Recovery:
     Attributes
     ----------
     case : Case
-    source, zones, readings, ladder : DataFrame
-        With the columns of their CSV files (units in brackets).
+    source, zones, readings, ladder, section : DataFrame
+        With the columns of their CSV files (units in brackets). `section` holds moment and shear
+        of a beam, or the flow or force of another member, along it.
     total, peak : mapping
         As in summary.json.
     findings : list of mapping (code, level, sentence)
     pictures : Pictures
         Curves for the figures.
+    balance : mapping or None
+        Equilibrium of the estimate in the total's unit: source (known parts included), reactions,
+        along (what bedding, loss, decay or inertia take) and difference; real parts. None where
+        the readings do not determine the source.
     """
 
     case: Case
@@ -86,6 +91,8 @@ class Recovery:
     ladder: pd.DataFrame
     pictures: Pictures
     facts: Mapping[str, Any] = field(default_factory=dict)
+    section: pd.DataFrame | None = None
+    balance: Mapping[str, float] | None = None
 
     @property
     def total(self) -> Mapping[str, Any]:

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from srcfit.answers import per, zone_sizes
+from srcfit.answers import per, section_forces, section_places, zone_sizes
 from srcfit.criteria import CRITERIA
 from srcfit.member import Array
 from srcfit.recovery import Number
@@ -136,6 +136,24 @@ def zones_table(solved: Solved, shown: Shown) -> pd.DataFrame:
         | shown.twin("zones", f"value_imag [{T}]")
         | shown.twin("zones", f"mean_imag [{U}]", per_size / zone_sizes(case))
     )
+
+
+def section_table(solved: Solved, shown: Shown) -> pd.DataFrame:
+    """Section forces (moment and shear, or the flow) along the member; at a jump the right limit.
+
+    Empty where the readings do not tell them.
+    """
+    import pandas as pd
+
+    forward = solved.forward
+    at = section_places(forward) * position_scale(solved)
+    columns: dict[str, Any] = {f"x [{forward.case.source.position_unit}]": at}
+    for force in section_forces(forward.case):
+        value, sd, lower, upper, _ = shown.block(force.name)
+        parts = {"": value, "_sd": sd, "_lower": lower, "_upper": upper}
+        columns |= {f"{force.name}{end} [{force.unit}]": part for end, part in parts.items()}
+        columns |= shown.twin(force.name, f"{force.name}_imag [{force.unit}]")
+    return pd.DataFrame(columns)
 
 
 def readings_table(solved: Solved) -> pd.DataFrame:

@@ -67,7 +67,9 @@ def join(*parts: str) -> str:
     return "\n\n".join(part for part in parts if part)
 
 
-def recovery_text(summary: Summary, limit_unit: str = "") -> str:
+def recovery_text(
+    summary: Summary, limit_unit: str = "", balance: Mapping[str, float] | None = None
+) -> str:
     """The table at the end of `srcfit recover`.
 
     Parameters
@@ -76,20 +78,33 @@ def recovery_text(summary: Summary, limit_unit: str = "") -> str:
         As in summary.json.
     limit_unit : str
         Unit of the limit, where one is asked about.
+    balance : mapping, optional
+        Equilibrium of the estimate, see `Recovery.balance`.
 
     Returns
     -------
     str
         Title, what was read and how, every number with its standard uncertainty and interval,
-        the limit's verdict, the findings and the cautions.
+        the limit's verdict, the equilibrium, the findings and the cautions.
     """
     return join(
         _opening(summary),
         _numbers(summary),
         section("Limit", _limit(summary, limit_unit)),
+        section("Balance", balance_text(balance, summary["units"]["total"]) if balance else ""),
         section("Findings", findings_text(summary["findings"])),
         section("Cautions", bullets(summary["cautions"])),
     )
+
+
+def balance_text(balance: Mapping[str, float], unit: str) -> str:
+    """Equilibrium as a small table: what acts is carried by ends and supports and along."""
+    words = {"source": "source", "reactions": "ends and supports", "along": "along the member",
+             "difference": "difference"}  # fmt: skip
+    size = max(abs(v) for v in balance.values())
+    shares = {k: v if abs(v) > 1e-9 * size else 0.0 for k, v in balance.items()}
+    rows = [(words[k], f"{brief(v, 6)} {unit}") for k, v in shares.items()]
+    return table(("", ""), rows, "lr")
 
 
 def findings_text(findings: Iterable[Mapping[str, str]]) -> str:

@@ -253,7 +253,7 @@ def _balanced(problem: Problem, free: np.ndarray[tuple[int], np.dtype[np.intp]])
 
 
 def _sums(rows: Array, constants: Array) -> Array:
-    """Rows times constants; 0 where they cancel but for rounding, as moments of a level load do."""
+    """Rows times constants; 0 where they cancel but for rounding (moments of a level load)."""
     sums, size = rows @ constants, np.abs(rows) @ constants
     return np.where(np.abs(sums) > ROUNDED * size, sums, 0.0)
 
