@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 import srcfit
+from srcfit.errors import SolveError
 
 PLACES = np.linspace(0.5, 11.5, 14)
 MEMBER = {
@@ -38,7 +39,9 @@ def mapping(tmp_path, member=MEMBER, scale=1e3, unit="mm", x_scale=1.0, x_unit="
     }  # fmt: skip
     return {
         "title": "t", "member": member, "source": source, "strength": strength,
-        "readings": {"file": name, "position": {"column": "x", "unit": x_unit}, "column": [column]},
+        "readings": {
+            "file": name, "position": {"column": "x", "unit": x_unit}, "column": [column],
+        },
     }  # fmt: skip
 
 
@@ -96,11 +99,13 @@ def test_truth_in_the_intervals(tmp_path):
 @pytest.mark.parametrize("choose", ["averaged", "gcv", "l-curve", "discrepancy", "k-fold", "risk"])
 def test_solvers_and_criteria(tmp_path, solver, choose):
     """Every solver with every criterion answers near the truth, or says why it cannot."""
-    try:
-        s = solve(tmp_path, solver=solver, choose=choose).summary()
-    except srcfit.errors.SolveError as error:
-        assert choose in str(error)
+    case = srcfit.make_case(mapping(tmp_path, solver=solver, choose=choose), folder=tmp_path)
+    silent = choose == "l-curve" and solver != "eigenbasis"  # no corner on these readings
+    if silent:
+        with pytest.raises(SolveError, match="no corner"):
+            srcfit.recover(case)
         return
+    s = srcfit.recover(case).summary()
     assert s["strength"]["solver"] == solver
     assert s["total"]["lower"] < 54.0 < s["total"]["upper"]
     assert (s["strength"]["value"] is None) == (choose == "averaged" and solver == "tikhonov")
