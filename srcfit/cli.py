@@ -70,7 +70,7 @@ def main(argv: Sequence[str] | None = None) -> int:
 
 
 def _fail(message: str, status: int) -> int:
-    click.echo(f"srcfit: {' '.join(message.split())}", err=True)
+    _say(message, False)
     return status
 
 
@@ -339,9 +339,12 @@ def _limit_unit(case: Case) -> str:
 
 
 def _say(message: str, quiet: bool) -> None:
-    """Progress, on the error stream."""
+    """Progress and errors on the error stream, without the control characters of names."""
+    from unicodedata import category
+
     if not quiet:
-        click.echo(f"srcfit: {message}", err=True)
+        plain = "".join(" " if category(c)[0] == "C" else c for c in message)
+        click.echo(f"srcfit: {' '.join(plain.split())}", err=True)
 
 
 def _print_json(value: Mapping[str, Any] | Sequence[Any]) -> None:

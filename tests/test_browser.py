@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import base64
+import csv
 import json
 import re
 import time
 import zlib
 from pathlib import Path
+from tempfile import TemporaryDirectory
 
 import fake_recovery as fake
 import numpy as np
@@ -18,7 +20,7 @@ from selenium.webdriver.common.action_chains import ActionChains
 from selenium.webdriver.common.by import By
 from selenium.webdriver.common.keys import Keys
 
-from srcfit import plots, report
+from srcfit import make_case, plots, recover, report
 
 pytestmark = pytest.mark.browser
 AXE = Path(__file__).parent / "assets" / "axe.min.js"
@@ -27,8 +29,31 @@ FLAGS = (
     "--disable-background-networking", "--disable-component-update", "--disable-sync",
     "--window-size=1280,1000",
 )  # fmt: skip
+
+
+def recovered():
+    """A real recovery whose every name is hostile."""
+    text = f"{fake.HOSTILE} deflection [mm]"
+    with TemporaryDirectory() as folder:
+        with (Path(folder) / "w.csv").open("w", newline="", encoding="utf-8") as file:
+            rows = [(x, f"{x * (9 - x) / 5:.2f}", fake.HOSTILE) for x in range(1, 9)]
+            csv.writer(file).writerows([("x [m]", text, "flag"), *rows])
+        case = make_case({
+            "title": fake.HOSTILE,
+            "member": {"kind": "beam", "length": "9 m", "bending_stiffness": "85 MN*m^2",
+                       "left": "pinned", "right": "pinned"},
+            "readings": {"file": "w.csv", "position": {"column": "x [m]", "unit": "m"},
+                         "column": [{"column": text, "kind": "deflection", "sd": "0.1 mm",
+                                     "group": fake.HOSTILE}]},
+            "source": {"unit": "kN/m", "cells": 40,
+                       "zones": [{"name": fake.HOSTILE, "from": "3 m", "to": "6 m"}]},
+        }, folder)  # fmt: skip
+        return recover(case)
+
+
 PAGES = {
     "beam": lambda: fake.make("beam"),
+    "recovered": recovered,
     "large": lambda: fake.make("conductor", 1000, 400),
     "hostile": lambda: fake.make("beam", hostile=True, bare=True),
 }
@@ -206,7 +231,7 @@ def test_pointing_at_a_reading_shows_its_influence(browser, pages, recoveries):
 
 @pytest.mark.parametrize(
     ("name", "dark", "width"),
-    [("beam", False, 1280), ("hostile", True, 360)],
+    [("beam", False, 1280), ("recovered", False, 768), ("hostile", True, 360)],
 )
 def test_accessibility(browser, pages, name, dark, width):
     show(browser, pages, name, width=width, dark=dark)
@@ -302,9 +327,10 @@ def test_a_large_page_is_quick(browser, pages):
     assert np.median(steps) < 50
 
 
-def test_hostile_names_run_nothing_and_read_right(browser, pages):
+@pytest.mark.parametrize("name", ["hostile", "recovered"])
+def test_hostile_names_run_nothing_and_read_right(browser, pages, name):
     browser.get_log("browser")
-    show(browser, pages, "hostile")
+    show(browser, pages, name)
     named = fake.HOSTILE.replace("\u202e", "").replace("\u202c", "")
     assert browser.title == named
     assert browser.find_element(By.TAG_NAME, "h1").text == named

@@ -140,6 +140,8 @@ def raising(monkeypatch, error):
     [
         (ReadingsError("it is empty", "data.csv:1", "fill\nit in"), 3,
          "srcfit: data.csv:1: it is empty; fill it in.\n"),
+        (ReadingsError("no \x1b[2Jcolumn", "a\u202eb.csv", "set it"), 3,
+         "srcfit: a b.csv: no [2Jcolumn; set it.\n"),
         (KeyboardInterrupt(), 130, "srcfit: interrupted\n"),
         (MemoryError(), 3, "srcfit: not enough memory; ask for fewer cells or readings\n"),
         (ZeroDivisionError("by 0"), 1, "srcfit: unexpected ZeroDivisionError: by 0; this is a "
