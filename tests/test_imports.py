@@ -22,9 +22,8 @@ ORDER = (
     "grid", "unknowns", "forward", "view", "elimination", "whitening", "priors", "solvers",
     "criteria", "evidence", "noise", "bands", "answers", "balance", "checks", "solve", "results",
     "facts", "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report",
-    "recover", "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "draft", "start",
-    "plan",
-    "rehearse", "series", "compare", "sklearn", "cli", "__main__",
+    "recover", "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "draft",
+    "start", "plan", "rehearse", "series", "compare", "sklearn", "cli", "__main__",
 )  # fmt: skip
 
 # rooms that a module below them in the list may open inside a function
