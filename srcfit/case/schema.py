@@ -24,7 +24,9 @@ Quantity = Any  # "768 MN*m^2"; checked by `Reader.quantity`
 class Table(BaseModel):
     """One table of a case."""
 
-    model_config = ConfigDict(extra="forbid", strict=True, arbitrary_types_allowed=True)
+    model_config = ConfigDict(
+        defer_build=True, extra="forbid", strict=True, arbitrary_types_allowed=True
+    )
     needed: ClassVar[tuple[str, ...]] = ()
 
 
