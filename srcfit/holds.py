@@ -8,7 +8,7 @@ import numpy as np
 
 from srcfit.influence import Bases, Influence, bases
 from srcfit.member import RIGID, Member, Restraint, Support
-from srcfit.state import Chain, Matrix, chain, operator
+from srcfit.state import Chain, Matrix, chain, operator, special_places
 
 SINGULAR = 1e-9
 ADDED = "hold"  # word of a support that was added to a member nothing holds
@@ -18,11 +18,13 @@ def null_states(line: Chain, both: Bases) -> Matrix:
     """States at all nodes (d, N, n) of the d null modes; d = 0 for a regular operator."""
     # a null mode lies in both bases; the node where they meet best shows it most clearly
     W, Y = np.linalg.qr(both.W)[0], np.linalg.qr(both.Y)[0]
-    meet = np.linalg.svd(np.concatenate([W, Y], axis=2), compute_uv=False)[:, -1]
-    node = int(np.argmin(meet))
-    if meet[node] > SINGULAR:
-        return np.zeros((0, len(line.x), line.order))
     half = line.order // 2
+    meet = np.linalg.svd(np.concatenate([W, Y], axis=2), compute_uv=False)[:, half:]
+    count = (meet < SINGULAR).sum(axis=1)
+    if not count.any():
+        return np.zeros((0, len(line.x), line.order))
+    most = np.flatnonzero(count == count.max())
+    node = int(most[np.argmin(meet[most, half - count.max()])])
     _, size, vh = np.linalg.svd(np.concatenate([W[node], -Y[node]], axis=1))
     states = vh[size < SINGULAR][:, :half].conj() @ W[node].T
     c = np.linalg.lstsq(both.W[node], states.T)[0].T
@@ -130,17 +132,18 @@ def restrained(member: Member) -> tuple[Member, Matrix | None, Chain | None]:
     if _surely_held(member):
         return member, None, None
     # odd fractions: a hold should not fall on a user's own place
-    line = chain(member, member.start + member.length * np.linspace(0.0137, 0.9871, 23))
+    odd = member.start + member.length * np.linspace(0.0137, 0.9871, 23)
+    line = chain(member, odd)
     modes = null_states(line, bases(line))
     if len(modes) == 0:
         return member, None, None
     left = modes[:, :, 0].copy()
-    taken = [s.at for s in member.supports]
-    allowed = (line.x > member.start) & (line.x < member.end)
-    allowed &= ~np.isin(line.x, taken)
+    allowed = np.isin(line.x, odd) & ~np.isin(line.x, [p for p, _, _ in special_places(member)])
+    # of places that serve alike the one in the middle: far from singular ends
+    aside = np.abs(line.x - (member.start + member.end) / 2) / member.length
     added = []
     for _ in range(len(modes)):
-        size = np.where(allowed, np.abs(left).max(axis=0), -1.0)
+        size = np.where(allowed, np.abs(left).max(axis=0) * (1 - 0.01 * aside), -1.0)
         best = int(np.argmax(size))
         column = left[:, best]
         left = left - np.outer(column, column.conj() @ left) / (np.abs(column) ** 2).sum()

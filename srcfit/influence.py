@@ -26,6 +26,7 @@ from srcfit.errors import MemberError
 from srcfit.member import Array, Member
 from srcfit.state import NEAR_AXIS, Chain, Matrix, gauss, operator
 
+LOOSE = 1e-11  # size of what a point condition does to states that it does not touch
 CARRIED = 0.5  # change of the state, as a norm, after which a basis is made orthonormal again
 
 
@@ -150,7 +151,7 @@ def _through_pin(basis: Matrix, row: Array, column: Array, what: str) -> tuple[M
     Returns the new basis and the matrix that takes coefficients in it back to the old basis.
     """
     held = row @ basis
-    if np.abs(held).max() < 1e-13:
+    if np.abs(held).max() < LOOSE:
         raise MemberError(
             f"the part of the member beside {what} is free to move by itself",
             "member",

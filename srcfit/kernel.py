@@ -15,7 +15,7 @@ import numpy as np
 from srcfit.eigen import refuse_buckled
 from srcfit.errors import MemberError
 from srcfit.holds import restrained, restraint_forces
-from srcfit.influence import Influence, at_nodes, influence, interval_integrals
+from srcfit.influence import at_nodes, influence, interval_integrals
 from srcfit.member import Array, Member, Unknown
 from srcfit.nulls import Nulls
 from srcfit.quantities import functionals
@@ -102,10 +102,10 @@ def kernel(member: Member, x: Any, s: Any, quantity: str = "response") -> Matrix
     refuse_buckled(member)
     x, s = _checked(member, x, "x"), _checked(member, s, "s")
     held, modes, _ = restrained(member)
-    line = chain(held, np.concatenate([x, s]))
-    lines = influence(line, functionals(line, quantity, x))
-    G = at_nodes(lines, line.node(s))
-    return G if modes is None else _generalised(member, line, lines, s, quantity, x, G)
+    if modes is None:
+        line = chain(held, np.concatenate([x, s]))
+        return at_nodes(influence(line, functionals(line, quantity, x)), line.node(s))
+    return _generalised(member, held, x, s, quantity)
 
 
 def _quadrature(member: Member) -> tuple[Array, Array]:
@@ -118,21 +118,20 @@ def _quadrature(member: Member) -> tuple[Array, Array]:
     return places.ravel(), (h[:, None] * b * member.area(places)).ravel()
 
 
-def _generalised(
-    member: Member, line: Chain, lines: Influence, s: Array, quantity: str, x: Array, G: Matrix
-) -> Matrix:
+def _generalised(member: Member, held: Member, x: Array, s: Array, quantity: str) -> Matrix:
     """Project the held member's kernel onto the complement of the null modes, on both sides."""
+    t, weight = _quadrature(held)
+    line = chain(held, np.concatenate([x, s, t]))
     nulls = Nulls(member, line)
-    t, weight = _quadrature(line.member)
-    fine = chain(line.member, np.concatenate([line.x, t]))
-    fine_nulls = Nulls(member, fine)
-    response = influence(fine, functionals(fine, "response", np.concatenate([s, t])))
-    psi = fine_nulls.against(response)  # response of the held member to r phi
-    psi_s, psi_t = psi[: len(s)], psi[len(s) :]
-    read = nulls.read(quantity, x)
-    phi_t = fine_nulls.value(t) * weight * profile(member, "r", t, 1.0)
-    inner = nulls.against(lines) - read @ (phi_t @ psi_t).T
-    found: Matrix = G - read @ psi_s.T - inner @ nulls.value(s)
+    asked = functionals(line, quantity, x), functionals(line, "response", np.concatenate([s, t]))
+    lines, n = influence(line, [*asked[0], *asked[1]]), len(x)
+    G = at_nodes(lines, line.node(s))[:n]
+    psi = nulls.against(lines)  # what the held member answers to r phi
+    read, psi_s, psi_t = psi[:n], psi[n : n + len(s)], psi[n + len(s) :]
+    phi_t = nulls.value(t) * weight * profile(member, "r", t, 1.0)
+    phi = nulls.read(quantity, x)
+    inner = read - phi @ (phi_t @ psi_t).T
+    found: Matrix = G - phi @ psi_s.T - inner @ nulls.value(s)
     return found
 
 

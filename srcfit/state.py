@@ -169,7 +169,8 @@ def scales(member: Member, x: Array, h: Array | float, mu: float = 0.0) -> Array
         p = np.abs(k["p"])
         return np.stack([np.ones_like(p), p / h], axis=-1)
     p2 = np.abs(k["p2"])
-    return np.stack([np.ones_like(p2), p2 * 0 + 1 / h, p2 / h**2, p2 / h**3], axis=-1)
+    slack = h**3 / p2 + (h / np.abs(k["shear"]) if "shear" in k else 0.0)
+    return np.stack([np.ones_like(p2), p2 * 0 + 1 / h, p2 / h**2, 1 / slack], axis=-1)
 
 
 def special_places(member: Member) -> list[tuple[float, str, Any]]:
@@ -344,9 +345,8 @@ def chain(member: Member, points: Any = (), mu: float = 0.0) -> Chain:
     n = member.kind.order
     middle = np.linspace(member.start, member.end, 41)[1:-1]
     rate = float(decay_rate(member, middle, mu).max())
-    size = np.exp(np.log(scales(member, middle, 1.0, mu)).mean(axis=0))
     reach = min(member.length, 1 / rate) if rate > 0 else member.length
-    scale = size / reach ** np.arange(n) if n == 4 else size / np.array([1.0, reach])
+    scale = np.exp(np.log(scales(member, middle, reach, mu)).mean(axis=0))
     for place, what, item in special_places(member):
         at = int(np.argmin(np.abs(np.array(x) - place)))
         while at + 1 < len(x) and x[at + 1] == x[at]:  # special places ascend: none moves later

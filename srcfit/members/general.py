@@ -70,6 +70,6 @@ GENERAL_4 = replace(
         SensorSpec("curvature", "curvature", "1/m^2"),
         SensorSpec("flux", "shear", "m", directions=DIRECTION_AXIAL),
     ),
-    rotation_spring_unit="m^2",
+    rotation_spring_unit="m^3",
     end_words=("pinned", "clamped", "free", "guided"),
 )
