@@ -188,7 +188,11 @@ def _limit(solved: Solved, shown: Shown) -> dict[str, Any] | None:
     estimate, sd = float(n.value * per_size), float(n.sd * per_size)
     from scipy.special import chndtr, ndtr, stdtr
 
+    # constraints make intervals uneven: the side towards the limit counts
     ratio = (at_most - estimate) / sd
+    end = n.upper if ratio > 0 else n.lower
+    if solved.held is not None and end is not None and n.value != end:
+        ratio = solved.answers.quantile * (at_most - estimate) / abs(end * per_size - estimate)
     dof = solved.readings - solved.answers.fit.effective_dof
     chance = float(ndtr(ratio) if solved.problem.stated else stdtr(max(dof, 1.0), ratio))
     if n.imaginary is not None:  # the modulus is judged

@@ -7,7 +7,7 @@ from dataclasses import asdict, replace
 
 import numpy as np
 
-from srcfit import __version__, checks
+from srcfit import __version__, checks, knowledge
 from srcfit.answers import per
 from srcfit.balance import Balance, balance, balance_facts
 from srcfit.bands import undetermined
@@ -91,13 +91,13 @@ def recover(
 
     with threadpool_limits(limits=1):
         readings = read(case) if readings is None else readings
-        solved = solve(case, readings)
-        extra, shares, bent = _properties(solved)
+        seed = rng if isinstance(rng, np.random.SeedSequence) else np.random.SeedSequence(rng)
+        solved = solve(case, readings, rng=seed)
+        extra, shares, bent = _properties(solved, seed)
         shown = Shown(solved, extra)
         sums = _sums(solved)
         found = [asdict(f) for f in _findings(solved, shown, shares, bent, sums)]
-        seed = rng.entropy if isinstance(rng, np.random.SeedSequence) else int(rng)
-        summary = facts(solved, shown, found, seed, __version__)
+        summary = facts(solved, shown, found, seed.entropy, __version__)
         return Recovery(
             case=case,
             source=source_table(solved, shown),
@@ -111,7 +111,9 @@ def recover(
         )
 
 
-def _properties(solved: Solved) -> tuple[Array, Mapping[str, Array], Mapping[str, float]]:
+def _properties(
+    solved: Solved, rng: np.random.SeedSequence
+) -> tuple[Array, Mapping[str, Array], Mapping[str, float]]:
     """Variance that uncertain properties add to each answer, by linearisation.
 
     Returns the sum, each property's share of it, and how far each bends: the difference of its
@@ -127,6 +129,7 @@ def _properties(solved: Solved) -> tuple[Array, Mapping[str, Array], Mapping[str
                 replace(forward.case, member=vary(forward.case.member, key, side)),
                 forward.readings,
                 criteria=False,
+                rng=rng,
             )
             for side in (1.0, -1.0)
         )
@@ -176,6 +179,7 @@ def _findings(
             {name: known(c.strength) for name, c in solved.choices.items() if c.index >= 0}
         )
     found += _nuisances(solved, shown)
+    found += knowledge.findings(solved, shown)
     names = [z.name for z in case.source.zones]
     found += checks.told(
         names, shown.shares("zones") if solved.problem.smooth else [None] * len(names)

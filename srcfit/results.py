@@ -36,8 +36,7 @@ class Shown:
         self.value: Array = np.real(value)
         self.imaginary: Array = np.imag(value)
         self.sd: Array = sd * np.abs(asked.factor)
-        half = a.quantile * self.sd
-        self.lower, self.upper = self.value - half, self.value + half
+        self.lower, self.upper = _interval(solved, np.sqrt(extra_variance), self.value)
         self.share = -asked.widest(-a.data_share)
         self._blocks = solved.asked.blocks
 
@@ -70,6 +69,26 @@ class Shown:
             self.value[where], self.sd[where], self.lower[where], self.upper[where],
             self.share[where],
         )  # fmt: skip
+
+
+def _interval(solved: Solved, extra: Array, value: Array) -> tuple[Array, Array]:
+    """Ends of the intervals in the user's units; constraints make them uneven.
+
+    An added sd widens each side in quadrature, and no end leaves what is possible at all.
+    """
+    a, asked = solved.answers, solved.asked
+    below, above = (
+        asked.widest(np.hypot(reach, a.quantile * extra))
+        for reach in (a.value - a.lower, a.upper - a.value)
+    )
+    size = np.abs(asked.factor)
+    lower, upper = value - below * size, value + above * size
+    if a.low is None or a.high is None:
+        return lower, upper
+    least, most = (
+        (end + np.real(asked.constant) + asked.shift) * asked.factor for end in (a.low, a.high)
+    )
+    return np.maximum(lower, least), np.minimum(upper, most)
 
 
 def known(value: Any) -> float | None:

@@ -11,14 +11,16 @@ from typing import Any
 
 import numpy as np
 
-from srcfit.answers import Asked, ask, per
+from srcfit.answers import Asked, ask, per, section_forces
 from srcfit.bands import Answers, cautious, plain
 from srcfit.case.model import Case
+from srcfit.constraints import Held, constrained
 from srcfit.criteria import CRITERIA, Choice, choose
 from srcfit.eigen import modes
 from srcfit.elimination import eliminate
 from srcfit.errors import SolveError
 from srcfit.forward import Forward, build
+from srcfit.limits import limits
 from srcfit.member import Array, Member
 from srcfit.noise import estimate_lag, estimate_noise
 from srcfit.priors import Family, family
@@ -44,6 +46,7 @@ class Solved:
         smooth part
     choices : mapping criterion -> Choice on that ladder
     choice : the one that was followed; None where averaged
+    held : what sign, ceiling and monotone stretches did; None where none is declared
     """
 
     forward: Forward
@@ -55,6 +58,7 @@ class Solved:
     ladder: Ladder | None
     choices: Mapping[str, Choice]
     choice: Choice | None
+    held: Held | None = None
 
     @property
     def readings(self) -> int:
@@ -62,21 +66,33 @@ class Solved:
         return len(self.problem.d) - self.problem.pseudo
 
 
-def solve(case: Case, readings: Readings, *, criteria: bool = True) -> Solved:
+def solve(
+    case: Case,
+    readings: Readings,
+    *,
+    criteria: bool = True,
+    rng: np.random.SeedSequence | None = None,
+) -> Solved:
     """Invert a case.
 
     Parameters
     ----------
     criteria : bool
         Also run every criterion on the ladder (left out when only the estimate is wanted).
+    rng : SeedSequence, optional
+        Seed of draws, which only constraints need.
 
     Raises
     ------
     SolveError
         When there are too few readings, or the chosen criterion has nothing to say.
     """
-    forward = build(case, readings)
-    balanced = eliminate(forward)
+    return invert(build(case, readings), criteria, rng or np.random.SeedSequence(0))
+
+
+def invert(forward: Forward, criteria: bool, rng: np.random.SeedSequence) -> Solved:
+    """Invert a forward model."""
+    case, balanced = forward.case, eliminate(forward)
     sd, lag = noise_of(forward)
     problem = whitened(forward, sd, lag, balanced)
     asked = ask(forward, balanced)
@@ -86,6 +102,7 @@ def solve(case: Case, readings: Readings, *, criteria: bool = True) -> Solved:
     ladder = _ladder(case, forward, problem) if smooth and wanted else None
     choices = {} if ladder is None else {name: choose(ladder, name) for name in CRITERIA}
     choice = None if ladder is None else _choice(case, ladder, choices)
+    centre = None if choice is None or ladder is None else (ladder, choice.index)
     if strength.interval == "plain" and smooth:
         answers = plain(
             problem, asked.questions, level=strength.level,
@@ -93,9 +110,18 @@ def solve(case: Case, readings: Readings, *, criteria: bool = True) -> Solved:
             roughness=1 if strength.roughness == "averaged" else strength.roughness,
         )  # fmt: skip
     else:
-        centre = None if choice is None or ladder is None else (ladder, choice.index)
         answers = cautious(problem, asked.questions, level=strength.level, centre=centre)
-    return Solved(forward, problem, sd, lag, asked, answers, ladder, choices, choice)
+    known, held = limits(forward, asked, balanced), None
+    if known is not None:
+        narrow = answers.choice is not None
+        if answers.choice is not None:
+            centre = answers.fit.ladders[0], answers.choice.index
+        answers, held = constrained(
+            problem, asked.questions, known, answers, rng, level=strength.level, centre=centre,
+            narrow=narrow, along=[asked.blocks[f.name] for f in section_forces(case)],
+            band=criteria,
+        )  # fmt: skip
+    return Solved(forward, problem, sd, lag, asked, answers, ladder, choices, choice, held)
 
 
 def noise_of(forward: Forward) -> tuple[Array, Array]:

@@ -20,8 +20,9 @@ ORDER = (
     "problem", "recovery", "case", "readings", "state", "influence", "holds", "quantities",
     "nulls", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen", "kernel", "sensors",
     "grid", "unknowns", "forward", "view", "elimination", "whitening", "priors", "solvers",
-    "criteria", "evidence", "noise", "bands", "answers", "balance", "checks", "solve", "results",
-    "facts", "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report",
+    "criteria", "evidence", "noise", "bands", "laws", "truncated", "strict", "answers", "limits",
+    "envelope", "constraints", "balance", "checks", "solve", "results", "facts", "knowledge",
+    "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report",
     "recover", "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "draft",
     "start", "plan", "rehearse", "series", "compare", "sklearn", "cli", "__main__",
 )  # fmt: skip

@@ -23,6 +23,8 @@ if TYPE_CHECKING:
 # columns are scaled to unit norm before the rank test, so this is free of units
 RANK = 1e-7
 REACHED = 1e-6
+# questions that weigh more than this part of all cells are quicker as a dense matrix
+FULL = 0.2
 ROUNDED = 1e-10
 UNIFORM = "uniform source"
 
@@ -272,5 +274,7 @@ def ask(fr: Frame, questions: Questions) -> Asked:
     off = np.linalg.norm(scaled - (scaled @ fr.reach.T) @ fr.reach, axis=1)
     determined = off <= REACHED * np.linalg.norm(scaled, axis=1)
     dense = np.asarray(questions.cells)[:, fr.free]
-    G = csr_array(dense) if fr.balanced is None else dense @ fr.balanced
+    G: csr_array | Array = dense if fr.balanced is None else dense @ fr.balanced
+    if fr.balanced is None and np.count_nonzero(dense) < FULL * dense.size:
+        G = csr_array(dense)
     return Asked(G, b @ fr.solve, np.abs(dense).sum(axis=1), determined)
