@@ -42,7 +42,7 @@ def random_case(seed):
 
 
 def by_sympy(case):
-    """sympy's beam: y is up there, shear has the other sign, a positive moment load is clockwise."""
+    """Beam of sympy: y is up, shear and bending moment have the other sign."""
     length, left, right, inner, (a, b, q), force, couple, EI = case
     found = Beam(length, 1, EI)
     names, deflection, slope = [], [], []
