@@ -23,7 +23,7 @@ def facts(
     fit = fit_facts(solved)
     lumped: list[dict[str, Any]] = [
         {"name": c.name, "at": None if p.at is None else p.at * position_scale(solved)}
-        | dict[str, Any](number_map(n))
+        | dict[str, Any](number_map(n)) | _whereabouts(solved, c.name)
         for c, p, n in zip(
             [c for c in forward.columns if c.kind == "lumped"], source.lumped,
             shown.numbers("lumped"), strict=True,
@@ -70,6 +70,14 @@ def facts(
         "seed": seed,
         "cautions": list(case.member.kind.cautions),
     }  # fmt: skip
+
+
+def _whereabouts(solved: Solved, name: str) -> dict[str, float | None]:
+    """Interval of the place of a lumped part; null where its place was given."""
+    place, scale = solved.places.get(name), position_scale(solved)
+    if place is None:
+        return {"at_lower": None, "at_upper": None}
+    return {"at_lower": place.lower * scale, "at_upper": place.upper * scale}
 
 
 def _strength_facts(solved: Solved) -> tuple[dict[str, Any], str]:

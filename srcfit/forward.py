@@ -7,6 +7,7 @@ exactly along the reading's influence line. B: lumped parts, nuisances, null mod
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -98,8 +99,17 @@ class Forward:
         return [self.case.columns[self.readings.spec[r]] for r in self.rows]
 
 
-def build(case: Case, readings: Readings) -> Forward:
+def build(
+    case: Case, readings: Readings, *, edges: Sequence[float] = (), spare: bool = False
+) -> Forward:
     """Build the linear model of a case.
+
+    Parameters
+    ----------
+    edges : sequence of float
+        Further places where cells are cut [m].
+    spare : bool
+        Whether there may be more unknowns than readings (places that are to be compared).
 
     Raises
     ------
@@ -110,7 +120,7 @@ def build(case: Case, readings: Readings) -> Forward:
     """
     refuse_buckled(case.member)
     rows = np.flatnonzero(readings.used)
-    grid = make_grid(case)
+    grid = make_grid(case, edges)
     specs = [case.columns[readings.spec[r]] for r in rows]
     line, asked, nulls, reactions, null_columns = _lines(case, readings, rows, specs, grid)
     lines, n = influence(line, asked), len(rows)
@@ -124,7 +134,8 @@ def build(case: Case, readings: Readings) -> Forward:
     )
     absolute = base(case.member) * _absolute(case.member, specs)
     y = corrected(readings, rows, specs) - known[:n] - absolute
-    _enough(case, n, columns)
+    if not spare:
+        _enough(case, n, columns)
     group_names = tuple(dict.fromkeys(s.group for s in specs))
     balance = None if nulls is None else _balance(nulls, grid, case, len(columns))
     return Forward(
@@ -269,8 +280,8 @@ def _lumped(case: Case, line: Chain, lines: Influence) -> tuple[list[Column], Ma
     for part in source.lumped:
         if part.at is None:
             raise SolveError(
-                f"the lumped part {part.name!r} has no place (`between`), and searching for one "
-                "is not offered", "source.lumped", "give its place with `at`",
+                f"the lumped part {part.name!r} has no place", "source.lumped",
+                "give its place with `at`",
             )  # fmt: skip
         columns.append(Column(part.name, "lumped", source.total_unit, member.kind.total_unit))
         if part.width == 0:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 
 from srcfit.case.model import Case, Lumped
@@ -10,15 +12,17 @@ from srcfit.problem import Grid
 from srcfit.state import gauss
 
 
-def make_grid(case: Case) -> Grid:
+def make_grid(case: Case, also: Sequence[float] = ()) -> Grid:
     """Equal cells over the member, cut at zone edges, breaks, zero stretches and widths.
 
-    A cell edge within a fifth of a cell of a drawn edge moves onto it.
+    A cell edge within a fifth of a cell of a drawn edge moves onto it. `also`: further places
+    where cells are cut.
     """
     member, source = case.member, case.source
     drawn = [z.start for z in source.zones] + [z.end for z in source.zones]
     drawn += [*source.breaks, *(e for part in source.zero for e in part)]
     drawn += [e for part in source.lumped if part.width for e in spread(part)]
+    drawn += also
     inside = np.unique([e for e in drawn if member.start < e < member.end])
     width = member.length / source.cells
     near = 1e-9 * member.length

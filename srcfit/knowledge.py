@@ -18,19 +18,50 @@ SURE = 0.001  # probability below which a growth of the misfit is called more th
 ENOUGH = 200.0  # effective draws below which the ends of an interval are rough
 REFUSED = 0.01  # share of trajectories that may be lost
 LISTED = 5  # stretches that are named
+APART = 0.05  # probability from which a stretch of places is named
 
 
 def findings(solved: Solved, shown: Shown) -> list[Finding]:
     """Everything about the knowledge of a case."""
-    held = solved.held
+    found, held = places(solved), solved.held
     if held is None:
-        return []
+        return found
     if held.reason:
-        return unused(held.reason)
-    found = contradicted(solved, held)
+        return [*found, *unused(held.reason)]
+    found += contradicted(solved, held)
     if not held.draws:
         return found
     return [*found, *active(solved, held, shown), *sampled(solved, held)]
+
+
+def places(solved: Solved) -> list[Finding]:
+    """Places that were looked for and are apart, or at the end of where they were looked for."""
+    unit = solved.forward.case.source.position_unit
+    scale, found = per(unit, "m"), []
+    for place in solved.places.values():
+        apart = [s for s in place.stretches if s.probability >= APART]
+        if len(apart) > 1:
+            words = "; ".join(
+                f"{s.start * scale:.4g}–{s.end * scale:.4g} {unit} ({s.probability:.0%})"
+                for s in apart
+            )
+            found.append(
+                Finding(
+                    "place-bimodal", "caution",
+                    f"The readings leave {place.name!r} at more than one place: {words}. Its "
+                    "strength, and all numbers that depend on it, are averaged over them; a "
+                    "reading between these places would tell.",
+                )
+            )  # fmt: skip
+        if place.at_end:
+            found.append(
+                Finding(
+                    "place-at-end", "caution",
+                    f"The most probable place of {place.name!r} is an end of the stretch where it "
+                    "was looked for: widen `between`, unless the part cannot stand beyond.",
+                )
+            )  # fmt: skip
+    return found
 
 
 def unused(reason: str) -> list[Finding]:

@@ -19,6 +19,7 @@ from srcfit.facts import facts, fit_facts
 from srcfit.forward import along
 from srcfit.influence import at_nodes
 from srcfit.member import Array
+from srcfit.places import solve
 from srcfit.readings import read
 from srcfit.readings.model import Readings
 from srcfit.recovery import Pictures, Recovery
@@ -33,7 +34,7 @@ from srcfit.results import (
     source_table,
     zones_table,
 )
-from srcfit.solve import Solved, solve, strength_unit
+from srcfit.solve import Solved, strength_unit
 from srcfit.state import Matrix
 from srcfit.whitening import together
 
@@ -120,9 +121,14 @@ def _properties(
     effect in the two directions over their mean, for the total.
     """
     forward = solved.forward
-    base = solved.answers.value
-    total = np.zeros(len(base))
+    total = np.zeros(len(solved.answers.value))
     shares, bent = {}, {}
+    centre = solved
+    if solved.places and forward.case.member.uncertainty:
+        # parts of unknown place stay where they most probably are
+        centre = solve(
+            forward.case, forward.readings, criteria=False, rng=rng, edges=solved.edges
+        )  # fmt: skip
     for key in forward.case.member.uncertainty:
         up, down = (
             solve(
@@ -130,6 +136,7 @@ def _properties(
                 forward.readings,
                 criteria=False,
                 rng=rng,
+                edges=solved.edges,
             )
             for side in (1.0, -1.0)
         )
@@ -137,7 +144,7 @@ def _properties(
         total += np.where(np.isfinite(shift), shift, 0.0) ** 2
         shares[key] = shift**2
         size = abs(shift[0])
-        bend = abs(_all(up)[0] + _all(down)[0] - 2 * _all(solved)[0])
+        bend = abs(_all(up)[0] + _all(down)[0] - 2 * _all(centre)[0])
         bent[key] = float(bend / size) if size > 0 else 0.0
     return total, shares, bent
 

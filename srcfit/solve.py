@@ -6,7 +6,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -23,6 +23,7 @@ from srcfit.forward import Forward, build
 from srcfit.limits import limits
 from srcfit.member import Array, Member
 from srcfit.noise import estimate_lag, estimate_noise
+from srcfit.placing import Place
 from srcfit.priors import Family, family
 from srcfit.problem import Grid, Problem
 from srcfit.readings.model import Readings
@@ -47,6 +48,8 @@ class Solved:
     choices : mapping criterion -> Choice on that ladder
     choice : the one that was followed; None where averaged
     held : what sign, ceiling and monotone stretches did; None where none is declared
+    places : where lumped parts of unknown place stand, by name
+    edges : further places where cells were cut [m]
     """
 
     forward: Forward
@@ -59,6 +62,8 @@ class Solved:
     choices: Mapping[str, Choice]
     choice: Choice | None
     held: Held | None = None
+    places: Mapping[str, Place] = field(default_factory=dict)
+    edges: tuple[float, ...] = ()
 
     @property
     def readings(self) -> int:
@@ -91,7 +96,7 @@ def solve(
 
 
 def invert(forward: Forward, criteria: bool, rng: np.random.SeedSequence) -> Solved:
-    """Invert a forward model."""
+    """Invert a forward model; parameters as of `solve`."""
     case, balanced = forward.case, eliminate(forward)
     sd, lag = noise_of(forward)
     problem = whitened(forward, sd, lag, balanced)
