@@ -213,10 +213,10 @@ def _lines(
 
     def asked(line: Chain) -> list[list[Term]]:
         sensors = [
-            sensor_terms(line, s.kind, place, weight, s.distance)
+            (s.kind, place, weight, s.distance)
             for s, (place, weight) in zip(specs, spots, strict=True)
         ]
-        return [*sensors, *_reactions(case, line)[1]]
+        return [*sensor_terms(line, sensors), *_reactions(case, line)[1]]
 
     found, reactions = asked(line), _reactions(case, line)[0]
     if modes is None:

@@ -7,9 +7,9 @@ from collections.abc import Sequence
 import numpy as np
 
 from srcfit.case.model import Case, Lumped
+from srcfit.intervals import gauss
 from srcfit.member import Array, Member
 from srcfit.problem import Grid
-from srcfit.state import gauss
 
 
 def make_grid(case: Case, also: Sequence[float] = ()) -> Grid:

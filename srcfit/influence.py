@@ -23,8 +23,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from srcfit.errors import MemberError
+from srcfit.intervals import gauss
 from srcfit.member import Array, Member
-from srcfit.state import NEAR_AXIS, Chain, Matrix, gauss, operator
+from srcfit.state import NEAR_AXIS, Chain, Matrix, operator
 
 LOOSE = 1e-11  # size of what a point condition does to states that it does not touch
 CARRIED = 0.5  # change of the state, as a norm, after which a basis is made orthonormal again

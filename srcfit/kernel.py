@@ -16,10 +16,11 @@ from srcfit.eigen import refuse_buckled
 from srcfit.errors import MemberError
 from srcfit.holds import restrained, restraint_forces
 from srcfit.influence import at_nodes, influence, interval_integrals
+from srcfit.intervals import gauss
 from srcfit.member import Array, Member, Unknown
 from srcfit.nulls import Nulls
 from srcfit.quantities import functionals
-from srcfit.state import Chain, Matrix, chain, gauss, inner_edges, profile, special_places
+from srcfit.state import Chain, Matrix, chain, inner_edges, profile, special_places
 
 Source = Callable[[Array], Any]
 PANELS = 100  # a source given as a function is first looked at on so many stretches

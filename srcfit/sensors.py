@@ -6,6 +6,8 @@ file (and, for a new quantity, its row to `quantities.QUANTITIES`).
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 
 from srcfit.influence import Term
@@ -47,20 +49,29 @@ def samples(member: Member, x: float, gauge: float, edges: Array) -> tuple[Array
 
 
 def sensor_terms(
-    line: Chain, kind: str, places: Array, weights: Array, distance: float | None
-) -> list[Term]:
-    """The functional of one sensor on a chain whose nodes hold all of `places`.
+    line: Chain, sensors: Sequence[tuple[str, Array, Array, float | None]]
+) -> list[list[Term]]:
+    """The functionals of sensors on a chain whose nodes hold all of their places.
+
+    Parameters
+    ----------
+    sensors : sequence of (kind, places, weights, distance)
 
     Raises
     ------
     MemberError
         When the member has no such quantity there (a reaction away from a support).
     """
-    spec = line.member.kind.sensor(kind)
-    factor = (distance or 0.0) if spec.needs_distance else 1.0
-    found = functionals(line, spec.quantity, places)
-    return [
-        Term(term.node, term.row * (factor * weight), term.before)
-        for terms, weight in zip(found, weights, strict=True)
-        for term in terms
-    ]
+    kind = line.member.kind
+    specs = [kind.sensor(name) for name, *_ in sensors]
+    found: list[list[Term]] = [[] for _ in sensors]
+    for quantity in dict.fromkeys(s.quantity for s in specs):
+        mine = [i for i, s in enumerate(specs) if s.quantity == quantity]
+        every = functionals(line, quantity, np.concatenate([sensors[i][1] for i in mine]))
+        owner = [i for i in mine for _ in sensors[i][1]]
+        weights = np.concatenate([sensors[i][2] for i in mine])
+        for i, weight, terms in zip(owner, weights, every, strict=True):
+            factor = (sensors[i][3] or 0.0) if specs[i].needs_distance else 1.0
+            size = factor * weight
+            found[i] += [t if size == 1 else Term(t.node, t.row * size, t.before) for t in terms]
+    return found

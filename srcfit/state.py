@@ -1,28 +1,26 @@
 """State form z' = A(x) z + b f of every member, and its exact propagation from node to node.
 
 Order 2: z = (u, F), F = p u'. Order 4: z = (u, psi, M, V), psi = u' unless the section shears.
-The member is cut into short intervals; over each the transfer matrix comes from Gauss collocation
-with eight stages (order 16; for constant coefficients it is the diagonal Pade approximation of
-the exponential). No product of transfer matrices over long stretches is ever formed: `kernel`
+The member is cut into short intervals; over each the transfer matrix is exact to rounding. No
+product of transfer matrices over long stretches is ever formed: `kernel`
 carries orthonormal bases instead.
 
-Source: Hairer, Norsett & Wanner, Solving Ordinary Differential Equations I, II.7 (collocation).
+What happens over one interval: see `intervals`.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import cache
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from srcfit.errors import MemberError
+from srcfit.intervals import LARGEST, STAGES, collocated, exponential, gauss
 from srcfit.member import Array, Member
 
 Matrix = NDArray[Any]
-STAGES = 8
 LONGEST = 1.0  # longest interval in units of the local decay length: error under 1e-18
 NEAR_AXIS = 1e-9  # start of the chain beside a singular end, in units of the length
 GROWTH = 1.6  # largest ratio of distances to a singular end over one interval
@@ -82,19 +80,6 @@ class Chain:
         off = np.abs(self.x[found] - x) > np.abs(self.x[near] - x)
         node: NDArray[np.int64] = np.where(off, near, found)
         return node
-
-
-@cache
-def gauss() -> tuple[Array, Array, Array]:
-    """Nodes, weights on [0, 1] and the collocation matrix of the Gauss method."""
-    place, weight = (np.asarray(v, float) for v in np.polynomial.legendre.leggauss(STAGES))
-    c: Array = (place + 1) / 2
-    b: Array = weight / 2
-    powers = np.arange(1, STAGES + 1)
-    # a[i, j] = integral of the j-th Lagrange polynomial from 0 to c[i]
-    moments = (c[:, None] ** (powers - 1)).T, (c[:, None] ** powers / powers).T
-    a = np.asarray(np.linalg.solve(*moments).T, dtype=np.float64)
-    return c, b, a
 
 
 def profile(member: Member, symbol: str, x: Array, default: float = 0.0) -> Array:
@@ -289,32 +274,26 @@ def transfer(member: Member, a: Array, b: Array, mu: float = 0.0) -> tuple[Matri
     load : (N, n, s) state at `b` per source density at the Gauss places, from rest at `a`
     inner : (N, s, s) response at the Gauss places per source density there, from rest at `a`
     """
-    c, weight, collocation = gauss()
+    c, weight, _ = gauss()
     h = b - a
     places = a[:, None] + h[:, None] * c
     n = member.kind.order
     d = scales(member, (a + b) / 2, h, mu)
-    A = state_matrix(member, places, mu) * (d[:, None, None, :] / d[:, None, :, None])
-    A *= h[:, None, None, None]
-    count = len(a)
-    # (I - a (x) A) Z = 1 (x) I for the stage values Z
-    lhs = -np.einsum("ij,kjmn->kimjn", collocation, A).reshape(count, STAGES * n, STAGES * n)
-    lhs += np.eye(STAGES * n)
-    # unit states at the left node, and unit forces on the last component at each Gauss place
-    unit = np.concatenate(
-        [np.tile(np.eye(n), (STAGES, 1)), np.kron(collocation, np.eye(n)[:, -1:])], 1
-    )
-    Z = np.linalg.solve(lhs, np.broadcast_to(unit, (count, *unit.shape)))
-    Z = Z.reshape(count, STAGES, n, n + STAGES)
-    step = np.einsum("j,kjmn,kjnl->kml", weight, A, Z)
-    step[:, :, :n] += np.eye(n)
-    step[:, -1, n:] += weight
+    ratio = h[:, None, None] * (d[:, None, :] / d[:, :, None])
+    constant = all(p.stepped for p in member.profiles.values()) and member.kind.geometry == "line"
+    step, rows = None, None
+    if constant:
+        B = state_matrix(member, (a + b) / 2, mu) * ratio
+        if np.abs(B).sum(axis=2).max(initial=0.0) <= LARGEST:
+            step, rows = exponential(B)
+    if step is None or rows is None:
+        step, rows = collocated(state_matrix(member, places, mu) * ratio[:, None])
     area = member.area(places)
     phi = step[:, :, :n] * (d[:, :, None] / d[:, None, :])
     force = (-h[:, None] * area / d[:, -1:])[:, None, :]
     load = step[:, :, n:] * d[:, :, None] * force
-    inner = Z[:, :, 0, n:] * d[:, None, :1] * force
-    stages = Z[:, :, 0, :n] / d[:, None, :]
+    inner = rows[:, :, n:] * d[:, None, :1] * force
+    stages = rows[:, :, :n] / d[:, None, :]
     return phi, places, weight * h[:, None] * area, stages, load, inner
 
 
@@ -340,37 +319,26 @@ def chain(member: Member, points: Any = (), mu: float = 0.0) -> Chain:
     """
     plain = _nodes(member, np.asarray(points, dtype=float).ravel(), mu)
     phi, places, weights, stages, load, inner = transfer(member, plain[:-1], plain[1:], mu)
-    x, parts = list(plain), [phi, places, weights, stages, load, inner]
-    pins: dict[int, Pin] = {}
     n = member.kind.order
+    parts = [phi, places, weights, stages, load, inner]
     middle = np.linspace(member.start, member.end, 41)[1:-1]
     rate = float(decay_rate(member, middle, mu).max())
     reach = min(member.length, 1 / rate) if rate > 0 else member.length
     scale = np.exp(np.log(scales(member, middle, reach, mu)).mean(axis=0))
-    for place, what, item in special_places(member):
-        at = int(np.argmin(np.abs(np.array(x) - place)))
-        while at + 1 < len(x) and x[at + 1] == x[at]:  # special places ascend: none moves later
-            at += 1
-        matrix, pin = _point(member, what, item)
-        x.insert(at + 1, x[at])
-        empty = np.zeros(STAGES)
-        new = (
-            np.eye(n) if matrix is None else matrix,
-            empty + x[at],
-            empty,
-            np.zeros((STAGES, n)),
-            np.zeros((n, STAGES)),
-            np.zeros((STAGES, STAGES)),
-        )
-        parts = [
-            np.insert(_as(old, value), at, value, axis=0)
-            for old, value in zip(parts, new, strict=True)
-        ]
-        if pin is not None:
-            pins[at] = pin
+    special = special_places(member)
+    # an interval of no length goes in before the one that begins at the place
+    at = [int(np.argmin(np.abs(plain - place))) for place, _, _ in special]
+    points = [_point(member, what, item) for _, what, item in special]
+    pins = {k + i: pin for i, (k, (_, pin)) in enumerate(zip(at, points, strict=True)) if pin}
+    if special:
+        unit = [np.eye(n) if matrix is None else matrix for matrix, _ in points]
+        parts[0] = np.insert(_as(phi, np.array(unit)), at, np.array(unit), axis=0)
+        parts[1:] = [np.insert(part, at, 0.0, axis=0) for part in parts[1:]]
+        parts[1][[k + i for i, k in enumerate(at)]] = plain[at][:, None]
+    x = np.insert(plain, at, plain[at])
     phi, places, weights, stages, load, inner = parts
     return Chain(
-        member, np.array(x), phi * (scale / scale[:, None]), pins, places, weights,
+        member, x, phi * (scale / scale[:, None]), pins, places, weights,
         stages * scale, load / scale[:, None], inner, scale, _tips(member, plain[0], plain[-1]),
     )  # fmt: skip
 

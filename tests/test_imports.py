@@ -17,15 +17,15 @@ ROOT = Path(srcfit.__file__).parent
 # a package counts as one unit; the data of a package (its `model`) may stand above the rest of it
 ORDER = (
     "errors", "unit_names", "units", "member", "members", "case.model", "readings.model",
-    "problem", "recovery", "case", "readings", "state", "influence", "holds", "quantities",
-    "nulls", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen", "kernel", "sensors",
-    "grid", "unknowns", "forward", "view", "elimination", "whitening", "priors", "solvers",
-    "criteria", "evidence", "noise", "bands", "laws", "truncated", "strict", "answers", "limits",
-    "envelope", "constraints", "placing", "balance", "checks", "solve", "places", "results",
-    "facts", "knowledge",
-    "rounding", "frames", "output", "captions", "drawing", "axes", "plots", "report",
-    "recover", "text", "kindtext", "inspection", "rawplot", "trial", "prediction", "draft",
-    "start", "plan", "rehearse", "series", "compare", "sklearn", "cli", "__main__",
+    "problem", "recovery", "case", "readings", "intervals", "state", "influence", "holds",
+    "quantities", "nulls", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen",
+    "kernel", "sensors", "grid", "unknowns", "forward", "view", "elimination", "whitening",
+    "priors", "solvers", "criteria", "evidence", "noise", "bands", "laws", "truncated",
+    "strict", "answers", "limits", "envelope", "constraints", "placing", "balance", "checks",
+    "solve", "places", "results", "facts", "knowledge", "rounding", "frames", "output",
+    "captions", "drawing", "axes", "plots", "report", "recover", "text", "kindtext",
+    "inspection", "rawplot", "trial", "prediction", "draft", "start", "plan", "rehearse",
+    "series", "compare", "sklearn", "cli", "__main__",
 )  # fmt: skip
 
 # rooms that a module below them in the list may open inside a function
