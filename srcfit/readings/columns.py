@@ -307,7 +307,7 @@ def read_column(table: Table, ask: Ask, rows: Sequence[int], stated: str | None)
         reason.setdefault(i, text)
     scale, offset = _sizes(units)
     value = scale * raw + offset
-    if any(complex(item.value).imag for item in more.values()):
+    if any(isinstance(item.value, complex) for item in more.values()):
         raw, value = raw.astype(complex), value.astype(complex)
     rough: list[int] = []
     for i, item in more.items():
