@@ -204,7 +204,7 @@ def _limit(solved: Solved, shown: Shown) -> dict[str, Any] | None:
     dof = solved.readings - solved.answers.fit.effective_dof
     chance = float(ndtr(ratio) if solved.problem.stated else stdtr(max(dof, 1.0), ratio))
     if n.imaginary is not None:  # the modulus is judged
-        other = n.imaginary * per_size
+        other = float(n.imaginary * per_size)
         chance = float(chndtr((at_most / sd) ** 2, 2, (estimate**2 + other**2) / sd**2))
         facts |= {"imaginary": other}
     return facts | {
