@@ -24,6 +24,7 @@ from srcfit.state import Matrix
 from srcfit.units import factor, multiply_text, same_dimension
 from srcfit.unknowns import Column
 
+NOTHING = 1e-10  # part of the largest below which a row is rounding
 CURRIE = 1.6448536269514722  # one-sided 5 % point of the normal distribution
 RAYLEIGH = 2.447746830680816  # 5 % point of the modulus of two normal errors
 RICE = 3.9297882418563925  # modulus that exceeds RAYLEIGH with 95 % probability
@@ -94,10 +95,17 @@ def ask(forward: Forward, balanced: Elimination | None = None) -> Asked:
     parts.append(("reactions", *rows, forward.reaction_known, units, 0.0))
     parts.append(("nulls", np.zeros((len(nulls), m)), np.eye(k)[nulls], 0.0, 1.0, 0.0))
     for force in section_forces(case):
-        found = along(forward, force.quantity, section_places(forward))
-        parts.append((force.name, *found, per(force.unit, force.si_unit), 0.0))
+        cells, columns, known = along(forward, force.quantity, section_places(forward))
+        at, beside = _without_rounding(cells), _without_rounding(columns)
+        parts.append((force.name, at, beside, known, per(force.unit, force.si_unit), 0.0))
     parts.append(("cells", np.eye(m), np.zeros((m, k)), 0.0, density_unit, 0.0))
     return _joined(parts, balanced, forward.grid)
+
+
+def _without_rounding(rows: Array) -> Array:
+    """Rows of nothing but rounding (a moment at a free end) as the zeros they stand for."""
+    size = np.abs(rows).max(axis=1, initial=0.0)
+    return np.where((size > NOTHING * size.max(initial=0.0))[:, None], rows, 0.0)
 
 
 @dataclass(frozen=True)
