@@ -95,7 +95,7 @@ def ask(forward: Forward, balanced: Elimination | None = None) -> Asked:
     parts.append(("reactions", *rows, forward.reaction_known, units, 0.0))
     parts.append(("nulls", np.zeros((len(nulls), m)), np.eye(k)[nulls], 0.0, 1.0, 0.0))
     for force in section_forces(case):
-        cells, columns, known = along(forward, force.quantity, section_places(forward))
+        cells, columns, known = along(forward, force.quantity, *section_places(forward))
         at, beside = _without_rounding(cells), _without_rounding(columns)
         parts.append((force.name, at, beside, known, per(force.unit, force.si_unit), 0.0))
     parts.append(("cells", np.eye(m), np.zeros((m, k)), 0.0, density_unit, 0.0))
@@ -131,15 +131,24 @@ def section_forces(case: Case) -> tuple[SectionForce, ...]:
     return (SectionForce(sensor.name, sensor.quantity, unit, sensor.unit),)
 
 
-def section_places(forward: Forward) -> Array:
-    """Places of the section forces [m], ascending: cell edges, supports, forces at one place."""
+def section_places(forward: Forward) -> tuple[Array, NDArray[np.bool_]]:
+    """Places of the section forces [m], ascending, and where the left limit is meant.
+
+    Cell edges; supports and forces at one place twice, just left and just right of them.
+    """
     member, source = forward.case.member, forward.case.source
-    inner = [s.at for s in member.supports]
-    inner += [p.at for p in source.lumped if p.at is not None and p.width == 0]
-    inner += [p.start for p in source.known if p.start == p.end]
-    places: Array = np.unique(np.concatenate([forward.grid.edges, inner]))
-    apart: Array = places[np.append(True, np.diff(places) > 1e-9 * member.length)]
-    return apart
+    near = 1e-9 * member.length
+    jumps = [s.at for s in member.supports]
+    jumps += [p.at for p in source.lumped if p.at is not None and p.width == 0]
+    jumps += [p.start for p in source.known if p.start == p.end]
+    inner = np.unique([p for p in jumps if member.start + near < p < member.end - near])
+    inner = inner[np.append(True, np.diff(inner) > near)[: len(inner)]]
+    edges = forward.grid.edges
+    gap = np.abs(edges[:, None] - inner).min(axis=1, initial=np.inf)
+    places = np.concatenate([edges[gap > near], inner, inner])
+    before = np.arange(len(places)) >= len(places) - len(inner)
+    order = np.lexsort((~before, places))
+    return places[order], before[order]
 
 
 def _joined(

@@ -9,12 +9,20 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from srcfit.captions import choices_of, extent, per_metre, source_word, unit
+from srcfit.captions import (
+    SectionCurve,
+    choices_of,
+    extent,
+    per_metre,
+    section_curves,
+    source_word,
+    unit,
+)
 from srcfit.drawing import BLACK, BLUE, GREY, MARKERS, VERMILLION, draw_member, plain, short
 from srcfit.errors import UnitError
 from srcfit.frames import flags, ladder_of, number, numbers, pretty, texts
 from srcfit.recovery import Recovery
-from srcfit.rounding import brief, minus, plus_minus
+from srcfit.rounding import UNDETERMINED, brief, minus, plus_minus
 from srcfit.units import factor
 
 if TYPE_CHECKING:
@@ -111,6 +119,39 @@ def _legend(ax: Axes, columns: int = 2, rise: float = 1.0, **place: Any) -> None
             "borderaxespad": 0.2,
         } | place
         ax.legend(handles, labels, fontsize=8, frameon=False, ncols=columns, **where)
+
+
+def plot_sections(recovery: Recovery, axes: Sequence[Axes]) -> None:
+    """Moment and shear, or the flow or force, inside the member with its interval, one an axes."""
+    for curve, ax in zip(section_curves(recovery), axes, strict=False):
+        _section(recovery, curve, ax)
+    for ax in list(axes)[:-1]:
+        ax.tick_params(labelbottom=False)
+        ax.set_xlabel("")
+    if len(axes):
+        _legend(axes[0])
+
+
+def plot_section(recovery: Recovery, ax: Axes) -> None:
+    """The moment of a beam, the flow or force of another member, with its interval."""
+    plot_sections(recovery, [ax])
+
+
+def _section(recovery: Recovery, curve: SectionCurve, ax: Axes) -> None:
+    ax.axhline(0, color=GREY, lw=0.6)
+    if np.isfinite(curve.lower).any():
+        level = brief(100 * number(recovery.facts.get("level") or 0.95))
+        ax.fill_between(curve.x, curve.lower, curve.upper, color="#bcd9ea", lw=0,
+                        label=f"{level} % interval, point by point")  # fmt: skip
+    if np.isfinite(curve.value).any():
+        ax.plot(curve.x, curve.value, color=BLUE, lw=1.4, label="estimate")
+    else:
+        ax.text(0.5, 0.5, UNDETERMINED, ha="center", transform=ax.transAxes)
+    for support in recovery.case.member.supports:
+        ax.axvline(support.at * per_metre(recovery), color=GREY, lw=0.6, ls=(0, (1, 2)), zorder=0)
+    ax.set_xlim(*extent(recovery))
+    ax.set_xlabel(labelled("x", unit(recovery, "position")))
+    ax.set_ylabel(labelled(curve.name, curve.unit))
 
 
 def panels(recovery: Recovery) -> list[tuple[str, str]]:

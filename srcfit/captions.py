@@ -3,14 +3,17 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from srcfit.frames import flags, ladder_of, number, numbers, pretty, texts, unit_of
 from srcfit.recovery import Recovery
-from srcfit.rounding import NO_INTERVAL, brief, interval, minus, plus_minus
+from srcfit.rounding import NO_INTERVAL, UNDETERMINED, brief, interval, minus, plus_minus
 
+Array = NDArray[np.float64]
 SOURCE_WORDS = {
     "rod": "load", "cable": "load", "beam": "load", "shaft": "torque", "conductor": "heat source",
     "wall": "heat source", "cylinder": "heat source", "sphere": "heat source",
@@ -99,6 +102,56 @@ def _most(values: Any) -> float:
     return float(np.nanmax(values)) if np.isfinite(values).any() else float("nan")
 
 
+@dataclass(frozen=True)
+class SectionCurve:
+    """A force, couple or flow inside the member along it, in its unit; nan: not determined."""
+
+    name: str
+    unit: str
+    x: Array
+    value: Array
+    sd: Array
+    lower: Array
+    upper: Array
+
+
+def section_curves(recovery: Recovery) -> list[SectionCurve]:
+    """Moment and shear of a beam, the flow or force of another member; of driven ones real."""
+    frame = recovery.section
+    if frame is None:
+        return []
+    heads = [str(h).partition(" [")[0] for h in frame.columns]
+    x = numbers(frame, "x")
+    return [
+        SectionCurve(
+            name.replace("_", " "), pretty(unit_of(frame, name)), x, numbers(frame, name),
+            *(numbers(frame, f"{name}_{end}") for end in ("sd", "lower", "upper")),
+        )
+        for name in heads if f"{name}_sd" in heads
+    ]  # fmt: skip
+
+
+def describe_section(recovery: Recovery) -> str:
+    """The largest and the least of each curve with their uncertainty and place."""
+    curves = section_curves(recovery)
+    if not curves:
+        return "There are no forces inside the member to show."
+    return " ".join(_extremes(recovery, c) for c in curves)
+
+
+def _extremes(recovery: Recovery, curve: SectionCurve) -> str:
+    word = f"{curve.name[0].upper()}{curve.name[1:]}"
+    if not np.isfinite(curve.value).any():
+        return f"{word}: {UNDETERMINED}."
+    place = unit(recovery, "position")
+    ends = [
+        plus_minus({"value": curve.value[i], "sd": curve.sd[i]}, curve.unit)
+        + f" at x = {brief(curve.x[i])} {place}"
+        for i in (int(np.nanargmax(curve.value)), int(np.nanargmin(curve.value)))
+    ]
+    return minus(f"{word}: at most {ends[0]}, at least {ends[1]}.")
+
+
 def describe_readings(recovery: Recovery) -> str:
     """How well the readings are met: counts, spread and largest standardised residual."""
     frame, fit = recovery.readings, recovery.facts.get("fit") or {}
@@ -169,6 +222,7 @@ def describe_modes(recovery: Recovery) -> str:
 DESCRIPTIONS: dict[str, Callable[[Recovery], str]] = {
     "member": describe_member,
     "source": describe_source,
+    "section": describe_section,
     "readings": describe_readings,
     "l-curve": describe_l_curve,
     "influence": describe_influence,

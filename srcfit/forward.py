@@ -157,7 +157,9 @@ def _model(
     return cells, [*loads, *unknown], columns, given + _known_parts(case, line, lines)
 
 
-def along(forward: Forward, quantity: str, x: Array) -> tuple[Matrix, Matrix, Matrix]:
+def along(
+    forward: Forward, quantity: str, x: Array, before: NDArray[np.bool_] | None = None
+) -> tuple[Matrix, Matrix, Matrix]:
     """A quantity along the member as rows over cells and columns, and its known part.
 
     Free motions of a member that nothing holds are columns too; nuisances of readings are 0.
@@ -167,17 +169,18 @@ def along(forward: Forward, quantity: str, x: Array) -> tuple[Matrix, Matrix, Ma
     quantity : str
         As in `kernel.kernel`.
     x : (g,) places that are nodes of the forward's chain (cell edges are) [m]
+    before : (g,) where the left limit is wanted
 
     Returns
     -------
     cells (g, m), columns (g, k), known (g,), in SI; the ambient is left out.
     """
     line = forward.line
-    lines = influence(line, functionals(line, quantity, x))
+    lines = influence(line, functionals(line, quantity, x, before))
     cells, _, columns, known = _model(forward.case, forward.grid, line, lines)
     null = np.zeros((len(x), 0))
     if forward.nulls is not None:
-        null = forward.nulls.read(quantity, x)
+        null = forward.nulls.read(quantity, x, before)
     padded = np.zeros((len(x), forward.B.shape[1] - columns.shape[1] - null.shape[1]))
     return cells, np.concatenate([columns, padded, null], axis=1), known
 

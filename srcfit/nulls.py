@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 import numpy as np
+from numpy.typing import NDArray
 
 from srcfit.holds import null_states, support_intervals
 from srcfit.influence import Influence, Term, bases, interval_integrals
@@ -42,9 +43,9 @@ class Nulls:
         found: Matrix = np.einsum("dks,ks->d", self.at, weights) / weights.sum()
         return found
 
-    def read(self, quantity: str, x: Array) -> Matrix:
-        """A quantity of the null modes at places, (len(x), d)."""
-        rows = [self.reading(terms) for terms in functionals(self.free, quantity, x)]
+    def read(self, quantity: str, x: Array, before: NDArray[np.bool_] | None = None) -> Matrix:
+        """A quantity of the null modes at places, (len(x), d); limits as in `functionals`."""
+        rows = [self.reading(terms) for terms in functionals(self.free, quantity, x, before)]
         return np.array(rows).reshape(len(x), len(self.states))
 
     def reading(self, terms: Sequence[Term]) -> Matrix:

@@ -20,9 +20,11 @@ from srcfit.axes import (
     plot_panel,
     plot_readings,
     plot_residuals,
+    plot_section,
+    plot_sections,
     plot_source,
 )
-from srcfit.captions import DESCRIPTIONS
+from srcfit.captions import DESCRIPTIONS, section_curves
 from srcfit.drawing import draw_member, plain, short
 from srcfit.recovery import Recovery
 
@@ -32,8 +34,8 @@ if TYPE_CHECKING:
 
 __all__ = [
     "FIGURES", "IN_AXES", "Drawn", "draw_all", "draw_in", "draw_member", "overview",
-    "plot_influence", "plot_l_curve", "plot_member", "plot_modes", "plot_readings", "plot_source",
-    "save_figures",
+    "plot_influence", "plot_l_curve", "plot_member", "plot_modes", "plot_readings",
+    "plot_section", "plot_source", "save_figures",
 ]  # fmt: skip
 WIDTH = 7.2  # inches, all figures
 
@@ -98,6 +100,15 @@ def readings_figure(recovery: Recovery) -> Figure:
     return _tidy(figure)
 
 
+def section_figure(recovery: Recovery) -> Figure:
+    """Each force inside the member in axes of its own, one above the other."""
+    count = max(len(section_curves(recovery)), 1)
+    figure = _figure(2.2 * count + 0.55, 0.35)
+    plot_sections(recovery, list(figure.subplots(count, 1, squeeze=False)[:, 0]))
+    figure.subplots_adjust(hspace=0.22)
+    return _tidy(figure)
+
+
 def overview(recovery: Recovery) -> Figure:
     """The member, the source and the first panel of readings with its residuals, in one figure."""
     figure = _figure(9.4, 0.75)
@@ -113,6 +124,7 @@ def overview(recovery: Recovery) -> Figure:
 IN_AXES: dict[str, Callable[[Recovery, Axes], None]] = {
     "member": plot_member,
     "source": plot_source,
+    "section": plot_section,
     "readings": plot_panel,
     "residuals": plot_residuals,
     "l-curve": plot_l_curve,
@@ -132,6 +144,7 @@ def draw_in(recovery: Recovery, ax: Axes, what: str = "source") -> Axes:
 FIGURES: dict[str, Callable[[Recovery], Figure]] = {
     "member": _single(plot_member, 2.1, 0.3),
     "source": _single(plot_source, 3.7, 0.65),
+    "section": section_figure,
     "readings": readings_figure,
     "l-curve": _single(plot_l_curve, 3.6),
     "influence": _single(plot_influence, 2.8),

@@ -6,6 +6,7 @@ from collections.abc import Callable
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from srcfit.errors import MemberError
 from srcfit.holds import support_intervals
@@ -49,8 +50,12 @@ QUANTITIES: dict[str, tuple[tuple[int, ...], Row]] = {
 }
 
 
-def functionals(line: Chain, quantity: str, x: Any) -> list[list[Term]]:
+def functionals(
+    line: Chain, quantity: str, x: Any, before: NDArray[np.bool_] | None = None
+) -> list[list[Term]]:
     """The functional `quantity` at each place of `x`: the right limit, at the end the left.
+
+    Where `before` is true: the left limit.
 
     Raises
     ------
@@ -70,12 +75,15 @@ def functionals(line: Chain, quantity: str, x: Any) -> list[list[Term]]:
             "choose one of " + ", ".join([*known, "reaction"]),
         )
     node = line.node(places)
-    last = node == len(line.x) - 1
+    left = node == len(line.x) - 1
+    if before is not None:
+        node = np.where(before, np.searchsorted(line.x, line.x[node]), node)
+        left = left | before
     # coefficients jump at edges: look just inside the side that is meant
-    nudge = np.where(last, -1e-12, 1e-12) * member.length
+    nudge = np.where(left, -1e-12, 1e-12) * member.length
     entries = row(member, member.area(line.x[node]), operator(member, line.x[node] + nudge))
     rows = np.stack([np.broadcast_to(np.asarray(e), places.shape) for e in entries], axis=1)
-    return [[Term(int(k), r, bool(e))] for k, r, e in zip(node, rows, last, strict=True)]
+    return [[Term(int(k), r, bool(e))] for k, r, e in zip(node, rows, left, strict=True)]
 
 
 def functional(line: Chain, quantity: str, x: float) -> list[Term]:

@@ -72,7 +72,7 @@ class Recovery:
     case : Case
     source, zones, readings, ladder, section : DataFrame
         With the columns of their CSV files (units in brackets). `section` holds moment and shear
-        of a beam, or the flow or force of another member, along it.
+        of a beam, or the flow or force of another member, along it, left and right of each jump.
     total, peak : mapping
         As in summary.json.
     findings : list of mapping (code, level, sentence)
@@ -124,8 +124,9 @@ class Recovery:
         ax : Axes, optional
             Axes to draw in.
         what : str
-            What goes into `ax`: member, source, readings (of the first kind and unit),
-            residuals, l-curve, influence or modes.
+            What goes into `ax`: member, source, section (the moment of a beam, the flow or force
+            of another member), readings (of the first kind and unit), residuals, l-curve,
+            influence or modes.
 
         Returns
         -------

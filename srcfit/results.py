@@ -158,14 +158,15 @@ def zones_table(solved: Solved, shown: Shown) -> pd.DataFrame:
 
 
 def section_table(solved: Solved, shown: Shown) -> pd.DataFrame:
-    """Section forces (moment and shear, or the flow) along the member; at a jump the right limit.
+    """Section forces (moment and shear, or the flow) along the member.
 
-    Empty where the readings do not tell them.
+    At supports and forces at one place two rows: just left and just right of it. Empty
+    where the readings do not tell them.
     """
     import pandas as pd
 
     forward = solved.forward
-    at = section_places(forward) * position_scale(solved)
+    at = section_places(forward)[0] * position_scale(solved)
     columns: dict[str, Any] = {f"x [{forward.case.source.position_unit}]": at}
     for force in section_forces(forward.case):
         value, sd, lower, upper, _ = shown.block(force.name)

@@ -152,7 +152,32 @@ def make(
          f"upper [{T}]": z["upper"], f"mean [{U}]": 60.0, "data_share": z["data_share"]}
         for z in zones
     ])  # fmt: skip
-    return Recovery(case, source, zone_table, readings, ladder, pictures, facts)
+    section = _section(kind, P, e, span, bare=bare)
+    return Recovery(case, source, zone_table, readings, ladder, pictures, facts, section)
+
+
+def _section(kind: str, P: str, end: float, span: float, *, bare: bool) -> pd.DataFrame:
+    """Moment and shear of the beam (both sides of its pinned support), else the heat flow."""
+    x = end - span * (1 - np.linspace(0, 1, 61))
+    names = {"heat_flow": "W"}
+    if kind == "beam":
+        names = {"moment": "kN*m", "shear": "kN"}
+        x = np.sort(np.append(x, 18.0))
+    t = (x - end + span) / span
+    columns: dict[str, Any] = {f"x [{P}]": x}
+    for k, (name, unit) in enumerate(names.items()):
+        value = 120 * np.sin((5 - 2 * k) * t)
+        if name == "shear":
+            value = value + 80 * (np.arange(len(x)) > np.flatnonzero(x == 18.0)[0])
+        sd = 4 + 3 * t
+        if bare:
+            value, sd = np.full((2, len(x)), np.nan)
+        columns |= {
+            f"{name} [{unit}]": value, f"{name}_sd [{unit}]": sd,
+            f"{name}_lower [{unit}]": value - 1.96 * sd,
+            f"{name}_upper [{unit}]": value + 1.96 * sd,
+        }  # fmt: skip
+    return pd.DataFrame(columns)
 
 
 def _readings(

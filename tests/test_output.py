@@ -18,7 +18,7 @@ from srcfit import output, plots, report
 from srcfit.errors import OutputError
 
 FILES = {"source.csv", "zones.csv", "readings.csv", "ladder.csv", "summary.json", "report.html",
-         "figures"}  # fmt: skip
+         "section.csv", "figures"}  # fmt: skip
 
 
 @pytest.fixture

@@ -206,6 +206,37 @@ def test_the_source_is_drawn_as_it_stands_in_the_table(beam):
     assert ax.get_ylabel() == "load [kN/m]"
 
 
+def test_the_forces_inside_are_drawn_as_they_stand_in_the_table(beam):
+    figure = axes_of(beam, "section")
+    assert [ax.get_ylabel() for ax in figure] == ["moment [kN·m]", "shear [kN]"]
+    for ax, head in zip(figure, ("moment{} [kN*m]", "shear{} [kN]"), strict=True):
+        curve = next(line for line in ax.get_lines() if line.get_label() == "estimate")
+        np.testing.assert_array_equal(curve.get_xdata(), beam.section["x [m]"])
+        np.testing.assert_array_equal(curve.get_ydata(), beam.section[head.format("")])
+        corners = ax.collections[0].get_paths()[0].vertices
+        assert corners[:, 1].max() == beam.section[head.format("_upper")].max()
+        assert corners[:, 1].min() == beam.section[head.format("_lower")].min()
+        assert [18.0, 18.0] in places(ax)  # supports are marked
+    # the jump of the shear at the support stands upright
+    shear = figure[1].get_lines()[1]
+    at = np.flatnonzero(shear.get_xdata() == 18.0)
+    assert np.diff(shear.get_ydata()[at]) == pytest.approx([80.0])
+
+
+def test_extremes_inside_are_said_with_their_places(beam, drawn):
+    moment = beam.section["moment [kN*m]"]
+    most = beam.section.loc[moment.idxmax()]
+    assert drawn["section"].text.startswith(
+        f"Moment: at most {plus_minus({'value': moment.max(), 'sd': most['moment_sd [kN*m]']})} "
+        f"kN·m at x = {brief(most['x [m]'])} m, at least \u2212"
+    )
+    assert plots.draw_all(fake.make(bare=True), ("section",))["section"].text == (
+        "Moment: not determined. Shear: not determined."
+    )
+    none = plots.draw_all(replace(beam, section=None), ("section",))["section"].text
+    assert none == "There are no forces inside the member to show."
+
+
 def test_names_of_overlapping_zones_stand_in_rows():
     start, end = np.array([0.0, 24.0, 54.0, 36.0, 46.0]), np.array([24.0, 54.0, 78.0, 46.0, 50.0])
     assert name_rows(start, end) == [0, 0, 0, 1, 1]

@@ -23,6 +23,7 @@ LIVE = {"source": "source", "readings": "readings", "l-curve": "strength",
 CAPTIONS = {
     "member": "The member to scale; deeper where it is stiffer.",
     "source": "Source along the member.",
+    "section": "Forces or flows inside the member with their interval, point by point.",
     "readings": "Readings and the response of the recovered source; residuals below.",
     "l-curve": "L-curve: each point is one strength of the ladder.",
     "influence": "Influence lines.",

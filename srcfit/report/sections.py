@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from srcfit.captions import extent, percent, source_word, unit
+from srcfit.captions import extent, percent, section_curves, source_word, unit
 from srcfit.case.model import ColumnSpec
 from srcfit.frames import flags, number, pretty
 from srcfit.member import Unknown
@@ -159,6 +159,27 @@ def source(recovery: Recovery) -> str:
         f"{_driven(recovery)}</p>"
     )
     return section("source", "Source", lead + figure("source") + tables.cells(recovery))
+
+
+def inside(recovery: Recovery) -> str:
+    """Moment and shear, or the flow or force, along the member."""
+    kind = recovery.case.member.kind
+    words = " and ".join(c.name for c in section_curves(recovery))
+    if not words:
+        lead = "This result holds no forces or flows inside the member."
+        return section("inside", "Inside the member", f"<p>{lead}</p>")
+    lead = (
+        f"The {safe(words)} that the recovered source makes inside the member, each place with "
+        f"its {percent(recovery)} interval."
+    )
+    if kind.order == 4:
+        lead += " A sagging moment is positive."
+    if recovery.case.member.supports:
+        lead += " Dotted lines are supports; the table has both sides of each."
+    if recovery.case.source.known:
+        lead += " The known parts of the source are included."
+    body = f"<p>{lead}{_driven(recovery)}</p>{figure('section')}{tables.inside(recovery)}"
+    return section("inside", "Inside the member", body)
 
 
 def _driven(recovery: Recovery) -> str:
@@ -384,6 +405,7 @@ SECTIONS: dict[str, Callable[[Recovery], str]] = {
     "answer": answer,
     "member": member,
     "source": source,
+    "inside": inside,
     "readings": readings,
     "strength": strength,
     "influence": influence,

@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from srcfit.captions import choices_of, per_metre, percent, unit
+from srcfit.captions import choices_of, per_metre, percent, section_curves, unit
 from srcfit.frames import flags, header, number, numbers, pretty, pretty_header, texts
 from srcfit.recovery import Recovery
 from srcfit.report.data import influence_unit
@@ -148,6 +148,26 @@ def cells(recovery: Recovery) -> str:
     heads = [pretty_header(header(frame, n) or n).replace("_", " ") for n in names]
     heads = [h.replace("estimate imag", "imaginary part") for h in heads]
     return table("table-source", "Source, cell by cell", heads, rows, fold=True)
+
+
+def inside(recovery: Recovery) -> str:
+    """Forces or flows inside the member, place by place."""
+    frame = recovery.section
+    curves = section_curves(recovery)
+    if frame is None or not curves:
+        return ""
+    heads = [pretty_header(header(frame, "x") or "x")]
+    rows: list[Row] = [[num(v, digits=5)] for v in curves[0].x]
+    for c in curves:
+        twin = f"{c.name.replace(' ', '_')}_imag"
+        amounts = {"": c.value, " from": c.lower, " to": c.upper}
+        if header(frame, twin):
+            amounts = {"": c.value, ", imaginary part": numbers(frame, twin),
+                       " from": c.lower, " to": c.upper}  # fmt: skip
+        heads += [with_unit(f"{c.name}{word}", c.unit) for word in amounts]
+        for i, row in enumerate(rows):
+            row += [num(v[i], round_like(v[i], c.sd[i])) for v in amounts.values()]
+    return table("table-inside", "Inside the member, place by place", heads, rows, fold=True)
 
 
 def readings(recovery: Recovery) -> str:
