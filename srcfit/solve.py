@@ -25,7 +25,7 @@ from srcfit.member import Array, Member
 from srcfit.noise import estimate_lag, estimate_noise
 from srcfit.placing import Place
 from srcfit.priors import Family, family
-from srcfit.problem import Grid, Problem
+from srcfit.problem import Grid, Problem, Questions
 from srcfit.readings.model import Readings
 from srcfit.solvers import SOLVERS
 from srcfit.solvers.ladder import Ladder
@@ -101,23 +101,11 @@ def invert(forward: Forward, criteria: bool, rng: np.random.SeedSequence) -> Sol
     sd, lag = noise_of(forward)
     problem = whitened(forward, sd, lag, balanced)
     asked = ask(forward, balanced)
+    answers, ladder, choices, choice = answered(forward, problem, asked.questions, criteria)
     strength = case.strength
-    smooth = problem.smooth and bool(problem.grid.free.any())
-    wanted = criteria or strength.choose != "averaged" or strength.solver != "tikhonov"
-    ladder = _ladder(case, forward, problem) if smooth and wanted else None
-    choices = {} if ladder is None else {name: choose(ladder, name) for name in CRITERIA}
-    choice = None if ladder is None else _choice(case, ladder, choices)
-    centre = None if choice is None or ladder is None else (ladder, choice.index)
-    if strength.interval == "plain" and smooth:
-        answers = plain(
-            problem, asked.questions, level=strength.level,
-            choose_by=str(strength.choose) if choice else "evidence",
-            roughness=1 if strength.roughness == "averaged" else strength.roughness,
-        )  # fmt: skip
-    else:
-        answers = cautious(problem, asked.questions, level=strength.level, centre=centre)
     known, held = limits(forward, asked, balanced), None
     if known is not None:
+        centre = None if choice is None or ladder is None else (ladder, choice.index)
         narrow = answers.choice is not None
         if answers.choice is not None:
             centre = answers.fit.ladders[0], answers.choice.index
@@ -127,6 +115,28 @@ def invert(forward: Forward, criteria: bool, rng: np.random.SeedSequence) -> Sol
             band=criteria,
         )  # fmt: skip
     return Solved(forward, problem, sd, lag, asked, answers, ladder, choices, choice, held)
+
+
+def answered(
+    forward: Forward, problem: Problem, questions: Questions, criteria: bool
+) -> tuple[Answers, Ladder | None, Mapping[str, Choice], Choice | None]:
+    """Answers without inequalities, as the case asks; ladder, choices, the one followed."""
+    case, strength = forward.case, forward.case.strength
+    smooth = problem.smooth and bool(problem.grid.free.any())
+    wanted = criteria or strength.choose != "averaged" or strength.solver != "tikhonov"
+    ladder = _ladder(case, forward, problem) if smooth and wanted else None
+    choices = {} if ladder is None else {name: choose(ladder, name) for name in CRITERIA}
+    choice = None if ladder is None else _choice(case, ladder, choices)
+    centre = None if choice is None or ladder is None else (ladder, choice.index)
+    if strength.interval == "plain" and smooth:
+        answers = plain(
+            problem, questions, level=strength.level,
+            choose_by=str(strength.choose) if choice else "evidence",
+            roughness=1 if strength.roughness == "averaged" else strength.roughness,
+        )  # fmt: skip
+    else:
+        answers = cautious(problem, questions, level=strength.level, centre=centre)
+    return answers, ladder, choices, choice
 
 
 def noise_of(forward: Forward) -> tuple[Array, Array]:
