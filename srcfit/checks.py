@@ -26,24 +26,31 @@ CLOSE = 0.05  # relative distance of eigenvalues (twice that of frequencies) wor
 CLOSED = 1e-6  # relative gap of the balance that is rounding
 
 
-def noise(chi_square: float, dof: float, stated: bool) -> list[Finding]:
-    """Stated noise against the residuals (chi-square test)."""
-    if not stated or dof < 1:
+def noise(
+    chi_square: float, dof: float, stated: bool, chance: float = float("nan")
+) -> list[Finding]:
+    """Stated noise against the residuals.
+
+    `chance` as of `misfit.chance`; without it the chi-square test with `dof`.
+    """
+    if not stated or dof <= 0:
         return []
     from scipy.special import chdtr, chdtrc
 
     scale = float(np.sqrt(chi_square / dof))
-    if chdtrc(dof, chi_square) < SURE:
+    if np.isnan(chance):
+        chance = float(chdtrc(dof, chi_square)) if dof >= 1 else 1.0
+    if chance < SURE:
         return [
             Finding(
                 "noise-contradicted", "serious",
-                f"The residuals are {scale:.2g} times as large as the stated noise "
-                f"(chi-square {chi_square:.4g} for {dof:.3g} degrees of freedom): the noise is "
+                f"The residuals are {scale:.2g} times as large as the stated noise lets expect "
+                f"(chi-square {chi_square:.3g} for {dof:.3g} degrees of freedom): the noise is "
                 "larger, or the member, an end, a support or a sensor is not as described; "
                 "check those before trusting the intervals.",
             )
         ]  # fmt: skip
-    if chdtr(dof, chi_square) < SURE:
+    if dof >= 1 and chdtr(dof, chi_square) < SURE:
         return [
             Finding(
                 "noise-overstated", "caution",

@@ -19,6 +19,7 @@ from srcfit.facts import facts, fit_facts
 from srcfit.forward import along
 from srcfit.influence import at_nodes
 from srcfit.member import Array
+from srcfit.misfit import chance
 from srcfit.places import solve
 from srcfit.readings import read
 from srcfit.readings.model import Readings
@@ -170,7 +171,8 @@ def _findings(
     if answers.reason:
         found += checks.few(len(forward.rows), len(forward.columns) + int(solved.problem.constant))
     if fit["chi_square"] is not None and fit["dof"] is not None:
-        found += checks.noise(fit["chi_square"], fit["dof"], solved.problem.stated)
+        odds = float("nan") if solved.held else chance(answers.fit)
+        found += checks.noise(fit["chi_square"], fit["dof"], solved.problem.stated, odds)
     told = together(forward, np.nan_to_num(answers.fit.standardised))
     found += checks.outliers(forward, np.maximum(np.abs(told.real), np.abs(told.imag)))
     found += checks.correlated(forward, told, solved.lag)

@@ -20,7 +20,7 @@ ORDER = (
     "problem", "recovery", "case", "readings", "intervals", "state", "influence", "holds",
     "quantities", "nulls", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen",
     "kernel", "sensors", "grid", "unknowns", "forward", "view", "elimination", "whitening",
-    "priors", "solvers", "criteria", "evidence", "noise", "bands", "laws", "truncated",
+    "priors", "solvers", "criteria", "evidence", "noise", "bands", "misfit", "laws", "truncated",
     "strict", "answers", "limits", "envelope", "constraints", "placing", "balance", "checks",
     "solve", "places", "results", "facts", "knowledge", "rounding", "frames", "output",
     "captions", "drawing", "axes", "plots", "report", "recover", "text", "kindtext",
