@@ -59,6 +59,9 @@ TRUTHS = {
     "girder_settled_pier/case.toml": {
         "total": 844, "span 1": 192, "span 2": 460, "span 3": 192, "queue": 300,
     },
+    "girder_settled_pier/strain_only.toml": {
+        "total": 844, "span 1": 192, "span 2": 460, "span 3": 192, "queue": 300,
+    },
     "busbar_joint/case.toml": {"total": 186.1, "joint A": 28.1, "joint B": 76.4},
     "busbar_joint/joints.toml": {
         "total": 186.1, "joint A": 7.7, "joint B": 56.0, "background": 51.0,
@@ -72,7 +75,8 @@ TRUTHS = {
     "cantilever_weight/case.toml": {"total": 4.905, "weight": 4.905},
 }  # fmt: skip
 OTHERS = {
-    "ground_beam_datum/case.toml", "three_bars/aluminium.toml", "three_bars/brass.toml",
+    "ground_beam_datum/case.toml", "girder_settled_pier/settlement_ignored.toml",
+    "three_bars/aluminium.toml", "three_bars/brass.toml",
     "three_bars/iron.toml",
 }  # fmt: skip
 
@@ -122,6 +126,35 @@ def test_settled_pier():
     for at, force in {0.0: 59.683, 24.0: 334.693, 54.0: 406.137, 78.0: 43.487}.items():
         per = {"N": 1e-3, "kN": 1.0}[reactions[at]["unit"]]
         assert reactions[at]["lower"] * per <= force <= reactions[at]["upper"] * per
+
+
+def test_settled_pier_by_strain_alone():
+    found = numbers(summary("girder_settled_pier/strain_only.toml"))
+    settlement = found["settlement:24 m"]
+    per = SI[settlement["unit"]] / 1e-3
+    assert settlement["lower"] * per <= 9.0 <= settlement["upper"] * per
+    # as computed independently: 57 kN with the queue's edges as breaks (84 kN without them)
+    assert half(settlement) * per == pytest.approx(0.33, rel=0.1)
+    assert half(found["total"]) == pytest.approx(57, rel=0.1)
+    # prisms and levelling agree, and narrow the settlement but not the load
+    joint = numbers(summary("girder_settled_pier/case.toml"))
+    assert half(joint["settlement:24 m"]) < 0.9 * half(settlement) * per
+    assert half(joint["total"]) == pytest.approx(half(found["total"]), rel=0.05)
+    assert abs(joint["settlement:24 m"]["value"] - settlement["value"] * per) < 0.33
+
+
+def test_an_ignored_settlement_is_caught():
+    """First differences and known noise gave 4200 kN, -1304 kN in span 3 and 7.6 elsewhere."""
+    found = summary("girder_settled_pier/settlement_ignored.toml")
+    total = found["total"]
+    assert total["value"] > 4 * 844
+    assert total["lower"] <= 4200 <= total["upper"]
+    assert found["zones"][2]["value"] == pytest.approx(-1304, rel=0.2)
+    assert found["fit"]["chi_square"] / found["fit"]["dof"] == pytest.approx(7.6, rel=0.1)
+    levels = {f["code"]: f["level"] for f in found["findings"]}
+    assert levels["noise-contradicted"] == "serious"
+    assert "noise-contradicted" not in codes(summary("girder_settled_pier/strain_only.toml"))
+    assert "noise-contradicted" not in codes(summary("girder_settled_pier/case.toml"))
 
 
 def test_hot_joint():
