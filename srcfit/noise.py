@@ -69,33 +69,25 @@ def rescaled(problem: Problem, groups: Groups, factors: Array) -> Problem:
     return replace(problem, A=problem.A / by, B=problem.B / by, d=d, stated=True)
 
 
-def estimate_lag(
-    whiten: Callable[[Array], Problem], sizes: NDArray[np.intp], unknown: NDArray[np.bool_]
-) -> Array:
+def estimate_lag(likelihood: Callable[[Array], float], unknown: NDArray[np.bool_]) -> Array:
     """Lag-1 correlation of neighbours in each group whose correlation is unknown.
 
     Parameters
     ----------
-    whiten : callable
-        Problem whitened with the (g,) lag-1 correlations it is given.
-    sizes : (g,) int
-        Readings of each group.
+    likelihood : callable
+        Log restricted likelihood of the readings with the (g,) lag-1 correlations it is given.
     unknown : (g,) bool
 
     Returns
     -------
     (g,) correlations, 0 where they are not asked for; never negative.
     """
-    lags = np.zeros(len(sizes))
-
-    def score(g: int, lag: float) -> float:
-        trial = lags.copy()
-        trial[g] = lag
-        volume = 0.5 * float((sizes - 1) @ np.log1p(-(trial**2)))
-        return restricted(whiten(trial)) - volume
-
-    for g in map(int, np.flatnonzero(unknown & (sizes >= 3))):
-        scores = [score(g, lag) for lag in LAGS]
+    lags = np.zeros(len(unknown))
+    for g in map(int, np.flatnonzero(unknown)):
+        scores = []
+        for lag in LAGS:
+            lags[g] = lag
+            scores.append(likelihood(lags.copy()))
         best = int(np.argmax(scores))
         lags[g] = LAGS[best]
         if 0 < best < len(LAGS) - 1:
@@ -114,7 +106,7 @@ def restricted(problem: Problem) -> float:
 
     Comparable between whitenings W of the same readings once ln|det W| is added.
     """
-    fr, found = _weighed(problem)
+    fr, found = few(problem)
     if found:
         best = max(float(w.log_evidence.max()) for w in found)
         average = sum(float(np.exp(w.log_evidence - best).sum()) for w in found)
@@ -133,7 +125,7 @@ def _families(problem: Problem) -> tuple[tuple[Family, ...], Array]:
     return (SMOOTH[0], STEPPED[0]) if drawn.shape[1] else (SMOOTH[0], SMOOTH[1]), drawn
 
 
-def _weighed(problem: Problem) -> tuple[Frame, list[Weighted]]:
+def few(problem: Problem) -> tuple[Frame, list[Weighted]]:
     """The problem under a few families; none where it has no smooth part."""
     fr = frame(problem)
     if not len(fr.free):
@@ -147,7 +139,7 @@ def _weighed(problem: Problem) -> tuple[Frame, list[Weighted]]:
 
 def _residuals(problem: Problem) -> tuple[Array, Array]:
     """Evidence-averaged squared residuals and hat values of the readings."""
-    fr, found = _weighed(problem)
+    fr, found = few(problem)
     if not found:
         left = (problem.d - fr.U @ fr.Ud)[: fr.readings]
         return left**2, (fr.U[: fr.readings] ** 2).sum(axis=1)
@@ -167,5 +159,5 @@ def _first_guess(problem: Problem, groups: Groups) -> float:
     fr = frame(alone)
     if fr.nu < 3 or not len(fr.free) or not alone.d.any():
         return 1.0
-    _, found = _weighed(alone)
+    _, found = few(alone)
     return float(np.sqrt(mean_noise(found)))

@@ -21,7 +21,8 @@ from srcfit.forward import build
 from srcfit.member import Array
 from srcfit.placing import Place, combinations, place_of, probabilities, stand_ins
 from srcfit.readings.model import Readings
-from srcfit.solve import Solved, invert, noise_of
+from srcfit.robust import noise_of
+from srcfit.solve import Solved, invert
 from srcfit.whitening import whitened
 
 Numbers = NDArray[np.intp]
@@ -145,14 +146,14 @@ def _chances(
     every = replace(case, source=replace(source, lumped=tuple(trial)))
     forward = build(every, readings, spare=True)
     middle = build(_at(case, unknown, [float(x[len(x) // 2]) for x in grids]), readings)
-    sd, lag = noise_of(middle)
+    noise = noise_of(middle)
     balanced = eliminate(forward)
     if len(balanced.names) < len(forward.columns):
         raise SolveError(
             "a member that nothing holds needs a smooth part before a place can be looked for",
             "source.smooth", "give the part's place with `at`, or leave `smooth` out",
         )  # fmt: skip
-    problem = whitened(forward, sd, lag, balanced)
+    problem = whitened(forward, noise.sd, noise.lag, balanced, noise.weight)
     each = combinations(columns)
     width = len(forward.columns)
     both = np.concatenate([each + p * width for p in range(forward.grid.parts)], axis=1)

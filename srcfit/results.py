@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import replace
-from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -15,7 +14,7 @@ from srcfit.recovery import Number
 from srcfit.solve import Solved, strength_unit
 from srcfit.state import Matrix
 from srcfit.units import factor
-from srcfit.whitening import sequences, together
+from srcfit.whitening import coloured, together
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -229,14 +228,9 @@ def reading_units(solved: Solved) -> tuple[Array, Array]:
 
 
 def recoloured(solved: Solved, white: Array) -> Matrix:
-    """Residuals in SI from whitened ones: the correlation put back, parts put together, (n,)."""
-    white = together(solved.forward, white)
-    out = white.copy()
-    for g, members in sequences(solved.forward):
-        keep = solved.lag[g]
-        for before, here in pairwise(members) if keep else ():
-            out[here] = keep * out[before] + np.sqrt(1 - keep**2) * white[here]
-    result: Matrix = out * solved.sd
+    """Residuals in SI from whitened ones: parts put together, correlation and weights undone."""
+    whole = coloured(solved.forward, together(solved.forward, white), solved.links)
+    result: Matrix = whole * solved.sd / np.sqrt(solved.noise.weight)
     return result
 
 

@@ -22,14 +22,14 @@ from srcfit.errors import SolveError
 from srcfit.forward import Forward, build
 from srcfit.limits import limits
 from srcfit.member import Array, Member
-from srcfit.noise import estimate_lag, estimate_noise
 from srcfit.placing import Place
 from srcfit.priors import Family, family
 from srcfit.problem import Grid, Problem, Questions
 from srcfit.readings.model import Readings
+from srcfit.robust import Noise, noise_of
 from srcfit.solvers import SOLVERS
 from srcfit.solvers.ladder import Ladder
-from srcfit.whitening import parts_of, sequences, whitened
+from srcfit.whitening import Links, links, whitened
 
 MOST_MODES = 100
 
@@ -40,8 +40,7 @@ class Solved:
 
     Attributes
     ----------
-    sd, lag : (n,), (g,) standard deviation of each used reading (SI) and lag-1 correlation of each
-        group that the problem was whitened with
+    noise : what the problem was whitened with
     asked, answers : the questions and their answers (SI)
     ladder : Ladder of the chosen solver, roughness 1 where it is averaged; None without a
         smooth part
@@ -54,8 +53,7 @@ class Solved:
 
     forward: Forward
     problem: Problem
-    sd: Array
-    lag: Array
+    noise: Noise
     asked: Asked
     answers: Answers
     ladder: Ladder | None
@@ -64,6 +62,21 @@ class Solved:
     held: Held | None = None
     places: Mapping[str, Place] = field(default_factory=dict)
     edges: tuple[float, ...] = ()
+
+    @property
+    def sd(self) -> Array:
+        """Standard deviation (SI) of each used reading, (n,); weights are not in it."""
+        return self.noise.sd
+
+    @property
+    def lag(self) -> Array:
+        """Lag-1 correlation of each group, (g,)."""
+        return self.noise.lag
+
+    @property
+    def links(self) -> Links:
+        """Neighbours of each used reading and their correlation."""
+        return links(self.forward, self.noise.lag, self.noise.weight)
 
     @property
     def readings(self) -> int:
@@ -95,11 +108,13 @@ def solve(
     return invert(build(case, readings), criteria, rng or np.random.SeedSequence(0))
 
 
-def invert(forward: Forward, criteria: bool, rng: np.random.SeedSequence) -> Solved:
-    """Invert a forward model; parameters as of `solve`."""
+def invert(
+    forward: Forward, criteria: bool, rng: np.random.SeedSequence, noise: Noise | None = None
+) -> Solved:
+    """Invert a forward model; parameters as of `solve`, the noise found where it is not given."""
     case, balanced = forward.case, eliminate(forward)
-    sd, lag = noise_of(forward)
-    problem = whitened(forward, sd, lag, balanced)
+    noise = noise_of(forward, balanced) if noise is None else noise
+    problem = whitened(forward, noise.sd, noise.lag, balanced, noise.weight)
     asked = ask(forward, balanced)
     answers, ladder, choices, choice = answered(forward, problem, asked.questions, criteria)
     strength = case.strength
@@ -114,7 +129,7 @@ def invert(forward: Forward, criteria: bool, rng: np.random.SeedSequence) -> Sol
             narrow=narrow, along=[asked.blocks[f.name] for f in section_forces(case)],
             band=criteria,
         )  # fmt: skip
-    return Solved(forward, problem, sd, lag, asked, answers, ladder, choices, choice, held)
+    return Solved(forward, problem, noise, asked, answers, ladder, choices, choice, held)
 
 
 def answered(
@@ -137,39 +152,6 @@ def answered(
     else:
         answers = cautious(problem, questions, level=strength.level, centre=centre)
     return answers, ladder, choices, choice
-
-
-def noise_of(forward: Forward) -> tuple[Array, Array]:
-    """Standard deviations (n,) and lag-1 correlations (g,) to whiten with: stated or estimated.
-
-    Where one common sd is all that is unknown, any first guess serves: bands integrate it out.
-    """
-    sd, lag = forward.sd.copy(), forward.lag.copy()
-    unknown = ~np.isfinite(sd)
-    if unknown.any():
-        size = np.abs(forward.y[unknown])
-        sd[unknown] = max(float(np.median(size)), float(size.max()) * 1e-3) or 1.0
-    numbers = np.unique(forward.group[unknown])
-    asked = np.isnan(lag)
-    lag[asked] = 0.0
-    if len(numbers) > 1 or (len(numbers) == 1 and not unknown.all()):
-        problem = whitened(forward, sd, lag)
-        group = np.where(unknown, np.searchsorted(numbers, forward.group), -1)
-        rows = np.full(len(problem.d), -1, dtype=np.intp)
-        reading = parts_of(forward)[0]
-        rows[: len(reading)] = group[reading]
-        factors = estimate_noise(problem, rows)
-        found = factors[np.clip(group, 0, None)]
-        sd = np.where(unknown & np.isfinite(found), sd * found, sd)
-    if asked.any():
-        sizes = np.ones(len(lag), dtype=np.intp)  # one more than there are pairs of neighbours
-        for g, members in sequences(forward):
-            whole = forward.driven and forward.specs()[members[0]].component is None
-            sizes[g] += (len(members) - 1) * (2 if whole else 1)
-        lag = np.where(
-            asked, estimate_lag(lambda trial: whitened(forward, sd, trial), sizes, asked), lag
-        )
-    return sd, lag
 
 
 def _ladder(case: Case, forward: Forward, problem: Problem) -> Ladder:

@@ -6,6 +6,8 @@ parts; cells and columns likewise. The noise is that of each part.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -23,18 +25,21 @@ def whitened(
     sd: Array | None = None,
     lag: Array | None = None,
     balanced: Elimination | None = None,
+    weight: Array | None = None,
 ) -> Problem:
     """The whitened problem with the stated noise, or with `sd` (n,) and `lag` (g,) in its place.
 
     Unknowns with prior knowledge, and a known total, become rows after the readings. `balanced`
-    is what `elimination.eliminate` gives (found here when left out).
+    is what `elimination.eliminate` gives (found here when left out). A reading of `weight` w
+    counts as one whose standard deviation is sd / sqrt(w).
     """
     sd = forward.sd if sd is None else sd
     lag = np.nan_to_num(forward.lag) if lag is None else lag
+    weight = np.ones(len(sd)) if weight is None else weight
     balanced = eliminate(forward) if balanced is None else balanced
     m, case = forward.A.shape[1], forward.case
-    rows = np.concatenate([forward.A, forward.B, forward.y[:, None]], axis=1) / sd[:, None]
-    rows = _decorrelated(forward, rows, lag)
+    rows = np.concatenate([forward.A, forward.B, forward.y[:, None]], axis=1)
+    rows = _decorrelated(rows * (np.sqrt(weight) / sd)[:, None], links(forward, lag, weight))
     readings, pseudo = (
         _apart(forward, _reduced(balanced, part, m)) for part in (rows, _knowledge(forward))
     )
@@ -83,16 +88,71 @@ def together(forward: Forward, values: Array) -> Matrix:
     return found
 
 
+@dataclass(frozen=True)
+class Links:
+    """How the noise of n readings hangs together, each with at most one neighbour before it.
+
+    Attributes
+    ----------
+    before : (n,) int
+        Number of the neighbour before; -1 where there is none.
+    lag : (n,)
+        Correlation with it, 0 where there is none.
+    """
+
+    before: Rows
+    lag: Array
+
+    @property
+    def volume(self) -> float:
+        """Log determinant of the whitening."""
+        return -0.5 * float(np.log1p(-(self.lag**2)).sum())
+
+
+def links(forward: Forward, lag: Array, weight: Array) -> Links:
+    """Neighbours of each reading in its sequence, and their correlation.
+
+    A down-weighted reading stands alone; those on either side of it are two steps apart.
+    """
+    before, kept = np.full(len(forward.rows), -1), np.zeros(len(forward.rows))
+    for g, members in sequences(forward) if lag.any() else ():
+        sound = np.flatnonzero(weight[members] == 1)
+        before[members[sound[1:]]] = members[sound[:-1]]
+        kept[members[sound[1:]]] = lag[g] ** np.diff(sound)
+    return Links(before, kept)
+
+
+def linked_rows(forward: Forward, found: Links) -> Links:
+    """The same for the problem's rows: those of the real parts first, then the imaginary ones."""
+    number, part = parts_of(forward)
+    row = np.full((2, len(forward.rows)), -1)
+    row[part, number] = np.arange(len(number))
+    before = found.before[number]
+    return Links(np.where(before < 0, -1, row[part, before]), found.lag[number])
+
+
 def sequences(forward: Forward) -> list[tuple[int, Rows]]:
-    """(group, readings in order along the member) of what may be correlated."""
-    x = forward.readings.x[forward.rows]
-    component = np.array([s.component or "" for s in forward.specs()])
+    """(group, readings in order along the member) of what may be correlated.
+
+    One sequence for each column of a group and each pass along the member: the first readings at
+    their places, then the second ones, and so on. Repeats at one place are independent.
+    """
+    x, spec = forward.places, forward.readings.spec[forward.rows]
     found = []
     for g in range(len(forward.groups)):
-        for part in dict.fromkeys(component[forward.group == g]):
-            members = np.flatnonzero((forward.group == g) & (component == part))
-            found.append((g, members[np.argsort(x[members], kind="stable")]))
+        for column in dict.fromkeys(spec[forward.group == g].tolist()):
+            members = np.flatnonzero((forward.group == g) & (spec == column))
+            members = members[np.argsort(x[members], kind="stable")]
+            turn = _occurrence(x[members])
+            found += [(g, members[turn == k]) for k in range(int(turn.max()) + 1)]
     return found
+
+
+def _occurrence(x: Array) -> Rows:
+    """How many equal entries stand before each one, in ascending entries."""
+    number = np.arange(len(x))
+    first = np.concatenate([[True], np.diff(x) > 0])
+    return np.asarray(number - np.maximum.accumulate(np.where(first, number, 0)))
 
 
 def _knowledge(forward: Forward) -> Matrix:
@@ -141,12 +201,21 @@ def _along(forward: Forward, density: Array) -> Array:
     return np.concatenate([forward.grid.per_part(density[:, :-1]), known[:, None]], axis=1)
 
 
-def _decorrelated(forward: Forward, rows: Matrix, lag: Array) -> Matrix:
-    """Rows of a first-order autoregressive group, made independent along the member."""
-    if not lag.any():
+def _decorrelated(rows: Matrix, found: Links) -> Matrix:
+    """Rows of first-order autoregressive noise, made independent along their sequences."""
+    here = np.flatnonzero(found.lag)
+    if not len(here):
         return rows
-    out = rows.copy()
-    for g, members in sequences(forward):
-        step = rows[members[1:]] - lag[g] * rows[members[:-1]]
-        out[members[1:]] = step / np.sqrt(1 - lag[g] ** 2)
+    out, lag = rows.copy(), found.lag[here, None]
+    out[here] = (rows[here] - lag * rows[found.before[here]]) / np.sqrt(1 - lag**2)
+    return out
+
+
+def coloured(forward: Forward, white: Matrix, found: Links) -> Matrix:
+    """Standardised residuals (n,) from whitened ones: the correlation put back."""
+    out = white.copy()
+    for _, members in sequences(forward) if found.lag.any() else ():
+        for i in members[found.lag[members] != 0]:
+            keep = found.lag[i]
+            out[i] = keep * out[found.before[i]] + np.sqrt(1 - keep**2) * white[i]
     return out

@@ -1,0 +1,321 @@
+"""Which readings are gross outliers: so far from all others that no source could have made them.
+
+At every strength the column of one reading alone and those of sources narrower than a cell
+compete for the misfit, the best first. A source that neighbours see explains more than one
+reading and wins; a reading that does not win clearly over all sources is unsure. Of all
+explanations, at any strength and with any number of suspects, the likeliest is taken.
+
+Sources: Cook, Holschuh & Weisberg (1982), J. R. Stat. Soc. B 44, 370, and Thompson (1985),
+J. R. Stat. Soc. B 47, 53, for an outlier as one reading with a noise of its own, found by
+restricted likelihood; Mallat & Zhang (1993), IEEE Trans. Signal Process. 41, 3397, for pursuit of
+the best column first.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from srcfit.noise import few
+from srcfit.problem import Array, Problem
+from srcfit.solvers.frame import Frame
+from srcfit.solvers.ladder import ALONE, misfit, penalised
+from srcfit.whitening import Links, Rows
+
+# chance that a sound set of readings holds one that is called gross; no bound below LEAST
+SURE, LEAST = 0.001, 3.5
+# log likelihood by which a reading must explain a misfit better than any source
+MARGIN = 3.0
+# no more than this part of the readings can be gross
+PART = 0.25
+# median of chi-square with one degree of freedom
+CHI = 0.4549364231195724
+
+
+def gross(n: int, dof: float | None = None) -> float:
+    """Standard deviations beyond which one of n readings is gross.
+
+    By the normal law, or by Student's with `dof` degrees of freedom where the noise is not stated.
+    """
+    from scipy.special import ndtri, stdtrit
+
+    p = SURE / max(n, 1)
+    return max(float(-ndtri(p) if dof is None else -stdtrit(max(dof, 1.0), p)), LEAST)
+
+
+@dataclass(frozen=True)
+class View:
+    """One family of sources on t rungs: what it leaves of the rows, and how it sees new columns.
+
+    The rows' precision, unpenalised columns projected out, is P = I - U U' - Z diag(fill) Z'.
+
+    Attributes
+    ----------
+    residual : (n, t)
+        P d.
+    energy : (t,)
+        d'P d.
+    volume : (t,)
+        Log determinant part of the log restricted likelihood.
+    weights : (t,)
+        Evidence, 1 in all over the views.
+    """
+
+    fr: Frame
+    Z: Array
+    fill: Array
+    residual: Array
+    energy: Array
+    volume: Array
+    weights: Array
+
+    def sizes(self, U: Array, Z: Array, squares: Array, at: int | slice = slice(None)) -> Array:
+        """Sizes c'P c of columns c, from their products with U and Z and their squares."""
+        own = squares - (U**2).sum(axis=1)
+        seen = Z**2 @ self.fill[:, at]
+        left = (own[:, None] if seen.ndim == 2 else own) - seen
+        floor = ALONE * (squares[:, None] if seen.ndim == 2 else squares)
+        return np.asarray(np.where(left > floor, left, np.inf))
+
+    def times(self, column: Array, at: int) -> Array:
+        """P c at one rung."""
+        U, Z = self.fr.U, self.Z
+        smooth = Z @ (self.fill[:, at] * (Z.T @ column))
+        return np.asarray(column - U @ (U.T @ column) - smooth)
+
+
+def views(problem: Problem) -> list[View]:
+    """A few families of a problem; without a smooth part only the unpenalised columns."""
+    fr, found = few(problem)
+    if not found:
+        left = problem.d - fr.U @ fr.Ud
+        none, one = np.zeros((len(left), 0)), np.ones(1)
+        return [View(fr, none, none[:0].T, left[:, None], one * (left @ left), 0 * one, one)]
+    out = []
+    for w in found:
+        sp, tau = w.spectrum, w.sigma**-2.0
+        ladder = penalised(sp, tau)
+        volume = -0.5 * np.log1p(sp.lam[:, None] / tau).sum(axis=0)
+        energy = misfit(sp.lam, sp.y, float(sp.rest @ sp.rest), tau)
+        out.append(
+            View(fr, sp.Z, ladder.fill, ladder.all_residuals, energy, volume, w.weights)
+        )  # fmt: skip
+    return out
+
+
+@dataclass(frozen=True)
+class Columns:
+    """What an error of each reading alone does to the whitened rows, as columns W e_i.
+
+    `weight` is that of the rows, `links` their correlation.
+    """
+
+    links: Links
+    weight: Array
+
+    def seen(self, rows: Array) -> Array:
+        """Products with each column, (n, ...), of whitened rows (n + pseudo, ...)."""
+        n = len(self.weight)
+        lag = self.links.lag.reshape(-1, *[1] * (rows.ndim - 1))
+        scale = 1 / np.sqrt(1 - lag**2)
+        out = scale * rows[:n]
+        here = np.flatnonzero(self.links.lag)
+        out[self.links.before[here]] -= (lag * scale)[here] * rows[here]
+        return np.asarray(out * np.sqrt(self.weight).reshape(lag.shape))
+
+    @property
+    def squares(self) -> Array:
+        """Squared norms of the columns, (n,)."""
+        share = 1 / (1 - self.links.lag**2)
+        out = share.copy()
+        here = np.flatnonzero(self.links.lag)
+        out[self.links.before[here]] += self.links.lag[here] ** 2 * share[here]
+        return np.asarray(out * self.weight)
+
+    def one(self, i: int, rows: int) -> Array:
+        """Column i, (rows,)."""
+        column = np.zeros(rows)
+        share = 1 / np.sqrt(1 - self.links.lag**2)
+        column[i] = share[i]
+        for j in np.flatnonzero((self.links.before == i) & (self.links.lag != 0)):
+            column[j] = -self.links.lag[j] * share[j]
+        return np.asarray(column * np.sqrt(self.weight[i]))
+
+
+@dataclass
+class Path:
+    """Columns picked one after another at one rung, the best first.
+
+    Attributes
+    ----------
+    view, at : where
+    g, q : products c'P d and c'P c of the columns of readings, what was picked taken out
+    far, wide : the same of the cells
+    energy : what is left of d'P d, before and after every pick
+    picks : (row of a reading or -1 for a source, squared distance in whitened units)
+    unsure : rows that a source explained no more than as well
+    """
+
+    view: View
+    at: int
+    g: Array
+    q: Array
+    far: Array
+    wide: Array
+    energy: list[float]
+    basis: list[Array] = field(default_factory=list)
+    picks: list[tuple[int, float]] = field(default_factory=list)
+    unsure: list[int] = field(default_factory=list)
+
+
+def _score(
+    volume: float | Array, energy: float | Array, nu: int, k: int | Rows, stated: bool
+) -> tuple[Array, Array]:
+    """Log restricted likelihood after k picks, and the noise's variance.
+
+    A stated noise may turn out larger, not smaller, so that a wrong member makes no outliers.
+    """
+    s2 = np.maximum(energy / np.maximum(nu - k, 1), 1.0 if stated else np.finfo(float).tiny)
+    return volume - 0.5 * (energy / s2 + nu * np.log(s2) + k), s2
+
+
+def _cost(n: int, nu: int, most: int, stated: bool) -> Array:
+    """What each pick must gain (most,): as much as one that lies at the bound of `gross`."""
+    k = np.arange(1, most + 1)
+    c2 = np.array([gross(n, None if stated else nu - int(j)) ** 2 for j in k])
+    if stated:
+        return np.asarray(0.5 * (c2 - 1) - 0.5 * np.log(c2))
+    return np.asarray(0.5 * nu * np.log((nu - k + c2) / (nu - k + 1)) - 0.5 * np.log(c2))
+
+
+def propose(problem: Problem, links: Links) -> tuple[Array, Rows]:
+    """Squared distance of each row that is suspected (0 of all others), and the unsure rows.
+
+    Every rung of every family is asked; the best explanation of all rows wins.
+    """
+    n = len(problem.d) - problem.pseudo
+    columns = Columns(links, np.ones(n))
+    squares, nothing = columns.squares, (np.zeros(n), np.zeros(0, dtype=np.intp))
+    found = views(problem)
+    fr = found[0].fr
+    most = min(int(PART * n), fr.nu - 3)
+    if most < 1:
+        return nothing
+    costs = np.append(0.0, np.cumsum(_cost(n, fr.nu, most, problem.stated)))
+    best = max(float(_score(v.volume, v.energy, fr.nu, 0, problem.stated)[0].max()) for v in found)
+    U, chosen = columns.seen(fr.U), None
+    for v in found:
+        g = columns.seen(v.residual)
+        q = v.sizes(U, columns.seen(v.Z), squares)
+        for at in _promising(v, g**2 / q, costs, best, problem.stated):
+            path = _pursue(problem, columns, v, int(at), g[:, at], q[:, at], most)
+            scores = _scores(path, fr.nu, costs, problem.stated)
+            k = int(np.argmax(scores))
+            if k and scores[k] > best:
+                best, chosen = float(scores[k]), (path, k)
+    if chosen is None:
+        return nothing
+    path, k = chosen
+    distance = np.zeros(n)
+    for row, t2 in path.picks[:k]:
+        if row >= 0:
+            distance[row] = t2
+    return distance, np.array(path.unsure, dtype=np.intp)
+
+
+def _scores(path: Path, nu: int, costs: Array, stated: bool) -> Array:
+    """Score after each number of picks."""
+    k = np.arange(len(path.energy))
+    scores, s2 = _score(path.view.volume[path.at], np.array(path.energy), nu, k, stated)
+    logs = np.concatenate([[0.0], np.cumsum([np.log(max(t2, 1e-300)) for _, t2 in path.picks])])
+    return np.asarray(scores - 0.5 * (logs - k * np.log(s2)) - costs[: len(k)])
+
+
+def _promising(v: View, t2: Array, costs: Array, best: float, stated: bool) -> Rows:
+    """Rungs at which the farthest readings, were they independent, could beat the best score."""
+    most = len(costs) - 1
+    top = -np.sort(-t2, axis=0)[:most]
+    k = np.arange(most + 1)[:, None]
+    none = np.zeros((1, t2.shape[1]))
+    left = v.energy - np.concatenate([none, np.cumsum(top, axis=0)])
+    left = np.maximum(left, 1e-12 * v.energy)
+    scores, s2 = _score(v.volume, left, v.fr.nu, k, stated)
+    logs = np.concatenate([none, np.cumsum(np.log(np.maximum(top, 1e-300)), axis=0)])
+    scores = scores - 0.5 * (logs - k * np.log(s2)) - costs[:, None]
+    return np.flatnonzero(scores[1:].max(axis=0) > best)
+
+
+def _pursue(
+    problem: Problem, columns: Columns, v: View, at: int, g: Array, q: Array, most: int
+) -> Path:
+    """Pick columns of readings and of narrow sources at one rung until nothing is gross."""
+    n, rows = len(g), len(problem.d)
+    A = problem.A[:, problem.grid.unknown]
+    norms = np.linalg.norm(A, axis=0)
+    A = A[:, norms > 0] / norms[norms > 0] if norms.any() else A[:, :1]
+    wide = v.sizes(A.T @ v.fr.U, A.T @ v.Z, np.ones(A.shape[1]), at)
+    path = Path(v, at, g.copy(), q.copy(), A.T @ v.residual[:, at], wide, [float(v.energy[at])])
+    bound = gross(n) ** 2
+    while len(path.picks) < most:
+        t2, s2 = path.g**2 / path.q, path.far**2 / path.wide
+        i, j = int(np.argmax(t2)), int(np.argmax(s2))
+        best = max(float(t2[i]), float(s2[j]))
+        # the noise as most readings show it, at least a stated one
+        scale = max(float(np.median(t2)) / CHI, 1.0 if problem.stated else 0.0)
+        if best <= bound * scale:
+            break
+        near, gone = best - 2 * MARGIN * scale, bound * scale
+        if t2[i] >= best:
+            column = columns.one(i, rows)
+            lifted = _lifted(path, column)
+            rivals = _after(path.far, path.wide, A.T @ lifted, path.g[i], path.q[i])
+            same = np.flatnonzero((s2 >= near) & (rivals <= gone))
+            if not len(same):
+                _take(path, columns, A, lifted, i, float(path.g[i]), float(path.q[i]), best)
+                continue
+            j = int(same[np.argmax(s2[same])])
+        lifted = _lifted(path, A[:, j])
+        rivals = _after(path.g, path.q, columns.seen(lifted), path.far[j], path.wide[j])
+        path.unsure += np.flatnonzero((t2 >= near) & (rivals <= gone)).tolist()
+        _take(
+            path, columns, A, lifted, -1, float(path.far[j]), float(path.wide[j]), float(s2[j])
+        )  # fmt: skip
+    return path
+
+
+def _lifted(path: Path, column: Array) -> Array:
+    """P c with all that was picked before taken out."""
+    out = path.view.times(column, path.at)
+    for b in path.basis:
+        out = out - b * (b @ column)
+    return out
+
+
+def _after(g: Array, q: Array, cross: Array, g0: float, q0: float) -> Array:
+    """Squared distances of columns once another one, with products `cross`, is taken out."""
+    left = q - cross**2 / q0
+    safe = left > 1e-6 * q
+    return np.asarray(np.where(safe, (g - cross * g0 / q0) ** 2 / np.where(safe, left, 1.0), 0.0))
+
+
+def _take(
+    path: Path, columns: Columns, A: Array, lifted: Array, row: int, g: float, q: float, t2: float
+) -> None:
+    """Take one column out of all the products."""
+    b = lifted / np.sqrt(q)
+    share = g / np.sqrt(q)
+    on_readings, on_cells = columns.seen(b), A.T @ b
+    path.g -= on_readings * share
+    path.far -= on_cells * share
+    path.q = _less(path.q, on_readings)
+    path.wide = _less(path.wide, on_cells)
+    path.basis.append(b)
+    path.energy.append(max(path.energy[-1] - t2, 0.0))
+    path.picks.append((row, t2))
+
+
+def _less(q: Array, cross: Array) -> Array:
+    """Squared sizes less what was taken out; inf where nothing is left."""
+    left = q - cross**2
+    return np.asarray(np.where(left > 1e-6 * q, left, np.inf))
