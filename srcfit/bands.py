@@ -136,6 +136,7 @@ def cautious(
     *,
     level: float = 0.95,
     centre: Centre | None = None,
+    at_least: float = 0.0,
 ) -> Answers:
     """Answers with the cautious band.
 
@@ -147,6 +148,8 @@ def cautious(
         Probability that an interval promises to hold.
     centre : (Ladder, int), optional
         Take the estimate from this rung; by default it is averaged over families by evidence.
+    at_least : float
+        Mean level to reckon with where the estimate's own is smaller.
 
     Returns
     -------
@@ -165,6 +168,7 @@ def cautious(
         ladder, at = centre
         value, fit = ladder.answers(questions)[:, at], rung_fit(ladder, at)
         size = mean_level(fr, ladder.estimates[fr.free, at])
+    size = max(size, at_least)
     m_c, s_c, m_0, share = _cautious(fr, asked, ground, size)
     off = np.maximum(np.abs(value - m_c), np.abs(value - m_0))
     parts = (value, np.sqrt(s_c**2 + off**2), m_c, m_0, s_c, share)

@@ -133,9 +133,13 @@ def invert(
 
 
 def answered(
-    forward: Forward, problem: Problem, questions: Questions, criteria: bool
+    forward: Forward, problem: Problem, questions: Questions, criteria: bool,
+    at_least: float = 0.0,
 ) -> tuple[Answers, Ladder | None, Mapping[str, Choice], Choice | None]:
-    """Answers without inequalities, as the case asks; ladder, choices, the one followed."""
+    """Answers without inequalities, as the case asks; ladder, choices, the one followed.
+
+    `at_least` as of `bands.cautious`.
+    """
     case, strength = forward.case, forward.case.strength
     smooth = problem.smooth and bool(problem.grid.free.any())
     wanted = criteria or strength.choose != "averaged" or strength.solver != "tikhonov"
@@ -150,7 +154,9 @@ def answered(
             roughness=1 if strength.roughness == "averaged" else strength.roughness,
         )  # fmt: skip
     else:
-        answers = cautious(problem, questions, level=strength.level, centre=centre)
+        answers = cautious(
+            problem, questions, level=strength.level, centre=centre, at_least=at_least
+        )  # fmt: skip
     return answers, ladder, choices, choice
 
 
