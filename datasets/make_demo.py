@@ -80,6 +80,18 @@ def sediment():
     return x, u @ np.tile(w / 12, 6)
 
 
+def ring():
+    """Head [m] in observation wells around a pumped well inside an infiltration ring."""
+    x = np.array([1.5, 4.0, 9.0, 16.0, 24.0, 32.0, 39.0, 45.0, 50.0, 56.0, 62.0, 72.0, 90.0,
+                  115.0, 145.0, 180.0, 215.0, 240.0])  # fmt: skip
+    ground = second_order.Line(0.3, 250.0, 8e-3, right=(RIGID, 0.0), geometry="cylinder")
+    day = 1e-3 / 86400.0  # 1 mm/d
+    seepage = [(0.3, 250.0, 0.6 * day), (40.0, 60.0, 200.0 * day)]
+    edges = np.geomspace(0.3, 250.0, 30)
+    solved = second_order.settle(ground, seepage, [(0.3, -0.020)], places=[*edges, *x])
+    return x, 24.0 + solved.at("response", x)
+
+
 def autoregressive(rng, sd, lag, count):
     """Stationary noise whose neighbours correlate by `lag`."""
     e = rng.normal(0.0, sd, count)
@@ -108,7 +120,7 @@ def named(letters, x, values, decimals):
 
 def main(folder=ROOT / "examples"):
     """Write every file of readings below `folder`."""
-    rngs = [np.random.default_rng(s) for s in np.random.SeedSequence(SEED).spawn(5)]
+    rngs = [np.random.default_rng(s) for s in np.random.SeedSequence(SEED).spawn(6)]
     invented = "invented readings, made by datasets/make_demo.py"
 
     x, w = ground_beam()
@@ -178,6 +190,15 @@ def main(folder=ROOT / "examples"):
         [(i, f"{100 * a:.2f}", f"{b:.0f}", f"{s:.0f}")
          for i, (a, b, s) in enumerate(zip(x, C, u, strict=True), 1)],
     )  # fmt: skip
+
+    x, h = ring()
+    h = h + rngs[5].normal(0.0, 0.003, len(x))
+    write(
+        folder / "infiltration_ring" / "heads.csv",
+        [invented, "18 observation wells, pressure probes, mean of a week, head above datum"],
+        ["well", "r [m]", "head [m]"],
+        named("OW", x, h, 3),
+    )
 
 
 if __name__ == "__main__":

@@ -70,6 +70,10 @@ TRUTHS = {
         "total": 9013, "joint bay": 171, "foreign pipe": 240, "dry stretch": 484,
         "step:fibre@220 m": 0.6,
     },
+    # 200 mm/d on 40-60 m and 0.6 mm/d everywhere
+    "infiltration_ring/case.toml": {
+        "total": 15.908, "inside the ring": 0.035, "ring": 14.588, "meadow": 1.285,
+    },
     "sediment_column/case.toml": {"total": 1.540, "dark layer": 0.924},
     # real readings: the weight is 0.500 kg
     "cantilever_weight/case.toml": {"total": 4.905, "weight": 4.905},
@@ -165,6 +169,23 @@ def test_hot_joint():
     assert joints["joint B"]["lower"] > 25.6  # above 10 microohm at 1600 A: outage now
 
 
+def test_infiltration_ring():
+    """By hand from two lines on semi-logarithmic paper (Thiem): flow = 2 pi T dh/dln r."""
+    found = summary("infiltration_ring/case.toml")
+    r, h = np.loadtxt(EXAMPLES / "infiltration_ring/heads.csv", delimiter=",", skiprows=3,
+                      usecols=(1, 2)).T  # fmt: skip
+    inside, beyond = (
+        2 * np.pi * 8e-3 * np.polyfit(np.log(r[part]), h[part], 1)[0] * 1e3
+        for part in (r < 40, r > 60)
+    )
+    assert inside == pytest.approx(20, rel=0.02)  # all that the well takes passes here
+    ring = numbers(found)["ring"]
+    assert ring["lower"] < inside - beyond < ring["upper"]
+    assert ring["value"] == pytest.approx(inside - beyond, abs=ring["sd"])
+    # what the transmissivity leaves open weighs as much as the readings: it is told
+    assert {"property-dominates", "property-not-linear"} & codes(found)
+
+
 def test_sediment():
     found = numbers(summary("sediment_column/case.toml"))
     assert half(found["dark layer"]) == pytest.approx(0.08, rel=0.3)
@@ -203,7 +224,7 @@ def test_heated_bars(bar):
 def test_demo_readings_are_made_by_the_script(tmp_path):
     make_demo.main(tmp_path)
     made = sorted(p.relative_to(tmp_path) for p in tmp_path.glob("*/*.csv"))
-    assert len(made) == 7
+    assert len(made) == 8
     for path in made:
         ours = (EXAMPLES / path).read_text(encoding="utf-8").splitlines()
         theirs = (tmp_path / path).read_text(encoding="utf-8").splitlines()
@@ -226,13 +247,27 @@ def test_demo_responses_are_the_stated_ones():
     _, T = make_demo.cable()
     # the gauge evens out the bay's peak of 62.0 degC
     assert [T.min(), T.max()] == pytest.approx([31.8, 61.6], abs=0.1)
+    r, h = make_demo.ring()
+
+    def flow_head(r):
+        """-T (r h')' / r = N(r) with what the well takes at its screen, no flow at 0.3 m else."""
+        day, T, a, b, R = 1e-3 / 86400, 8e-3, 40.0, 60.0, 250.0
+
+        def bowl(r, start, rate):  # head of a rain of `rate` beyond `start`, less its value at R
+            s = np.maximum(r, start)
+            return -rate / (2 * T) * ((s**2 - R**2) / 2 - start**2 * np.log(s / R))
+
+        rain = bowl(r, 0.3, 0.6 * day) + bowl(r, a, 200 * day) - bowl(r, b, 200 * day)
+        return 24.0 + rain + 0.020 / (2 * np.pi * T) * np.log(r / R)
+
+    np.testing.assert_allclose(h, flow_head(r), atol=1e-9)
     _, C = make_demo.sediment()
     assert C.max() == pytest.approx(10_170, rel=0.03)  # a slice of 1.5 cm sees a little less
 
 
 @pytest.mark.parametrize(
     "name", ["ground_beam", "girder_settled_pier", "busbar_joint", "buried_cable",
-             "sediment_column"],
+             "infiltration_ring", "sediment_column"],
 )  # fmt: skip
 def test_every_scenario_has_its_page(name):
     """The page of each of the five scenarios: small, complete, its zones and total in it."""
