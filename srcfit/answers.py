@@ -260,6 +260,8 @@ def _complex_peak(x: Array, real: Array, imaginary: Array, upper: Array) -> dict
         "lower": float(real[best] - half[best]),
         "upper": float(real[best] + half[best]),
         "imaginary": float(imaginary[best]),
+        "imaginary_lower": float(imaginary[best] - half[best]),
+        "imaginary_upper": float(imaginary[best] + half[best]),
         "position": float(x[best]),
         "position_lower": float(places.min()),
         "position_upper": float(places.max()),

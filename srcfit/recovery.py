@@ -24,7 +24,8 @@ Array = NDArray[np.float64]
 class Number:
     """A value with its standard deviation and interval, in the user's unit; None: undetermined.
 
-    Of a driven member `value` is the real part; sd and the interval's half-width hold for either.
+    Of a driven member `value`, lower and upper are of the real part, `imaginary` and its bounds of
+    the other; sd and the interval's half-width are the same for either.
     """
 
     value: float | None
@@ -32,6 +33,8 @@ class Number:
     lower: float | None
     upper: float | None
     imaginary: float | None = None
+    imaginary_lower: float | None = None
+    imaginary_upper: float | None = None
     driven: bool = False
 
 

@@ -49,13 +49,30 @@ class Shown:
         ]
         if not self.driven:
             return plain
-        twins = self.imaginary[where]
-        return [replace(n, imaginary=known(v), driven=True)
-                for n, v in zip(plain, twins, strict=True)]  # fmt: skip
+        twins = zip(self.imaginary[where], *self._beside(where), strict=True)
+        return [
+            replace(n, imaginary=known(v), imaginary_lower=known(low), imaginary_upper=known(high),
+                    driven=True)
+            for n, (v, low, high) in zip(plain, twins, strict=True)
+        ]  # fmt: skip
+
+    def _beside(self, where: slice) -> tuple[Array, Array]:
+        """Ends of the intervals of imaginary parts: as wide as those of the real parts."""
+        half = self.upper[where] - self.value[where]
+        return self.imaginary[where] - half, self.imaginary[where] + half
 
     def twin(self, block: str, name: str, factor: Any = 1.0) -> dict[str, Array]:
         """Imaginary parts of a block as one more column of a table; nothing where not driven."""
         return {name: self.imaginary[self._blocks[block]] * factor} if self.driven else {}
+
+    def twin_bounds(
+        self, block: str, lower: str, upper: str, factor: Any = 1.0
+    ) -> dict[str, Array]:
+        """Ends of their intervals as two more columns; nothing where not driven."""
+        if not self.driven:
+            return {}
+        low, high = self._beside(self._blocks[block])
+        return {lower: low * factor, upper: high * factor}
 
     def shares(self, block: str) -> list[float | None]:
         """Data share of the block's numbers."""
@@ -97,9 +114,12 @@ def known(value: Any) -> float | None:
 
 
 def number_map(n: Number) -> dict[str, float | None]:
-    """As in summary.json; of a driven member with the twin key `imaginary`."""
+    """As in summary.json; of a driven member with the twin key `imaginary` and its interval."""
     plain = {"value": n.value, "sd": n.sd, "lower": n.lower, "upper": n.upper}
-    return plain | ({"imaginary": n.imaginary} if n.driven else {})
+    if not n.driven:
+        return plain
+    twins = {"_lower": n.imaginary_lower, "_upper": n.imaginary_upper}
+    return plain | {"imaginary": n.imaginary} | {f"imaginary{k}": v for k, v in twins.items()}
 
 
 def position_scale(solved: Solved) -> float:
@@ -127,6 +147,7 @@ def source_table(solved: Solved, shown: Shown) -> pd.DataFrame:
             f"to [{P}]": grid.edges[1:] * scale,
         }
         | shown.twin("cells", f"estimate_imag [{U}]", ~held)
+        | shown.twin_bounds("cells", f"lower_imag [{U}]", f"upper_imag [{U}]", ~held)
     )
 
 
@@ -152,6 +173,7 @@ def zones_table(solved: Solved, shown: Shown) -> pd.DataFrame:
             "data_share": share,
         }
         | shown.twin("zones", f"value_imag [{T}]")
+        | shown.twin_bounds("zones", f"lower_imag [{T}]", f"upper_imag [{T}]")
         | shown.twin("zones", f"mean_imag [{U}]", per_size / zone_sizes(case))
     )
 
@@ -172,6 +194,8 @@ def section_table(solved: Solved, shown: Shown) -> pd.DataFrame:
         parts = {"": value, "_sd": sd, "_lower": lower, "_upper": upper}
         columns |= {f"{force.name}{end} [{force.unit}]": part for end, part in parts.items()}
         columns |= shown.twin(force.name, f"{force.name}_imag [{force.unit}]")
+        bounds = (f"{force.name}_{end}_imag [{force.unit}]" for end in ("lower", "upper"))
+        columns |= shown.twin_bounds(force.name, *bounds)
     return pd.DataFrame(columns)
 
 

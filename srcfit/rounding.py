@@ -77,6 +77,17 @@ def twin(number: Mapping[str, Any], unit: str = "") -> str:
     return f"i({plus_minus({'value': part, 'sd': number.get('sd')}, unit)})"
 
 
+def twin_interval(number: Mapping[str, Any], unit: str = "") -> str:
+    """Text like ``i(-0.3 to 2.5 kN)`` of a driven member's imaginary part; empty without one."""
+    part, ends = number.get("imaginary"), ("imaginary_lower", "imaginary_upper")
+    if _real(part) is None or isinstance(part, Mapping):
+        return ""
+    own = {"value": part, "sd": number.get("sd"), "lower": number.get(ends[0]),
+           "upper": number.get(ends[1])}  # fmt: skip
+    told = interval(own, unit)
+    return "" if told == NO_INTERVAL else f"i({told})"
+
+
 def interval(number: Mapping[str, Any], unit: str = "") -> str:
     """Text like ``900.3 to 936.5 kN`` of a mapping with lower and upper."""
     sd, value = number.get("sd"), number.get("value")

@@ -7,7 +7,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 from unicodedata import category, east_asian_width
 
-from srcfit.rounding import UNDETERMINED, brief, interval, plus_minus, twin
+from srcfit.rounding import UNDETERMINED, brief, interval, plus_minus, twin, twin_interval
 
 WIDTH = 96
 LEVELS = ("serious", "caution", "note")
@@ -172,6 +172,8 @@ def _cells(number: Mapping[str, Any], unit: str) -> tuple[str, str]:
     beside = twin(number, unit)
     if beside and told != UNDETERMINED:
         told += f" and {beside}"
+    if twin_interval(number, unit):
+        bounds += f" and {twin_interval(number, unit)}"
     return told, bounds
 
 

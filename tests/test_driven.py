@@ -150,6 +150,9 @@ def test_export_with_amplitude_and_phase(tmp_path):
                    summary["reactions"][0]):  # fmt: skip
         assert np.isfinite(number["imaginary"])
         assert number["upper"] - number["value"] == pytest.approx(1.96 * number["sd"], rel=1e-3)
+        low, high = number["imaginary_lower"], number["imaginary_upper"]
+        assert (low + high) / 2 == pytest.approx(number["imaginary"], abs=1e-9 * abs(high))
+        assert high - low == pytest.approx(number["upper"] - number["lower"], rel=1e-9)
     # the wave falls by 1/e and lags by a radian over 0.148 m: 6 K at the surface, no source inside
     surface = summary["nuisances"][0]
     half = surface["upper"] - surface["value"]
@@ -166,8 +169,18 @@ def test_export_with_amplitude_and_phase(tmp_path):
     np.testing.assert_allclose(value - left, table["predicted"] + 1j * table["predicted_imag"])
     source = pd.read_csv(folder / "source.csv")
     assert {"estimate [W/m^3]", "estimate_imag [W/m^3]"} <= set(source)
+    for end in ("lower", "upper"):
+        off = source[f"{end} [W/m^3]"] - source["estimate [W/m^3]"]
+        beside = source[f"{end}_imag [W/m^3]"] - source["estimate_imag [W/m^3]"]
+        np.testing.assert_allclose(beside, off, rtol=1e-6)
     zones = pd.read_csv(folder / "zones.csv")
     assert {"value_imag [W/m^2]", "mean_imag [W/m^3]"} <= set(zones)
+    assert zones["lower_imag [W/m^2]"][0] == pytest.approx(summary["zones"][0]["imaginary_lower"])
+    inside = pd.read_csv(folder / "section.csv")
+    assert (inside["heat_flux_lower_imag [W/m^2]"] <= inside["heat_flux_imag [W/m^2]"]).all()
+    page = (folder / "report.html").read_text(encoding="utf-8")
+    assert "imaginary part, 95 % from" in page
+    assert "heat flux, imaginary part to" in page
     saved = json.loads((folder / "summary.json").read_text())
     assert saved["total"]["imaginary"] == pytest.approx(summary["total"]["imaginary"])
 

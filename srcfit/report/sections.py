@@ -17,7 +17,7 @@ from srcfit.report.data import LINES, READINGS
 from srcfit.report.html import clean, figure, listing, name, nested, safe, section
 from srcfit.report.method import CAUTIONS, method_text
 from srcfit.report.numbers import interval, minus, plus_minus, shown
-from srcfit.rounding import NO_INTERVAL, UNDETERMINED, brief, twin
+from srcfit.rounding import NO_INTERVAL, UNDETERMINED, brief, twin, twin_interval
 
 LEVELS = ("serious", "caution", "note")
 
@@ -57,6 +57,9 @@ def total_sentence(recovery: Recovery) -> str:
     low, high = ends.split(" to ", 1)
     part = "the part in phase lies " if twin(total, T) else ""
     where = f"{part}between {shown(low)} and {shown(high)}"
+    if twin_interval(total, T):
+        low, high = twin_interval(total, T)[2:-1].split(" to ", 1)
+        where += f", the other between {shown(low)} and {shown(high)}"
     return f"{lead}: with {percent(recovery)} confidence {where}."
 
 
@@ -100,13 +103,14 @@ def _zone(recovery: Recovery, zone: Mapping[str, Any], scale: tuple[float, float
     place = shown(minus(f"{brief(zone.get('from'))} to {brief(zone.get('to'))} {P}"))
     amount = shown(f"{plus_minus(zone, T)} {twin(zone, T)}".rstrip())
     ends = interval(zone, T)
+    both = f"{ends} {twin_interval(zone, T)}".rstrip()
     share = number(zone.get("data_share"))
     weak = np.isfinite(share) and share < 0.5
     doubt = '<span class="weak">mainly the prior’s</span>' if weak else ""
     return (
         f'<li><span class="zone">{name(zone.get("name"))} <small>{place}</small></span>'
         f'<span class="amount">{amount}{doubt}</span>{_strip(zone, scale)}'
-        f'<span class="range">{shown(ends) if ends != NO_INTERVAL else "–"}</span></li>'
+        f'<span class="range">{shown(both) if ends != NO_INTERVAL else "–"}</span></li>'
     )
 
 

@@ -27,25 +27,29 @@ def with_unit(text: str, unit_text: str) -> str:
 def estimate(row: Mapping[str, Any], driven: bool = False) -> list[Num]:
     """Cells of value, standard uncertainty and both ends of the interval, rounded together.
 
-    Of a driven member the value's imaginary part stands after its real part.
+    Of a driven member the imaginary part stands after the real part, and so do its ends.
     """
     value, sd = round_pair(row.get("value"), row.get("sd"))
-    cells = [num(row.get("value"), value or UNDETERMINED), num(row.get("sd"), sd)]
-    for key in ("lower", "upper"):
-        cells.append(num(row.get(key), round_like(row.get(key), row.get("sd"), row.get("value"))))
-    if driven:
-        part = row.get("imaginary")
-        cells.insert(1, num(part, round_like(part, row.get("sd"), row.get("value"))))
-    return cells
+
+    def like(*keys: str) -> list[Num]:
+        return [num(row.get(k), round_like(row.get(k), row.get("sd"), row.get("value")))
+                for k in keys]  # fmt: skip
+
+    first, spread = num(row.get("value"), value or UNDETERMINED), num(row.get("sd"), sd)
+    if not driven:
+        return [first, spread, *like("lower", "upper")]
+    ends = like("lower", "upper", "imaginary_lower", "imaginary_upper")
+    return [first, *like("imaginary"), spread, *ends]
 
 
 def estimate_heads(recovery: Recovery, unit_text: str) -> list[str]:
     """Headers of the cells of `estimate`."""
-    level = percent(recovery)
-    values = [with_unit("value", unit_text)]
-    if recovery.case.member.driven:
-        values = [with_unit("real part", unit_text), with_unit("imaginary part", unit_text)]
-    return [*values, "standard uncertainty", f"{level} from", f"{level} to"]
+    ends = [f"{percent(recovery)} {word}" for word in ("from", "to")]
+    if not recovery.case.member.driven:
+        return [with_unit("value", unit_text), "standard uncertainty", *ends]
+    parts = ("real part", "imaginary part")
+    both = [f"{part}, {end}" for part in parts for end in ends]
+    return [*(with_unit(part, unit_text) for part in parts), "standard uncertainty", *both]
 
 
 def share(value: Any) -> Num:
@@ -130,8 +134,9 @@ def detection(recovery: Recovery) -> str:
 def cells(recovery: Recovery) -> str:
     """The source cell by cell."""
     frame = recovery.source
-    names = [n for n in ("x", "estimate", "estimate_imag", "sd", "lower", "upper", "data_share")
-             if header(frame, n)]  # fmt: skip
+    amounts = ("estimate", "estimate_imag", "lower", "upper", "lower_imag", "upper_imag")
+    order = ("x", "estimate", "estimate_imag", "sd", *amounts[2:], "data_share")
+    names = [n for n in order if header(frame, n)]
     columns = [numbers(frame, n) for n in names]
     sd = numbers(frame, "sd")
     rows: list[Row] = []
@@ -140,13 +145,14 @@ def cells(recovery: Recovery) -> str:
         for key, column in zip(names, columns, strict=True):
             if key == "data_share":
                 row.append(share(column[i]))
-            elif key in ("estimate", "estimate_imag", "lower", "upper"):
+            elif key in amounts:
                 row.append(num(column[i], round_like(column[i], sd[i])))
             else:
                 row.append(num(column[i], digits=5 if key == "x" else 2))
         rows.append(row)
     heads = [pretty_header(header(frame, n) or n).replace("_", " ") for n in names]
-    heads = [h.replace("estimate imag", "imaginary part") for h in heads]
+    for old, new in (("estimate imag", "imaginary part"), (" imag", ", imaginary part")):
+        heads = [h.replace(old, new) for h in heads]
     return table("table-source", "Source, cell by cell", heads, rows, fold=True)
 
 
@@ -159,11 +165,11 @@ def inside(recovery: Recovery) -> str:
     heads = [pretty_header(header(frame, "x") or "x")]
     rows: list[Row] = [[num(v, digits=5)] for v in curves[0].x]
     for c in curves:
-        twin = f"{c.name.replace(' ', '_')}_imag"
+        key = c.name.replace(" ", "_")
         amounts = {"": c.value, " from": c.lower, " to": c.upper}
-        if header(frame, twin):
-            amounts = {"": c.value, ", imaginary part": numbers(frame, twin),
-                       " from": c.lower, " to": c.upper}  # fmt: skip
+        for word, end in (("", ""), (" from", "_lower"), (" to", "_upper")):
+            if header(frame, f"{key}{end}_imag"):
+                amounts[f", imaginary part{word}"] = numbers(frame, f"{key}{end}_imag")
         heads += [with_unit(f"{c.name}{word}", c.unit) for word in amounts]
         for i, row in enumerate(rows):
             row += [num(v[i], round_like(v[i], c.sd[i])) for v in amounts.values()]
