@@ -331,29 +331,3 @@ def few(n: int, unknown: int) -> list[Finding]:
             "fit by: the intervals are left empty; add readings.",
         )
     ]  # fmt: skip
-
-
-def asymmetric(name: str, ratio: float) -> list[Finding]:
-    """A property whose effect is not linear over its own uncertainty."""
-    if ratio <= 0.3:
-        return []
-    return [
-        Finding(
-            "property-not-linear", "caution",
-            f"The effect of the uncertainty of {name} bends by {ratio:.0%} over one standard "
-            "deviation: its share of the intervals is rough; try the case at both ends of it.",
-        )
-    ]  # fmt: skip
-
-
-def property_share(name: str, share: float) -> list[Finding]:
-    """A property that dominates the uncertainty of the total."""
-    if share <= 0.5:
-        return []
-    return [
-        Finding(
-            "property-dominates", "caution",
-            f"{share:.0%} of the variance of the total comes from the uncertainty of {name}: "
-            "knowing it better helps more than better readings.",
-        )
-    ]  # fmt: skip

@@ -2,17 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import asdict, replace
+from dataclasses import asdict
 
 import numpy as np
 
-from srcfit import __version__, checks, knowledge
+from srcfit import __version__, checks, knowledge, patterns, shares, tell
 from srcfit.answers import per
 from srcfit.balance import Balance, balance, balance_facts
 from srcfit.bands import undetermined
 from srcfit.case.model import Case
-from srcfit.case.vary import vary
 from srcfit.eigen import modes
 from srcfit.errors import Finding
 from srcfit.facts import facts, fit_facts
@@ -35,6 +33,7 @@ from srcfit.results import (
     source_table,
     zones_table,
 )
+from srcfit.shares import properties
 from srcfit.solve import Solved, strength_unit
 from srcfit.state import Matrix
 from srcfit.whitening import together
@@ -95,16 +94,19 @@ def recover(
         readings = read(case) if readings is None else readings
         seed = rng if isinstance(rng, np.random.SeedSequence) else np.random.SeedSequence(rng)
         solved = solve(case, readings, rng=seed)
-        extra, shares, bent = _properties(solved, seed)
-        shown = Shown(solved, extra)
-        sums = _sums(solved)
-        found = [asdict(f) for f in _findings(solved, shown, shares, bent, sums)]
+        moved = properties(solved, seed)
+        shown = Shown(solved, moved.variance)
+        sums, told = _sums(solved), tell.tell(solved)
+        parts = shares.shares(solved, moved, told.rows, told.noise)
+        found = [asdict(f) for f in _findings(solved, shown, parts, told, sums)]
         summary = facts(solved, shown, found, seed.entropy, __version__)
+        summary |= tell.facts(solved, told) | {"shares": [part.facts() for part in parts]}
+        resolution, shift = tell.columns(solved, told)
         return Recovery(
             case=case,
-            source=source_table(solved, shown),
+            source=source_table(solved, shown).assign(**resolution),
             zones=zones_table(solved, shown),
-            readings=readings_table(solved),
+            readings=readings_table(solved).assign(**shift),
             ladder=ladder_table(solved),
             pictures=_pictures(solved),
             facts=summary,
@@ -113,53 +115,8 @@ def recover(
         )
 
 
-def _properties(
-    solved: Solved, rng: np.random.SeedSequence
-) -> tuple[Array, Mapping[str, Array], Mapping[str, float]]:
-    """Variance that uncertain properties add to each answer, by linearisation.
-
-    Returns the sum, each property's share of it, and how far each bends: the difference of its
-    effect in the two directions over their mean, for the total.
-    """
-    forward = solved.forward
-    total = np.zeros(len(solved.answers.value))
-    shares, bent = {}, {}
-    centre = solved
-    if solved.places and forward.case.member.uncertainty:
-        # parts of unknown place stay where they most probably are
-        centre = solve(
-            forward.case, forward.readings, criteria=False, rng=rng, edges=solved.edges
-        )  # fmt: skip
-    for key in forward.case.member.uncertainty:
-        up, down = (
-            solve(
-                replace(forward.case, member=vary(forward.case.member, key, side)),
-                forward.readings,
-                criteria=False,
-                rng=rng,
-                edges=solved.edges,
-            )
-            for side in (1.0, -1.0)
-        )
-        shift = (_all(up) - _all(down)) / 2
-        total += np.where(np.isfinite(shift), shift, 0.0) ** 2
-        shares[key] = shift**2
-        size = abs(shift[0])
-        bend = abs(_all(up)[0] + _all(down)[0] - 2 * _all(centre)[0])
-        bent[key] = float(bend / size) if size > 0 else 0.0
-    return total, shares, bent
-
-
-def _all(solved: Solved) -> Array:
-    """Answers in SI, known parts included."""
-    constant = solved.asked.constant
-    both = [constant.real, constant.imag][: solved.asked.parts]
-    values: Array = solved.answers.value + np.concatenate(both)
-    return values
-
-
 def _findings(
-    solved: Solved, shown: Shown, shares: Mapping[str, Array], bent: Mapping[str, float],
+    solved: Solved, shown: Shown, parts: list[shares.Share], told: tell.Told,
     sums: Balance | None,
 ) -> list[Finding]:  # fmt: skip
     forward, answers, case = solved.forward, solved.answers, solved.forward.case
@@ -173,9 +130,11 @@ def _findings(
     if fit["chi_square"] is not None and fit["dof"] is not None:
         odds = float("nan") if solved.held else chance(answers.fit)
         found += checks.noise(fit["chi_square"], fit["dof"], solved.problem.stated, odds)
-    told = together(forward, np.nan_to_num(answers.fit.standardised))
-    found += checks.outliers(forward, np.maximum(np.abs(told.real), np.abs(told.imag)))
-    found += checks.correlated(forward, told, solved.lag)
+    left = together(forward, np.nan_to_num(answers.fit.standardised))
+    found += checks.outliers(forward, np.maximum(np.abs(left.real), np.abs(left.imag)))
+    alike = checks.correlated(forward, left, solved.lag)
+    named = frozenset(g for g in forward.groups if any(repr(g) in f.sentence for f in alike))
+    found += alike + patterns.findings(solved, told.main, correlated=named)
     if (
         solved.choice is not None
         and solved.ladder is not None
@@ -196,12 +155,7 @@ def _findings(
     if sums is not None:
         total = case.source.total_unit
         found += checks.balanced(sums, total, per(total, case.member.kind.total_unit))
-    for key, share in shares.items():
-        own = float(share[0])
-        variance = own + float(answers.sd[0] ** 2)
-        if np.isfinite(variance) and variance > 0:
-            found += checks.property_share(key, own / variance)
-        found += checks.asymmetric(key, bent[key])
+    found += tell.findings(solved, shown, told) + shares.findings(parts)
     return found
 
 
