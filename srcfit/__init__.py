@@ -17,6 +17,8 @@ if TYPE_CHECKING:
     from srcfit.case.load import make_case as make_case
     from srcfit.case.member import make_member as make_member
     from srcfit.case.model import Case as Case
+    from srcfit.compare import Comparison as Comparison
+    from srcfit.compare import compare as compare
     from srcfit.eigen import modes as modes
     from srcfit.kernel import kernel as kernel
     from srcfit.kernel import respond as respond
@@ -32,26 +34,28 @@ _FACE = {
     "make_member": "srcfit.case",
     "read": "srcfit.readings",
     "recover": "srcfit.recover",
+    "compare": "srcfit.compare",
     "kernel": "srcfit.kernel",
     "modes": "srcfit.eigen",
     "respond": "srcfit.kernel",
     "Case": "srcfit.case.model",
+    "Comparison": "srcfit.compare",
     "Member": "srcfit.member",
     "Readings": "srcfit.readings.model",
     "Recovery": "srcfit.recovery",
 }
 
 __all__ = [
-    "Case", "Member", "Readings", "Recovery", "kernel", "load_case", "make_case", "make_member",
-    "modes", "read", "recover", "respond",
+    "Case", "Comparison", "Member", "Readings", "Recovery", "compare", "kernel", "load_case",
+    "make_case", "make_member", "modes", "read", "recover", "respond",
 ]  # fmt: skip
 
 
 class _Face(ModuleType):
     """The package itself: loads names on first use.
 
-    `kernel` and `recover` are functions as well as modules. Importing such a module would put it
-    in the function's place; here the function is put there instead.
+    `compare`, `kernel` and `recover` are functions as well as modules. Importing such a module
+    would put it in the function's place; here the function is put there instead.
     """
 
     def __getattr__(self, name: str) -> Any:

@@ -9,7 +9,7 @@ import sys
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, TextIO, TypeVar
+from typing import TYPE_CHECKING, Any, Literal, TextIO, TypeVar
 
 import click
 
@@ -143,6 +143,9 @@ def _kind(required: bool) -> Callable[[F], F]:
 
 AS_JSON = click.option("--json", "as_json", is_flag=True, help="Print JSON for machines.")
 QUIET = click.option("--quiet", "-q", is_flag=True, help="No progress and no table.")
+SEED = click.option("--seed", type=click.IntRange(min=0), default=0, show_default=True,
+                    help="Seed of everything random; it is recorded.")  # fmt: skip
+STRICT = click.option("--strict", is_flag=True, help="Exit with 4 when a finding is serious.")
 REPLACE = click.option("--replace", is_flag=True, help="Replace what is there already.")
 
 
@@ -248,9 +251,8 @@ def inspect(case_path: str, output: str | None, as_json: bool, quiet: bool, repl
 @cli.command(short_help="Recover the source into a new folder.")
 @CASE
 @click.option("-o", "--output", type=click.Path(), help="Folder to make.  [default: CASE-result]")
-@click.option("--seed", type=click.IntRange(min=0), default=0, show_default=True,
-              help="Seed of everything random; it is recorded.")  # fmt: skip
-@click.option("--strict", is_flag=True, help="Exit with 4 when a finding is serious.")
+@SEED
+@STRICT
 @AS_JSON
 @QUIET
 @REPLACE
@@ -282,8 +284,60 @@ def recover(
 
         told = recovery_text(summary, _limit_unit(case), found.balance)
         click.echo(f"{told}\n\nWritten to {folder}")
-    serious = any(f["level"] == "serious" for f in summary["findings"])
-    return SERIOUS if strict and serious else DONE
+    return _status(summary["findings"], strict)
+
+
+@cli.command(short_help="Find what changed between two campaigns of readings.")
+@click.argument("case_a", metavar="A", type=click.Path())
+@click.argument("case_b", metavar="B", type=click.Path())
+@click.option("-o", "--output", type=click.Path(), help="Folder to make.  [default: A-B-change]")
+@click.option("--common", metavar="NAME", multiple=True,
+              help="A nuisance that is the same in both (as in summary.json); repeatable."
+)  # fmt: skip
+@click.option("--shared-noise", metavar="R", type=float, default=0.0, show_default=True,
+              help="Correlation of one sensor's noise between the campaigns, 0 to below 1."
+)  # fmt: skip
+@click.option("--by", type=click.Choice(["pairs", "stack"]),
+              help="Difference common sensors, or take all readings together.")  # fmt: skip
+@click.option("--reckon", metavar="DENSITY",
+              help='Mean change to reckon with, e.g. "10 kN/m".  [default: the mean source]'
+)  # fmt: skip
+@SEED
+@STRICT
+@AS_JSON
+@QUIET
+@REPLACE
+def compare(
+    case_a: str, case_b: str, output: str | None, common: tuple[str, ...], shared_noise: float,
+    by: Literal["pairs", "stack"] | None, reckon: str | None, seed: int, strict: bool,
+    as_json: bool, quiet: bool, replace: bool,
+) -> int:  # fmt: skip
+    """Find what changed from campaign A to campaign B and write tables into a new folder.
+
+    A and B are case files of one layout: the same member and the same questions, each with its
+    own readings. Readings of sensors that both have are differenced, so that what is the same in
+    both drops out; the change and its interval are found jointly, which is sharper than the
+    difference of two answers. A nuisance that did not change between the campaigns (a datum, a
+    settlement, an end value) is named with --common.
+    """
+    from srcfit import output as saving
+    from srcfit.changes import comparison_text
+    from srcfit.compare import compare as run
+
+    folder = output if output is not None else f"{Path(case_a).stem}-{Path(case_b).stem}-change"
+    first, second = _load(case_a, quiet), _load(case_b, quiet)
+    inputs = (*saving.input_paths(first[0]), *saving.input_paths(second[0]))
+    saving.check(folder, replace=replace, inputs=inputs)
+    _say("comparing the campaigns", quiet)
+    found = run(first[0], second[0], common=common, shared_noise=shared_noise, by=by,
+                reckon=reckon, readings=(first[1], second[1]), rng=seed)  # fmt: skip
+    _say(f"writing {folder}", quiet)
+    found.save(folder, replace=replace)
+    if as_json:
+        _print_json(saving.strict(found.summary()))
+    elif not quiet:
+        click.echo(f"{comparison_text(found.summary())}\n\nWritten to {folder}")
+    return _status(found.findings, strict)
 
 
 @cli.command(short_help="Predict the readings for a given source.")
@@ -329,6 +383,11 @@ def _load(case_path: str, quiet: bool) -> tuple[Case, Readings]:
     _say(f"reading {case_path}", quiet)
     case = load_case(Path(case_path))
     return case, read(case)
+
+
+def _status(findings: Sequence[Mapping[str, str]], strict: bool) -> int:
+    serious = any(f["level"] == "serious" for f in findings)
+    return SERIOUS if strict and serious else DONE
 
 
 def _limit_unit(case: Case) -> str:

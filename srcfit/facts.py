@@ -45,7 +45,7 @@ def facts(
         "total": number_map(shown.numbers("total")[0]),
         "zones": zones,
         "background": next((number_map(n) for n in shown.numbers("background")), None),
-        "peak": _peak(solved, shown),
+        "peak": peak_facts(solved, shown),
         "lumped": lumped,
         "nuisances": [
             {"name": c.name} | number_map(n) | {"unit": c.unit}
@@ -166,7 +166,8 @@ def reaction_facts(solved: Solved, shown: Shown) -> list[dict[str, Any]]:
     return facts
 
 
-def _peak(solved: Solved, shown: Shown) -> dict[str, float] | None:
+def peak_facts(solved: Solved, shown: Shown) -> dict[str, float] | None:
+    """Peak as in summary.json."""
     if not solved.problem.smooth:
         return None
     value, _, lower, upper, _ = shown.block("cells")

@@ -49,7 +49,8 @@ def test_version(capsys):
 def test_help_names_every_command_the_exit_statuses_and_completion(capsys):
     status, out, err = run(capsys, "--help")
     assert (status, err) == (0, "")
-    for word in ("kinds", "new", "inspect", "recover", "predict", "--version", "Exit status",
+    for word in ("kinds", "new", "inspect", "recover", "compare", "predict", "--version",
+                 "Exit status",
                  "_SRCFIT_COMPLETE=bash_source", "_SRCFIT_COMPLETE=zsh_source"):  # fmt: skip
         assert word in out
 
