@@ -6,7 +6,7 @@ say. `recover` calls them in turn.
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 
 import numpy as np
 
@@ -167,40 +167,46 @@ def told(names: Sequence[str], shares: Sequence[float | None]) -> list[Finding]:
     ]  # fmt: skip
 
 
-def inseparable(forward: Forward, groups: Sequence[Sequence[str]]) -> list[Finding]:
-    """Unknowns that the readings cannot tell apart, by name."""
+def inseparable(
+    forward: Forward, groups: Sequence[Sequence[str]], advice: Sequence[str] = ()
+) -> list[Finding]:
+    """Unknowns that the readings cannot tell apart, by name; `advice` says what would."""
     return [
         Finding(
             "inseparable", "serious",
             "The readings cannot tell apart " + _listed(names) + ": only a combination of them is "
             "determined, so every number that depends on them is left empty; state one of them, "
             "declare where there is no source (`zero`), or add a reading that sees them "
-            "differently.",
+            f"differently. {text}".rstrip(),
         )
-        for names in groups
+        for names, text in zip(groups, advice or [""] * len(groups), strict=True)
     ]  # fmt: skip
 
 
 def nearly_inseparable(
-    names: Sequence[str], units: Sequence[str], sd: Sequence[float | None], alone: Sequence[float]
-) -> list[Finding]:
+    names: Sequence[str], units: Sequence[str], sd: Sequence[float | None],
+    alone: Sequence[float], advise: Callable[[str], str] | None = None,
+) -> list[Finding]:  # fmt: skip
     """Nuisances that the readings tell far worse than they would if the source were known.
 
     `sd` is that of the answer, `alone` that with the source known; both in the unit given.
+    `advise` says which reading would help one of them.
     """
-    weak = [
-        f"{name} (sd {s:.2g} {unit}; {a:.1g} {unit} if the source were known)"
+    blurred = [
+        (name, f"{name} (sd {s:.2g} {unit}; {a:.1g} {unit} if the source were known)")
         for name, unit, s, a in zip(names, units, sd, alone, strict=True)
         if s is not None and s > BLURRED * a
     ]
-    if not weak:
+    if not blurred:
         return []
+    weak = [text for _, text in blurred]
+    advice = "" if advise is None else " ".join(advise(name) for name, _ in blurred)
     return [
         Finding(
             "nearly-inseparable", "caution",
             "Nearly inseparable from the source: " + _listed(weak) + "; part of it may stand in "
             "the source, and the other way round, so state it or add a reading that sees only one "
-            "of them.",
+            f"of them. {advice}".rstrip(),
         )
     ]  # fmt: skip
 
@@ -217,7 +223,8 @@ def singular(forward: Forward) -> list[Finding]:
     member = forward.case.member
     if member.driven or member.lam:
         return _at_eigenvalue(member)
-    how = "move as a rigid body" if member.kind.order == 4 else "drift to any level"
+    names = [c.name for c in forward.columns if c.kind == "null"]
+    amount = "its amount was" if len(names) == 1 else "their amounts were"
     weights = forward.grid.weights * forward.grid.free
     rows = forward.balance[:, : len(weights)]
     off = weights - np.linalg.lstsq(rows.T, weights, rcond=None)[0] @ rows
@@ -228,8 +235,8 @@ def singular(forward: Forward) -> list[Finding]:
     return [
         Finding(
             "singular-member", "caution",
-            f"Nothing holds the member, which can {how}: the source was taken as balanced "
-            f"({total}), and the level of the response was fitted as unknown.",
+            f"Nothing holds back {_listed(names)}: the source was taken as balanced ({total}), "
+            f"and {amount} fitted to the readings.",
         )
     ]  # fmt: skip
 

@@ -6,10 +6,9 @@ from dataclasses import asdict
 
 import numpy as np
 
-from srcfit import __version__, checks, knowledge, patterns, shares, tell
+from srcfit import __version__, checks, knowledge, patterns, separate, shares, tell, verdicts
 from srcfit.answers import per
 from srcfit.balance import Balance, balance, balance_facts
-from srcfit.bands import undetermined
 from srcfit.case.model import Case
 from srcfit.eigen import modes
 from srcfit.errors import Finding
@@ -100,6 +99,7 @@ def recover(
         parts = shares.shares(solved, moved, told.rows, told.noise)
         found = [asdict(f) for f in _findings(solved, shown, parts, told, sums)]
         summary = facts(solved, shown, found, seed.entropy, __version__)
+        summary["findings"] += [asdict(f) for f in verdicts.findings(case, summary)]
         summary |= tell.facts(solved, told) | {"shares": [part.facts() for part in parts]}
         resolution, shift = tell.columns(solved, told)
         return Recovery(
@@ -124,7 +124,7 @@ def _findings(
     found = [*forward.readings.findings, *checks.exclusions(forward)]
     found += checks.singular(forward)
     found += checks.resonance(forward)
-    found += checks.inseparable(forward, undetermined(solved.problem))
+    found += separate.findings(solved, shown)
     if answers.reason:
         found += checks.few(len(forward.rows), len(forward.columns) + int(solved.problem.constant))
     if fit["chi_square"] is not None and fit["dof"] is not None:
@@ -146,7 +146,6 @@ def _findings(
         found += checks.disagreement(
             {name: known(c.strength) for name, c in solved.choices.items() if c.index >= 0}
         )
-    found += _nuisances(solved, shown)
     found += knowledge.findings(solved, shown)
     names = [z.name for z in case.source.zones]
     found += checks.told(
@@ -170,22 +169,6 @@ def estimate(solved: Solved) -> tuple[Matrix | None, Matrix]:
         beta[where] = value[blocks[block]]
     told = np.isfinite(f).all() and np.isfinite(beta).all()
     return (f if told else None), beta
-
-
-def _nuisances(solved: Solved, shown: Shown) -> list[Finding]:
-    """Nuisances that the source blurs."""
-    columns = [c for c in solved.forward.columns if c.kind == "nuisance"]
-    by_name = dict(zip(solved.problem.names, solved.problem.B.T, strict=False))
-    factor = np.abs(solved.asked.factor[solved.asked.blocks["nuisances"]])
-    noise = solved.answers.fit.noise
-    alone = [
-        f * noise / max(float(np.linalg.norm(by_name[c.name])), 1e-300)
-        for c, f in zip(columns, factor, strict=True)
-    ]
-    sd = [n.sd for n in shown.numbers("nuisances")]
-    return checks.nearly_inseparable(
-        [c.name for c in columns], [c.unit for c in columns], sd, alone
-    )
 
 
 def _sums(solved: Solved) -> Balance | None:
