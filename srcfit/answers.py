@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from srcfit.case.model import Case
+from srcfit.case.model import Case, Sign
 from srcfit.elimination import Elimination, eliminate
 from srcfit.forward import Forward, along
 from srcfit.grid import overlap, spread
@@ -269,16 +269,27 @@ def _complex_peak(x: Array, real: Array, imaginary: Array, upper: Array) -> dict
 
 
 def detection(
-    name: str, value: float | None, sd: float | None, imaginary: float | None = None
-) -> dict[str, Any]:
+    name: str, value: float | None, sd: float | None, imaginary: float | None = None,
+    quantile: float = CURRIE, sign: Sign = "any",
+) -> dict[str, Any]:  # fmt: skip
     """Critical level and detection limit of one part, 5 % error of either kind.
 
+    Parameters
+    ----------
+    quantile : float
+        One-sided 5 % point of the estimate's error over `sd`.
+    sign : str
+        The direction that counts: that of the declared sign, either one where none is declared.
+
+    Notes
+    -----
     Of a complex amplitude the modulus is judged (Rayleigh and Rice distributions).
     Source: Currie (1968), Analytical Chemistry 40, 586; ISO 11929.
     """
     if value is None or sd is None:
         return {"name": name, "critical": None, "limit": None, "detected": None}
-    critical, limit, size = CURRIE * sd, 2 * CURRIE * sd, value
+    critical, limit = quantile * sd, 2 * quantile * sd
+    size = abs(value) if sign == "any" else -value if sign == "nonpositive" else value
     if imaginary is not None:
         critical, limit, size = RAYLEIGH * sd, RICE * sd, float(np.hypot(value, imaginary))
     return {"name": name, "critical": critical, "limit": limit, "detected": size > critical}

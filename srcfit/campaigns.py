@@ -55,6 +55,8 @@ def _name(case: Case) -> str:
 
 
 def _told(value: Any) -> str:
+    if isinstance(value, list):
+        return "; ".join(map(str, value)) or "empty"
     return value if isinstance(value, str) else repr(value)
 
 

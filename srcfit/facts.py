@@ -7,10 +7,11 @@ from typing import Any
 
 import numpy as np
 
-from srcfit.answers import detection, peak, per, verdict, zone_sizes
+from srcfit.answers import peak
 from srcfit.results import Shown, known, number_map, position_scale, reading_units
 from srcfit.solve import Solved, strength_unit
 from srcfit.unknowns import place_text, response_unit
+from srcfit.verdicts import detection_facts, limit_facts
 
 
 def facts(
@@ -55,11 +56,11 @@ def facts(
             )
         ],
         "reactions": reaction_facts(solved, shown),
-        "limit": _limit(solved, shown),
-        "detection": [
-            detection(p["name"], p["value"], p["sd"], p.get("imaginary"))
-            for p in [*lumped, *zones]
-        ],
+        "simultaneous": {
+            "factor": known(shown.factor), "pointwise": known(solved.answers.quantile),
+        },
+        "limit": limit_facts(solved, shown),
+        "detection": detection_facts(solved, [*lumped, *zones]),
         "findings": list(findings),
         "excluded": [
             {"file": readings.file[i], "line": int(readings.line[i]), "reason": readings.reason[i]}
@@ -166,49 +167,16 @@ def reaction_facts(solved: Solved, shown: Shown) -> list[dict[str, Any]]:
     return facts
 
 
-def peak_facts(solved: Solved, shown: Shown) -> dict[str, float] | None:
-    """Peak as in summary.json."""
+def peak_facts(solved: Solved, shown: Shown) -> dict[str, Any] | None:
+    """Peak as in summary.json; `joint` holds for its size and its place at once."""
     if not solved.problem.smooth:
         return None
     value, _, lower, upper, _ = shown.block("cells")
-    grid = solved.forward.grid
-    twin = shown.twin("cells", "imaginary").get("imaginary")
-    return peak(grid.middles * position_scale(solved), value, lower, upper, grid.free, twin)
-
-
-def _limit(solved: Solved, shown: Shown) -> dict[str, Any] | None:
-    """Verdict on the limit: `probability` is that of the limit being kept."""
-    case = solved.forward.case
-    limit = case.source.limit
-    if limit is None:
+    grid, twin = solved.forward.grid, shown.twin("cells", "imaginary").get("imaginary")
+    x = grid.middles * position_scale(solved)
+    found = peak(x, value, lower, upper, grid.free, twin)
+    if found is None:
         return None
-    index = [z.name for z in case.source.zones].index(limit.zone)
-    n = shown.numbers("zones")[index]
-    kind, source = case.member.kind, case.source
-    unit, si = (
-        (source.unit, kind.source_unit) if limit.density else (source.total_unit, kind.total_unit)
-    )
-    at_most = limit.at_most * per(unit, si)
-    facts: dict[str, Any] = {"zone": limit.zone, "at_most": at_most}
-    if n.value is None or n.sd is None:
-        return facts | {"estimate": None, "probability": None, "verdict": None}
-    size = zone_sizes(case)[index] if limit.density else 1.0
-    per_size = per(unit, si) / per(source.total_unit, kind.total_unit) / size
-    estimate, sd = float(n.value * per_size), float(n.sd * per_size)
-    from scipy.special import chndtr, ndtr, stdtr
-
-    # constraints make intervals uneven: the side towards the limit counts
-    ratio = (at_most - estimate) / sd
-    end = n.upper if ratio > 0 else n.lower
-    if solved.held is not None and end is not None and n.value != end:
-        ratio = solved.answers.quantile * (at_most - estimate) / abs(end * per_size - estimate)
-    dof = solved.readings - solved.answers.fit.effective_dof
-    chance = float(ndtr(ratio) if solved.problem.stated else stdtr(max(dof, 1.0), ratio))
-    if n.imaginary is not None:  # the modulus is judged
-        other = float(n.imaginary * per_size)
-        chance = float(chndtr((at_most / sd) ** 2, 2, (estimate**2 + other**2) / sd**2))
-        facts |= {"imaginary": other}
-    return facts | {
-        "estimate": estimate, "probability": chance,
-        "verdict": verdict(chance, case.strength.level),
-    }  # fmt: skip
+    whole = peak(x, value, *shown.everywhere(), grid.free, twin)
+    kept = ("lower", "upper", "position_lower", "position_upper")
+    return found | {"joint": None if whole is None else {k: whole[k] for k in kept}}

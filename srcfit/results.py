@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -10,10 +11,12 @@ import numpy as np
 from srcfit.answers import per, section_forces, section_places, zone_sizes
 from srcfit.criteria import CRITERIA
 from srcfit.member import Array
+from srcfit.problem import Questions
 from srcfit.recovery import Number
+from srcfit.simultaneous import factor
 from srcfit.solve import Solved, strength_unit
 from srcfit.state import Matrix
-from srcfit.units import factor
+from srcfit.units import factor as unit_factor
 from srcfit.whitening import coloured, together
 
 if TYPE_CHECKING:
@@ -36,6 +39,7 @@ class Shown:
         self.imaginary: Array = np.imag(value)
         self.sd: Array = sd * np.abs(asked.factor)
         self.lower, self.upper = _interval(solved, np.sqrt(extra_variance), self.value)
+        self._solved, self._reach = solved, _reach(solved)
         self.share = -asked.widest(-a.data_share)
         self._blocks = solved.asked.blocks
 
@@ -55,6 +59,26 @@ class Shown:
                     driven=True)
             for n, (v, low, high) in zip(plain, twins, strict=True)
         ]  # fmt: skip
+
+    @cached_property
+    def factor(self) -> float:
+        """Quantile that makes the cells' band hold at all places at once; nan without one."""
+        solved, where = self._solved, self._blocks["cells"]
+        rows, count = solved.asked.questions, len(solved.asked.constant)
+        cells = np.concatenate([np.arange(where.start, where.stop)[solved.forward.grid.free]
+                                + p * count for p in range(solved.asked.parts)])  # fmt: skip
+        asked = Questions(rows.cells[cells], rows.columns[cells])
+        level = solved.forward.case.strength.level
+        return factor(solved.problem, asked, solved.answers, level)
+
+    def everywhere(self) -> tuple[Array, Array]:
+        """Lower and upper of the cells' band that holds at all places at once."""
+        where = self._blocks["cells"]
+        ratio = self.factor / self._solved.answers.quantile
+        value, least, most = self.value[where], self._reach[0][where], self._reach[1][where]
+        lower = value - ratio * (value - self.lower[where])
+        upper = value + ratio * (self.upper[where] - value)
+        return np.maximum(lower, least), np.minimum(upper, most)
 
     def _beside(self, where: slice) -> tuple[Array, Array]:
         """Ends of the intervals of imaginary parts: as wide as those of the real parts."""
@@ -99,12 +123,19 @@ def _interval(solved: Solved, extra: Array, value: Array) -> tuple[Array, Array]
     )
     size = np.abs(asked.factor)
     lower, upper = value - below * size, value + above * size
+    least, most = _reach(solved)
+    return np.maximum(lower, least), np.minimum(upper, most)
+
+
+def _reach(solved: Solved) -> tuple[Array, Array]:
+    """What each number can be at all, in the user's units."""
+    a, asked = solved.answers, solved.asked
     if a.low is None or a.high is None:
-        return lower, upper
+        return np.full(len(asked.constant), -np.inf), np.full(len(asked.constant), np.inf)
     least, most = (
         (end + np.real(asked.constant) + asked.shift) * asked.factor for end in (a.low, a.high)
     )
-    return np.maximum(lower, least), np.minimum(upper, most)
+    return least, most
 
 
 def known(value: Any) -> float | None:
@@ -146,9 +177,19 @@ def source_table(solved: Solved, shown: Shown) -> pd.DataFrame:
             f"from [{P}]": grid.edges[:-1] * scale,
             f"to [{P}]": grid.edges[1:] * scale,
         }
+        | _everywhere(shown, U, held)
         | shown.twin("cells", f"estimate_imag [{U}]", ~held)
         | shown.twin_bounds("cells", f"lower_imag [{U}]", f"upper_imag [{U}]", ~held)
     )
+
+
+def _everywhere(shown: Shown, unit: str, held: Any) -> dict[str, Array]:
+    """Band that holds at all places at once, as two more columns."""
+    lower, upper = shown.everywhere()
+    return {
+        f"lower_everywhere [{unit}]": np.where(held, 0.0, lower),
+        f"upper_everywhere [{unit}]": np.where(held, 0.0, upper),
+    }
 
 
 def zones_table(solved: Solved, shown: Shown) -> pd.DataFrame:
@@ -245,7 +286,7 @@ def reading_units(solved: Solved) -> tuple[Array, Array]:
     for i, (unit, kind) in enumerate(zip(readings.unit, readings.kind, strict=True)):
         si = case.member.kind.sensor(kind).unit
         if (unit, si) not in cache:
-            per_unit, offset = factor(unit or si, si, "unit", difference=case.member.driven)
+            per_unit, offset = unit_factor(unit or si, si, "unit", difference=case.member.driven)
             cache[unit, si] = 1 / per_unit, -offset / per_unit
         scale[i], shift[i] = cache[unit, si]
     return scale, shift

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from decimal import ROUND_HALF_EVEN, Decimal
 from math import floor, isfinite, log10
 from typing import Any
@@ -95,6 +95,47 @@ def interval(number: Mapping[str, Any], unit: str = "") -> str:
     if not all(ends):
         return NO_INTERVAL
     return minus(f"{ends[0]} to {ends[1]} {unit}".rstrip())
+
+
+def chance_text(chance: float, level: float = 0.95) -> str:
+    """A probability as a percentage that stands on the same side of `level` as the number.
+
+    Three significant digits, more only where rounding would hide that it misses the level.
+    """
+    if chance < 0.001 or chance > 0.999:
+        return "below 0.1 %" if chance < 0.5 else "above 99.9 %"
+    for digits in range(3, 16):
+        text = f"{100 * chance:.{digits}g}"
+        ends = (float(text) / 100 - edge for edge in (level, 1 - level))
+        true = (chance - edge for edge in (level, 1 - level))
+        if all(a * b > 0 or a == b for a, b in zip(ends, true, strict=True)):
+            break
+    return f"{text} %"
+
+
+def peak_sentence(facts: Mapping[str, Any], unit: str, position: str) -> str:
+    """What holds for the size and the place of the largest density at once; empty without it."""
+    peak, together = facts.get("peak") or {}, facts.get("simultaneous") or {}
+    joint = peak.get("joint")
+    if not joint or not together.get("factor"):
+        return ""
+    spread = {**joint, "value": peak["value"], "sd": (joint["upper"] - joint["lower"]) / 4}
+    wider = together["factor"] / together["pointwise"]
+    size = "smallest (most negative)" if peak["value"] < 0 else "largest"
+    if peak.get("imaginary") is not None:
+        size = "largest (by modulus)"
+    return (
+        f"With {100 * facts['level']:.10g} % confidence, for size and place at once: the {size} "
+        f"density is between {interval(spread, unit).replace(' to ', ' and ')} and stands between "
+        f"{minus(brief(joint['position_lower'], 4))} and "
+        f"{minus(brief(joint['position_upper'], 4))} {position}. The band that holds at all "
+        f"places at once is {brief(wider, 2)} times as wide as that for any one place."
+    )
+
+
+def listed(words: Sequence[str]) -> str:
+    """Words as a list in a sentence."""
+    return words[0] if len(words) == 1 else ", ".join(words[:-1]) + " and " + words[-1]
 
 
 def minus(text: str) -> str:

@@ -7,7 +7,16 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 from unicodedata import category, east_asian_width
 
-from srcfit.rounding import UNDETERMINED, brief, interval, plus_minus, twin, twin_interval
+from srcfit.rounding import (
+    UNDETERMINED,
+    brief,
+    chance_text,
+    interval,
+    peak_sentence,
+    plus_minus,
+    twin,
+    twin_interval,
+)
 
 WIDTH = 96
 LEVELS = ("serious", "caution", "note")
@@ -90,6 +99,7 @@ def recovery_text(
     return join(
         _opening(summary),
         _numbers(summary),
+        section("Peak", _everywhere(summary)),
         section("Limit", _limit(summary, limit_unit)),
         section("Balance", balance_text(balance, summary["units"]["total"]) if balance else ""),
         section("Findings", findings_text(summary["findings"])),
@@ -201,6 +211,12 @@ def _peak(peak: Mapping[str, Any], at: str, source: str) -> tuple[str, str, str,
     return "peak", place, told, interval(spread, source), ""
 
 
+def _everywhere(summary: Summary) -> str:
+    units = summary["units"]
+    told = peak_sentence(summary, units["source"], units["position"])
+    return bullets([told]) if told else ""
+
+
 def _limit(summary: Summary, unit: str) -> str:
     limit = summary["limit"]
     if not limit:
@@ -210,15 +226,9 @@ def _limit(summary: Summary, unit: str) -> str:
         return bullets(
             [f"{limit['zone']} at most {brief(limit['at_most'], 6)} {unit}: {UNDETERMINED}"]
         )
-    sure = f"with probability {_percent(chance)}"
+    sure = f"with probability {chance_text(chance, summary['level'])}"
     amount = f"{brief(limit['at_most'], 6)} {unit}".rstrip()
     estimate = f"{brief(limit['estimate'])} {unit}".rstrip()
     return bullets([
         f"{limit['zone']} at most {amount}: {limit['verdict']} (estimate {estimate}; kept {sure})"
     ])  # fmt: skip
-
-
-def _percent(share: float) -> str:
-    if 0.001 <= share <= 0.999:
-        return f"{100 * share:.3g} %"
-    return "below 0.1 %" if share < 0.5 else "above 99.9 %"

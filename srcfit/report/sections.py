@@ -17,7 +17,15 @@ from srcfit.report.data import LINES, READINGS
 from srcfit.report.html import clean, figure, listing, name, nested, safe, section
 from srcfit.report.method import CAUTIONS, method_text
 from srcfit.report.numbers import interval, minus, plus_minus, shown
-from srcfit.rounding import NO_INTERVAL, UNDETERMINED, brief, twin, twin_interval
+from srcfit.rounding import (
+    NO_INTERVAL,
+    UNDETERMINED,
+    brief,
+    chance_text,
+    peak_sentence,
+    twin,
+    twin_interval,
+)
 
 LEVELS = ("serious", "caution", "note")
 
@@ -125,8 +133,10 @@ def _verdict(recovery: Recovery) -> str:
     text = str(most) if isinstance(most, str) else f"{brief(most)} {unit(recovery, kind)}"
     odds = ""
     if np.isfinite(chance):
-        near = "less than 0.1" if chance < 0.001 else f"{brief(100 * chance, 3)}"
-        odds = f" The probability that it is kept is {near if chance <= 0.999 else 'over 99.9'} %."
+        level = number(recovery.facts.get("level") or 0.95)
+        odds = f" The probability that it is kept is {chance_text(chance, level)}."
+        if limit.get("verdict") == "undecided":
+            odds += " The readings do not decide it: take it for neither kept nor exceeded."
     return (
         f'<p class="verdict">Limit of {shown(text)} in {name(limit.get("zone"))}: '
         f"<strong>{safe(limit.get('verdict') or 'no verdict')}</strong>.{shown(odds)}</p>"
@@ -162,6 +172,9 @@ def source(recovery: Recovery) -> str:
         f"{percent(recovery)} confidence. Dotted lines are the edges of zones."
         f"{_driven(recovery)}</p>"
     )
+    told = peak_sentence(recovery.facts, unit(recovery, "source"), unit(recovery, "position"))
+    if told:
+        lead += f"<p>{shown(clean(told))}</p>"
     return section("source", "Source", lead + figure("source") + tables.cells(recovery))
 
 
