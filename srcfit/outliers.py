@@ -16,12 +16,15 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 
 import numpy as np
+from numpy.typing import NDArray
 
 from srcfit.noise import few
 from srcfit.problem import Array, Problem
 from srcfit.solvers.frame import Frame
 from srcfit.solvers.ladder import ALONE, misfit, penalised
 from srcfit.whitening import Links, Rows
+
+Mask = NDArray[np.bool_]
 
 # chance that a sound set of readings holds one that is called gross; no bound below LEAST
 SURE, LEAST = 0.001, 3.5
@@ -152,9 +155,10 @@ class Path:
     view, at : where
     g, q : products c'P d and c'P c of the columns of readings, what was picked taken out
     far, wide : the same of the cells
-    energy : what is left of d'P d, before and after every pick
+    energy, common : what is left of d'P d, and the noise's variance as most readings show it
+        (by their median, at least a stated one), before and after every pick
     picks : (row of a reading or -1 for a source, squared distance in whitened units)
-    unsure : rows that a source explained no more than as well
+    unsure : (number of picks before, row) where a source explained a row about as well
     """
 
     view: View
@@ -164,19 +168,19 @@ class Path:
     far: Array
     wide: Array
     energy: list[float]
+    common: list[float]
     basis: list[Array] = field(default_factory=list)
     picks: list[tuple[int, float]] = field(default_factory=list)
-    unsure: list[int] = field(default_factory=list)
+    unsure: list[tuple[int, int]] = field(default_factory=list)
 
 
 def _score(
     volume: float | Array, energy: float | Array, nu: int, k: int | Rows, stated: bool
 ) -> tuple[Array, Array]:
-    """Log restricted likelihood after k picks, and the noise's variance.
-
-    A stated noise may turn out larger, not smaller, so that a wrong member makes no outliers.
-    """
-    s2 = np.maximum(energy / np.maximum(nu - k, 1), 1.0 if stated else np.finfo(float).tiny)
+    """Log restricted likelihood after k picks, and the noise's variance."""
+    if stated:
+        return np.asarray(volume - 0.5 * (energy + k)), np.ones(np.shape(energy))
+    s2 = np.maximum(energy / np.maximum(nu - k, 1), np.finfo(float).tiny)
     return volume - 0.5 * (energy / s2 + nu * np.log(s2) + k), s2
 
 
@@ -191,6 +195,8 @@ def _cost(n: int, nu: int, most: int, stated: bool) -> Array:
 
 def propose(problem: Problem, links: Links) -> tuple[Array, Rows]:
     """Squared distance of each row that is suspected (0 of all others), and the unsure rows.
+
+    Distances are in units of the noise's variance.
 
     Every rung of every family is asked; the best explanation of all rows wins.
     """
@@ -210,26 +216,32 @@ def propose(problem: Problem, links: Links) -> tuple[Array, Rows]:
         q = v.sizes(U, columns.seen(v.Z), squares)
         for at in _promising(v, g**2 / q, costs, best, problem.stated):
             path = _pursue(problem, columns, v, int(at), g[:, at], q[:, at], most)
-            scores = _scores(path, fr.nu, costs, problem.stated)
-            k = int(np.argmax(scores))
+            scores, s2 = _scores(path, fr.nu, costs, problem.stated)
+            k = int(np.argmax(np.where(_gross(path, gross(n) ** 2), scores, -np.inf)))
             if k and scores[k] > best:
-                best, chosen = float(scores[k]), (path, k)
+                best, chosen = float(scores[k]), (path, k, float(s2[k]))
     if chosen is None:
         return nothing
-    path, k = chosen
+    path, k, one = chosen
     distance = np.zeros(n)
     for row, t2 in path.picks[:k]:
         if row >= 0:
-            distance[row] = t2
-    return distance, np.array(path.unsure, dtype=np.intp)
+            distance[row] = t2 / one
+    return distance, np.array([row for pick, row in path.unsure if pick < k], dtype=np.intp)
 
 
-def _scores(path: Path, nu: int, costs: Array, stated: bool) -> Array:
-    """Score after each number of picks."""
+def _scores(path: Path, nu: int, costs: Array, stated: bool) -> tuple[Array, Array]:
+    """Score after each number of picks, and the noise's variance."""
     k = np.arange(len(path.energy))
     scores, s2 = _score(path.view.volume[path.at], np.array(path.energy), nu, k, stated)
     logs = np.concatenate([[0.0], np.cumsum([np.log(max(t2, 1e-300)) for _, t2 in path.picks])])
-    return np.asarray(scores - 0.5 * (logs - k * np.log(s2)) - costs[: len(k)])
+    return np.asarray(scores - 0.5 * (logs - k * np.log(s2)) - costs[: len(k)]), s2
+
+
+def _gross(path: Path, bound: float) -> Mask:
+    """For each number of picks whether all of them are gross beside what most readings show."""
+    least = np.minimum.accumulate([np.inf, *(t2 for _, t2 in path.picks)])
+    return np.asarray(least > bound * np.array(path.common))
 
 
 def _promising(v: View, t2: Array, costs: Array, best: float, stated: bool) -> Rows:
@@ -255,33 +267,43 @@ def _pursue(
     norms = np.linalg.norm(A, axis=0)
     A = A[:, norms > 0] / norms[norms > 0] if norms.any() else A[:, :1]
     wide = v.sizes(A.T @ v.fr.U, A.T @ v.Z, np.ones(A.shape[1]), at)
-    path = Path(v, at, g.copy(), q.copy(), A.T @ v.residual[:, at], wide, [float(v.energy[at])])
+    floor = 1.0 if problem.stated else 0.0
+    path = Path(
+        v, at, g.copy(), q.copy(), A.T @ v.residual[:, at], wide, [float(v.energy[at])],
+        [_common(g, q, floor)],
+    )  # fmt: skip
     bound = gross(n) ** 2
     while len(path.picks) < most:
         t2, s2 = path.g**2 / path.q, path.far**2 / path.wide
         i, j = int(np.argmax(t2)), int(np.argmax(s2))
         best = max(float(t2[i]), float(s2[j]))
-        # the noise as most readings show it, at least a stated one
-        scale = max(float(np.median(t2)) / CHI, 1.0 if problem.stated else 0.0)
-        if best <= bound * scale:
+        if best <= bound * floor or path.energy[-1] <= 1e-9 * path.energy[0]:
             break
-        near, gone = best - 2 * MARGIN * scale, bound * scale
+        one = 1.0 if problem.stated else path.common[-1]
+        near, gone = best - 2 * MARGIN * one, bound * one
         if t2[i] >= best:
-            column = columns.one(i, rows)
-            lifted = _lifted(path, column)
+            lifted = _lifted(path, columns.one(i, rows))
             rivals = _after(path.far, path.wide, A.T @ lifted, path.g[i], path.q[i])
             same = np.flatnonzero((s2 >= near) & (rivals <= gone))
-            if not len(same):
-                _take(path, columns, A, lifted, i, float(path.g[i]), float(path.q[i]), best)
-                continue
-            j = int(same[np.argmax(s2[same])])
-        lifted = _lifted(path, A[:, j])
-        rivals = _after(path.g, path.q, columns.seen(lifted), path.far[j], path.wide[j])
-        path.unsure += np.flatnonzero((t2 >= near) & (rivals <= gone)).tolist()
-        _take(
-            path, columns, A, lifted, -1, float(path.far[j]), float(path.wide[j]), float(s2[j])
-        )  # fmt: skip
+            if len(same):
+                j = int(same[np.argmax(s2[same])])
+            else:
+                _take(path, columns, A, lifted, i, float(path.g[i]), float(path.q[i]))
+        if t2[i] < best or len(same):
+            lifted = _lifted(path, A[:, j])
+            rivals = _after(path.g, path.q, columns.seen(lifted), path.far[j], path.wide[j])
+            row = int(np.argmax(np.where(rivals <= gone, t2, 0.0)))
+            if t2[row] >= near:
+                path.unsure.append((len(path.picks), row))
+            _take(path, columns, A, lifted, -1, float(path.far[j]), float(path.wide[j]))
+        path.common.append(_common(path.g, path.q, floor))
     return path
+
+
+def _common(g: Array, q: Array, floor: float) -> float:
+    """Variance of the noise by the median of the readings' squared distances."""
+    left = np.isfinite(q)
+    return max(float(np.median(g[left] ** 2 / q[left])) / CHI, floor) if left.any() else floor
 
 
 def _lifted(path: Path, column: Array) -> Array:
@@ -300,7 +322,7 @@ def _after(g: Array, q: Array, cross: Array, g0: float, q0: float) -> Array:
 
 
 def _take(
-    path: Path, columns: Columns, A: Array, lifted: Array, row: int, g: float, q: float, t2: float
+    path: Path, columns: Columns, A: Array, lifted: Array, row: int, g: float, q: float
 ) -> None:
     """Take one column out of all the products."""
     b = lifted / np.sqrt(q)
@@ -311,8 +333,8 @@ def _take(
     path.q = _less(path.q, on_readings)
     path.wide = _less(path.wide, on_cells)
     path.basis.append(b)
-    path.energy.append(max(path.energy[-1] - t2, 0.0))
-    path.picks.append((row, t2))
+    path.energy.append(max(path.energy[-1] - g**2 / q, 0.0))
+    path.picks.append((row, g**2 / q))
 
 
 def _less(q: Array, cross: Array) -> Array:

@@ -11,7 +11,7 @@ Source: Thompson (1985), J. R. Stat. Soc. B 47, 53 (restricted likelihood of suc
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -20,9 +20,10 @@ from numpy.typing import NDArray
 from srcfit.elimination import Elimination, eliminate
 from srcfit.forward import Forward
 from srcfit.noise import estimate_lag, estimate_noise, restricted
-from srcfit.outliers import Columns, View, gross, propose, views
+from srcfit.outliers import CHI, Columns, View, gross, propose, views
 from srcfit.problem import Array, Problem
-from srcfit.whitening import Links, linked_rows, links, parts_of, sequences, whitened
+from srcfit.solvers.ladder import ALONE
+from srcfit.whitening import Links, Rows, linked_rows, links, parts_of, sequences, whitened
 
 Mask = NDArray[np.bool_]
 
@@ -97,8 +98,8 @@ def noise_of(forward: Forward, balanced: Elimination | None = None) -> Noise:
             sd = _sds(forward, before, unknown, balanced)
         if by_lag:
             lag = _lags(forward, replace(before, sd=sd), balanced)
-        doubt = _doubt(forward, sd, lag, balanced)
-        now = Noise(sd, lag, doubt.weight, doubt.unsure, doubt.settled)
+        found = _doubt(forward, sd, lag, balanced)
+        now = Noise(sd, lag, found.weight, found.unsure, found.settled)
         if (by_group + by_lag == 0) or _alike(before, now, by_group and by_lag):
             return now
     return replace(now, settled=False)
@@ -143,24 +144,33 @@ def _lags(forward: Forward, noise: Noise, balanced: Elimination) -> Array:
 
 def _doubt(forward: Forward, sd: Array, lag: Array, balanced: Elimination) -> Doubt:
     """Weights of all readings for a given sd and correlation."""
-    number = parts_of(forward)[0]
 
     def given(weight: Array) -> tuple[Problem, Links]:
         problem = whitened(forward, sd, lag, balanced, weight)
         return problem, linked_rows(forward, links(forward, lag, weight))
 
-    n = len(sd)
+    return doubt(given, parts_of(forward)[0], len(sd))
+
+
+def doubt(given: Callable[[Array], tuple[Problem, Links]], number: Rows, n: int) -> Doubt:
+    """Weights of n readings.
+
+    Parameters
+    ----------
+    given : callable
+        Problem and links of its rows for (n,) weights.
+    number : (rows,) int
+        Reading of each row.
+    """
     distance, far = propose(*given(np.ones(n)))
-    unsure = np.zeros(n, dtype=bool)
+    unsure, weight = np.zeros(n, dtype=bool), np.ones(n)
     unsure[number[far]] = True
-    weight = np.ones(n)
     np.minimum.at(weight, number, 1 / np.maximum(distance, 1.0))
     for _ in range(ROUNDS if (weight < 1).any() else 0):
         problem, chain = given(weight)
-        rows = revised(problem, chain, weight[number])
         # of a complex reading the part that lies farther decides
         new = np.ones(n)
-        np.minimum.at(new, number, rows)
+        np.minimum.at(new, number, revised(problem, chain, weight[number]))
         moved = np.abs(np.log(new / weight)).max()
         weight = new
         if moved <= CLOSE:
@@ -194,12 +204,17 @@ def revised(problem: Problem, links: Links, weight: Array) -> Array:
 
 
 def _variance(found: Sequence[View], weight: Array, stated: bool) -> list[Array]:
-    """Variance (t,) of the whitened noise at each rung of each view; at least a stated one."""
+    """Variance (t,) of the whitened noise at each rung of each view.
+
+    A stated one is larger only where most of the sound rows say so: a wrong member makes no
+    outliers.
+    """
     if not stated:
         return [np.maximum(v.energy / v.fr.nu, np.finfo(float).tiny) for v in found]
     sound = np.flatnonzero(weight == 1)
-    squares = sum(float((v.residual[sound] ** 2).sum(axis=0) @ v.weights) for v in found)
-    spent = sum(float((v.Z[sound] ** 2).sum(axis=0) @ v.fill @ v.weights) for v in found)
-    left = len(sound) - float((found[0].fr.U[sound] ** 2).sum()) - spent
-    one = max(1.0, squares / left) if left > 1 else 1.0
-    return [np.full(len(v.weights), one) for v in found]
+    squares = sum((v.residual[sound] ** 2) @ v.weights for v in found)
+    spent = sum((v.Z[sound] ** 2) @ v.fill @ v.weights for v in found)
+    left = 1 - (found[0].fr.U[sound] ** 2).sum(axis=1) - spent
+    told = left > ALONE
+    one = float(np.median(squares[told] / left[told])) / CHI if told.any() else 1.0
+    return [np.full(len(v.weights), max(one, 1.0)) for v in found]

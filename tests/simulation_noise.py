@@ -1,0 +1,157 @@
+"""How intervals and errors fare with real noise: simulated readings of known sources.
+
+`python tests/simulation_noise.py [DRAWS]` prints the tables (some minutes); the test suite runs a
+small part. Layouts and sources are those of `simulation`.
+
+Noise, in units of its stated sd: white and stated; white and to be estimated; 5 % of the readings
+off by another 10 to 30 sd, down-weighted or not; first-order autoregressive with a lag-1
+correlation of 0.5 along the member, ignored, stated or estimated.
+"""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Callable, Sequence
+from dataclasses import replace
+
+import numpy as np
+import simulation
+from numpy.typing import NDArray
+from threadpoolctl import threadpool_limits
+
+from srcfit.bands import cautious
+from srcfit.noise import estimate_lag, restricted
+from srcfit.problem import Problem
+from srcfit.robust import Doubt, doubt
+from srcfit.whitening import Links
+
+Array = NDArray[np.float64]
+NOISE, LAG = simulation.NOISE, 0.5
+OFTEN, NEAR, FAR = 0.05, 10.0, 30.0
+
+
+def spoiled(noise: Array, rng: np.random.Generator) -> Array:
+    """White noise with gross outliers added to a part of the readings."""
+    n = len(noise)
+    off = rng.uniform(NEAR, FAR, n) * rng.choice([-1.0, 1.0], n)
+    return np.where(rng.random(n) < OFTEN, noise + off, noise)
+
+
+def autoregressive(noise: Array) -> Array:
+    """The same white noise, made first-order autoregressive with the same variance."""
+    out = noise.copy()
+    for i in range(1, len(out)):
+        out[i] = LAG * out[i - 1] + np.sqrt(1 - LAG**2) * noise[i]
+    return out
+
+
+def white(problem: Problem, lag: float) -> Problem:
+    """The problem whitened for a lag-1 correlation of neighbouring rows."""
+
+    def less(rows: Array) -> Array:
+        out = rows.copy()
+        out[1:] = (rows[1:] - lag * rows[:-1]) / np.sqrt(1 - lag**2)
+        return out
+
+    return replace(problem, A=less(problem.A), d=less(problem.d))
+
+
+def weighted(problem: Problem) -> tuple[Problem, Doubt]:
+    """The problem with its gross outliers down-weighted, and which they are."""
+    n = len(problem.d)
+    alone = Links(np.full(n, -1), np.zeros(n))
+
+    def given(weight: Array) -> tuple[Problem, Links]:
+        by = np.sqrt(weight)
+        return replace(problem, A=problem.A * by[:, None], d=problem.d * by), alone
+
+    found = doubt(given, np.arange(n), n)
+    return given(found.weight)[0], found
+
+
+def lag_of(problem: Problem) -> float:
+    """Lag-1 correlation of the rows by restricted likelihood."""
+
+    def likelihood(lag: Array) -> float:
+        volume = 0.5 * (len(problem.d) - 1) * float(np.log1p(-(lag[0] ** 2)))
+        return restricted(white(problem, float(lag[0]))) - volume
+
+    return float(estimate_lag(likelihood, np.array([True]))[0])
+
+
+def treatments() -> dict[str, tuple[str, Callable[[Problem], Problem]]]:
+    """Name -> (kind of noise, what is made of the problem)."""
+    return {
+        "white, sd stated": ("white", lambda p: p),
+        "white, sd estimated": ("white", lambda p: replace(p, stated=False)),
+        "5 % outliers, weighted": ("spoiled", lambda p: weighted(p)[0]),
+        "5 % outliers, sd estimated, weighted": (
+            "spoiled", lambda p: weighted(replace(p, stated=False))[0],
+        ),
+        "5 % outliers, taken at their word": ("spoiled", lambda p: p),
+        "correlated 0.5, ignored": ("correlated", lambda p: p),
+        "correlated 0.5, stated": ("correlated", lambda p: white(p, LAG)),
+        "correlated 0.5, estimated": ("correlated", lambda p: white(p, lag_of(p))),
+    }  # fmt: skip
+
+
+def simulate(
+    member: str, n: int, draws: int, names: Sequence[str] = (), shapes: Sequence[str] = ()
+) -> dict[str, simulation.Tally]:
+    """Tallies of the cautious band; every treatment sees the same white noise underneath.
+
+    The error is that of the source's density on the cells (root of the sum of squares).
+    """
+    A_fine, middles, blank, questions = simulation.layout(member, n)
+    shapes = tuple(shapes or simulation.SHAPES)
+    chosen = {k: t for k, t in treatments().items() if not names or k in names}
+    size = (len(shapes), draws, 6)
+    held = {k: np.full(size, np.nan) for k in chosen}
+    width = {k: np.full(size, np.nan) for k in chosen}
+    error = {k: np.full(size[:2], np.nan) for k in chosen}
+    rng = np.random.default_rng([list(simulation.MEMBERS).index(member), n, 5])
+    for i, shape in enumerate(shapes):
+        f = simulation.SHAPES[shape](middles)
+        cells = f.reshape(simulation.CELLS, simulation.FINER).mean(axis=1)
+        truth = questions.cells[:6] @ cells
+        u = A_fine @ f
+        sd = NOISE * np.abs(u).max()
+        for j in range(draws):
+            e = rng.normal(size=n)
+            noises = {"white": e, "spoiled": spoiled(e, rng), "correlated": autoregressive(e)}
+            for name, (kind, treat) in chosen.items():
+                d = u / sd + noises[kind]
+                problem = Problem(blank.A / sd, blank.B, d, blank.grid, places=blank.places)
+                band = cautious(treat(problem), questions)
+                half = (band.upper - band.value)[:6]
+                held[name][i, j] = np.abs(band.value[:6] - truth) <= half
+                width[name][i, j] = half
+                error[name][i, j] = np.linalg.norm(band.value[6:] - cells)
+    return {k: simulation.Tally(held[k], width[k], error[k]) for k in chosen}
+
+
+def against(found: dict[str, simulation.Tally], name: str) -> float:
+    """Root mean square error over that with white stated noise, over all draws."""
+    base = found["white, sd stated"].error
+    return float(np.sqrt((found[name].error ** 2).mean() / (base**2).mean()))
+
+
+def main(draws: int = 20) -> None:
+    """Print the table as Markdown."""
+    names = list(treatments())
+    print("Zones on average / total (nominal 0.95), error over that with white stated noise.\n")
+    print("| layout, readings | " + " | ".join(names) + " |")
+    print("|---" * (len(names) + 1) + "|")
+    for member in simulation.MEMBERS:
+        for n in (12, 40):
+            found = simulate(member, n, draws)
+            cells = []
+            for name in names:
+                zones, _, total = found[name].row()
+                cells.append(f"{zones:.2f} / {total:.2f}, {against(found, name):.2f}")
+            print(f"| {member}, {n} | " + " | ".join(cells) + " |", flush=True)
+
+
+if __name__ == "__main__":
+    with threadpool_limits(limits=1):
+        main(int(sys.argv[1]) if len(sys.argv) > 1 else 20)
