@@ -11,8 +11,8 @@ Math. Stat. 11, 147 (runs of signs); Spearman (1904), Am. J. Psychol. 15, 72 (ra
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from dataclasses import dataclass
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, replace
 from math import comb
 
 import numpy as np
@@ -29,6 +29,7 @@ SURE = 0.001  # probability, over all groups, below which a pattern is called mo
 FEWEST = 6  # readings of a group that may show a shift, a trend or a gain
 RANKED = 12  # readings that a rank correlation needs
 EACH = 8  # readings of either sign that runs need
+CLOSE = 0.75  # part of the strongest score from which on another pattern explains as much
 ABSORBED = 1e-6  # part of a column that the model itself leaves free
 
 
@@ -55,39 +56,66 @@ def findings(solved: Solved, main: Smoother, *, correlated: frozenset[str]) -> l
     forward = solved.forward
     if forward.driven or not len(forward.rows):
         return []
-    found: list[Finding] = []
-    level = SURE / len(forward.groups)
-    standard = np.nan_to_num(solved.answers.fit.standardised)
-    size = np.abs(
-        forward.readings.value[forward.rows] - recoloured(solved, solved.answers.fit.residual)
-    )
-    for g, name in enumerate(forward.groups):
+    groups = []
+    for g in range(len(forward.groups)):
         members = np.flatnonzero(forward.group == g)
-        members = members[np.argsort(forward.places[members], kind="stable")]
-        if solved.held is None and not solved.places:
-            found += _column(solved, main, g, members, level)
-        found += _growing(name, standard[members], size[members], level)
+        groups.append(members[np.argsort(forward.places[members], kind="stable")])
+    level = SURE / len(groups)
+    if solved.held is None and not solved.places:
+        found = _column(solved, main, groups, level)
+        if found:  # it shows in every other test too
+            return [found]
+    left: list[Finding] = []
+    standard = np.nan_to_num(solved.answers.fit.standardised)
+    size = np.abs(_predicted(solved))
+    for name, members in zip(forward.groups, groups, strict=True):
+        left += _growing(name, standard[members], size[members], level)
         if name not in correlated:
-            found += _runs(name, standard[members], level)
-    return found
+            left += _runs(name, standard[members], level)
+    return left
+
+
+def _predicted(solved: Solved) -> Array:
+    """What the fit reads at each used reading (SI), (n,)."""
+    forward = solved.forward
+    residual = recoloured(solved, solved.answers.fit.residual)
+    return np.real(forward.readings.value[forward.rows] - residual)
 
 
 def _column(
-    solved: Solved, main: Smoother, g: int, members: NDArray[np.intp], level: float
-) -> list[Finding]:
-    """The strongest of shift, trend and gain in one group."""
+    solved: Solved, main: Smoother, groups: Sequence[NDArray[np.intp]], level: float
+) -> Finding | None:
+    """The strongest of shift, trend and gain in any group, if it is beyond chance."""
     from scipy.special import ndtri, stdtrit
 
-    patterns = list(_scores(solved, main, members))
-    if not patterns:
-        return []
-    worst = max(patterns, key=lambda p: abs(p.score))
+    seen = [(list(_scores(solved, main, members)), members) for members in groups]
+    best = max(
+        ((p, k) for k, (patterns, _) in enumerate(seen) for p in patterns),
+        key=lambda one: abs(one[0].score), default=None,
+    )  # fmt: skip
+    if best is None:
+        return None
+    worst, k = best
     dof = solved.readings - solved.answers.fit.effective_dof
     tail = level / 2
     bound = float(-ndtri(tail) if solved.problem.stated else -stdtrit(max(dof, 1.0), tail))
     if abs(worst.score) <= bound:
-        return []
-    return [_sentence(solved, solved.forward.groups[g], int(members[0]), worst)]
+        return None
+    found = _sentence(solved, solved.forward.groups[k], int(seen[k][1][0]), worst)
+    close = [
+        p.name for p in seen[k][0] if p is not worst and abs(p.score) > CLOSE * abs(worst.score)
+    ]
+    others = [
+        repr(solved.forward.groups[i]) for i, (patterns, _) in enumerate(seen)
+        if i != k and any(abs(p.score) > bound for p in patterns)
+    ]  # fmt: skip
+    more = [f"a {' or a '.join(close)} of theirs would look much the same"] if close else []
+    if others:
+        more.append(f"it may as well be {' and '.join(others)} that is wrong")
+    if not more:
+        return found
+    said = f"{', and '.join(more)}."
+    return replace(found, sentence=f"{found.sentence} {said[0].upper()}{said[1:]}")
 
 
 def _scores(solved: Solved, main: Smoother, members: NDArray[np.intp]) -> Iterator[Pattern]:
@@ -96,9 +124,7 @@ def _scores(solved: Solved, main: Smoother, members: NDArray[np.intp]) -> Iterat
         return
     forward = solved.forward
     x = forward.places[members]
-    read = np.real(
-        forward.readings.value[forward.rows] - recoloured(solved, solved.answers.fit.residual)
-    )
+    read = _predicted(solved)
     shapes = {
         "shift": np.ones(len(members)),
         "trend": (x - x.mean()) / max(float(np.ptp(x)), np.finfo(float).tiny),
@@ -141,8 +167,8 @@ def _sentence(solved: Solved, group: str, member: int, pattern: Pattern) -> Find
         way = "rise" if amount > 0 else "fall"
         return Finding(
             "residuals-trend", "caution",
-            f"The residuals of {group!r} {way} by {abs(amount):.2g} {unit} from its first place "
-            f"to its last ({odds}): a tilted datum, a drift while reading along it, or an end or "
+            f"The residuals of {group!r} {way} by {abs(amount):.2g} {unit} from the first place "
+            f"to the last ({odds}): a tilted datum, a drift while reading along it, or an end or "
             "a support that is not as described does that; check those first.",
         )  # fmt: skip
     more = "more" if pattern.size > 0 else "less"
