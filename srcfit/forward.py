@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -34,6 +35,7 @@ from srcfit.unknowns import (
     base,
     corrected,
     lags,
+    place_text,
     reading_nuisances,
     response_unit,
     restraint_label,
@@ -128,7 +130,8 @@ def build(
     own, own_columns = reading_nuisances(case, readings, rows, specs)
     padded = np.zeros((len(lines) - n, own_columns.shape[1]))
     columns += own
-    columns += [Column(f"null mode {i + 1}", "null") for i in range(null_columns.shape[1])]
+    if nulls is not None:
+        columns += [Column(name, "null") for name in nulls.names(partial(place_text, case))]
     B = np.concatenate(
         [member_columns, np.concatenate([own_columns, padded]), null_columns], axis=1
     )
@@ -202,7 +205,7 @@ def _lines(
 ) -> tuple[Chain, list[list[Term]], Nulls | None, tuple[Reaction, ...], Matrix]:
     """Functionals of all used sensors and of all reactions, and what they read of null modes."""
     member = case.member
-    held, modes, _ = restrained(member)
+    held, free = restrained(member)
     jumps = [p for p, _, _ in special_places(held)]
     kinks = np.unique([*grid.edges, *inner_edges(member), *jumps])
     spots = [
@@ -222,7 +225,7 @@ def _lines(
         return [*sensor_terms(line, sensors), *_reactions(case, line)[1]]
 
     found, reactions = asked(line), _reactions(case, line)[0]
-    if modes is None:
+    if not free:
         return line, found, None, reactions, np.zeros((len(found), 0))
     nulls = Nulls(member, line)
     reads = np.array([nulls.reading(terms) for terms in asked(nulls.free)])

@@ -6,17 +6,26 @@ from dataclasses import replace
 
 import numpy as np
 
-from srcfit.influence import Bases, Influence, bases
-from srcfit.member import RIGID, Member, Restraint, Support
+from srcfit.errors import MemberError
+from srcfit.influence import FreePartError, Influence, bases
+from srcfit.member import RIGID, Array, Member, Restraint, Support
 from srcfit.state import Chain, Matrix, chain, operator, special_places
 
 SINGULAR = 1e-9
+STILL = 1e-9  # displacement beside the state's largest component that is none
 ADDED = "hold"  # word of a support that was added to a member nothing holds
 
 
-def null_states(line: Chain, both: Bases) -> Matrix:
-    """States at all nodes (d, N, n) of the d null modes; d = 0 for a regular operator."""
-    # a null mode lies in both bases; the node where they meet best shows it most clearly
+def free_motions(line: Chain) -> Matrix:
+    """Scaled states at all nodes (d, N, n) of motions that nothing resists; d = 0 when held.
+
+    Where a part moves by itself that motion comes alone: others may be left when it is held.
+    """
+    try:
+        both = bases(line)
+    except FreePartError as part:
+        return _of_part(line, part)[None]
+    # a free motion lies in both bases; the node where they meet best shows it most clearly
     W, Y = np.linalg.qr(both.W)[0], np.linalg.qr(both.Y)[0]
     half = line.order // 2
     meet = np.linalg.svd(np.concatenate([W, Y], axis=2), compute_uv=False)[:, half:]
@@ -30,15 +39,44 @@ def null_states(line: Chain, both: Bases) -> Matrix:
     c = np.linalg.lstsq(both.W[node], states.T)[0].T
     b = np.linalg.lstsq(both.Y[node], states.T)[0].T
     modes = np.empty((len(states), len(line.x), line.order), dtype=both.Y.dtype)
-    for k in range(node, len(line.x)):
-        modes[:, k] = c @ both.W[k].T
-        if k + 1 < len(line.x):
-            c = c @ both.to_right[k].T
-    for k in range(node, -1, -1):
-        modes[:, k] = b @ both.Y[k].T
-        if k > 0:
-            b = b @ both.to_left[k - 1].T
+    modes[:, node:] = _rightward(both.W, both.to_right, c, node)
+    modes[:, : node + 1] = _leftward(both.Y, both.to_left, b, node)
     return modes
+
+
+def _of_part(line: Chain, part: FreePartError) -> Matrix:
+    """States (N, n) of the motion of a part that a point condition lets turn or slip by itself.
+
+    The jump that the condition leaves free is then itself a state of the part: the part takes the
+    whole jump, and the member beyond is at rest.
+    """
+    here = part.interval + 1 - part.ahead
+    column = line.pins[part.interval].column
+    amount = np.linalg.lstsq(part.basis[here], column)[0][None]
+    states = np.zeros((len(line.x), line.order), dtype=part.basis.dtype)
+    if part.ahead:
+        states[: here + 1] = _leftward(part.basis, part.back, amount, here)[0]
+    else:
+        states[here:] = _rightward(part.basis, part.back, amount, here)[0]
+    return states
+
+
+def _rightward(W: Matrix, to_right: Matrix, c: Matrix, node: int) -> Matrix:
+    """States (d, N - node, n) from `node` on of coefficients c (d, h) in W there."""
+    found = [c @ W[node].T]
+    for k in range(node, len(W) - 1):
+        c = c @ to_right[k].T
+        found.append(c @ W[k + 1].T)
+    return np.stack(found, axis=1)
+
+
+def _leftward(Y: Matrix, to_left: Matrix, b: Matrix, node: int) -> Matrix:
+    """States (d, node + 1, n) up to `node` of coefficients b (d, h) in Y there."""
+    found = [b @ Y[node].T]
+    for k in range(node, 0, -1):
+        b = b @ to_left[k - 1].T
+        found.append(b @ Y[k - 1].T)
+    return np.stack(found[::-1], axis=1)
 
 
 def restraint_forces(lines: Influence) -> tuple[list[str], Matrix]:
@@ -117,8 +155,8 @@ def _surely_held(member: Member) -> bool:
     return clamped or held_places > 1 or bool((rate > 0).any())
 
 
-def restrained(member: Member) -> tuple[Member, Matrix | None, Chain | None]:
-    """The member, held at as many places as it has null modes (none for a regular one).
+def restrained(member: Member) -> tuple[Member, int]:
+    """The member, held at as many places as it has free motions (none for a regular one).
 
     For a balanced source these holds carry no force, so the response differs from the free
     member's by null modes only.
@@ -126,28 +164,55 @@ def restrained(member: Member) -> tuple[Member, Matrix | None, Chain | None]:
     Returns
     -------
     member : Member, with supports added
-    modes : (d, N, n) scaled states of the null modes on `chain`, or None
-    chain : Chain, or None
+    count : int
+        Number of null modes.
+
+    Raises
+    ------
+    MemberError
+        When a part is free and too short to be held.
     """
     if _surely_held(member):
-        return member, None, None
-    # odd fractions: a hold should not fall on a user's own place
-    odd = member.start + member.length * np.linspace(0.0137, 0.9871, 23)
-    line = chain(member, odd)
-    modes = null_states(line, bases(line))
-    if len(modes) == 0:
-        return member, None, None
-    left = modes[:, :, 0].copy()
+        return member, 0
+    odd, held = _odd_places(member), member
+    while True:
+        line = chain(held, odd)
+        modes = free_motions(line)
+        count = len(held.supports) - len(member.supports)
+        if len(modes) == 0:
+            return held, count
+        at = _hold(line, modes, odd)
+        if at is None:
+            raise MemberError(
+                "a part of the member between two hinges, supports or ends is free to move and "
+                "too short to be followed",
+                "member",
+                "take the points together, or hold the part by a support, an end or a spring",
+            )
+        added = Support(at, ADDED, Restraint(RIGID))
+        held = replace(held, supports=tuple(sorted((*held.supports, added), key=lambda s: s.at)))
+
+
+def _odd_places(member: Member) -> Array:
+    """Places where a hold may go: at odd fractions, since it should not fall on a user's own.
+
+    Some lie between any two neighbouring point conditions.
+    """
+    inner = [p for p, _, _ in special_places(member)]
+    stops = np.unique([member.start, *inner, member.end])
+    between = stops[:-1, None] + np.diff(stops)[:, None] * np.array([0.0713, 0.3719, 0.9317])
+    whole = member.start + member.length * np.linspace(0.0137, 0.9871, 23)
+    return np.unique(np.concatenate([whole, between.ravel()]))
+
+
+def _hold(line: Chain, modes: Matrix, odd: Array) -> float | None:
+    """Where a hold stops most of the motions; None where it could stop nothing."""
+    member = line.member
     allowed = np.isin(line.x, odd) & ~np.isin(line.x, [p for p, _, _ in special_places(member)])
     # of places that serve alike the one in the middle: far from singular ends
     aside = np.abs(line.x - (member.start + member.end) / 2) / member.length
-    added = []
-    for _ in range(len(modes)):
-        size = np.where(allowed, np.abs(left).max(axis=0) * (1 - 0.01 * aside), -1.0)
-        best = int(np.argmax(size))
-        column = left[:, best]
-        left = left - np.outer(column, column.conj() @ left) / (np.abs(column) ** 2).sum()
-        added.append(float(line.x[best]))
-    held = tuple(Support(at, ADDED, Restraint(RIGID)) for at in added)
-    supports = tuple(sorted((*member.supports, *held), key=lambda s: s.at))
-    return replace(member, supports=supports), modes, line
+    moved = np.abs(modes[:, :, 0]).max(axis=0)
+    size = np.where(allowed, moved * (1 - 0.01 * aside), -1.0)
+    best = int(np.argmax(size))
+    enough = size[best] > STILL * np.abs(modes).max()
+    return float(line.x[best]) if enough else None

@@ -146,18 +146,39 @@ def _orthonormal(columns: Matrix) -> tuple[Matrix, Matrix]:
     return q, np.array([[size, first + again], [0.0, rest]], dtype=columns.dtype)
 
 
-def _through_pin(basis: Matrix, row: Array, column: Array, what: str) -> tuple[Matrix, Matrix]:
-    """States of `basis` with row @ z = 0, plus any jump along `column`.
+class FreePartError(MemberError):
+    """A part beside a point condition moves by itself: what of a basis was carried so far.
 
-    Returns the new basis and the matrix that takes coefficients in it back to the old basis.
+    Attributes
+    ----------
+    interval : int
+        That of the point condition.
+    ahead : int
+        1: the part lies left of it, 0: right.
+    basis, back : as in `Bases`, filled up to the condition
     """
-    held = row @ basis
-    if np.abs(held).max() < LOOSE:
-        raise MemberError(
-            f"the part of the member beside {what} is free to move by itself",
+
+    def __init__(
+        self, line: Chain, interval: int, ahead: int, basis: Matrix, back: Matrix
+    ) -> None:
+        side = "left" if ahead else "right"
+        super().__init__(
+            f"the part of the member {side} of {line.x[interval]:.6g} m is free to move by itself",
             "member",
             "hold it by a support, an end or a spring",
         )
+        self.interval, self.ahead, self.basis, self.back = interval, ahead, basis, back
+
+
+def _through_pin(basis: Matrix, row: Array, column: Array) -> tuple[Matrix, Matrix] | None:
+    """States of `basis` with row @ z = 0, plus any jump along `column`.
+
+    Returns the new basis and the matrix that takes coefficients in it back to the old basis; None
+    where every state of the basis meets the condition.
+    """
+    held = row @ basis
+    if np.abs(held).max() < LOOSE:
+        return None
     null = np.linalg.qr(held.conj()[:, None], mode="complete")[0][:, 1:]
     q, r = _orthonormal(np.concatenate([basis @ null, column[:, None]], axis=1))
     back = np.concatenate([null, np.zeros((len(null), 1))], axis=1) @ np.linalg.inv(r)
@@ -165,7 +186,13 @@ def _through_pin(basis: Matrix, row: Array, column: Array, what: str) -> tuple[M
 
 
 def bases(line: Chain) -> Bases:
-    """Carry the bases along the chain, in both directions."""
+    """Carry the bases along the chain, in both directions.
+
+    Raises
+    ------
+    FreePartError
+        Where a part beside a point condition moves by itself.
+    """
     scale, n = line.scale, line.order
     half, count = n // 2, len(line.x)
     start = _end_basis(line.member, "left") / scale[:, None]
@@ -190,13 +217,17 @@ def _carry(
     """
     unit = np.eye(back.shape[1])
     growth = np.sqrt((np.abs(step - np.eye(line.order)) ** 2).sum(axis=(1, 2)))
-    turned, skew = [], 0.0
+    turned: list[int] = []
+    skew = 0.0
     for k in intervals:
         here, there = k + 1 - ahead, k + ahead
         pin = line.pins.get(k)
         if pin is not None:
-            place = f"{line.x[k]:.6g} m"
-            basis[there], back[k] = _through_pin(basis[here], pin.row, pin.column, place)
+            through = _through_pin(basis[here], pin.row, pin.column)
+            if through is None:
+                back[turned] = np.linalg.inv(back[turned])
+                raise FreePartError(line, k, ahead, basis, back)
+            basis[there], back[k] = through
             skew = 0.0
             continue
         skew += growth[k]

@@ -102,8 +102,8 @@ def kernel(member: Member, x: Any, s: Any, quantity: str = "response") -> Matrix
     """
     refuse_buckled(member)
     x, s = _checked(member, x, "x"), _checked(member, s, "s")
-    held, modes, _ = restrained(member)
-    if modes is None:
+    held, free = restrained(member)
+    if not free:
         line = chain(held, np.concatenate([x, s]))
         return at_nodes(influence(line, functionals(line, quantity, x)), line.node(s))
     return _generalised(member, held, x, s, quantity)
@@ -183,9 +183,9 @@ def respond(
     x = _checked(member, x, "x")
     loads = [_load(member, item) for item in lumped]
     at = _checked(member, [p for p, _, _ in loads], "lumped place") if loads else np.zeros(0)
-    held, modes, _ = restrained(member)
+    held, free = restrained(member)
     edges, density = _source(member, source)
-    t, weight = _quadrature(held) if modes is not None else (np.zeros(0), np.zeros(0))
+    t, weight = _quadrature(held) if free else (np.zeros(0), np.zeros(0))
     line = chain(held, np.concatenate([x, at, edges, t]))
     f = density(line.places)
     asked = functionals(line, quantity, x)
@@ -197,7 +197,7 @@ def respond(
     given = dict(prescribed(member))
     for name, column in zip(names, columns.T, strict=True):
         found = found + _known(given[name]) * column
-    if modes is not None:
+    if free:
         found = _complement(member, line, found, f, loads, at, (quantity, x, t, weight))
     result = found[: len(x)]
     if quantity == "response" and member.kind.relative and not member.driven:

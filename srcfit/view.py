@@ -58,7 +58,7 @@ class View:
         return cells, columns, known + (self.base if self.quantity == "response" else 0.0)
 
     def _block(self, x: Array) -> tuple[Array, Array, Array]:
-        held, modes, _ = restrained(self.member)
+        held, free = restrained(self.member)
         line = chain(held, np.concatenate([self.edges, x]))
         lines = influence(line, functionals(line, self.quantity, x))
         cells = np.add.reduceat(interval_integrals(lines), self._first(line.x), axis=1)
@@ -69,7 +69,7 @@ class View:
                 columns.append(column[:, None])
             else:
                 known += amount * column
-        if modes is not None:
+        if free:
             nulls = Nulls(self.member, line)
             holds = [s.at for s in held.supports if s.word == ADDED]
             at = nulls.value(np.array(holds))
@@ -83,8 +83,8 @@ class View:
 
     def balance(self) -> Array | None:
         """Integrals of the free motions over each cell (d, m); None where the member is held."""
-        held, modes, _ = restrained(self.member)
-        if modes is None:
+        held, free = restrained(self.member)
+        if not free:
             return None
         nulls = Nulls(self.member, chain(held, self.edges))
         parts = (nulls.at * nulls.free.weights).sum(axis=2)

@@ -217,4 +217,5 @@ def test_elements_of_beams(seed):
     # nodal values converge with the fourth power of the element: one step of extrapolation
     wanted = values[1] + (values[1] - values[0]) / 15
     found = srcfit.respond(member, x, lambda s: 1 + np.cos(s))
-    assert np.abs(found - wanted).max() <= 2e-8 * np.abs(wanted).max()
+    # 160 elements are ill-conditioned by some 160**4: the referee's own rounding is up to 1e-7
+    assert np.abs(found - wanted).max() <= 2e-7 * np.abs(wanted).max()

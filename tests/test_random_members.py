@@ -12,7 +12,6 @@ from hypothesis import strategies as st
 from pairs import none
 
 import srcfit
-from srcfit.errors import MemberError
 from srcfit.holds import restrained
 from srcfit.influence import bases, influence
 from srcfit.quantities import functionals
@@ -31,23 +30,21 @@ QUANTITIES = {
 
 
 def made(drawn):
-    """The member; a part that no condition holds at all is refused, which is right."""
+    """The member, the same held where something of it moves freely, and a factor on tolerances.
+
+    What all but nothing holds (a little bedding beside a pin) amplifies rounding: its kernel is as
+    many times larger than its own stiffness makes it as the states of the two ends nearly meet.
+    """
     member = srcfit.make_member(drawn.given)
-    try:
-        held, modes, _ = restrained(member)
-    except MemberError as error:
-        if "free to move by itself" not in str(error):
-            raise
-        assume(False)
-    # what all but nothing holds (a little bedding beside a pin) amplifies rounding: left out
+    held, free = restrained(member)
     both = bases(chain(held))
     W, Y = np.linalg.qr(both.W)[0], np.linalg.qr(both.Y)[0]
     meet = np.linalg.svd(np.concatenate([W, Y], axis=2), compute_uv=False)[:, -1]
-    assume(meet.min() > 1e-4)
-    return member, held, modes is not None
+    assume(meet.min() > 1e-9)
+    return member, held, free > 0, max(1.0, 1e-4 / meet.min())
 
 
-def reciprocity(member, held, drawn):
+def reciprocity(member, held, drawn, slack):
     """What sensor i reads under the line of sensor j is what j reads under that of i."""
     kinds = QUANTITIES[member.kind.order]
     # each sensor at its own places, so that no two of them share a node
@@ -70,18 +67,18 @@ def reciprocity(member, held, drawn):
             block = np.s_[a * n : (a + 1) * n, b * n : (b + 1) * n]
             off = np.abs(R - R.T)[block][apart[block]].max()
             bound = max(terms_of[block].max(), terms_of.T[block].max())
-            assert off <= 1e-12 * bound, (kinds[a], kinds[b], off / bound)
+            assert off <= 1e-12 * slack * bound, (kinds[a], kinds[b], off / bound)
 
 
-def symmetry_and_sign(member, drawn, singular):
+def symmetry_and_sign(member, drawn, singular, slack):
     """Symmetric, positive semidefinite; of order 2 nowhere negative unless singular."""
     x = drawn.places(SHARES)
     G = srcfit.kernel(member, x, x)
     largest = np.abs(G).max()
-    assert np.abs(G - G.T).max() <= 1e-12 * largest
-    assert np.linalg.eigvalsh((G + G.T) / 2).min() >= -1e-11 * largest
+    assert np.abs(G - G.T).max() <= 1e-12 * slack * largest
+    assert np.linalg.eigvalsh((G + G.T) / 2).min() >= -1e-11 * slack * largest
     if member.kind.order == 2 and not singular:
-        assert G.min() >= -1e-12 * largest
+        assert G.min() >= -1e-12 * slack * largest
     if member.kind.order == 4:
         # a unit couple at s turns x as a unit load at x turns s
         turned = np.array([
@@ -91,11 +88,13 @@ def symmetry_and_sign(member, drawn, singular):
         if turned is not None:
             rotation = srcfit.kernel(member, x, x, "rotation")
             expected = np.array([rotation[4, 1], rotation[2, 5]])
-            assert turned == pytest.approx(expected, abs=1e-11 * np.abs(rotation).max())
+            # a section that is soft in shear hardly turns while it sinks
+            size = max(np.abs(rotation).max(), 1e-3 * largest / member.length)
+            assert turned == pytest.approx(expected, abs=1e-11 * slack * size)
     return G
 
 
-def equilibrium(member, drawn):
+def equilibrium(member, drawn, slack):
     """A unit source comes out at ends and supports, or is taken along the member."""
     at = drawn.places([0.4321])[0]
     held = [p for p, e in ((member.start, member.left), (member.end, member.right))
@@ -114,10 +113,10 @@ def equilibrium(member, drawn):
     if rate.any():
         along = weight @ (rate * srcfit.kernel(member, x, [at])[:, 0])
     size = max(1.0, abs(along), abs(out))
-    assert abs(out + along - 1) <= 1e-9 * size, (out, along)
+    assert abs(out + along - 1) <= 1e-9 * slack * size, (out, along)
 
 
-def superposition(member, drawn):
+def superposition(member, drawn, slack):
     """Responses add up, and twice the source gives twice the response."""
     x = drawn.places([0.2, 0.55, 0.9])
     a, b = drawn.places([0.31, 0.74])
@@ -128,24 +127,19 @@ def superposition(member, drawn):
     other = srcfit.respond(member, x, none, [(a, 2.0), (b, -1.0)])
     both = srcfit.respond(member, x, 2 * value, [(a, 6.0), (b, -3.0)])
     size = max(np.abs(one).max(), np.abs(other).max(), 1e-300)
-    assert np.abs(2 * one + 3 * other - both).max() <= 1e-11 * size
+    assert np.abs(2 * one + 3 * other - both).max() <= 1e-11 * slack * size
     G = srcfit.kernel(member, x, [a, b])
-    assert np.abs(G @ [2.0, -1.0] - other).max() <= 1e-11 * np.abs(G).max()
+    assert np.abs(G @ [2.0, -1.0] - other).max() <= 1e-11 * slack * np.abs(G).max()
 
 
-def monotone(member, drawn, G, factor):
+def monotone(member, drawn, G, factor, slack):
     """Stiffer coefficients never give way more: G - G_stiffer is positive semidefinite."""
     stiffer = dict(drawn.given)
     for key in drawn.stiff:
         stiffer[key] = times(stiffer[key], factor)
     x = drawn.places(SHARES)
-    try:
-        less = G - srcfit.kernel(srcfit.make_member(stiffer), x, x)
-    except MemberError as error:
-        if "free to move" not in str(error):
-            raise
-        return
-    assert np.linalg.eigvalsh((less + less.T) / 2).min() >= -1e-11 * np.abs(G).max()
+    less = G - srcfit.kernel(srcfit.make_member(stiffer), x, x)
+    assert np.linalg.eigvalsh((less + less.T) / 2).min() >= -1e-11 * slack * np.abs(G).max()
 
 
 def times(value, factor):
@@ -159,14 +153,14 @@ def times(value, factor):
 
 
 def laws(drawn, factor):
-    member, held, singular = made(drawn)
-    reciprocity(member, held, drawn)
-    G = symmetry_and_sign(member, drawn, singular)
+    member, held, singular, slack = made(drawn)
+    reciprocity(member, held, drawn, slack)
+    G = symmetry_and_sign(member, drawn, singular, slack)
     if singular:
         return
-    equilibrium(member, drawn)
-    superposition(member, drawn)
-    monotone(member, drawn, G, factor)
+    equilibrium(member, drawn, slack)
+    superposition(member, drawn, slack)
+    monotone(member, drawn, G, factor, slack)
 
 
 @RUN

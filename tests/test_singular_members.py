@@ -7,9 +7,12 @@ from test_forward import case_of
 
 import srcfit
 from srcfit.balance import balance
-from srcfit.errors import SolveError
+from srcfit.errors import MemberError, SolveError
+from srcfit.holds import restrained
+from srcfit.nulls import Nulls
 from srcfit.recover import estimate
 from srcfit.solve import solve
+from srcfit.state import chain
 
 L, K = 2.0, 0.4
 ROD = {
@@ -240,3 +243,111 @@ def test_lambda_at_an_eigenvalue(tmp_path, known):
     assert holds(found.summary()["zones"][0], truth)
     assert found.total["sd"] > 0
     assert width * len(f) == pytest.approx(1)
+
+
+HINGED = {
+    "kind": "beam", "length": "6 m", "bending_stiffness": "2 MN*m^2", "left": "clamped",
+    "right": "free", "hinge": [{"at": "4 m"}],
+}  # fmt: skip
+PAIR = [(4.5, 1000.0), (6.0, -250.0)]  # no couple about the hinge; 750 N come out there
+
+
+def hinged_deflection(x, turn):
+    """Cantilever under 750 N at its tip; beyond the hinge the bent part, turned by `turn`."""
+    EI = 2e6
+    left = 750 * x**2 * (3 * 4 - x) / (6 * EI)
+    s = np.maximum(x - 4, 0.0)
+    # shear 750 up to 4.5 m, -250 beyond; no moment at the hinge and at the end
+    bent = (-750 * s**3 + 1000 * np.maximum(s - 0.5, 0) ** 3) / (6 * EI)
+    return np.where(x < 4, left, 750 * 4**3 / (3 * EI) + bent + turn * s)
+
+
+def test_a_part_beyond_a_hinge_turns_freely():
+    member = srcfit.make_member(HINGED)
+    x, w = np.polynomial.legendre.leggauss(30)
+    cuts = [(4.0, 4.5), (4.5, 6.0)]
+    s = np.concatenate([(a + b) / 2 + (b - a) / 2 * x for a, b in cuts])
+    weight = np.concatenate([(b - a) / 2 * w for a, b in cuts])
+    # the rotation s - 4 is the null mode: the response has no share in it
+    free = hinged_deflection(s, 0.0)
+    turn = -(weight * free * (s - 4)).sum() / (weight * (s - 4) ** 2).sum()
+    places = np.array([1.0, 2.5, 3.9, 4.2, 4.5, 5.3, 6.0])
+    found = srcfit.respond(member, places, lambda x: 0 * x, PAIR)
+    np.testing.assert_allclose(found, hinged_deflection(places, turn), rtol=1e-9)
+    moment = srcfit.respond(member, [0.0, 2.0, 4.0, 4.5, 6.0], lambda x: 0 * x, PAIR, "moment")
+    np.testing.assert_allclose(moment, [-3000, -1500, 0, 375, 0], atol=1e-6)
+    with pytest.raises(MemberError, match="not balanced"):
+        srcfit.respond(member, places, lambda x: 0 * x, PAIR[:1])
+
+
+def test_modes_of_a_hinged_part_begin_with_its_rotation():
+    found = srcfit.modes(srcfit.make_member(HINGED), 3)
+    assert found.eigenvalues[0] == pytest.approx(0, abs=1e-9 * found.eigenvalues[1])
+    x = np.array([2.0, 3.9, 4.5, 5.0, 6.0])
+    phi = found.functions(x)[:, 0]
+    np.testing.assert_allclose(phi / phi[-1], [0, 0, 0.25, 0.5, 1], atol=1e-9)
+
+
+def hinged_case(folder):
+    x = np.linspace(0.2, 5.9, 24).round(6)
+    sd = 2e-5
+    rng = np.random.default_rng(5)
+    w = hinged_deflection(x, 0.002) + sd * rng.normal(size=24)
+    columns = [{"column": "w", "kind": "deflection", "unit": "m", "sd": f"{sd} m"}]
+    source = {
+        "unit": "N/m", "cells": 60, "smooth": False,
+        "lumped": [{"name": "down", "at": "4.5 m"}, {"name": "up", "at": "6 m"}],
+    }  # fmt: skip
+    return case_of(folder, HINGED, columns, zip(x.tolist(), w.tolist(), strict=True), source)
+
+
+def test_loads_on_a_part_that_turns_freely_are_recovered(tmp_path):
+    """One load follows from the other by the balance of the part; the rotation is an unknown."""
+    found = srcfit.recover(hinged_case(tmp_path))
+    down, up = found.summary()["lumped"]
+    assert holds(down, 1000.0)
+    assert holds(up, -250.0)
+    assert down["sd"] < 100
+    assert up["value"] == pytest.approx(-down["value"] / 4, rel=1e-9)
+    told = next(f for f in found.findings if f["code"] == "singular-member")
+    assert "a rotation of the part from 4 m to 6 m" in told["sentence"]
+    clamp = found.summary()["reactions"][0]
+    assert clamp["value"] == pytest.approx(down["value"] + up["value"], rel=1e-8)
+
+
+NAMES = {
+    "beam": [
+        ({"left": "free", "right": "free"},
+         ["a uniform shift of the member", "a rigid rotation of the member"]),
+        ({"left": "pinned", "right": "free"}, ["a rigid rotation of the member"]),
+        ({"left": "guided", "right": "guided"}, ["a uniform shift of the member"]),
+        ({"left": "pinned", "right": "pinned", "hinge": [{"at": "2 m"}]}, ["a folding at 2 m"]),
+        ({"left": "free", "right": "clamped", "hinge": [{"at": "2 m"}]},
+         ["a rotation of the part from 0 m to 2 m"]),
+    ],
+    "rod": [({"left": "free", "right": "free"}, ["a uniform shift of the member"])],
+    "shaft": [({"left": "free", "right": "free"}, ["a uniform twist of the member"])],
+    "conductor": [({"left": "insulated", "right": "insulated"},
+                   ["a uniform level of the temperature"])],
+}  # fmt: skip
+STIFF = {"beam": {"bending_stiffness": "2 MN*m^2"}, "rod": {"axial_stiffness": "2 MN"},
+         "shaft": {"torsional_stiffness": "2 MN*m^2"},
+         "conductor": {"conductance": "2 W*m/K"}}  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    ("kind", "ends", "expected"), [(k, e, n) for k, some in NAMES.items() for e, n in some]
+)
+def test_free_motions_have_names(kind, ends, expected):
+    member = srcfit.make_member({"kind": kind, "length": "6 m", **STIFF[kind], **ends})
+    held, count = restrained(member)
+    assert count == len(expected)
+    nulls = Nulls(member, chain(held, np.linspace(0, 6, 7)))
+    assert list(nulls.names(lambda x: f"{x:g} m")) == expected
+
+
+def test_what_cannot_be_told_apart_is_called_by_its_name(tmp_path):
+    found = srcfit.recover(rod_case(tmp_path, {}, offset="unknown"))
+    told = next(f for f in found.findings if f["code"] == "inseparable")
+    assert "a uniform level of the temperature" in told["sentence"]
+    assert "null mode" not in str(found.findings)
