@@ -153,10 +153,12 @@ def facts(solved: Solved, told: Told) -> dict[str, Any]:
     """Further keys of summary.json: one decade of strength, zones' resolution, heavy readings."""
     zones = [z.name for z in solved.forward.case.source.zones]
     readings, scale = solved.forward.readings, position_scale(solved)
-    decade = {}
+    # with inequalities or doubtful places the answer is no longer the ladder's own
+    plain = solved.held is None and not solved.places
+    decade: dict[str, Any] = {}
     for name, (_, dof) in told.decade.items():
         values = [known(v) for v in moved(solved, told, name)]
-        decade[name] = None if not np.isfinite(dof) else {
+        decade[name] = None if not (plain and np.isfinite(dof)) else {
             "total": values[0],
             "zones": [{"name": z, "value": v} for z, v in zip(zones, values[1:], strict=True)],
             "effective_dof": dof,
@@ -192,7 +194,7 @@ def moved(solved: Solved, told: Told, name: str) -> Array:
 def findings(solved: Solved, shown: Shown, told: Told) -> list[Finding]:
     """What resolution, single readings and the strength leave to say."""
     found = _narrow(solved, told) + _at_nodes(solved) + _unseen(solved)
-    if solved.held is None:
+    if solved.held is None and not solved.places:
         total = shown.numbers("total")[0]
         found += _heavy(solved, told, total) + _leaning(solved, told, total)
     return found

@@ -12,7 +12,7 @@ from srcfit.case.model import ColumnSpec
 from srcfit.frames import flags, number, pretty
 from srcfit.member import Unknown
 from srcfit.recovery import Recovery
-from srcfit.report import tables
+from srcfit.report import tables, telling
 from srcfit.report.data import LINES, READINGS
 from srcfit.report.html import clean, figure, listing, name, nested, safe, section
 from srcfit.report.method import CAUTIONS, method_text
@@ -175,7 +175,8 @@ def source(recovery: Recovery) -> str:
     told = peak_sentence(recovery.facts, unit(recovery, "source"), unit(recovery, "position"))
     if told:
         lead += f"<p>{shown(clean(told))}</p>"
-    return section("source", "Source", lead + figure("source") + tables.cells(recovery))
+    body = lead + figure("source") + telling.resolution(recovery) + tables.cells(recovery)
+    return section("source", "Source", body)
 
 
 def inside(recovery: Recovery) -> str:
@@ -217,7 +218,8 @@ def readings(recovery: Recovery) -> str:
             "lets expect (1 is just right)."
         )
     lead += _thinned(recovery)
-    tail = tables.noise(recovery) + tables.excluded(recovery) + tables.readings(recovery)
+    tail = tables.noise(recovery) + telling.heaviest(recovery) + tables.excluded(recovery)
+    tail += tables.readings(recovery)
     return section("readings", "Readings and fit", f"<p>{lead}</p>{figure('readings')}{tail}")
 
 
@@ -259,7 +261,8 @@ def strength(recovery: Recovery) -> str:
         "criteria agree, and where the totals hardly move along the ladder, the choice matters "
         "little."
     )
-    body = f"<p>{lead}</p><p>{more}</p>{figure('l-curve')}{tables.criteria(recovery)}"
+    body = f"<p>{lead}</p><p>{more}</p>{figure('l-curve')}{telling.decade(recovery)}"
+    body += tables.criteria(recovery)
     return section("strength", "Strength", body)
 
 
@@ -302,6 +305,7 @@ def numbers(recovery: Recovery) -> str:
     """All answers as tables."""
     parts = (
         tables.zones(recovery),
+        telling.shares(recovery),
         tables.background(recovery),
         tables.lumped(recovery),
         tables.detection(recovery),

@@ -135,7 +135,7 @@ def cells(recovery: Recovery) -> str:
     """The source cell by cell."""
     frame = recovery.source
     amounts = ("estimate", "estimate_imag", "lower", "upper", "lower_imag", "upper_imag")
-    order = ("x", "estimate", "estimate_imag", "sd", *amounts[2:], "data_share")
+    order = ("x", *amounts[:2], "sd", *amounts[2:], "data_share", "resolution")
     names = [n for n in order if header(frame, n)]
     columns = [numbers(frame, n) for n in names]
     sd = numbers(frame, "sd")
@@ -188,6 +188,8 @@ def readings(recovery: Recovery) -> str:
     z = numbers(frame, "standardised")
     twins = [n for n in IMAGINARY if header(frame, n)]
     beside = [numbers(frame, n) for n in twins]
+    moves = header(frame, "shift_total")
+    shift = numbers(frame, "shift_total") if moves else None
     rows: list[Row] = []
     for i in range(len(frame)):
         row: Row = [safe(words["line"][i])]
@@ -200,6 +202,7 @@ def readings(recovery: Recovery) -> str:
         ]
         row += [num(z[i], digits=2), num(columns["leave_one_out"][i], digits=3)]
         row += [num(part[i], round_like(part[i], sd[i])) for part in beside]
+        row += [] if shift is None else [num(shift[i], digits=2)]
         rows.append(row)
     heads = ["line", *(["file"] if several else []), "group", "kind", "unit"]
     heads += [
@@ -212,6 +215,7 @@ def readings(recovery: Recovery) -> str:
     ]
     heads += ["residual / sd", "leave-one-out residual"]
     heads += [f"{n.removesuffix('_imag')}, imaginary part" for n in twins]
+    heads += [with_unit("moves the total by", unit(recovery, "total"))] if moves else []
     return table("table-readings", "Every reading", heads, rows, fold=True)
 
 
