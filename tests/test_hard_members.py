@@ -174,3 +174,25 @@ def test_short_spans_beside_long_ones():
     for name, row in ROWS.items():
         exact = digits.kernel(stepped, x, s, read=row)
         assert off(srcfit.kernel(member, x, s, name), exact) < 1e-8
+
+
+@pytest.mark.parametrize("bedding", [1e3, 1.0, 1e-3, 1e-6])
+def test_a_sliver_of_bedding_beside_a_pin(bedding):
+    """All but free to turn: digits are lost as the response outgrows the beam's own, no faster.
+
+    Against 50 digits. At 1e-6 N/m2 over 2 cm the beam gives way 1e11 times more than by bending.
+    """
+    held = ((0.0, 0.5, 0.0), (0.5, 0.52, bedding), (0.52, 1.0, 0.0))
+    member = srcfit.make_member({
+        "kind": "beam", "length": "1 m", "bending_stiffness": "1000 N*m^2", "left": "pinned",
+        "right": "free", "foundation": [[f"{a} m", f"{b} m", f"{k!r} N/m^2"] for a, b, k in held],
+    })  # fmt: skip
+    pieces = tuple((a, b, {"p2": 1000.0, "p1": 0.0, "p0": k}) for a, b, k in held)
+    exact = digits.Stepped(4, pieces, (digits.RIGID, 0.0), (0.0, 0.0))
+    x = [0.11, 0.3, 0.47, 0.7, 0.93]
+    G = srcfit.kernel(member, x, x)
+    wanted = np.array(digits.kernel(exact, x, x)).astype(float)
+    growth = np.abs(wanted).max() * 1000.0  # over L**3 / EI
+    bound = 1e-14 + 1e-16 * growth
+    assert np.abs(G - wanted).max() <= bound * np.abs(wanted).max()
+    assert np.abs(G - G.T).max() <= bound * np.abs(wanted).max()
