@@ -15,8 +15,10 @@ from srcfit.eigen import modes
 from srcfit.eigencount import number_below
 from srcfit.errors import Finding
 from srcfit.forward import Forward
-from srcfit.member import Array, Member
+from srcfit.member import Member
+from srcfit.robust import Noise
 from srcfit.state import Matrix
+from srcfit.whitening import sequences
 
 SURE = 0.001  # probability below which a residual pattern is called more than chance
 DISAGREE = 30.0  # ratio of strengths between criteria that is worth a sentence
@@ -62,55 +64,32 @@ def noise(
     return []
 
 
-def correlated(forward: Forward, standardised: Matrix, lag: Array) -> list[Finding]:
+def correlated(forward: Forward, standardised: Matrix, noise: Noise) -> list[Finding]:
     """Lag-1 correlation of the standardised residuals along the member, group by group.
 
-    `lag` is what the noise was already modelled with; the residuals are whitened by it.
+    `noise` is what the residuals were whitened with; down-weighted readings do not count.
     """
     found = []
-    x = forward.readings.x[forward.rows]
+    chains = sequences(forward)
     for g, name in enumerate(forward.groups):
-        members = np.flatnonzero(forward.group == g)
-        members = members[np.argsort(x[members], kind="stable")]
-        e = standardised[members]
+        mine = [m[noise.weight[m] == 1] for number, m in chains if number == g]
+        e = standardised[np.concatenate(mine)]
         n = len(e) * (2 if forward.driven else 1)
         if n < 10 or not e.any():
             continue
-        seen = float((e[1:] * e[:-1].conj()).real.sum() / (np.abs(e) ** 2).sum())
+        pairs = [(standardised[m[1:]] * standardised[m[:-1]].conj()).real.sum() for m in mine]
+        seen = float(sum(pairs) / (np.abs(e) ** 2).sum())
         if seen > 3.1 / np.sqrt(n):  # one-sided, one in a thousand for independent noise
             found.append(
                 Finding(
                     "residuals-correlated", "caution",
                     f"Neighbouring residuals of {name!r} resemble each other (lag-1 correlation "
-                    f"{seen:.2f} over {n} readings, beyond the {lag[g]:.2f} that was modelled): "
-                    "the intervals are too narrow; give the group `correlation = \"estimate\"`, "
-                    "or look for something the member lacks.",
+                    f"{seen:.2f} over {n} readings, beyond the {noise.lag[g]:.2f} that was "
+                    "modelled): the intervals are too narrow; give the group `correlation = "
+                    "\"estimate\"`, or look for something the member lacks.",
                 )
             )  # fmt: skip
     return found
-
-
-def outliers(forward: Forward, standardised: Array) -> list[Finding]:
-    """Readings far outside the stated noise."""
-    n = len(standardised)
-    from scipy.special import ndtri
-
-    bound = max(float(-ndtri(SURE / max(n, 1))), 3.5)
-    far = np.flatnonzero(np.abs(standardised) > bound)
-    if not len(far):
-        return []
-    readings = forward.readings
-    lines = ", ".join(f"{readings.file[r]} line {readings.line[r]}" for r in forward.rows[far][:8])
-    more = f" and {len(far) - 8} more" if len(far) > 8 else ""
-    return [
-        Finding(
-            "outlier", "caution",
-            f"{len(far)} of {n} readings lie more than {bound:.1f} standard deviations from the "
-            f"fit ({lines}{more}): look at them; exclude what is not a reading, but a source "
-            "sharper than the smooth part allows looks the same and wants a lumped part or "
-            "breaks there.",
-        )
-    ]  # fmt: skip
 
 
 def edge(index: int, count: int, name: str) -> list[Finding]:

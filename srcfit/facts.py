@@ -136,7 +136,17 @@ def noise_facts(solved: Solved, chi_square: float | None, dof: float | None) -> 
     ratio = None
     if chi_square is not None and dof is not None and dof > 0:
         ratio = float(np.sqrt(chi_square / dof))
-    return {"stated": solved.problem.stated, "scale": ratio, "groups": groups}
+    named = {
+        word: [
+            {"file": forward.readings.file[r], "line": int(forward.readings.line[r]),
+             "weight": float(solved.noise.weight[i])}
+            for i, r in enumerate(forward.rows) if which[i]
+        ]
+        for word, which in (
+            ("outliers", solved.noise.weight < 1), ("doubtful", solved.noise.unsure),
+        )
+    }  # fmt: skip
+    return {"stated": solved.problem.stated, "scale": ratio, "groups": groups} | named
 
 
 def zone_facts(solved: Solved, shown: Shown) -> list[dict[str, Any]]:

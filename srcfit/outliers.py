@@ -93,8 +93,8 @@ def views(problem: Problem) -> list[View]:
     fr, found = few(problem)
     if not found:
         left = problem.d - fr.U @ fr.Ud
-        none, one = np.zeros((len(left), 0)), np.ones(1)
-        return [View(fr, none, none[:0].T, left[:, None], one * (left @ left), 0 * one, one)]
+        Z, fill, one = np.zeros((len(left), 0)), np.zeros((0, 1)), np.ones(1)
+        return [View(fr, Z, fill, left[:, None], one * (left @ left), 0 * one, one)]
     out = []
     for w in found:
         sp, tau = w.spectrum, w.sigma**-2.0
@@ -265,8 +265,9 @@ def _pursue(
     n, rows = len(g), len(problem.d)
     A = problem.A[:, problem.grid.unknown]
     norms = np.linalg.norm(A, axis=0)
-    A = A[:, norms > 0] / norms[norms > 0] if norms.any() else A[:, :1]
-    wide = v.sizes(A.T @ v.fr.U, A.T @ v.Z, np.ones(A.shape[1]), at)
+    # without a cell that any row sees, one column of zeros that is never picked
+    A = A[:, norms > 0] / norms[norms > 0] if norms.any() else np.zeros((rows, 1))
+    wide = v.sizes(A.T @ v.fr.U, A.T @ v.Z, (A**2).sum(axis=0), at)
     floor = 1.0 if problem.stated else 0.0
     path = Path(
         v, at, g.copy(), q.copy(), A.T @ v.residual[:, at], wide, [float(v.energy[at])],

@@ -6,7 +6,17 @@ from dataclasses import asdict
 
 import numpy as np
 
-from srcfit import __version__, checks, knowledge, patterns, separate, shares, tell, verdicts
+from srcfit import (
+    __version__,
+    checks,
+    doubts,
+    knowledge,
+    patterns,
+    separate,
+    shares,
+    tell,
+    verdicts,
+)
 from srcfit.answers import per
 from srcfit.balance import Balance, balance, balance_facts
 from srcfit.case.model import Case
@@ -131,8 +141,8 @@ def _findings(
         odds = float("nan") if solved.held else chance(answers.fit)
         found += checks.noise(fit["chi_square"], fit["dof"], solved.problem.stated, odds)
     left = together(forward, np.nan_to_num(answers.fit.standardised))
-    found += checks.outliers(forward, np.maximum(np.abs(left.real), np.abs(left.imag)))
-    alike = checks.correlated(forward, left, solved.lag)
+    found += doubts.findings(solved, shown) + doubts.repeatability(solved)
+    alike = checks.correlated(forward, left, solved.noise)
     named = frozenset(g for g in forward.groups if any(repr(g) in f.sentence for f in alike))
     found += alike + patterns.findings(solved, told.main, correlated=named)
     if (

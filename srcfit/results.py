@@ -17,7 +17,7 @@ from srcfit.simultaneous import factor
 from srcfit.solve import Solved, strength_unit
 from srcfit.state import Matrix
 from srcfit.units import factor as unit_factor
-from srcfit.whitening import coloured, together
+from srcfit.whitening import coloured, parts_of, together
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -248,11 +248,15 @@ def readings_table(solved: Solved) -> pd.DataFrame:
     readings, n = forward.readings, len(forward.readings)
     scale, shift = reading_units(solved)
     case, kind = forward.case, complex if forward.driven else float
-    residual, left, standardised = (np.full(n, np.nan, dtype=kind) for _ in range(3))
+    residual, left, score = (np.full(n, np.nan, dtype=kind) for _ in range(3))
     fit = solved.answers.fit
     residual[forward.rows] = recoloured(solved, fit.residual)
-    left[forward.rows] = together(forward, fit.leave_one_out) * solved.sd
-    standardised[forward.rows] = together(forward, fit.standardised)
+    weight = np.full(n, np.nan)
+    weight[forward.rows] = solved.noise.weight
+    left[forward.rows] = (
+        together(forward, fit.leave_one_out) * solved.sd / np.sqrt(solved.noise.weight)
+    )
+    score[forward.rows] = standardised(solved)
     sd = readings.sd.copy()
     sd[forward.rows] = solved.sd * (1 if solved.problem.stated else solved.answers.fit.noise)
     predicted = readings.value - residual
@@ -262,20 +266,20 @@ def readings_table(solved: Solved) -> pd.DataFrame:
         f"x [{forward.case.source.position_unit}]": readings.x * position_scale(solved),
         "value": np.real(readings.value) * scale + shift, "sd": sd * scale, "used": readings.used,
         "reason": readings.reason, "predicted": np.real(predicted) * scale + shift,
-        "residual": np.real(residual) * scale, "standardised": np.real(standardised),
+        "residual": np.real(residual) * scale, "standardised": np.real(score),
         "leave_one_out": np.real(left) * scale,
     }  # fmt: skip
     if not forward.driven:
-        return pd.DataFrame(shown)
+        return pd.DataFrame(shown | {"weight": weight})
     twins = {"value": readings.value, "predicted": predicted, "residual": residual,
-             "standardised": standardised, "leave_one_out": left}  # fmt: skip
+             "standardised": score, "leave_one_out": left}  # fmt: skip
     component = np.array([case.columns[i].component or "" for i in readings.spec])
     for name, amount in twins.items():
         size = 1.0 if name == "standardised" else scale
         # a column of one component says nothing of the other
         shown[name] = np.where(component == "imaginary", np.nan, shown[name])
         shown[f"{name}_imag"] = np.where(component == "real", np.nan, np.imag(amount) * size)
-    return pd.DataFrame(shown)
+    return pd.DataFrame(shown | {"weight": weight})
 
 
 def reading_units(solved: Solved) -> tuple[Array, Array]:
@@ -290,6 +294,20 @@ def reading_units(solved: Solved) -> tuple[Array, Array]:
             cache[unit, si] = 1 / per_unit, -offset / per_unit
         scale[i], shift[i] = cache[unit, si]
     return scale, shift
+
+
+def standardised(solved: Solved) -> Matrix:
+    """Distance of each used reading from the fit in standard deviations, (n,).
+
+    That of a down-weighted reading is from what all others say, at the noise of its group.
+    """
+    fit, weight = solved.answers.fit, solved.noise.weight[parts_of(solved.forward)[0]]
+    score = fit.standardised
+    low = np.flatnonzero(weight < 1)
+    w, hat = weight[low], fit.hat[low]
+    others = hat / ((1 - hat) * w)
+    score[low] = fit.leave_one_out[low] / (fit.noise * np.sqrt(w * (1 + others)))
+    return together(solved.forward, score)
 
 
 def recoloured(solved: Solved, white: Array) -> Matrix:

@@ -212,8 +212,8 @@ def _variance(found: Sequence[View], weight: Array, stated: bool) -> list[Array]
     if not stated:
         return [np.maximum(v.energy / v.fr.nu, np.finfo(float).tiny) for v in found]
     sound = np.flatnonzero(weight == 1)
-    squares = sum((v.residual[sound] ** 2) @ v.weights for v in found)
-    spent = sum((v.Z[sound] ** 2) @ v.fill @ v.weights for v in found)
+    squares = np.sum([v.residual[sound] ** 2 @ v.weights for v in found], axis=0)
+    spent = np.sum([v.Z[sound] ** 2 @ (v.fill @ v.weights) for v in found], axis=0)
     left = 1 - (found[0].fr.U[sound] ** 2).sum(axis=1) - spent
     told = left > ALONE
     one = float(np.median(squares[told] / left[told])) / CHI if told.any() else 1.0
