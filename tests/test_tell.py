@@ -319,3 +319,43 @@ def test_a_silent_mode_keeps_its_gain(tmp_path):
         smoother(found.problem, fit, some).matrix(), smoother(found.problem, full, some).matrix(),
         rtol=1e-6,
     )  # fmt: skip
+
+
+def driven_case(folder, columns, **strength):
+    """A beam driven at 3 Hz, read as complex amplitudes or as components."""
+    member = {**MEMBER, "mass": "100 kg/m", "frequency": "3 Hz", "damping": 0.05}
+    w = 1e3 * srcfit.respond(srcfit.make_member(member), PLACES, load)
+    w = w + 0.05 * (np.random.default_rng(1).normal(size=(2, len(w))) * [[1], [1j]]).sum(axis=0)
+    rows = [f"{x:.10g},{v.real:.12g}{v.imag:+.12g}i,{v.real:.12g}"
+            for x, v in zip(PLACES, w, strict=True)]  # fmt: skip
+    (folder / "d.csv").write_text("\n".join(["x,w,re", *rows]) + "\n")
+    table = {"file": "d.csv", "position": {"column": "x", "unit": "m"},
+             "column": [{"kind": "deflection", "unit": "mm", "sd": "0.05 mm", **c}
+                        for c in columns]}  # fmt: skip
+    return srcfit.make_case(
+        {"member": member, "readings": table, "strength": strength,
+         "source": {"unit": "kN/m", "cells": 60, "zones": ZONES}}, folder=folder,
+    )  # fmt: skip
+
+
+@pytest.mark.parametrize("with_component", [False, True])
+def test_leaving_out_a_complex_amplitude(tmp_path, with_component):
+    """Both parts go at once; beside readings of one part only the two hardly touch each other."""
+    beside = [{"column": "re", "component": "real", "group": "re"}] if with_component else []
+    less = {"column": "w", "exclude_lines": [7]}
+    whole = srcfit.recover(driven_case(tmp_path, [{"column": "w"}, *beside], choose=TAU))
+    least = srcfit.recover(driven_case(tmp_path, [less, *beside], choose=TAU))
+    own = (whole.readings["line"] == 7) & (whole.readings["group"] == "w")
+    shift = float(whole.readings["shift_total [kN]"][own].iloc[0])
+    moved = whole.total["value"] - least.total["value"]
+    assert moved == pytest.approx(shift, rel=0.02 if with_component else 1e-6)
+
+
+def test_the_map_of_a_driven_member(tmp_path):
+    """T d is the value of both parts."""
+    found = solved(driven_case(tmp_path, [{"column": "w"}]))
+    whole = smoother(found.problem, found.answers.fit, found.asked.questions)
+    value = found.answers.value
+    np.testing.assert_allclose(
+        whole.matrix() @ found.problem.d, value, rtol=1e-6, atol=1e-6 * np.abs(value).max()
+    )
