@@ -225,19 +225,26 @@ def plain(
     choose_by: str = "evidence",
     roughness: int | float | str = 1,
     level: float = 0.95,
+    strength: float | None = None,
 ) -> Answers:
     """Answers with the band of one strength: the named alternative to `cautious`.
+
+    The strength is chosen by a criterion, or stated.
 
     Raises
     ------
     SolveError
         When the criterion has nothing to say about this problem.
     """
-    ladder = tikhonov(problem, roughness=roughness)
+    stated = None if strength is None else np.array([strength])
+    ladder = tikhonov(problem, roughness=roughness, strengths=stated)
     fr, asked = ladder.frame, ask(ladder.frame, questions)
     if not len(fr.free) or fr.nu == 0:
         return without_source(fr, asked, level)
-    choice = choose(ladder, choose_by)
+    if strength is None:
+        choice = choose(ladder, choose_by)
+    else:
+        choice = Choice("stated", 0, strength, float("nan"), True, "")
     if choice.index < 0:
         how = "choose another criterion or leave strength.choose out"
         raise SolveError(f"{choose_by} cannot choose here: {choice.note}", "strength.choose", how)

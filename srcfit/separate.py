@@ -140,6 +140,12 @@ def _variances(fr: Frame, w: Weighted, questions: Questions) -> Array:
     return np.asarray(conditional(ask(fr, questions), w)[1] @ w.weights)
 
 
+def _frame(solved: Solved) -> Frame:
+    """The fit's own frame, where it has no shapes beyond the constant."""
+    own = [la.frame for la in solved.answers.fit.ladders[:1] if not la.frame.extra.shape[1]]
+    return own[0] if own else frame(solved.problem)
+
+
 def mixed(problem: Problem, names: Sequence[str]) -> Array:
     """Amounts (k',) of the combination of named unpenalised unknowns that no reading sees."""
     N = unpenalised(problem)
@@ -172,7 +178,7 @@ def would_separate(solved: Solved, names: Sequence[str]) -> str:
     target = next((n for n in names if n in problem.names), None)
     if forward.driven or problem.grid.parts > 1 or not len(forward.rows) or target is None:
         return ""
-    asked, fr = candidates(solved), frame(problem)
+    asked, fr = candidates(solved), _frame(solved)
     v = mixed(problem, names)
     sees = seen(problem, asked.questions, v)
     clear = np.flatnonzero(sees)
@@ -203,7 +209,7 @@ def would_tell(solved: Solved, name: str) -> str:
     problem = solved.problem
     if solved.forward.driven or problem.grid.parts > 1 or name not in problem.names:
         return ""
-    asked, fr = candidates(solved), frame(problem)
+    asked, fr = candidates(solved), _frame(solved)
     if not len(fr.free) or fr.nu == 0:
         return ""
     unit = np.zeros((1, problem.B.shape[1]))

@@ -152,6 +152,7 @@ def answered(
             problem, questions, level=strength.level,
             choose_by=str(strength.choose) if choice else "evidence",
             roughness=1 if strength.roughness == "averaged" else strength.roughness,
+            strength=choice.strength if choice and choice.criterion == "stated" else None,
         )  # fmt: skip
     else:
         answers = cautious(

@@ -359,3 +359,11 @@ def test_the_map_of_a_driven_member(tmp_path):
     np.testing.assert_allclose(
         whole.matrix() @ found.problem.d, value, rtol=1e-6, atol=1e-6 * np.abs(value).max()
     )
+
+
+def test_a_stated_strength_with_its_plain_band(tmp_path):
+    """A number for `choose` goes with the plain interval too: the estimate is that of the rung."""
+    wide = srcfit.recover(case(tmp_path, deflections(), choose=TAU))
+    plain = srcfit.recover(case(tmp_path, deflections(), choose=TAU, interval="plain"))
+    assert plain.total["value"] == pytest.approx(wide.total["value"], rel=1e-9)
+    assert plain.total["sd"] < wide.total["sd"]
