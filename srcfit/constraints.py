@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from srcfit.bands import Answers, Centre, Fit, Ground, noise_at, wary, weighed
 from srcfit.envelope import by_bounds, by_draws, draws
-from srcfit.evidence import Weighted, at_one
+from srcfit.evidence import Weighted, at_one, mean_noise, weigh
 from srcfit.laws import SLIGHT, Law, cut, laws, made, numbered, several, typical, without_source
 from srcfit.limits import Limits
 from srcfit.problem import Array, Problem, Questions
@@ -34,6 +34,10 @@ SPARE = 1e-3
 # laws that draws come from
 LAWS = 12
 TIGHT = 1e-7  # relative slack of a wall that is met
+# strict bounds reckon with a source that varies by half of STEEP times its level where it acts;
+# at walls along at least this part of the free length they may pass the band without inequalities
+STEEP, PART = 4.0, 0.03
+TINY = 1e-300
 
 
 @dataclass(frozen=True)
@@ -100,11 +104,15 @@ class Setting:
 
 @dataclass(frozen=True)
 class Band:
-    """Laws of the band: for draws, for strict bounds, and for centres without drawn steps."""
+    """Laws of the band: for draws, for strict bounds, and for centres without drawn steps.
+
+    `at_walls`: strict bounds stand by themselves, also beyond the band without inequalities.
+    """
 
     several: list[Law]
     typical: list[Law]
     plain_steps: list[Law]
+    at_walls: bool
 
 
 def constrained(
@@ -162,7 +170,8 @@ def constrained(
     if excess == 0 and _outside(s, of_band.several) < SPARE:
         return _within(free, limits), idle
     answers, held = _banded(s, free, value, of_band, level, rng, along)
-    tight = _tight(limits, value[s.rows] - limits.least, m)
+    met = _met(s, value)
+    tight = met[met.sum(axis=1) == 1].any(axis=0)
     fit = _fit(s, free.fit, value, spent)
     return replace(_within(answers, limits), fit=fit), replace(held, tight=tight, excess=excess)
 
@@ -200,15 +209,18 @@ def _band(
     """Laws of the band, at the level of the estimate `value`."""
     if ground is None:
         alone = _estimators(replace(s, inner=s.outer), None, centre, noise)
-        return Band(alone, alone, [])
-    size, outer = _level(s, value), ask(s.fr, s.outer)
+        return Band(alone, alone, [], True)
+    size, outer, noise = _level(s, value), ask(s.fr, s.outer), mean_noise(ground.averaged)
     families = wary(s.fr, ground, size, ground.drawn, spread=True)
+    ready = made(families, outer)
+    steep, at_walls = _steep(s, size, typical(ready))
+    steeper = weigh([w.spectrum for w in families], ground.sigma, steep, noise)
     plain_steps = []
     if ground.drawn.shape != ground.known.shape:
-        known = wary(s.fr, ground, size, ground.known, spread=True)
+        known = wary(s.fr, ground, steep, ground.known, spread=True)
         plain_steps = typical(made(known, ask(s.fr, s.inner)))
-    ready = made(families, outer)
-    return Band(several(ready, LAWS), typical(ready), plain_steps)
+    strict = typical(made(steeper, outer))
+    return Band(several(ready, LAWS), strict, plain_steps, at_walls)
 
 
 def _whole(s: Setting, ground: Ground, w: Weighted) -> Weighted:
@@ -237,6 +249,31 @@ def _level(s: Setting, value: Array) -> float:
     """Mean of |source| over the free cells."""
     free, weights = s.problem.grid.free, s.problem.grid.weights
     return float(np.abs(value[s.cells])[free] @ weights[free] / weights[free].sum())
+
+
+def _steep(s: Setting, size: float, cautious: Sequence[Law]) -> tuple[float, bool]:
+    """The level that strict bounds reckon with, and whether the source stands at walls.
+
+    Both are those of the most probable cautious source.
+    """
+    known, grid = s.limits, s.problem.grid
+    lengths = np.bincount(known.piece[grid.free], grid.weights[grid.free])
+    share = lengths / lengths.sum()
+    d, held, acts = len(share), 0.0, 0.0
+    for law in cautious:
+        r = reduced(law, s.on, s.on, known.walls, known.wall_least)
+        point, u, _ = most_probable(r)
+        density = np.abs(point[:d])
+        held += law.weight * float((known.walls[u > 0, :d] != 0).any(axis=0) @ share)
+        acts += law.weight * float(density**2 @ share) / max(float(density @ share), TINY)
+    return max(size, STEEP * acts), held >= PART
+
+
+def _met(s: Setting, value: Array) -> NDArray[np.bool_]:
+    """The cells of each inequality that is met, (p, m)."""
+    slack = value[s.rows] - s.limits.least
+    met = slack <= TIGHT * max(float(np.abs(slack).max(initial=0.0)), TINY)
+    return np.asarray(s.limits.touched & met[:, None])
 
 
 def _estimate(s: Setting, estimate: Sequence[Law]) -> tuple[Array, Array, float]:
@@ -306,7 +343,16 @@ def _banded(
     )
     m_0 = _centres(s, band.plain_steps) if band.plain_steps else centre
     apart = free.quantile * np.abs(centre - m_0)
-    strict = np.stack([centre - np.hypot(down, apart), centre + np.hypot(up, apart)])
+    off = free.quantile * np.maximum(np.abs(value - centre), np.abs(value - m_0))
+    around = ((centre, apart), (value, off))
+    strict = np.stack(
+        [
+            np.min([c - np.hypot(down, d) for c, d in around], axis=0),
+            np.max([c + np.hypot(up, d) for c, d in around], axis=0),
+        ]
+    )
+    if not band.at_walls:
+        strict = np.stack([np.maximum(strict[0], free.lower), np.minimum(strict[1], free.upper)])
     lower = np.minimum(np.minimum(drawn[0], strict[0]), value)
     upper = np.maximum(np.maximum(drawn[1], strict[1]), value)
     sd = np.sqrt(((points.values - value) ** 2).mean(axis=0))
@@ -348,13 +394,3 @@ def _fit(s: Setting, free: Fit, value: Array, spent: Array) -> Fit:
     hat = np.clip(free.hat - spent, 0.0, 1.0)
     left = np.where(1 - hat > ALONE, 1 - hat, np.nan)
     return replace(free, residual=residual, hat=hat, leave_one_out=residual / left)
-
-
-def _tight(limits: Limits, slack: Array, m: int) -> NDArray[np.bool_]:
-    """Cells at a wall of their own."""
-    cells = limits.rows.cells
-    alone = (cells != 0).sum(axis=1) == 1
-    met = alone & (slack <= TIGHT * max(float(np.abs(slack).max(initial=0.0)), 1e-300))
-    tight = np.zeros(m, dtype=bool)
-    tight[np.argmax(cells[met] != 0, axis=1)] = True
-    return tight

@@ -33,6 +33,8 @@ class Limits:
     ----------
     rows, least : Questions, (p,)
         On cells and columns.
+    touched : (p, m) bool
+        The cells that each inequality is about.
     coordinates : Questions
         Mean densities of pieces, then lumped parts if they have a sign: d of them.
     piece : (m,) int
@@ -47,6 +49,7 @@ class Limits:
 
     rows: Questions
     least: Array
+    touched: NDArray[np.bool_]
     coordinates: Questions
     piece: NDArray[np.intp]
     walls: Array
@@ -83,7 +86,9 @@ def limits(forward: Forward, asked: Asked, balanced: Elimination) -> Limits | No
     loads = np.eye(len(forward.columns))[lumped if source.sign != "any" else []]
     turn = -1.0 if source.sign == "nonpositive" else 1.0
     on_fine, least = _inequalities(source, fine)
-    rows, least = _rows(balanced, on_fine @ fine.means, turn * loads, least)
+    about = on_fine @ fine.means
+    touched = np.vstack([about, np.zeros((len(loads), about.shape[1]))]) != 0
+    rows, least = _rows(balanced, about, turn * loads, least)
     on_coarse, wall_least = _inequalities(source, coarse)
     means = coarse.means[coarse.free]
     coordinates, offset = _rows(balanced, means, loads, np.zeros(len(means)))
@@ -96,7 +101,7 @@ def limits(forward: Forward, asked: Asked, balanced: Elimination) -> Limits | No
         piece[grid.free] = np.argmax(means[:, grid.free] > 0, axis=0)
     low, high = _ranges(forward, asked)
     return Limits(
-        rows, least, coordinates, piece, walls,
+        rows, least, touched, coordinates, piece, walls,
         np.append(wall_least, np.zeros(len(loads))) + walls @ offset, low, high, _words(source),
     )  # fmt: skip
 
@@ -114,21 +119,28 @@ def _rows(
 
 def _inequalities(source: SourceSpec, parts: Parts) -> tuple[Array, Array]:
     """Rows over the densities of stretches, and the least that they may be."""
-    each = np.eye(len(parts.middles))[parts.free]
-    rows, least = [np.zeros((0, len(parts.middles)))], [np.zeros(0)]
+    x, each, order = parts.middles, np.eye(len(parts.middles)), np.zeros((0, len(parts.middles)))
+    stretches = [
+        np.flatnonzero((x > s.start) & (x < s.end) & parts.free)[:: 1 if s.rising else -1]
+        for s in source.monotone
+        if source.smooth
+    ]
+    for inside in stretches:
+        order = np.concatenate([order, each[inside[1:]] - each[inside[:-1]]])
+    rows, least = [order], [np.zeros(len(order))]
+    # of a stretch that rises its first bounds the others below, its last above
+    shared = sum((np.isin(np.arange(len(x)), inside) for inside in stretches), np.zeros(len(x)))
+    lowest, highest = parts.free.copy(), parts.free.copy()
+    for inside in stretches:
+        lowest[[i for i in inside[1:] if shared[i] == 1]] = False
+        highest[[i for i in inside[:-1] if shared[i] == 1]] = False
     if source.sign != "any":
-        rows.append(each if source.sign == "nonnegative" else -each)
-        least.append(np.zeros(len(each)))
+        up = source.sign == "nonnegative"
+        rows.append(each[lowest] if up else -each[highest])
+        least.append(np.zeros(len(rows[-1])))
     if source.ceiling is not None:
-        rows.append(-each)
-        least.append(np.full(len(each), -source.ceiling))
-    for stretch in source.monotone if source.smooth else ():
-        x = parts.middles
-        inside = np.flatnonzero((x > stretch.start) & (x < stretch.end))
-        steps = np.eye(len(x))[inside[1:]] - np.eye(len(x))[inside[:-1]]
-        steps = steps[(steps[:, parts.free] != 0).any(axis=1)]
-        rows.append(steps if stretch.rising else -steps)
-        least.append(np.zeros(len(steps)))
+        rows.append(-each[highest])
+        least.append(np.full(len(rows[-1]), -source.ceiling))
     return np.concatenate(rows), np.concatenate(least)
 
 

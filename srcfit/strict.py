@@ -58,7 +58,8 @@ def reduced(law: Law, asked: Numbers, on: Numbers, walls: Array, least: Array) -
     size = np.sqrt(np.maximum(law.variance[on], np.finfo(float).tiny))
     lam, V = eigh(law.between(on, on) / np.outer(size, size), check_finite=False)
     lam = np.maximum(lam, ROUNDING * lam[-1])
-    factor = size[:, None] * V * np.sqrt(lam)
+    # the symmetric root: the sign of an eigenvector changes no draw
+    factor = size[:, None] * (V * np.sqrt(lam)) @ V.T
     slope = law.between(asked, on) / size @ (V / lam) @ V.T / size
     S = factor @ factor.T
     told = ((slope @ factor) ** 2).sum(axis=1)
@@ -92,11 +93,13 @@ def inside(r: Reduced) -> Array:
 
 
 def most_probable(r: Reduced) -> tuple[Array, Array, float]:
-    """Values (q,) at the most probable point inside the walls, its multipliers, its distance."""
+    """Values (q,) at the most probable point inside the walls, its multipliers (w,), its distance.
+
+    The distance from the mean is squared, in standard deviations.
+    """
     M = r.walls @ r.S @ r.walls.T
     u = multipliers(M, r.walls @ r.centre - r.least)
-    pull = r.walls.T @ u
-    return r.mean + r.slope @ (r.S @ pull), pull, float(pull @ r.S @ pull)
+    return r.mean + r.slope @ (r.S @ (r.walls.T @ u)), u, float(u @ M @ u)
 
 
 def bounds(r: Reduced, which: Numbers, quantile: float) -> tuple[Array, Array, Array]:
@@ -115,8 +118,8 @@ def bounds(r: Reduced, which: Numbers, quantile: float) -> tuple[Array, Array, A
     centre, up, down : (k,)
         Value at the most probable point, and how far the bounds are above and below it.
     """
-    value, pull, least = most_probable(r)
-    centre = value[which]
+    value, held, least = most_probable(r)
+    centre, pull = value[which], r.walls.T @ held
     slope = np.concatenate([r.slope[which], -r.slope[which]])
     rest = np.tile(r.rest[which], 2)
     sd = np.sqrt(((slope @ r.factor) ** 2).sum(axis=1) + rest)
@@ -155,7 +158,6 @@ def scattered(
 ) -> Array:  # fmt: skip
     """Draws of all questions (..., q) from draws of the coordinates (..., n, d)."""
     values = r.mean + (points - r.centre) @ r.slope.T
-    some = np.flatnonzero(r.rest)
-    noise = rng.normal(size=(*values.shape[:-1], len(some)))
-    values[..., some] += noise * np.sqrt(r.rest[some]) * scale[:, None]
-    return np.asarray(values)
+    # noise for every question, so that which of them have a remainder changes no other's draws
+    noise = rng.normal(size=values.shape)
+    return np.asarray(values + noise * np.sqrt(r.rest) * scale[:, None])
