@@ -244,8 +244,12 @@ def _solved(
     answers, ladder, choices, choice = answered(
         both[0], problem, questions, criteria, asked.level
     )  # fmt: skip
+    # what is declared about the sources does not hold for their difference
+    case = both[0].case
+    source = replace(case.source, sign="any", ceiling=None, monotone=(), total=None, known=())
+    forward = replace(both[0], case=replace(case, source=source))
     return Joint(
-        Solved(both[0], problem, Noise.given(*noise[0]), joined.asked, answers, ladder, choices,
+        Solved(forward, problem, Noise.given(*noise[0]), joined.asked, answers, ladder, choices,
                choice),
         joined.nuisances, joined.spread,
     )  # fmt: skip

@@ -8,6 +8,8 @@ from typing import Any
 import numpy as np
 
 from srcfit.answers import peak
+from srcfit.readingsalone import ends
+from srcfit.readingsalone import facts as alone_facts
 from srcfit.results import Shown, known, number_map, position_scale, reading_units
 from srcfit.solve import Solved, strength_unit
 from srcfit.unknowns import place_text, response_unit
@@ -31,6 +33,7 @@ def facts(
         )
     ]  # fmt: skip
     zones = zone_facts(solved, shown)
+    total: dict[str, Any] = number_map(shown.numbers("total")[0]) | ends(shown.alone, 0)
     readings = forward.readings
     return {
         "schema": 1,
@@ -43,7 +46,7 @@ def facts(
         "strength": _strength_facts(solved)[0],
         "noise": noise_facts(solved, fit["chi_square"], fit["dof"]),
         "fit": fit,
-        "total": number_map(shown.numbers("total")[0]),
+        "total": total,
         "zones": zones,
         "background": next((number_map(n) for n in shown.numbers("background")), None),
         "peak": peak_facts(solved, shown),
@@ -59,6 +62,7 @@ def facts(
         "simultaneous": {
             "factor": known(shown.factor), "pointwise": known(solved.answers.quantile),
         },
+        "alone": alone_facts(shown.alone, case, total, zones),
         "limit": limit_facts(solved, shown),
         "detection": detection_facts(solved, [*lumped, *zones]),
         "findings": list(findings),
@@ -156,9 +160,13 @@ def zone_facts(solved: Solved, shown: Shown) -> list[dict[str, Any]]:
         {"name": z.name, "from": z.start * scale, "to": z.end * scale}
         | number_map(n)
         | {"data_share": share}
-        for z, n, share in zip(
-            solved.forward.case.source.zones, shown.numbers("zones"), shown.shares("zones"),
-            strict=True,
+        | ends(shown.alone, i)
+        for i, (z, n, share) in enumerate(
+            zip(
+                solved.forward.case.source.zones, shown.numbers("zones"), shown.shares("zones"),
+                strict=True,
+            ),
+            start=1,
         )
     ]  # fmt: skip
 

@@ -12,6 +12,7 @@ from srcfit.answers import per, section_forces, section_places, zone_sizes
 from srcfit.criteria import CRITERIA
 from srcfit.member import Array
 from srcfit.problem import Questions
+from srcfit.readingsalone import ReadingsAlone, readings_alone
 from srcfit.recovery import Number
 from srcfit.simultaneous import factor
 from srcfit.solve import Solved, strength_unit
@@ -39,7 +40,7 @@ class Shown:
         self.imaginary: Array = np.imag(value)
         self.sd: Array = sd * np.abs(asked.factor)
         self.lower, self.upper = _interval(solved, np.sqrt(extra_variance), self.value)
-        self._solved, self._reach = solved, _reach(solved)
+        self._solved, self._reach, self._extra = solved, _reach(solved), extra_variance
         self.share = -asked.widest(-a.data_share)
         self._blocks = solved.asked.blocks
 
@@ -79,6 +80,12 @@ class Shown:
         lower = value - ratio * (value - self.lower[where])
         upper = value + ratio * (self.upper[where] - value)
         return np.maximum(lower, least), np.minimum(upper, most)
+
+    @cached_property
+    def alone(self) -> ReadingsAlone:
+        """What the readings alone say of the total and of each wide zone."""
+        _, _, lower, upper, _ = self.block("cells")
+        return readings_alone(self._solved, self._extra, lower, upper)
 
     def _beside(self, where: slice) -> tuple[Array, Array]:
         """Ends of the intervals of imaginary parts: as wide as those of the real parts."""
@@ -216,6 +223,10 @@ def zones_table(solved: Solved, shown: Shown) -> pd.DataFrame:
         | shown.twin("zones", f"value_imag [{T}]")
         | shown.twin_bounds("zones", f"lower_imag [{T}]", f"upper_imag [{T}]")
         | shown.twin("zones", f"mean_imag [{U}]", per_size / zone_sizes(case))
+        | {
+            f"data_{end} [{T}]": np.where(np.isfinite(v), v, np.nan)[1:]
+            for end, v in (("lower", shown.alone.lower), ("upper", shown.alone.upper))
+        }
     )
 
 

@@ -100,6 +100,7 @@ def recovery_text(
         _opening(summary),
         _numbers(summary),
         section("Peak", _everywhere(summary)),
+        _alone(summary),
         section("Limit", _limit(summary, limit_unit)),
         section("Balance", balance_text(balance, summary["units"]["total"]) if balance else ""),
         section("Findings", findings_text(summary["findings"])),
@@ -215,6 +216,15 @@ def _everywhere(summary: Summary) -> str:
     units = summary["units"]
     told = peak_sentence(summary, units["source"], units["position"])
     return bullets([told]) if told else ""
+
+
+def _alone(summary: Summary) -> str:
+    """What the readings say without the prior."""
+    alone = summary.get("alone") or {}
+    if not alone.get("told"):
+        return ""
+    lead = textwrap.fill(f"{alone['assumed']}, allow", WIDTH)
+    return section(lead, bullets(alone["told"]))
 
 
 def _limit(summary: Summary, unit: str) -> str:

@@ -316,7 +316,17 @@ def numbers(recovery: Recovery) -> str:
         "<p>Standard uncertainties and intervals are those of the cautious band; they are not "
         "additive, because neighbouring zones share their doubt.</p>"
     )
-    return section("numbers", "Numbers", note + "".join(parts))
+    return section("numbers", "Numbers", note + "".join(parts) + _alone(recovery))
+
+
+def _alone(recovery: Recovery) -> str:
+    """How much of the answer the readings give without the prior."""
+    alone = recovery.facts.get("alone") or {}
+    if not alone.get("told"):
+        return ""
+    items = "".join(f"<li>{shown(clean(t))}</li>" for t in alone["told"])
+    lead = f"<h3>Without the prior</h3><p>{shown(clean(alone['assumed']))}, allow:</p>"
+    return f"{lead}<ul>{items}</ul>"
 
 
 def assumptions(recovery: Recovery) -> str:
