@@ -70,12 +70,11 @@ class Joint:
 
 
 def told(
-    found: Joint, extra: Array, missed: Array, alone: Sequence[Solved], pairing: Pairing,
-    asked: Agreed, seed: np.random.SeedSequence,
+    found: Joint, extra: Array, missed: Array, alone: Sequence[Solved], single: Sequence[Shown],
+    pairing: Pairing, asked: Agreed, seed: np.random.SeedSequence,
 ) -> tuple[pd.DataFrame, pd.DataFrame, pd.DataFrame, dict[str, Any]]:  # fmt: skip
     """Tables of the change, of the zones and of the readings, and the summary."""
     solved, shown = found.solved, Shown(found.solved, extra)
-    single = [Shown(s, np.zeros(len(s.answers.value))) for s in alone]
     cases = alone[0].forward.case, alone[1].forward.case
     source, units = cases[0].source, _units(cases[0])
     beyond = missed * np.abs(solved.asked.factor)

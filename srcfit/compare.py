@@ -27,7 +27,9 @@ from srcfit.places import solve
 from srcfit.problem import Questions
 from srcfit.readings import read
 from srcfit.readings.model import Readings
+from srcfit.results import Shown
 from srcfit.robust import Noise
+from srcfit.shares import Properties, properties
 from srcfit.solve import Solved, answered
 from srcfit.units import quantity
 
@@ -166,7 +168,7 @@ def compare(
         cases = _in_units_of(a, b)
         both = tuple(read(c) for c in cases) if readings is None else readings
         seed = rng if isinstance(rng, np.random.SeedSequence) else np.random.SeedSequence(rng)
-        alone = tuple(solve(c, r, criteria=False, rng=seed)
+        alone = tuple(solve(c, r, rng=seed)
                       for c, r in zip(cases, both, strict=True))  # fmt: skip
         first, second = (s.forward for s in alone)
         check_common(first, second, common)
@@ -182,7 +184,10 @@ def compare(
         found = _solved((first, second), noise, pairing, asked)
         extra = _properties(found, cases, both, noise, pairing, asked)
         missed = _missed(found, extra, asked)
-        return Comparison(cases, *told(found, extra, missed, alone, pairing, asked, seed))
+        single = [Shown(s, properties(s, seed).variance) for s in alone]
+        return Comparison(
+            cases, *told(found, extra, missed, alone, single, pairing, asked, seed)
+        )  # fmt: skip
 
 
 def _in_units_of(a: Case, b: Case) -> tuple[Case, Case]:
@@ -263,19 +268,26 @@ def _properties(
 
     By central differences, as in a recovery; what they do to both campaigns alike cancels.
     """
-    total = np.zeros(len(found.solved.answers.value))
+    shift, bend = {}, {}
+    centre = _whole(found.solved)
     for key in cases[0].member.uncertainty:
-        moved = []
-        for side in (1.0, -1.0):
-            both = [build(replace(c, member=vary(c.member, key, side)), r)
-                    for c, r in zip(cases, readings, strict=True)]  # fmt: skip
-            solved = _solved(both, noise, pairing, asked, criteria=False).solved
-            constant = solved.asked.constant
-            known_parts = [constant.real, constant.imag][: solved.asked.parts]
-            moved.append(solved.answers.value + np.concatenate(known_parts))
-        shift = (moved[0] - moved[1]) / 2
-        total += np.where(np.isfinite(shift), shift, 0.0) ** 2
-    return total
+        up, down = (
+            _whole(_solved(
+                [build(replace(c, member=vary(c.member, key, side)), r)
+                 for c, r in zip(cases, readings, strict=True)],
+                noise, pairing, asked, criteria=False,
+            ).solved)
+            for side in (1.0, -1.0)
+        )  # fmt: skip
+        shift[key], bend[key] = (up - down) / 2, up + down - 2 * centre
+    return Properties(shift, bend, len(centre)).variance
+
+
+def _whole(solved: Solved) -> Array:
+    """Answers in SI, known parts included."""
+    constant = solved.asked.constant
+    parts = [constant.real, constant.imag][: solved.asked.parts]
+    return np.asarray(solved.answers.value + np.concatenate(parts))
 
 
 def _missed(found: Joint, extra: Array, asked: Agreed) -> Array:

@@ -458,3 +458,15 @@ def test_the_text_names_what_was_done(tmp_path):
     text = comparison_text(found.summary())
     for words in ("15 common sensors, differenced", "common", "offset:level", "correlated by 0.5"):
         assert words in text
+
+
+def test_beside_the_change_stand_the_recoveries_own_numbers(tmp_path):
+    member = {**MEMBER, "uncertainty": {"foundation": "5 %"}}
+    cases = [case(tmp_path, n, readings(c, s), member=member)
+             for n, c, s in (("a", 0.0, 1), ("b", 30e3, 2))]  # fmt: skip
+    found = srcfit.compare(*cases).facts
+    for key, own in zip("ab", (srcfit.recover(c).facts for c in cases), strict=True):
+        for part, whole in ((found["total"], own["total"]),
+                            *zip(found["zones"], own["zones"], strict=True)):  # fmt: skip
+            for name in ("value", "sd", "lower", "upper"):
+                assert part[key][name] == pytest.approx(whole[name], rel=1e-9)
