@@ -22,27 +22,35 @@ MATTERS = 0.05  # share of a variance from which on the bend of an effect is wor
 
 @dataclass(frozen=True)
 class Properties:
-    """What uncertain properties add to each answer, by linearisation.
+    """What uncertain properties add to each answer, by central differences.
 
     Attributes
     ----------
     shift : mapping property -> (q,)
-        Change of each answer (SI) over one standard uncertainty, by central differences.
+        Change of each answer (SI) over one standard uncertainty.
     bend : mapping property -> (q,)
-        How far the changes in the two directions differ, over their mean.
+        Second difference: how far the changes in the two directions differ.
+    count : int
+        q.
     """
 
     shift: Mapping[str, Array]
     bend: Mapping[str, Array]
     count: int
 
+    def added(self, key: str) -> Array:
+        """Variance (q,) that one property adds; 0 where an answer is undetermined.
+
+        Mean square of the changes in the two directions, shift**2 + bend**2 / 4: the square of
+        the linear effect, and no less where an effect turns round. Source: the Gauss-Hermite rule
+        of two places (Abramowitz & Stegun, 25.4.46), for a normal property.
+        """
+        return np.asarray(np.nan_to_num(self.shift[key] ** 2 + self.bend[key] ** 2 / 4))
+
     @property
     def variance(self) -> Array:
-        """Sum of the squares, (q,); 0 where an answer is undetermined."""
-        total = np.zeros(self.count)
-        for shift in self.shift.values():
-            total += np.nan_to_num(shift) ** 2
-        return total
+        """Sum over the properties, (q,)."""
+        return sum((self.added(key) for key in self.shift), np.zeros(self.count))
 
 
 def properties(solved: Solved, rng: np.random.SeedSequence) -> Properties:
@@ -70,9 +78,7 @@ def properties(solved: Solved, rng: np.random.SeedSequence) -> Properties:
             for side in (1.0, -1.0)
         )
         shift[key] = (up - down) / 2
-        size = np.abs(shift[key])
-        off = np.abs(up + down - 2 * _whole(centre))
-        bend[key] = np.divide(off, size, out=np.zeros(len(off)), where=size > 0)
+        bend[key] = up + down - 2 * _whole(centre)
     return Properties(shift, bend, len(solved.answers.value))
 
 
@@ -90,6 +96,7 @@ class Share:
 
     `smoothing` is what is neither noise nor a property: what was assumed about the source
     beforehand, the distance between the estimate and the cautious one, and a doubtful place.
+    `bend` is the second over the first difference of each property's effect.
     """
 
     zone: str | None
@@ -133,11 +140,15 @@ def shares(
                 name,
                 heard / whole,
                 (float(own[p, i]) - heard) / whole,
-                {k: float(np.nan_to_num(s[row]) ** 2) / whole for k, s in known.shift.items()},
-                {k: float(b[row]) for k, b in known.bend.items()},
+                {key: float(known.added(key)[row]) / whole for key in known.shift},
+                {key: _ratio(known.bend[key][row], known.shift[key][row]) for key in known.shift},
             )
         )
     return found
+
+
+def _ratio(bend: float, shift: float) -> float:
+    return abs(float(bend / shift)) if shift else 0.0
 
 
 def findings(found: list[Share]) -> list[Finding]:
@@ -157,13 +168,14 @@ def findings(found: list[Share]) -> list[Finding]:
             )  # fmt: skip
         bent = [(s.bend[key], _named(s)) for s in found if s.properties[key] > MATTERS]
         worst, name = max(bent, default=(0.0, ""))
+        how = f"bends by {worst:.0%} over" if worst < 1 else "turns round within"
         if worst > BENDS:
             told.append(
                 Finding(
                     "property-not-linear", "caution",
-                    f"The effect of the uncertainty of {key} on {name} bends by {worst:.0%} over "
-                    "one standard deviation: its share of the intervals is rough; try the case at "
-                    "both ends of it.",
+                    f"The effect of the uncertainty of {key} on {name} {how} one standard "
+                    "deviation: its share of the intervals is rough; try the case at both ends of "
+                    "it.",
                 )
             )  # fmt: skip
     return told

@@ -25,6 +25,7 @@ from srcfit.solvers import SOLVERS
 from srcfit.whitening import linked_rows, parts_of
 
 BLIND = 0.2  # part of its noise that the mean level must move a reading by
+MANY = 3  # heavy readings beside the heaviest that no longer are a matter of single readings
 LEAST = 1e-9  # part of a cell's density that is rounding
 DECADES = {"weaker": -1.0, "stronger": 1.0}
 
@@ -295,8 +296,17 @@ def _heavy(solved: Solved, told: Told, total: Number) -> list[Finding]:
         f"more than the half-width of its interval ({half:.3g} {unit})"
     )
     others = [int(i) for i in heavy if i != worst]
+    if len(others) >= MANY:
+        text = (
+            f"{len(heavy)} readings move the total by more than the half-width of its interval "
+            f"({half:.3g} {unit}) each, most of all {_lines(solved, [int(worst)])} (by "
+            f"{abs(shift[worst]):.3g} {unit}): they contradict each other, so the noise is larger "
+            "than stated or the member is not as described; do not use the total before that is "
+            "mended."
+        )
+        return [Finding("influential-reading", "caution", text)]
     if others:
-        first += f"; so do {len(others)} others ({_lines(solved, others)})"
+        first += f"; so does {_lines(solved, others)}"
     return [
         Finding(
             "influential-reading", "caution",

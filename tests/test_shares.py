@@ -104,7 +104,17 @@ def test_a_bent_effect_is_said_where_it_matters():
     share = shares.Share(None, 0.5, 0.1, {"k": 0.35, "h": 0.01}, {"k": 0.5, "h": 3.0})
     told = shares.findings([share])
     assert [f.code for f in told] == ["property-not-linear"]
-    assert "of k on the total bends by 50%" in told[0].sentence
+    assert "of k on the total bends by 50% over one standard deviation" in told[0].sentence
+    turned = shares.findings([replace(share, bend={"k": 2.0, "h": 0.0})])
+    assert "of k on the total turns round within one standard" in turned[0].sentence
+
+
+def test_an_effect_that_turns_round_adds_its_variance():
+    """y = y0 - k abs(z), z normal: its mean square about y0 is that of both directions."""
+    k = 2.0
+    known = shares.Properties({"k": np.array([0.0])}, {"k": np.array([-2 * k])}, 1)
+    z = np.random.default_rng(3).normal(size=400_000)
+    assert known.variance[0] == pytest.approx(np.mean((k * np.abs(z)) ** 2), rel=0.02)
 
 
 def test_a_driven_member_has_its_shares(tmp_path):

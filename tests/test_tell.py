@@ -216,19 +216,31 @@ def test_noise_of_the_estimate_by_repeated_readings(tmp_path):
     np.testing.assert_allclose(seen, np.sqrt(told.noise[0]), rtol=3.5 / np.sqrt(800))
 
 
-def test_a_gross_reading_is_named(tmp_path):
-    """Four readings of a cantilever, one of them wrong: file and line, and what it would be."""
-    places = np.array([1.0, 4.0, 8.0, 11.0])
-    w = srcfit.respond(srcfit.make_member(MEMBER), places, load)
-    w[2] += 8e-3
+def test_a_reading_that_the_total_hangs_on_is_named(tmp_path):
+    """One reading far out on a beam read beside its support: file and line, what it would be."""
+    places = np.array([0.2, 0.3, 0.4, 0.5, 4.0])
+    w = srcfit.respond(srcfit.make_member(MEMBER), places, lambda x: 2e3 + 0 * x)
+    w += 5e-5 * np.array([2.0, 1.0, 1.5, 1.0, -1.0])  # within two sd each
     source = {"smooth": False, "background": "unknown"}
-    given = case(tmp_path, w, places=places, source=source)
-    whole = srcfit.recover(given)
-    told = [f for f in whole.findings if f["code"] == "influential-reading"]
+    whole = srcfit.recover(case(tmp_path, w, places=places, source=source))
+    told = [f["sentence"] for f in whole.findings if f["code"] == "influential-reading"]
     assert len(told) == 1
-    assert "w.csv line 4 alone moves the total" in told[0]["sentence"]
-    less = srcfit.recover(case(tmp_path, w, places=places, source=source, without=[4]))
-    assert f"{less.total['value']:.4g} kN without it" in told[0]["sentence"]
+    assert "w.csv line 6 alone moves the total" in told[0]
+    less = srcfit.recover(case(tmp_path, w, places=places, source=source, without=[6]))
+    assert f"{less.total['value']:.4g} kN without it" in told[0]
+
+
+def test_readings_that_contradict_each_other(tmp_path):
+    """Noise stated twenty times too small: no reading is singled out, the model is."""
+    places = np.linspace(0.5, 11.5, 9)
+    w = srcfit.respond(srcfit.make_member(MEMBER), places, lambda x: 2e3 + 0 * x)
+    w += 1e-3 * np.random.default_rng(5).normal(size=9)
+    source = {"smooth": False, "background": "unknown"}
+    found = srcfit.recover(case(tmp_path, w, places=places, source=source))
+    told = [f["sentence"] for f in found.findings if f["code"] == "influential-reading"]
+    assert len(told) == 1
+    assert "readings move the total by more than the half-width" in told[0]
+    assert "they contradict each other" in told[0]
 
 
 def test_a_zone_finer_than_the_resolution(tmp_path):
