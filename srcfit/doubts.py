@@ -93,7 +93,9 @@ def _totals(solved: Solved, shown: Shown, weight: Array, when: str) -> str:
     """What the total would be with other weights; empty where there is none."""
     noise = replace(solved.noise, weight=weight)
     other = invert(solved.forward, False, np.random.SeedSequence(0), noise)
-    both = [s.numbers("total")[0] for s in (shown, Shown(other, np.zeros(len(shown.value))))]
+    both = [
+        s.numbers("total")[0] for s in (shown, Shown(other, np.zeros(len(other.answers.value))))
+    ]
     unit = solved.forward.case.source.total_unit
     here, there = (plus_minus(number_map(n), unit) for n in both)
     if UNDETERMINED in (here, there):

@@ -184,6 +184,12 @@ def _score(
     return volume - 0.5 * (energy / s2 + nu * np.log(s2) + k), s2
 
 
+def _larger(v: View, stated: bool) -> Array:
+    """Log restricted likelihood (t,) without outliers, under a noise no smaller than stated."""
+    s2 = np.maximum(v.energy / v.fr.nu, 1.0 if stated else np.finfo(float).tiny)
+    return np.asarray(v.volume - 0.5 * (v.energy / s2 + v.fr.nu * np.log(s2)))
+
+
 def _cost(n: int, nu: int, most: int, stated: bool) -> Array:
     """What each pick must gain (most,): as much as one that lies at the bound of `gross`."""
     k = np.arange(1, most + 1)
@@ -209,7 +215,8 @@ def propose(problem: Problem, links: Links) -> tuple[Array, Rows]:
     if most < 1:
         return nothing
     costs = np.append(0.0, np.cumsum(_cost(n, fr.nu, most, problem.stated)))
-    best = max(float(_score(v.volume, v.energy, fr.nu, 0, problem.stated)[0].max()) for v in found)
+    # the rival of all suspicion: no outlier at all, but a noise larger than stated
+    best = max(float(_larger(v, problem.stated).max()) for v in found)
     U, chosen = columns.seen(fr.U), None
     for v in found:
         g = columns.seen(v.residual)
