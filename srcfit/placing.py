@@ -32,6 +32,8 @@ Numbers = NDArray[np.intp]
 # columns that the others explain but for this part of their square are not seen
 UNSEEN = 1e-10
 TINY = 1e-300
+# correlations beyond this are taken for it; probabilities below that are rounding
+LIKE, FAINT = 1 - 1e-12, 1e-13
 
 
 @dataclass(frozen=True)
@@ -172,10 +174,32 @@ def _gain(
         gain = 0.5 * (volume + fr.nu * np.log(energy) - (fr.nu - k) * np.log(left))
     if sign:
         noise = 1.0 if fr.problem.stated else energy / fr.nu
-        variance = np.diagonal(np.linalg.inv(seen), axis1=2, axis2=3)
-        spread = np.sqrt(variance * np.reshape(noise, (1, -1, 1)))
-        gain = gain + log_ndtr(sign * told / spread).sum(axis=2)
+        covariance = np.linalg.inv(seen)
+        size = np.sqrt(np.diagonal(covariance, axis1=2, axis2=3))
+        level = sign * told / (size * np.sqrt(np.reshape(noise, (1, -1, 1))))
+        if k == 1:
+            gain = gain + log_ndtr(level[:, :, 0])
+        else:
+            rho = covariance[:, :, 0, 1] / (size[:, :, 0] * size[:, :, 1])
+            gain = gain + log_both_below(level[:, :, 0], level[:, :, 1], rho)
     return np.where(bad[:, None], -np.inf, gain)
+
+
+def log_both_below(h: Array, k: Array, rho: Array) -> Array:
+    """Logarithm of the probability that two normal numbers of correlation rho are below h and k.
+
+    Where it is below rounding, the product of both probabilities takes its place.
+    Source: Owen (1956), Ann. Math. Stat. 27, 1075.
+    """
+    from scipy.special import log_ndtr, ndtr, owens_t
+
+    h, k = (np.where(np.abs(x) < TINY, TINY, x) for x in (h, k))
+    rho = np.clip(rho, -LIKE, LIKE)
+    root = np.sqrt(1 - rho**2)
+    both = (ndtr(h) + ndtr(k)) / 2 - np.where(h * k < 0, 0.5, 0.0)
+    both = both - owens_t(h, (k - rho * h) / (h * root)) - owens_t(k, (h - rho * k) / (k * root))
+    product = log_ndtr(h) + log_ndtr(k)
+    return np.asarray(np.where(both > FAINT, np.log(np.maximum(both, FAINT)), product))
 
 
 def place_of(

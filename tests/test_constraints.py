@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 
+import cvxpy
 import numpy as np
 import pytest
 import referee
@@ -19,8 +20,6 @@ from srcfit.priors import factor
 from srcfit.problem import Grid, Problem, Questions
 from srcfit.solvers import SOLVERS, nonnegative
 from srcfit.solvers.nonnegative import many, missed, multipliers
-
-cvxpy = pytest.importorskip("cvxpy")
 
 CELLS, SEED = 40, np.random.SeedSequence(5)
 FALLING = Monotone(0.3, 1.0, rising=False)
