@@ -32,6 +32,8 @@ SURE, LEAST = 0.001, 3.5
 MARGIN = 3.0
 # no more than this part of the readings can be gross
 PART = 0.25
+# picks in a row that gain nothing before a path is given up
+VAIN = 4
 # median of chi-square with one degree of freedom
 CHI = 0.4549364231195724
 
@@ -199,10 +201,11 @@ def _cost(n: int, nu: int, most: int, stated: bool) -> Array:
     return np.asarray(0.5 * nu * np.log((nu - k + c2) / (nu - k + 1)) - 0.5 * np.log(c2))
 
 
-def propose(problem: Problem, links: Links) -> tuple[Array, Rows]:
+def propose(problem: Problem, links: Links, sign: int = 0) -> tuple[Array, Rows]:
     """Squared distance of each row that is suspected (0 of all others), and the unsure rows.
 
-    Distances are in units of the noise's variance.
+    `sign`: 1 or -1 where the source is known to have no other; then none is to blame for a
+    misfit that would take the other. Distances are in units of the noise's variance.
 
     Every rung of every family is asked; the best explanation of all rows wins.
     """
@@ -221,8 +224,11 @@ def propose(problem: Problem, links: Links) -> tuple[Array, Rows]:
     for v in found:
         g = columns.seen(v.residual)
         q = v.sizes(U, columns.seen(v.Z), squares)
-        for at in _promising(v, g**2 / q, costs, best, problem.stated):
-            path = _pursue(problem, columns, v, int(at), g[:, at], q[:, at], most)
+        hopes = _hopes(v, g**2 / q, costs, problem.stated)
+        for at in np.argsort(-hopes):
+            if hopes[at] <= best:
+                break
+            path = _pursue(problem, columns, v, int(at), g[:, at], q[:, at], costs, sign)
             scores, s2 = _scores(path, fr.nu, costs, problem.stated)
             k = int(np.argmax(np.where(_gross(path, gross(n) ** 2), scores, -np.inf)))
             if k and scores[k] > best:
@@ -251,8 +257,11 @@ def _gross(path: Path, bound: float) -> Mask:
     return np.asarray(least > bound * np.array(path.common))
 
 
-def _promising(v: View, t2: Array, costs: Array, best: float, stated: bool) -> Rows:
-    """Rungs at which the farthest readings, were they independent, could beat the best score."""
+def _hopes(v: View, t2: Array, costs: Array, stated: bool) -> Array:
+    """Best score (t,) that the farthest readings could reach, were they independent.
+
+    Neighbouring rungs tell much the same: all but every third are -inf.
+    """
     most = len(costs) - 1
     top = -np.sort(-t2, axis=0)[:most]
     k = np.arange(most + 1)[:, None]
@@ -262,13 +271,15 @@ def _promising(v: View, t2: Array, costs: Array, best: float, stated: bool) -> R
     scores, s2 = _score(v.volume, left, v.fr.nu, k, stated)
     logs = np.concatenate([none, np.cumsum(np.log(np.maximum(top, 1e-300)), axis=0)])
     scores = scores - 0.5 * (logs - k * np.log(s2)) - costs[:, None]
-    return np.flatnonzero(scores[1:].max(axis=0) > best)
+    third = np.arange(t2.shape[1]) % 3 == 0
+    return np.asarray(np.where(third, scores[1:].max(axis=0), -np.inf))
 
 
 def _pursue(
-    problem: Problem, columns: Columns, v: View, at: int, g: Array, q: Array, most: int
-) -> Path:
-    """Pick columns of readings and of narrow sources at one rung until nothing is gross."""
+    problem: Problem, columns: Columns, v: View, at: int, g: Array, q: Array, costs: Array,
+    sign: int,
+) -> Path:  # fmt: skip
+    """Pick columns of readings and of narrow sources at one rung until nothing is gained."""
     n, rows = len(g), len(problem.d)
     A = problem.A[:, problem.grid.unknown]
     norms = np.linalg.norm(A, axis=0)
@@ -281,8 +292,9 @@ def _pursue(
         [_common(g, q, floor)],
     )  # fmt: skip
     bound = gross(n) ** 2
-    while len(path.picks) < most:
+    while len(path.picks) < len(costs) - 1:
         t2, s2 = path.g**2 / path.q, path.far**2 / path.wide
+        s2[sign * path.far < 0] = 0.0
         i, j = int(np.argmax(t2)), int(np.argmax(s2))
         best = max(float(t2[i]), float(s2[j]))
         if best <= bound * floor or path.energy[-1] <= 1e-9 * path.energy[0]:
@@ -305,6 +317,9 @@ def _pursue(
                 path.unsure.append((len(path.picks), row))
             _take(path, columns, A, lifted, -1, float(path.far[j]), float(path.wide[j]))
         path.common.append(_common(path.g, path.q, floor))
+        scores = _scores(path, v.fr.nu, costs, problem.stated)[0]
+        if len(scores) - 1 - int(np.argmax(scores)) >= VAIN:
+            break
     return path
 
 
@@ -317,8 +332,9 @@ def _common(g: Array, q: Array, floor: float) -> float:
 def _lifted(path: Path, column: Array) -> Array:
     """P c with all that was picked before taken out."""
     out = path.view.times(column, path.at)
-    for b in path.basis:
-        out = out - b * (b @ column)
+    if path.basis:
+        basis = np.array(path.basis)
+        out = out - (basis @ column) @ basis
     return out
 
 

@@ -149,10 +149,13 @@ def _doubt(forward: Forward, sd: Array, lag: Array, balanced: Elimination) -> Do
         problem = whitened(forward, sd, lag, balanced, weight)
         return problem, linked_rows(forward, links(forward, lag, weight))
 
-    return doubt(given, parts_of(forward)[0], len(sd))
+    sign = {"nonnegative": 1, "nonpositive": -1}.get(forward.case.source.sign, 0)
+    return doubt(given, parts_of(forward)[0], len(sd), 0 if forward.driven else sign)
 
 
-def doubt(given: Callable[[Array], tuple[Problem, Links]], number: Rows, n: int) -> Doubt:
+def doubt(
+    given: Callable[[Array], tuple[Problem, Links]], number: Rows, n: int, sign: int = 0
+) -> Doubt:
     """Weights of n readings.
 
     Parameters
@@ -161,8 +164,10 @@ def doubt(given: Callable[[Array], tuple[Problem, Links]], number: Rows, n: int)
         Problem and links of its rows for (n,) weights.
     number : (rows,) int
         Reading of each row.
+    sign : {1, 0, -1}
+        The only sign that the source may have; 0 where it may have either.
     """
-    distance, far = propose(*given(np.ones(n)))
+    distance, far = propose(*given(np.ones(n)), sign)
     unsure, weight = np.zeros(n, dtype=bool), np.ones(n)
     unsure[number[far]] = True
     np.minimum.at(weight, number, 1 / np.maximum(distance, 1.0))
