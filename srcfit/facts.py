@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 
 from srcfit.answers import peak
+from srcfit.member import Array
 from srcfit.readingsalone import ends
 from srcfit.readingsalone import facts as alone_facts
 from srcfit.results import Shown, known, number_map, position_scale, reading_units
@@ -195,6 +196,21 @@ def peak_facts(solved: Solved, shown: Shown) -> dict[str, Any] | None:
     found = peak(x, value, lower, upper, grid.free, twin)
     if found is None:
         return None
-    whole = peak(x, value, *shown.everywhere(), grid.free, twin)
-    kept = ("lower", "upper", "position_lower", "position_upper")
-    return found | {"joint": None if whole is None else {k: whole[k] for k in kept}}
+    return found | {"joint": _joint(solved, shown, x, found["value"])}
+
+
+def _joint(solved: Solved, shown: Shown, x: Array, value: float) -> dict[str, float] | None:
+    """Interval of the size and places of the peak that hold together, each at half the error."""
+    level, grid = solved.forward.case.strength.level, solved.forward.grid
+    estimate, twin = shown.block("cells")[0], shown.twin("cells", "imaginary").get("imaginary")
+    each = (1 + level) / 2
+    whole = peak(x, estimate, *shown.everywhere(each), grid.free, twin)
+    if whole is None:
+        return None
+    rivals = x[shown.rivals(-1.0 if value < 0 else 1.0, each) & grid.free]
+    # the band that bounds the size bounds the place too: the place keeps to both
+    return {
+        "lower": whole["lower"], "upper": whole["upper"],
+        "position_lower": max(float(rivals.min()), whole["position_lower"]),
+        "position_upper": min(float(rivals.max()), whole["position_upper"]),
+    }  # fmt: skip

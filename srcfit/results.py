@@ -7,6 +7,7 @@ from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from srcfit.answers import per, section_forces, section_places, zone_sizes
 from srcfit.criteria import CRITERIA
@@ -14,10 +15,10 @@ from srcfit.member import Array
 from srcfit.problem import Questions
 from srcfit.readingsalone import ReadingsAlone, readings_alone
 from srcfit.recovery import Number
-from srcfit.simultaneous import factor
+from srcfit.simultaneous import Together, correlations
 from srcfit.solve import Solved, strength_unit
 from srcfit.state import Matrix
-from srcfit.units import factor as unit_factor
+from srcfit.units import factor
 from srcfit.whitening import coloured, parts_of, together
 
 if TYPE_CHECKING:
@@ -62,24 +63,46 @@ class Shown:
         ]  # fmt: skip
 
     @cached_property
+    def together(self) -> Together | None:
+        """How the free cells' band hangs together, all parts; None without a band."""
+        solved, rows = self._solved, self._solved.asked.questions
+        free, count = self._free(), len(solved.asked.constant)
+        cells = np.concatenate([free + p * count for p in range(solved.asked.parts)])
+        asked = Questions(rows.cells[cells], rows.columns[cells])
+        return correlations(solved.problem, asked, solved.answers)
+
+    def _free(self) -> NDArray[np.intp]:
+        """Numbers of the questions to the cells that carry a smooth part."""
+        where = self._blocks["cells"]
+        return np.arange(where.start, where.stop)[self._solved.forward.grid.free]
+
+    @cached_property
     def factor(self) -> float:
         """Quantile that makes the cells' band hold at all places at once; nan without one."""
-        solved, where = self._solved, self._blocks["cells"]
-        rows, count = solved.asked.questions, len(solved.asked.constant)
-        cells = np.concatenate([np.arange(where.start, where.stop)[solved.forward.grid.free]
-                                + p * count for p in range(solved.asked.parts)])  # fmt: skip
-        asked = Questions(rows.cells[cells], rows.columns[cells])
-        level = solved.forward.case.strength.level
-        return factor(solved.problem, asked, solved.answers, level)
+        level = self._solved.forward.case.strength.level
+        return float("nan") if self.together is None else self.together.factor(level)
 
-    def everywhere(self) -> tuple[Array, Array]:
+    def everywhere(self, level: float | None = None) -> tuple[Array, Array]:
         """Lower and upper of the cells' band that holds at all places at once."""
-        where = self._blocks["cells"]
-        ratio = self.factor / self._solved.answers.quantile
+        where, ratio = self._blocks["cells"], self.factor
+        if level is not None and self.together is not None:
+            ratio = self.together.factor(level)
+        ratio /= self._solved.answers.quantile
         value, least, most = self.value[where], self._reach[0][where], self._reach[1][where]
         lower = value - ratio * (value - self.lower[where])
         upper = value + ratio * (self.upper[where] - value)
         return np.maximum(lower, least), np.minimum(upper, most)
+
+    def rivals(self, turn: float, level: float) -> NDArray[np.bool_]:
+        """Cells that may have the largest density (of `turn` -1 the smallest), (m,)."""
+        cells = self._blocks["cells"]
+        found = np.zeros(cells.stop - cells.start, dtype=bool)
+        if self.together is None or self.driven:
+            return ~found
+        at = self._free()[self.together.places]
+        sd = (self.upper[at] - self.lower[at]) / (2 * self._solved.answers.quantile)
+        found[at - cells.start] = self.together.rivals(turn * self.value[at], sd, level)
+        return found
 
     @cached_property
     def alone(self) -> ReadingsAlone:
@@ -301,7 +324,7 @@ def reading_units(solved: Solved) -> tuple[Array, Array]:
     for i, (unit, kind) in enumerate(zip(readings.unit, readings.kind, strict=True)):
         si = case.member.kind.sensor(kind).unit
         if (unit, si) not in cache:
-            per_unit, offset = unit_factor(unit or si, si, "unit", difference=case.member.driven)
+            per_unit, offset = factor(unit or si, si, "unit", difference=case.member.driven)
             cache[unit, si] = 1 / per_unit, -offset / per_unit
         scale[i], shift[i] = cache[unit, si]
     return scale, shift

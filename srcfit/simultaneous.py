@@ -10,8 +10,10 @@ bounds it by independent places.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy.linalg import eigh
 
 from srcfit.bands import Answers
@@ -23,11 +25,56 @@ from srcfit.solvers.spectrum import bases, route, spectrum
 
 DRAWS, SEED = 5000, 1967  # one fixed stream: the same posterior gives the same factor
 MOST = 400  # places that are looked at; more are thinned evenly, neighbours being alike
-SLIGHT = 1e-7  # part of the largest eigenvalue that is left out
+PAIRED = 48  # places whose differences are drawn
+SLIGHT = 1e-9  # part of the largest eigenvalue that is left out
+NEAR = 1e-3  # places that move together but for this part of their sd are one
 
 
-def factor(problem: Problem, cells: Questions, answers: Answers, level: float) -> float:
-    """Quantile of the largest |deviation| / sd over all cells, at least the pointwise one.
+@dataclass(frozen=True)
+class Together:
+    """How the deviations of a band's places hang together.
+
+    Attributes
+    ----------
+    places : (p,) int
+        Numbers of the places that are looked at, among those that were asked for.
+    correlation : (p, p)
+    dof : float or None
+        Degrees of freedom of an unstated noise.
+    pointwise : float
+        Quantile of the band at any one place.
+    """
+
+    places: NDArray[np.intp]
+    correlation: Array
+    dof: float | None
+    pointwise: float
+
+    def factor(self, level: float) -> float:
+        """Quantile of the largest |deviation| / sd over all places, at least the pointwise one."""
+        return max(sup_quantile(self.correlation, level, self.dof), self.pointwise)
+
+    def rivals(self, value: Array, sd: Array, level: float) -> NDArray[np.bool_]:
+        """Places that may have the largest density, (p,).
+
+        All differences between two places hold at once with the probability `level`; a place
+        that is below the largest estimate by more than its difference allows is none.
+
+        Parameters
+        ----------
+        value, sd : (p,) at `places`
+        """
+        covariance = self.correlation * np.outer(sd, sd)
+        best = int(np.argmax(value))
+        variance = covariance[best, best] + np.diag(covariance) - 2 * covariance[best]
+        few = np.unique(np.linspace(0, len(sd) - 1, PAIRED).astype(int))
+        apart = pair_quantile(covariance[np.ix_(few, few)], level, self.dof)
+        gap = value[best] - value
+        return np.asarray(gap <= apart * np.sqrt(np.maximum(variance, 0.0)))
+
+
+def correlations(problem: Problem, cells: Questions, answers: Answers) -> Together | None:
+    """How the band of a problem hangs together; None where there is no band.
 
     Parameters
     ----------
@@ -36,39 +83,53 @@ def factor(problem: Problem, cells: Questions, answers: Answers, level: float) -
         One row a place.
     answers : Answers
         Of the problem: level, noise and, of a plain band, the choice.
-    level : float
-
-    Returns
-    -------
-    float
-        nan where there is no band.
     """
     if answers.reason or not problem.smooth:
-        return float("nan")
+        return None
     fr = frame(problem)
     if not len(fr.free) or fr.nu == 0:
-        return float("nan")
+        return None
     pick = np.unique(np.linspace(0, len(cells.cells) - 1, MOST).astype(int))
     asked = ask(fr, Questions(cells.cells[pick], cells.columns[pick]))
     covariance = spread(asked, _families(problem, answers))
-    told = asked.determined & (np.diag(covariance) > 0)
+    sd = np.sqrt(np.maximum(np.diag(covariance), 0.0))
+    told = asked.determined & (sd > 0)
     if not told.any():
-        return float("nan")
+        return None
     dof = None if problem.stated else max(fr.readings - answers.fit.effective_dof, 1.0)
-    found = sup_quantile(covariance[np.ix_(told, told)], level, dof)
-    return max(found, answers.quantile)
+    correlation = (covariance / np.outer(np.where(sd > 0, sd, 1), np.where(sd > 0, sd, 1)))[
+        np.ix_(told, told)
+    ]
+    return Together(pick[told], correlation, dof, answers.quantile)
 
 
-def sup_quantile(covariance: Array, level: float, dof: float | None = None) -> float:
-    """Quantile of max |z_i| / sd_i, z ~ N(0, covariance), or of Student's t with `dof`."""
+def _draws(covariance: Array, dof: float | None) -> Array:
+    """Draws (N, p) of N(0, covariance), or of Student's t with `dof`."""
     sd = np.sqrt(np.diag(covariance))
     lam, V = eigh(covariance / np.outer(sd, sd), check_finite=False)
     keep = lam > SLIGHT * lam[-1]
     rng = np.random.default_rng(SEED)
-    z = rng.normal(size=(DRAWS, int(keep.sum()))) @ (V[:, keep] * np.sqrt(lam[keep])).T
-    largest = np.abs(z).max(axis=1)
-    if dof is not None:
-        largest = largest / np.sqrt(rng.chisquare(dof, DRAWS) / dof)
+    factor = sd[:, None] * V[:, keep] * np.sqrt(lam[keep])
+    z = rng.normal(size=(DRAWS, int(keep.sum()))) @ factor.T
+    return z if dof is None else z / np.sqrt(rng.chisquare(dof, DRAWS) / dof)[:, None]
+
+
+def sup_quantile(covariance: Array, level: float, dof: float | None = None) -> float:
+    """Quantile of max |z_i| / sd_i, z ~ N(0, covariance), or of Student's t with `dof`."""
+    z = _draws(covariance, dof) / np.sqrt(np.diag(covariance))
+    return float(np.quantile(np.abs(z).max(axis=1), level))
+
+
+def pair_quantile(covariance: Array, level: float, dof: float | None = None) -> float:
+    """Quantile of max |z_i - z_j| / sd of that difference, over all pairs."""
+    z, largest = _draws(covariance, dof), np.zeros(DRAWS)
+    variance = np.diag(covariance)
+    for i in range(1, len(variance)):
+        sd = np.sqrt(np.maximum(variance[i] + variance[:i] - 2 * covariance[i, :i], 0.0))
+        told = sd > NEAR * np.sqrt(variance[i])
+        if told.any():
+            off = np.abs(z[:, i, None] - z[:, :i][:, told]) / sd[told]
+            largest = np.maximum(largest, off.max(axis=1))
     return float(np.quantile(largest, level))
 
 

@@ -10,7 +10,14 @@ from scipy.stats import norm
 from srcfit.bands import cautious
 from srcfit.evidence import at_one
 from srcfit.problem import Questions
-from srcfit.simultaneous import _families, factor, spread, sup_quantile
+from srcfit.simultaneous import (
+    Together,
+    _families,
+    correlations,
+    pair_quantile,
+    spread,
+    sup_quantile,
+)
 from srcfit.solvers.frame import ask, frame
 from srcfit.solvers.spectrum import bases, spectrum
 
@@ -29,7 +36,7 @@ def test_its_variances_are_those_of_the_band(case):
     asked = ask(frame(problem), cells(problem))
     covariance = spread(asked, _families(problem, answers))
     told = answers.determined
-    assert np.isnan(factor(problem, cells(problem), answers, 0.95)) == (not told.any())
+    assert (correlations(problem, cells(problem), answers) is None) == (not told.any())
     np.testing.assert_allclose(np.sqrt(np.diag(covariance))[told], answers.s_c[told], rtol=1e-6)
     low = np.linalg.eigvalsh(covariance)[0]
     assert low > -1e-9 * np.diag(covariance).max()
@@ -112,5 +119,28 @@ def test_no_band_no_factor():
     problem = worked.problem(worked.CASES[0])
     answers = cautious(problem, cells(problem))
     none = replace(answers, reason="only 2 readings beyond the unpenalised unknowns")
-    assert np.isnan(factor(problem, cells(problem), none, 0.95))
-    assert factor(problem, cells(problem), answers, 0.95) > answers.quantile
+    assert correlations(problem, cells(problem), none) is None
+    found = correlations(problem, cells(problem), answers)
+    assert found.factor(0.95) > answers.quantile
+    np.testing.assert_allclose(np.diag(found.correlation), 1.0)
+
+
+def test_the_quantile_of_all_differences_is_the_studentised_range():
+    """Tukey: max |z_i - z_j| / sqrt(2) of n independent places; upper 5 % point q / sqrt(2).
+
+    q(0.95; 3, inf) = 3.314 and q(0.95; 10, inf) = 4.474 (any table of the studentised range).
+    """
+    for n, q in ((3, 3.314), (10, 4.474)):
+        assert pair_quantile(np.eye(n), 0.95) == pytest.approx(q / np.sqrt(2), abs=0.05)
+
+
+def test_the_true_top_is_among_the_rivals():
+    """Smooth Gaussian curves around a bump, 100 times: the place of the top is kept in 95 %."""
+    x = np.linspace(0, 1, 24)
+    R = np.exp(-(((x[:, None] - x) / 0.15) ** 2)) * 0.999 + 0.001 * np.eye(24)
+    truth, sd = 4 * np.exp(-(((x - 0.4) / 0.2) ** 2)), np.full(24, 0.5)
+    hang = Together(np.arange(24), R, None, 1.96)
+    L, rng = np.linalg.cholesky(R), np.random.default_rng(6)
+    masks = [hang.rivals(truth + 0.5 * L @ rng.normal(size=24), sd, 0.95) for _ in range(100)]
+    assert np.mean([m[np.argmax(truth)] for m in masks]) >= 0.89
+    assert np.mean(masks) < 0.4  # and most other places are ruled out
