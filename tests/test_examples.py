@@ -167,6 +167,15 @@ def test_hot_joint():
     joints = numbers(summary("busbar_joint/joints.toml"))
     assert half(joints["joint B"]) == pytest.approx(2.1, rel=0.1)
     assert joints["joint B"]["lower"] > 25.6  # above 10 microohm at 1600 A: outage now
+    assert joints["joint B"]["value"] == pytest.approx(56, abs=2.1)
+    # resistance = heat over the current squared: 21.9 +- 0.8 microohm
+    microohm = 1e6 / 1600**2
+    assert joints["joint B"]["value"] * microohm == pytest.approx(21.9, abs=0.8)
+    assert half(joints["joint B"]) * microohm == pytest.approx(0.8, rel=0.1)
+    limits = {d["name"]: d for d in summary("busbar_joint/joints.toml")["detection"]}
+    assert limits["joint B"]["limit"] == pytest.approx(3.6, rel=0.1)
+    assert limits["joint B"]["limit"] * microohm == pytest.approx(1.4, rel=0.1)
+    assert limits["joint A"]["detected"]
 
 
 def test_infiltration_ring():
