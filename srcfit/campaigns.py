@@ -38,8 +38,8 @@ def check_alike(a: Case, b: Case) -> None:
     Raises
     ------
     SolveError
-        Naming the first thing that differs. Prescribed amounts (settlements, held temperatures,
-        the ambient), known parts, signs and limits may differ.
+        Naming the first thing that differs, or when a lumped part has no place. Prescribed amounts
+        (settlements, held temperatures, the ambient), known parts, signs and limits may differ.
     """
     for what, first, second in (*_of_member(a.member, b.member), *_of_source(a, b)):
         if first != second:
@@ -48,6 +48,11 @@ def check_alike(a: Case, b: Case) -> None:
                 "compare takes two campaigns of one layout: make both cases alike but for their "
                 "readings",
             )  # fmt: skip
+    if any(p.at is None for p in a.source.lumped):
+        raise SolveError(
+            "a lumped part of unknown place cannot be compared", "source.lumped",
+            "give its place with `at` in both cases",
+        )  # fmt: skip
 
 
 def _name(case: Case) -> str:

@@ -218,11 +218,6 @@ def _by(a: Forward, b: Forward, pairing: Pairing) -> By:
 
 
 def _enough(a: Forward, b: Forward, pairing: Pairing, asked: Agreed) -> None:
-    if any(p.at is None for p in a.case.source.lumped):
-        raise SolveError(
-            "a lumped part of unknown place cannot be compared", "source.lumped",
-            "give its place with `at` in both cases",
-        )  # fmt: skip
     unknown = [c for c in a.columns if c.kind != "null" and c.name not in asked.common]
     if asked.by == "pairs" and len(pairing.first) < len(unknown) + 1:
         raise SolveError(

@@ -470,3 +470,51 @@ def test_beside_the_change_stand_the_recoveries_own_numbers(tmp_path):
                             *zip(found["zones"], own["zones"], strict=True)):  # fmt: skip
             for name in ("value", "sd", "lower", "upper"):
                 assert part[key][name] == pytest.approx(whole[name], rel=1e-9)
+
+
+def test_an_unknown_noise_is_found_and_judged_by_students_t(tmp_path):
+    """No sd stated anywhere: the difference's own residuals tell it, and intervals are wider."""
+    pairs = [(n, readings(c, s)) for n, c, s in (("a", 0.0, 1), ("b", 30e3, 2))]
+    blind = srcfit.compare(*(case(tmp_path, f"u{n}", v, sd="estimate") for n, v in pairs))
+    told = srcfit.compare(*(case(tmp_path, n, v) for n, v in pairs))
+    assert blind.facts["zones"][1]["shown"]
+    for n in (blind.total, blind.facts["zones"][1]):
+        assert n["lower"] < 270 < n["upper"]
+    ratio = (blind.total["upper"] - blind.total["lower"]) / (4 * blind.total["sd"])
+    assert ratio > (told.total["upper"] - told.total["lower"]) / (4 * told.total["sd"])
+
+
+def test_known_parts_that_differ_and_signs_are_findings(tmp_path):
+    known = [{"from": "0 m", "to": "30 m", "value": "10 kN/m"}]
+    a = case(tmp_path, "a", readings(0.0, 1), source={**SOURCE, "sign": "nonnegative"})
+    b = case(tmp_path, "b", readings(0.0, 2), source={**SOURCE, "known": known})
+    found = srcfit.compare(a, b)
+    assert {"sign-not-used", "known-differs"} <= {f["code"] for f in found.findings}
+    assert found.total["lower"] < -300 < found.total["upper"]  # 10 kN/m over 30 m are known in B
+    assert found.zones["lower [kN]"].min() < 0  # a change may have either sign
+
+
+def test_a_part_of_unknown_place_is_refused(tmp_path):
+    source = {**SOURCE, "lumped": [{"name": "post", "between": ["4 m", "12 m"]}]}
+    cases = [case(tmp_path, n, readings(0.0, s), source=source) for s, n in enumerate("ab")]
+    with pytest.raises(SolveError, match="unknown place"):
+        srcfit.compare(*cases)
+
+
+def test_units_are_those_of_a_and_change_nothing(tmp_path):
+    other = {**SOURCE, "unit": "N/m", "total_unit": "N"}
+    a, b = readings(0.0, 1), readings(30e3, 2)
+    one = srcfit.compare(case(tmp_path, "a", a), case(tmp_path, "b", b, source=other))
+    two = srcfit.compare(case(tmp_path, "c", a, source=other), case(tmp_path, "d", b))
+    assert one.facts["units"]["total"] == "kN"
+    np.testing.assert_allclose(numbers(two.facts), 1e3 * numbers(one.facts), rtol=1e-9)
+    swapped = srcfit.compare(case(tmp_path, "e", b), case(tmp_path, "f", a))
+    assert swapped.total["value"] == pytest.approx(-one.total["value"], rel=1e-9)
+
+
+def test_an_outlier_of_one_campaign_does_not_make_a_change(tmp_path):
+    """One cell misread by 3 mm in B: it is down-weighted there, and so is its difference."""
+    values = readings(0.0, 2)
+    values[4] += 3e-3
+    found = srcfit.compare(case(tmp_path, "a", readings(0.0, 1)), case(tmp_path, "b", values))
+    assert not any(n["shown"] for n in (found.total, *found.facts["zones"]))
