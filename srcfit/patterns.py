@@ -67,9 +67,10 @@ def findings(solved: Solved, main: Smoother, *, correlated: frozenset[str]) -> l
             return [found]
     left: list[Finding] = []
     standard = np.nan_to_num(solved.answers.fit.standardised)
+    alone = np.nan_to_num(solved.answers.fit.leave_one_out)
     size = np.abs(_predicted(solved))
     for name, members in zip(forward.groups, groups, strict=True):
-        left += _growing(name, standard[members], size[members], level)
+        left += _growing(name, standard[members], alone[members], size[members], level)
         if name not in correlated:
             left += _runs(name, standard[members], level)
     return left
@@ -181,15 +182,22 @@ def _sentence(solved: Solved, group: str, member: int, pattern: Pattern) -> Find
     )  # fmt: skip
 
 
-def _growing(name: str, standard: Array, size: Array, level: float) -> list[Finding]:
-    """Residuals whose spread grows with the reading (rank correlation, one-sided)."""
+def _growing(
+    name: str, standard: Array, alone: Array, size: Array, level: float
+) -> list[Finding]:  # fmt: skip
+    """Residuals whose spread grows with the reading (rank correlation, one-sided).
+
+    A fit that follows some readings more than others leaves them smaller residuals. How much
+    smaller depends on the source: between the standardised and the left-out residuals. Both must
+    grow.
+    """
     n = len(standard)
     if n < RANKED or np.ptp(size) == 0 or not standard.any():
         return []
     from scipy.special import stdtr
 
-    a, b = _ranks(np.abs(standard)), _ranks(size)
-    rho = float(np.corrcoef(a, b)[0, 1])
+    ranks = [_ranks(np.abs(e)) for e in (standard, alone)]
+    rho = min(float(np.corrcoef(r, _ranks(size))[0, 1]) for r in ranks)
     t = rho * np.sqrt((n - 2) / max(1 - rho**2, 1e-12))
     if stdtr(n - 2, -t) >= level:
         return []
@@ -197,8 +205,9 @@ def _growing(name: str, standard: Array, size: Array, level: float) -> list[Find
         Finding(
             "residuals-grow", "caution",
             f"The residuals of {name!r} grow with the reading (rank correlation {rho:.2f} over "
-            f"{n} readings): the sd of the large readings is stated too small or that of the "
-            "small ones too large; give each reading its own by `sd_column`.",
+            f"{n} readings): the large ones are noisier than stated, or the source there is "
+            "sharper than the smooth part allows; give each reading its own sd by `sd_column`, or "
+            "declare `breaks` or a lumped part there.",
         )
     ]  # fmt: skip
 

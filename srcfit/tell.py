@@ -322,10 +322,10 @@ def _leaning(solved: Solved, told: Told, total: Number) -> list[Finding]:
         return []
     unit = solved.forward.case.source.total_unit
     listed = []
-    for name, words in (("weaker", "a tenth"), ("stronger", "ten times")):
+    for name, words in (("weaker", "a tenth of"), ("stronger", "ten times")):
         value = float(moved(solved, told, name)[0])
         if np.isfinite(value) and not total.lower <= value <= total.upper:
-            listed.append(f"{value:.4g} {unit} with {words} of the smoothing")
+            listed.append(f"{value:.4g} {unit} with {words} the smoothing")
     if not listed:
         return []
     return [
