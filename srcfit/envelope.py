@@ -29,7 +29,7 @@ from srcfit.truncated import Gaussians, draw, effective, shortest
 Numbers = NDArray[np.intp]
 
 # chains, trajectories of each and trajectories before them
-CHAINS, ROUNDS, BURN = 120, 8, 3
+CHAINS, ROUNDS, BURN = 120, 6, 3
 # with so few coordinates so many times the trajectories cost nothing
 FEW, MORE = 5, 4
 # strict bounds that are found in a block of questions along the member
@@ -77,7 +77,8 @@ def draws(
     for i, r in enumerate(each):
         mine = which == i
         values[:, mine] = scattered(r, points.x[:, mine], scale[mine], numbers)
-    told = effective(values, which)
+    # chains that stay where they are tell nothing
+    told = effective(values, which) * (1 - points.refused)
     return Draws(values.reshape(-1, len(asked)), told, points.refused)
 
 

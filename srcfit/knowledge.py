@@ -50,7 +50,7 @@ def places(solved: Solved) -> list[Finding]:
                     "place-bimodal", "caution",
                     f"The readings leave {place.name!r} at more than one place: {words}. Its "
                     "strength, and all numbers that depend on it, are averaged over them; a "
-                    "reading between these places would tell.",
+                    "reading close to one of these places would tell.",
                 )
             )  # fmt: skip
         if place.at_end:
@@ -163,12 +163,21 @@ def sampled(solved: Solved, held: Held) -> list[Finding]:
     found = [
         Finding(
             "sampled-intervals", "note",
-            f"Under what is known of the source no closed form serves: the intervals hold both "
-            f"{held.draws} draws (worth at least {least:.0f} independent ones for total, zones "
-            "and lumped parts) and strict bounds; the same seed gives the same numbers.",
+            f"Under what is known of the source there is no closed form: each interval spans both "
+            f"that of {held.draws} draws (worth at least {least:.0f} independent ones for total, "
+            "zones and lumped parts) and strict bounds; the same seed gives the same numbers.",
         )
     ]  # fmt: skip
-    if least < ENOUGH or held.refused > REFUSED:
+    if least < 1:
+        found.append(
+            Finding(
+                "few-draws", "caution",
+                "The draws behind the intervals could not move inside what is known of the "
+                "source: the intervals rest on strict bounds alone. That happens where readings "
+                "and knowledge contradict each other.",
+            )
+        )  # fmt: skip
+    elif least < ENOUGH or held.refused > REFUSED:
         lost = f", and {held.refused:.1%} of the trajectories were lost" if held.refused else ""
         found.append(
             Finding(

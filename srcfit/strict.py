@@ -128,9 +128,11 @@ def bounds(r: Reduced, which: Numbers, quantile: float) -> tuple[Array, Array, A
     push = quantile / np.where(sd > 0, sd, 1.0)
     low, high = np.zeros(len(sd)), np.full(len(sd), np.inf)
     M, first = r.walls @ r.S @ r.walls.T, push.copy()
+    last = np.tile(held, (len(sd), 1))
     for _ in range(TURNS):
         s, by = slope[live], push[live][:, None]
-        u = many(M, (r.centre + by * (s @ r.S)) @ r.walls.T - r.least)
+        u = many(M, (r.centre + by * (s @ r.S)) @ r.walls.T - r.least, last[live])
+        last[live] = u
         way = by * s + u @ r.walls
         far = ((way @ r.factor) ** 2).sum(axis=1) + push[live] ** 2 * rest[live] - least
         moved = (s * ((way - pull) @ r.S)).sum(axis=1) + push[live] * rest[live]

@@ -23,7 +23,7 @@ Numbers = NDArray[np.intp]
 QUARTER = 1.0
 # a trajectory with more reflections than this is not taken (it takes as many backwards, so the
 # draws keep their distribution)
-MOST_REFLECTIONS = 3000
+MOST_REFLECTIONS = 1000
 # numbers held at once: arrays that stay in the cache, and below what is mapped anew each time
 AT_ONCE = 12_000
 TINY = 1e-300

@@ -135,7 +135,7 @@ def tally(found: Sequence[Draw]) -> Tally:
     )  # fmt: skip
 
 
-def main(draws: int = 8, members: Sequence[str] = MEMBERS) -> None:
+def main(draws: int = 5, members: Sequence[str] = MEMBERS) -> None:
     """Print the table as Markdown; every layout has its own seed."""
     print("| layout, readings, noise | zones / worst shape / total | reach zero | width |")
     print("|---|---|---|---|")
@@ -152,4 +152,4 @@ def main(draws: int = 8, members: Sequence[str] = MEMBERS) -> None:
 
 if __name__ == "__main__":
     with threadpool_limits(limits=1):
-        main(int(sys.argv[1]) if len(sys.argv) > 1 else 8, sys.argv[2:] or MEMBERS)
+        main(int(sys.argv[1]) if len(sys.argv) > 1 else 5, sys.argv[2:] or MEMBERS)

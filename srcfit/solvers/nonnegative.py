@@ -24,13 +24,16 @@ from scipy.linalg import LinAlgError, cho_factor, cho_solve
 from srcfit.errors import SolveError
 from srcfit.problem import Array
 
+Numbers = NDArray[np.intp]
+
 # Karush-Kuhn-Tucker residual that is let through, relative to the largest distance
 CLOSE = 1e-8
-ROUNDS = 60
+ROUNDS = 30
 # rows broken by less are kept; a row that the held ones explain but for this part depends on them
 ROUNDING, DEPENDENT = 1e-12, 1e-11
 # rows whose variance is this small a part of the largest have none
 FIXED = 1e-24
+NONE = np.zeros(0, dtype=np.intp)
 
 
 def multipliers(M: Array, q: Array) -> Array:
@@ -52,20 +55,17 @@ def multipliers(M: Array, q: Array) -> Array:
     C, z = M / np.outer(scale, scale), q / scale
     u = _active_set(C, z)
     if u is None or missed(C, z, u) > CLOSE:
-        u = _one_by_one(C, z)
-    gap = missed(C, z, u)
-    if gap > CLOSE:
-        raise SolveError(
-            f"the estimate under its constraints did not converge (residual {gap:.1e} of the "
-            f"largest distance, {CLOSE:g} allowed)",
-            "source",
-            "use fewer cells, or leave the constraint out",
-        )
+        u = _checked(C, z, _one_by_one(C, z))
     return np.asarray(u / scale)
 
 
-def many(M: Array, q: Array) -> Array:
+def many(M: Array, q: Array, start: Array | None = None) -> Array:
     """Multipliers (n, p) of many problems with one covariance M (p, p) and means q (n, p).
+
+    Parameters
+    ----------
+    start : (n, p), optional
+        Multipliers of problems like these.
 
     Raises
     ------
@@ -74,10 +74,23 @@ def many(M: Array, q: Array) -> Array:
     """
     scale = _scale(M, q.min(axis=0))
     C, z = M / np.outer(scale, scale), q / scale
-    u, settled = _together(C, z)
+    begin = z < 0 if start is None else start > 0
+    u, settled = _together(C, z, begin)
     for i in np.flatnonzero(~settled):
-        u[i] = multipliers(C, z[i])
+        u[i] = _checked(C, z[i], _one_by_one(C, z[i], np.flatnonzero(begin[i])))
     return np.asarray(u / scale)
+
+
+def _checked(C: Array, z: Array, u: Array) -> Array:
+    gap = missed(C, z, u)
+    if gap > CLOSE:
+        raise SolveError(
+            f"the estimate under its constraints did not converge (residual {gap:.1e} of the "
+            f"largest distance, {CLOSE:g} allowed)",
+            "source",
+            "use fewer cells, or leave the constraint out",
+        )
+    return u
 
 
 def missed(C: Array, z: Array, u: Array) -> float:
@@ -122,10 +135,10 @@ def _active_set(C: Array, z: Array) -> Array | None:
     return None
 
 
-def _together(C: Array, z: Array) -> tuple[Array, NDArray[np.bool_]]:
+def _together(C: Array, z: Array, begin: NDArray[np.bool_]) -> tuple[Array, NDArray[np.bool_]]:
     """The active sets of many problems at once: multipliers (n, p) and which of them settled."""
     n, p = z.shape
-    active, found, settled = z < 0, np.zeros((n, p)), np.zeros(n, dtype=bool)
+    active, found, settled = begin.copy(), np.zeros((n, p)), np.zeros(n, dtype=bool)
     live = np.arange(n)
     for _ in range(ROUNDS):
         on = active[live]
@@ -147,13 +160,13 @@ def _together(C: Array, z: Array) -> tuple[Array, NDArray[np.bool_]]:
     return found, settled
 
 
-def _one_by_one(C: Array, z: Array) -> Array:
+def _one_by_one(C: Array, z: Array, begin: Numbers = NONE) -> Array:
     """Dual active set: the row that is broken most comes in, rows that no longer push go out.
 
     Every step brings the point further from the mean, so that it cannot run in circles; rows that
-    depend on others are swapped, never held beside them.
+    depend on others are swapped, never held beside them. It may begin at rows held elsewhere.
     """
-    u, held = np.zeros(len(z)), np.zeros(0, dtype=np.intp)
+    u, held = _pushing(C, z, begin)
     size = max(1.0, float(np.abs(z).max(initial=0.0)))
     for _ in range(50 * len(z) + 1000):
         w = C @ u + z
@@ -184,6 +197,21 @@ def _one_by_one(C: Array, z: Array) -> Array:
             held = np.delete(held, out)
         u = np.maximum(u, 0.0)
     return _polished(C, z, u)
+
+
+def _pushing(C: Array, z: Array, held: Numbers) -> tuple[Array, Numbers]:
+    """Multipliers of those of the rows that push by themselves, and these rows."""
+    u = np.zeros(len(z))
+    while len(held):
+        try:
+            by = cho_solve(cho_factor(C[np.ix_(held, held)], check_finite=False), -z[held])
+        except LinAlgError:
+            return u, NONE
+        if (by >= 0).all():
+            u[held] = by
+            break
+        held = held[by > 0]
+    return u, held
 
 
 def _polished(C: Array, z: Array, u: Array) -> Array:
