@@ -11,6 +11,7 @@ from srcfit.captions import extent, percent, section_curves, source_word, unit
 from srcfit.frames import flags, number
 from srcfit.recovery import Recovery
 from srcfit.report import tables, telling
+from srcfit.report.assumptions import assumptions
 from srcfit.report.data import LINES, READINGS
 from srcfit.report.html import clean, figure, name, nested, safe, section
 from srcfit.report.method import CAUTIONS, method_text
