@@ -139,6 +139,8 @@ def _source(kind: MemberKind) -> list[str]:
         "# breaks = [ … ]                           # places where the source is known to jump",
         "# lumped = [ { name = …, at = … } ]        # sources at a place",
         "# known = [ { from = …, to = …, value = … } ]",
+        "# ceiling = …                              # the largest density that is possible",
+        '# monotone = [ { from = …, to = …, trend = "falling" } ]   # or "rising"',
     ]
     return lines
 
