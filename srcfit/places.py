@@ -21,7 +21,7 @@ from srcfit.forward import build
 from srcfit.member import Array
 from srcfit.placing import Place, combinations, place_of, probabilities, stand_ins
 from srcfit.readings.model import Readings
-from srcfit.robust import noise_of
+from srcfit.robust import Noise, noise_of
 from srcfit.solve import Solved, invert
 from srcfit.whitening import whitened
 
@@ -42,6 +42,7 @@ def solve(
     criteria: bool = True,
     rng: np.random.SeedSequence | None = None,
     edges: Sequence[float] = (),
+    noise: Noise | None = None,
 ) -> Solved:
     """Invert a case whose lumped parts may have unknown places.
 
@@ -50,6 +51,8 @@ def solve(
     criteria, rng : as of `solve.solve`
     edges : sequence of float
         Further places where cells are cut [m].
+    noise : Noise, optional
+        Found from the readings when left out; with unknown places it always is.
 
     Raises
     ------
@@ -60,7 +63,7 @@ def solve(
     unknown = [i for i, p in enumerate(case.source.lumped) if p.at is None]
     if not unknown:
         forward = build(case, readings, edges=edges)
-        return replace(invert(forward, criteria, seed), edges=tuple(edges))
+        return replace(invert(forward, criteria, seed, noise), edges=tuple(edges))
     _check(case, unknown)
     ranges = [_range(case.source.lumped[i]) for i in unknown]
     grids, chances = _search(case, readings, unknown, ranges, seed)

@@ -61,7 +61,8 @@ def properties(solved: Solved, rng: np.random.SeedSequence) -> Properties:
     if solved.places and uncertain:
         # parts of unknown place stay where they most probably are
         centre = solve(
-            forward.case, forward.readings, criteria=False, rng=rng, edges=solved.edges
+            forward.case, forward.readings, criteria=False, rng=rng, edges=solved.edges,
+            noise=solved.noise,
         )  # fmt: skip
     shift, bend = {}, {}
     for key in uncertain:
@@ -73,6 +74,7 @@ def properties(solved: Solved, rng: np.random.SeedSequence) -> Properties:
                     criteria=False,
                     rng=rng,
                     edges=solved.edges,
+                    noise=solved.noise,
                 )
             )
             for side in (1.0, -1.0)

@@ -16,11 +16,12 @@ Res. 97, 14055 (strict bounds under a sign); Lawson & Hanson, Solving Least Squa
 
 from __future__ import annotations
 
+import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.linalg import null_space, solve
+from scipy.linalg import LinAlgWarning, null_space, solve
 
 from srcfit.problem import Array, Problem, Questions
 
@@ -132,7 +133,10 @@ def _least_worst(A: Array, q: Array, start: Array, beside: Array, reach: float, 
         pull = z / max(float(np.linalg.norm(v)), ROUNDING * float(np.abs(q).max()))
         M = (side.T * weight) @ side
         M[np.diag_indices(len(M))] += pull + ROUNDING * np.trace(M)
-        y = solve(M, -(side.T * weight) @ off - pull * (beside.T @ start), assume_a="pos")
+        with warnings.catch_warnings():
+            # repeats at one place leave M all but singular: see above
+            warnings.simplefilter("ignore", LinAlgWarning)
+            y = solve(M, -(side.T * weight) @ off - pull * (beside.T @ start), assume_a="pos")
         v = start + beside @ y
     return best
 
