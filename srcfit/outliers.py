@@ -218,8 +218,14 @@ def propose(problem: Problem, links: Links, sign: int = 0) -> tuple[Array, Rows]
     if most < 1:
         return nothing
     costs = np.append(0.0, np.cumsum(_cost(n, fr.nu, most, problem.stated)))
-    # the rival of all suspicion: no outlier at all, but a noise larger than stated
-    best = max(float(_larger(v, problem.stated).max()) for v in found)
+    # the rivals of all suspicion: no outlier, or, as unlikely as one, a noise larger than stated
+    best = max(
+        float(np.maximum(
+            _score(v.volume, v.energy, fr.nu, 0, problem.stated)[0],
+            _larger(v, problem.stated) - costs[1],
+        ).max())
+        for v in found
+    )  # fmt: skip
     U, chosen = columns.seen(fr.U), None
     for v in found:
         g = columns.seen(v.residual)
