@@ -28,7 +28,7 @@ from srcfit.results import (
     source_table,
     zones_table,
 )
-from srcfit.rounding import brief, interval, plus_minus
+from srcfit.rounding import UNDETERMINED, brief, interval, plus_minus, twin
 from srcfit.solve import Solved
 from srcfit.text import bullets, clean, findings_text, join, section, table
 from srcfit.unknowns import response_unit
@@ -348,8 +348,8 @@ def _numbers(facts: Mapping[str, Any]) -> str:
     at, total, density = units["position"], units["total"], units["source"]
 
     def row(name: str, where: str, n: Mapping[str, Any], unit: str) -> tuple[str, ...]:
-        own = [plus_minus(n[k], unit) if k in n else "" for k in ("a", "b")]
-        return (name, where, *own, _signed(plus_minus(n, unit)), interval(n, unit))
+        own = [_amount(n[k], unit) if k in n else "" for k in ("a", "b")]
+        return (name, where, *own, _signed(_amount(n, unit)), interval(n, unit))
 
     rows = [row("total", "", facts["total"], total)]
     rows += [row(f"zone {z['name']}", f"{brief(z['from'], 6)} to {brief(z['to'], 6)} {at}", z,
@@ -378,13 +378,19 @@ def statements(facts: Mapping[str, Any]) -> list[str]:
 def _statement(n: Mapping[str, Any], unit: str) -> str:
     if n["shown"] is None:
         return "the readings cannot tell its change"
-    change = _signed(plus_minus(n, unit))
+    change = _signed(_amount(n, unit))
     if n["shown"]:
         return f"{change}: a change is shown"
     lead = f"{change}: no change is shown; not detected is not absent"
     if n["missed"] is None:
         return f"{lead}, and these sensors may have missed any change"
     return f"{lead}, a change of up to {brief(n['missed'], 2)} {unit} may have been missed"
+
+
+def _amount(n: Mapping[str, Any], unit: str) -> str:
+    """Value ± sd; of a driven member with its imaginary part."""
+    told, beside = plus_minus(n, unit), twin(n, unit)
+    return f"{told} and {beside}" if beside and told != UNDETERMINED else told
 
 
 def _signed(text: str) -> str:

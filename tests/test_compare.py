@@ -518,3 +518,14 @@ def test_an_outlier_of_one_campaign_does_not_make_a_change(tmp_path):
     values[4] += 3e-3
     found = srcfit.compare(case(tmp_path, "a", readings(0.0, 1)), case(tmp_path, "b", values))
     assert not any(n["shown"] for n in (found.total, *found.facts["zones"]))
+
+
+def test_of_driven_members_both_parts_are_told(tmp_path):
+    member = {**MEMBER, "mass": "1200 kg/m", "frequency": "3 Hz", "damping": "0.05"}
+    cases = [case(tmp_path, n, readings(c, s), member=member)
+             for n, c, s in (("a", 0.0, 1), ("b", 30e3, 2))]  # fmt: skip
+    found = srcfit.compare(*cases)
+    assert found.total["imaginary"] is not None
+    assert "± " in comparison_text(found.summary())
+    assert "and i(" in comparison_text(found.summary())
+    assert "difference_imag" in found.readings.columns
