@@ -118,6 +118,11 @@ def _travel(y: Array, speeds: Array, normal: Array, ahead: Array) -> tuple[Array
         lost = hits > MOST_REFLECTIONS
         if lost.any():
             place[lost, :d], refused = before[lost], refused + int(lost.sum())
+            # a chain that cannot leave its start is given up
+            stuck = lost & (turn == 0)
+            ends[:, live[stuck]] = before[stuck]
+            turn[stuck] = len(speeds) - 1
+            refused += int(stuck.sum()) * (len(speeds) - 1)
             ended |= lost
         if not ended.any():
             continue

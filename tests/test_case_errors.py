@@ -251,6 +251,9 @@ def test_files_that_are_no_case(tmp_path):
         ({"total_unit": "kN*m"}, "source.total_unit", "give a force"),
         ({"position_unit": "s"}, "source.position_unit", "give a length"),
         ({"limit": {"zone": "a", "at_most": "3 N"}}, "source.limit.zone", "is no zone"),
+        ({"monotone": [{"from": "0 m", "to": "8 m", "trend": "rising"},
+                       {"from": "7 m", "to": "30 m", "trend": "falling"}]}, "source.monotone",
+         "overlap"),
     ],
 )  # fmt: skip
 def test_faults_of_a_source(changes, key, words):

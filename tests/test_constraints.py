@@ -340,3 +340,33 @@ def test_intervals_hold_for_sources_that_are_zero_elsewhere(member, n, noise):
     assert found.touched >= 0.95  # what is zero may be zero
     assert found.least >= 0
     assert found.width <= 1  # and something is gained by knowing the sign
+
+
+@pytest.mark.parametrize("seed", range(8))
+def test_combinations_of_knowledge(seed):
+    """Signs, ceilings and stretches that meet, met or contradicted: all kept, nothing silent."""
+    rng = np.random.default_rng(seed)
+    cut = rng.uniform(0.2, 0.8)
+    known = {
+        "sign": "nonnegative", "ceiling": rng.choice([0.5, 1.5]),
+        "monotone": (Monotone(0.0, cut, rising=True), Monotone(cut, 1.0, rising=False)),
+    }  # fmt: skip
+    keys = [key for key in known if rng.random() < 0.7] or ["sign"]
+    known = {key: known[key] for key in keys}
+    shapes = (block, lambda x: 1 + 0 * x, lambda x: np.exp(-3 * x), lambda x: x - 0.3)
+    problem = beam(seed, n=int(rng.choice([8, 30])), shape=shapes[seed % 4], lumped=seed % 2 == 1)
+    problem = replace(problem, stated=seed % 3 > 0)
+    questions = every(problem)
+    limits, free = knowledge(problem, questions, **known), cautious(problem, questions)
+    answers, _ = constrained(problem, questions, limits, free, SEED)
+    told = np.isfinite(answers.lower)
+    assert told.any()
+    assert (answers.lower <= answers.value)[told].all()
+    assert (answers.value <= answers.upper)[told].all()
+    assert (answers.lower >= limits.low)[told].all()
+    assert (answers.upper <= limits.high)[told].all()
+    f, size = answers.value[:CELLS], np.abs(answers.value[:CELLS]).max()
+    if "monotone" in known:
+        inside = problem.grid.middles
+        assert (np.diff(f[inside < cut]) >= -1e-9 * size).all()
+        assert (np.diff(f[inside > cut]) <= 1e-9 * size).all()

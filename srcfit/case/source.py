@@ -6,6 +6,7 @@ import os
 from collections.abc import Mapping
 from contextlib import suppress
 from dataclasses import dataclass
+from itertools import combinations
 from pathlib import Path as File
 from typing import Any, get_args
 
@@ -308,6 +309,10 @@ class _Asked:
 
         found: Any = each(self.reader, (*ROOT, "monotone"), value, one)
         return tuple(found)
+        for a, b in combinations(found, 2):
+            if a.rising != b.rising and max(a.start, b.start) < min(a.end, b.end):
+                self.reader.wrong((*ROOT, "monotone"), "a rising and a falling stretch overlap",
+                                  "let one begin where the other ends")  # fmt: skip
 
     def total(self, data: object) -> Knowledge | None:
         if data is None:

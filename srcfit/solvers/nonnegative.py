@@ -33,6 +33,7 @@ ROUNDS = 30
 ROUNDING, DEPENDENT = 1e-12, 1e-11
 # rows whose variance is this small a part of the largest have none
 FIXED = 1e-24
+FEW_BITS = 32 * np.finfo(float).eps
 NONE = np.zeros(0, dtype=np.intp)
 
 
@@ -94,12 +95,20 @@ def _checked(C: Array, z: Array, u: Array) -> Array:
 
 
 def missed(C: Array, z: Array, u: Array) -> float:
-    """Largest violation of w >= 0, u >= 0 and u'w = 0, over the largest |z| (at least 1)."""
+    """Largest violation of w >= 0, u >= 0 and u'w = 0, over the largest |z| (at least 1).
+
+    What the numbers' own rounding leaves of sums as large as these is no violation.
+    """
     w = C @ u + z
-    size = max(1.0, float(np.abs(z).max(initial=0.0)))
+    size = max(1.0, float(np.abs(z).max(initial=0.0)), _noise(C, u) / CLOSE)
     worst = max(float((-w).max(initial=0.0)), float((-u).max(initial=0.0)))
     both = float(np.minimum(np.abs(w), np.abs(u)).max(initial=0.0))
     return max(worst, both) / size
+
+
+def _noise(C: Array, u: Array) -> float:
+    """Rounding of the sums C u."""
+    return float(FEW_BITS * (np.abs(C) @ np.abs(u)).max(initial=0.0))
 
 
 def _scale(M: Array, q: Array) -> Array:
@@ -172,7 +181,7 @@ def _one_by_one(C: Array, z: Array, begin: Numbers = NONE) -> Array:
         w = C @ u + z
         w[held] = 0.0
         new = int(np.argmin(w))
-        if w[new] >= -ROUNDING * size:
+        if w[new] >= -max(ROUNDING * size, _noise(C, u)):
             break
         while True:
             r = cho_solve(cho_factor(C[np.ix_(held, held)]), C[held, new]) if len(held) else w[:0]
