@@ -1,9 +1,10 @@
 """The cautious band of a source that is known to keep inequalities.
 
 The estimate is the exact constrained one at the evidence-weighted mean strength of each family,
-averaged over families. The interval of a question is the hull of draws and strict bounds under
-the cautious families (see `envelope`); the distance between the centres with and without steps
-at the drawn edges widens it, as in `bands`. Where the inequalities take next to nothing from the
+averaged over families. The interval of a question is the hull of draws under the cautious
+families and of strict bounds under steeper ones (see `envelope`), around the estimate and around
+their own centre; the distances between estimate and centres, with and without steps at the drawn
+edges, widen it as in `bands`. Where the inequalities take next to nothing from the
 unconstrained posterior, the closed forms of `bands` stand and nothing is drawn.
 """
 
