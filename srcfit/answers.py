@@ -55,6 +55,12 @@ class Asked:
         """Rows of each question: 2 for complex amplitudes."""
         return len(self.questions.cells) // len(self.constant)
 
+    def runs(self, *names: str) -> list[slice]:
+        """Where blocks stand among all rows, both parts of complex amplitudes."""
+        found = [self.blocks[name] for name in names]
+        starts = [p * len(self.constant) for p in range(self.parts)]
+        return [slice(at + b.start, at + b.stop) for at in starts for b in found]
+
     def together(self, values: Array) -> Matrix:
         """Values of all rows as one number a question, the known part left out."""
         if self.parts == 1:

@@ -17,7 +17,7 @@ Sources: Wahba (1983), J. R. Stat. Soc. B 45, 133, and Nychka (1988), J. Am. Sta
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -110,6 +110,8 @@ class Answers:
         The plain band's choice.
     low, high : (q,) or None
         What each question can be at all, where constraints say so: intervals end there.
+    band : {"calibrated", "cautious", "plain"}
+        What the intervals are.
     """
 
     value: Array
@@ -128,6 +130,7 @@ class Answers:
     choice: Choice | None = None
     low: Array | None = None
     high: Array | None = None
+    band: str = "cautious"
 
 
 def cautious(
@@ -161,18 +164,60 @@ def cautious(
         return without_source(fr, asked, level)
     ground = weighed(fr)
     if centre is None:
-        f = mean_source(ground.averaged)
-        value, fit = means(fr, asked, f), averaged_fit(ground.averaged)
-        size = mean_level(fr, _density(fr, f))
+        value, fit, size = averaged(fr, asked, ground)
     else:
         ladder, at = centre
         value, fit = ladder.answers(questions)[:, at], rung_fit(ladder, at)
         size = mean_level(fr, ladder.estimates[fr.free, at])
     size = max(size, at_least)
-    m_c, s_c, m_0, share = _cautious(fr, asked, ground, size)
-    off = np.maximum(np.abs(value - m_c), np.abs(value - m_0))
-    parts = (value, np.sqrt(s_c**2 + off**2), m_c, m_0, s_c, share)
+    judged = judge(fr, asked, ground, value, size)
+    parts = (value, judged.sd, judged.m_c, judged.m_0, judged.s_c, judged.data_share)
     return assembled(fr, asked, parts, fit, size, level)
+
+
+@dataclass(frozen=True)
+class Judged:
+    """Cautious judgement of q answers.
+
+    Attributes
+    ----------
+    m_c, m_0, s_c, data_share, off : (q,)
+        As of `Answers`; the distance of the estimate from the cautious means.
+    drawn, known : lists of Weighted
+        The cautious families with steps at all drawn edges, and at the known breaks alone.
+    """
+
+    m_c: Array
+    m_0: Array
+    s_c: Array
+    data_share: Array
+    off: Array
+    drawn: list[Weighted]
+    known: list[Weighted]
+
+    @property
+    def sd(self) -> Array:
+        """Half-width of the cautious band over the quantile, (q,)."""
+        return np.sqrt(self.s_c**2 + self.off**2)
+
+
+def averaged(fr: Frame, asked: Asked, ground: Ground) -> tuple[Array, Fit, float]:
+    """Values (q,) of the evidence-averaged estimate, its fit and its mean level."""
+    f = mean_source(ground.averaged)
+    size = mean_level(fr, _density(fr, f))
+    return means(fr, asked, f), averaged_fit(ground.averaged), size
+
+
+def judge(fr: Frame, asked: Asked, ground: Ground, value: Array, size: float) -> Judged:
+    """Judge values (q,) by what a cautious prior of mean level `size` makes of the readings."""
+    drawn = wary(fr, ground, size, ground.drawn, spread=True)
+    m_c, variance = moments(asked, drawn)
+    known, m_0 = drawn, m_c
+    if ground.drawn.shape != ground.known.shape:
+        known = wary(fr, ground, size, ground.known, spread=False)
+        m_0 = means(fr, asked, mean_source(known))
+    off = np.maximum(np.abs(value - m_c), np.abs(value - m_0))
+    return Judged(m_c, m_0, np.sqrt(variance), data_share(asked, drawn), off, drawn, known)
 
 
 @dataclass(frozen=True)
@@ -196,16 +241,16 @@ class Ground:
     known: Array
 
 
-def weighed(fr: Frame) -> Ground:
-    """Weigh the families of the estimate."""
+def weighed(fr: Frame, *, spread: bool = False) -> Ground:
+    """Weigh the families of the estimate; `spread`: with all that variances need."""
     cells = fr.problem.grid
     drawn, known = pieces(cells, zones=True), pieces(cells, zones=False)
     families = estimate_families(drawn)
     keys = [SCALE, *((f.base, f.length) for f in (*families, *CAUTIOUS))]
     products = bases(fr, keys, route(fr))
     sigma = grid(fr, products)
-    averaged = weigh([spectrum(fr, f, products, drawn) for f in families], sigma)
-    return Ground(averaged, products, sigma, drawn, known)
+    found = [spectrum(fr, f, products, drawn, right=spread) for f in families]
+    return Ground(weigh(found, sigma), products, sigma, drawn, known)
 
 
 def wary(fr: Frame, ground: Ground, size: float, steps: Array, *, spread: bool) -> list[Weighted]:
@@ -256,7 +301,8 @@ def plain(
     sd = np.sqrt(variance)
     parts = (value, sd, value, value, sd, data_share(asked, [one]))
     size = mean_level(fr, ladder.estimates[fr.free, at])
-    return assembled(fr, asked, parts, rung_fit(ladder, at), size, level, choice)
+    found = assembled(fr, asked, parts, rung_fit(ladder, at), size, level, choice)
+    return replace(found, band="plain")
 
 
 def undetermined(problem: Problem) -> tuple[tuple[str, ...], ...]:
@@ -279,18 +325,6 @@ def undetermined(problem: Problem) -> tuple[tuple[str, ...], ...]:
         found.append(tuple(names[i] for i in sorted([int(order[rank + j]), *alike])))
     # the two parts of a complex amplitude have one name
     return tuple(dict.fromkeys(tuple(dict.fromkeys(group)) for group in found))
-
-
-def _cautious(
-    fr: Frame, asked: Asked, ground: Ground, size: float
-) -> tuple[Array, Array, Array, Array]:
-    """m_c, s_c, m_0 and the data share of each question."""
-    families = wary(fr, ground, size, ground.drawn, spread=True)
-    m_c, variance = moments(asked, families)
-    m_0 = m_c
-    if ground.drawn.shape != ground.known.shape:
-        m_0 = means(fr, asked, mean_source(wary(fr, ground, size, ground.known, spread=False)))
-    return m_c, np.sqrt(variance), m_0, data_share(asked, families)
 
 
 def _density(fr: Frame, variation: Array) -> Array:

@@ -157,28 +157,43 @@ def moments(asked: Asked, families: Sequence[Weighted]) -> tuple[Array, Array]:
 
 
 def conditional(asked: Asked, w: Weighted) -> tuple[Array, Array]:
-    """Mean and variance (q, t) of each question at each rung of one family.
+    """Mean and variance (q, t) of each question at each rung of one family."""
+    sp = w.spectrum
+    T = transfer(asked, sp)
+    mean = asked.H @ sp.frame.Ud
+    mean = mean[:, None] + T @ (w.sigma**2 * w.shrink * sp.y[:, None])
+    return mean, w.noise * spreads(asked, sp, T, w.sigma, w.shrink)
 
-    With g~ = g - A'h: mean = h'd + sigma**2 T D y, T = g~'C A'QV, D = 1 / (1 + sigma**2 lam);
-    variance = |h|**2 + sigma**2 g~'C g~ - sigma**4 T**2 D, or the same as a sum of positive
-    terms in the coordinates of the covariance's factor.
+
+def transfer(asked: Asked, sp: Spectrum) -> Array:
+    """T = g~'C A'QV (q, c) with g~ = g - A'h: what each mode's amount adds to each question.
+
+    The mean is h'd + sigma**2 T D y, D = 1 / (1 + sigma**2 lam).
     """
-    sp, fr, size = w.spectrum, w.spectrum.frame, len(w.spectrum.V)
+    size = len(sp.V)
+    return np.asarray(asked.G @ (sp.K[:, :size] @ sp.V) - asked.H @ (sp.S[size:, :size] @ sp.V))
+
+
+def spreads(asked: Asked, sp: Spectrum, T: Array, sigma: Array, shrink: Array) -> Array:
+    """Variance (q, t) of each question at each rung, for noise of variance 1.
+
+    |h|**2 + sigma**2 g~'C g~ - sigma**4 T**2 D, or the same as a sum of positive terms in the
+    coordinates of the covariance's factor.
+    """
+    fr, size = sp.frame, len(sp.V)
     unpenalised = (asked.H**2).sum(axis=1)[:, None]
-    T = asked.G @ (sp.K[:, :size] @ sp.V) - asked.H @ (sp.S[size:, :size] @ sp.V)
-    mean = (asked.H @ fr.Ud)[:, None] + T @ (w.sigma**2 * w.shrink * sp.y[:, None])
     if sp.right is not None:
         L = sp.factor
         whole = asked.G @ L - asked.H @ (fr.UA @ L)
         seen = whole @ sp.right.T
         unseen = ((whole - seen @ sp.right) ** 2).sum(axis=1)[:, None]
-        spread = w.sigma**2 * (unseen + seen**2 @ w.shrink)
+        spread = sigma**2 * (unseen + seen**2 @ shrink)
     else:
         cross = (asked.G @ sp.K[:, size:]) * asked.H
         prior = prior_variance(asked, sp) - 2 * cross.sum(axis=1)
         prior = prior + ((asked.H @ sp.S[size:, size:]) * asked.H).sum(axis=1)
-        spread = w.sigma**2 * prior[:, None] - T**2 @ (w.sigma**4 * w.shrink)
-    return mean, w.noise * (unpenalised + np.maximum(spread, 0.0))
+        spread = sigma**2 * prior[:, None] - T**2 @ (sigma**4 * shrink)
+    return np.asarray(unpenalised + np.maximum(spread, 0.0))
 
 
 def prior_variance(asked: Asked, sp: Spectrum) -> Array:

@@ -100,6 +100,7 @@ def _strength_facts(solved: Solved) -> tuple[dict[str, Any], str]:
         "value": None if choice is None else choice.strength * scale,
         "effective_dof": known(solved.answers.fit.effective_dof),
         "choices": values,
+        "interval": solved.answers.band,
     }, unit
 
 

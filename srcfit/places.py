@@ -203,7 +203,7 @@ def _mixture(
     each = [
         invert(
             build(_at(case, unknown, places), readings, edges=edges),
-            criteria and int(k) == best, seed,
+            criteria and int(k) == best, seed, tuned=False,
         )
         for k, places in zip(which, spots, strict=True)
     ]  # fmt: skip

@@ -5,7 +5,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -13,6 +13,7 @@ import numpy as np
 
 from srcfit.answers import Asked, ask, per, section_forces
 from srcfit.bands import Answers, cautious, plain
+from srcfit.calibration import calibrated
 from srcfit.case.model import Case
 from srcfit.constraints import Held, constrained
 from srcfit.criteria import CRITERIA, Choice, choose
@@ -109,15 +110,24 @@ def solve(
 
 
 def invert(
-    forward: Forward, criteria: bool, rng: np.random.SeedSequence, noise: Noise | None = None
-) -> Solved:
-    """Invert a forward model; parameters as of `solve`, the noise found where it is not given."""
+    forward: Forward, criteria: bool, rng: np.random.SeedSequence, noise: Noise | None = None,
+    *, tuned: bool = True,
+) -> Solved:  # fmt: skip
+    """Invert a forward model; parameters as of `solve`, the noise found where it is not given.
+
+    `tuned`: calibrate the band where the case asks for it and criteria are run.
+    """
     case, balanced = forward.case, eliminate(forward)
     noise = noise_of(forward, balanced) if noise is None else noise
     problem = whitened(forward, noise.sd, noise.lag, balanced, noise.weight)
     asked = ask(forward, balanced)
-    answers, ladder, choices, choice = answered(forward, problem, asked.questions, criteria)
     strength = case.strength
+    runs = None
+    if tuned and criteria and strength.interval == "calibrated":
+        runs = asked.runs("cells", *(f.name for f in section_forces(case)))
+    answers, ladder, choices, choice = answered(
+        forward, problem, asked.questions, criteria, runs=runs
+    )  # fmt: skip
     known, held = limits(forward, asked, balanced), None
     if known is not None:
         centre = None if choice is None or ladder is None else (ladder, choice.index)
@@ -133,12 +143,17 @@ def invert(
 
 
 def answered(
-    forward: Forward, problem: Problem, questions: Questions, criteria: bool,
+    forward: Forward,
+    problem: Problem,
+    questions: Questions,
+    criteria: bool,
     at_least: float = 0.0,
+    runs: Sequence[slice] | None = None,
 ) -> tuple[Answers, Ladder | None, Mapping[str, Choice], Choice | None]:
     """Answers without inequalities, as the case asks; ladder, choices, the one followed.
 
-    `at_least` as of `bands.cautious`.
+    `at_least` as of `bands.cautious`; with `runs` (as of `calibration.calibrated`) the band of an
+    averaged estimate is calibrated.
     """
     case, strength = forward.case, forward.case.strength
     smooth = problem.smooth and bool(problem.grid.free.any())
@@ -154,6 +169,8 @@ def answered(
             roughness=1 if strength.roughness == "averaged" else strength.roughness,
             strength=choice.strength if choice and choice.criterion == "stated" else None,
         )  # fmt: skip
+    elif runs is not None and centre is None:
+        answers = calibrated(problem, questions, level=strength.level, runs=runs)
     else:
         answers = cautious(
             problem, questions, level=strength.level, centre=centre, at_least=at_least

@@ -127,10 +127,12 @@ def findings_text(findings: Iterable[Mapping[str, str]]) -> str:
 def _opening(summary: Summary) -> str:
     fit, strength = summary["fit"], summary["strength"]
     value = brief(strength["value"], 4)
+    percent = f"{100 * summary['level']:g} %"
     chosen = f"strength {value}, chosen by {strength['choose']}" if value else "strength averaged"
     rows = [
         ("readings", f"{fit['used']} used of {fit['read']}"),
         ("method", f"{strength['solver']}, {chosen}, {_dof(strength['effective_dof'])}"),
+        ("intervals", f"{strength.get('interval', 'cautious')} band, {percent}"),
         ("noise", _noise(summary)),
     ]
     return join(clean(summary["title"]), table(("", ""), rows))

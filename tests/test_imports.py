@@ -21,13 +21,13 @@ ORDER = (
     "quantities", "nulls", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen",
     "kernel", "sensors", "grid", "unknowns", "forward", "view", "elimination", "whitening",
     "priors", "solvers", "criteria", "evidence", "noise", "outliers", "robust", "bands",
-    "references", "repeats", "calibration", "simultaneous", "unaided", "misfit", "smoother", "laws",
-    "truncated", "strict", "answers", "limits", "envelope", "constraints", "placing", "balance",
-    "checks", "solve", "places", "rounding", "readingsalone", "results", "doubts", "verdicts", "facts", "tell",
-    "patterns", "separate", "shares", "knowledge", "frames", "output", "captions", "drawing",
-    "axes", "plots", "report", "recover", "text", "kindtext", "inspection", "rawplot", "trial",
-    "prediction", "draft", "start", "plan", "rehearse", "series", "campaigns", "joint",
-    "changes", "compare", "sklearn", "cli", "__main__",
+    "references", "repeats", "calibration", "simultaneous", "unaided", "misfit", "smoother",
+    "laws", "truncated", "strict", "answers", "limits", "envelope", "constraints", "placing",
+    "balance", "checks", "solve", "places", "rounding", "readingsalone", "results", "doubts",
+    "verdicts", "facts", "tell", "patterns", "separate", "shares", "knowledge", "frames",
+    "output", "captions", "drawing", "axes", "plots", "report", "recover", "text", "kindtext",
+    "inspection", "rawplot", "trial", "prediction", "draft", "start", "plan", "rehearse",
+    "series", "campaigns", "joint", "changes", "compare", "sklearn", "cli", "__main__",
 )  # fmt: skip
 
 # rooms that a module below them in the list may open inside a function

@@ -217,7 +217,7 @@ class StrengthSpec:
     roughness: Literal["averaged", 0, 1, 2] | float = "averaged"
     choose: Choose | float = "averaged"
     level: float = 0.95
-    interval: Literal["cautious", "plain"] = "cautious"
+    interval: Literal["cautious", "calibrated", "plain"] = "cautious"
 
 
 @dataclass(frozen=True)

@@ -44,6 +44,7 @@ ROOT: Path = ("source",)
 FEWEST_CELLS = 3
 DENSE_MATRICES = 6  # square matrices of cells by cells held at once
 CONTRADICTION = 5.0  # standard deviations
+INTERVALS = ("cautious", "calibrated", "plain")
 
 
 def most_cells() -> int:
@@ -308,11 +309,11 @@ class _Asked:
             return Monotone(start, end, table.trend == "rising")
 
         found: Any = each(self.reader, (*ROOT, "monotone"), value, one)
-        return tuple(found)
         for a, b in combinations(found, 2):
             if a.rising != b.rising and max(a.start, b.start) < min(a.end, b.end):
                 self.reader.wrong((*ROOT, "monotone"), "a rising and a falling stretch overlap",
                                   "let one begin where the other ends")  # fmt: skip
+        return tuple(found)
 
     def total(self, data: object) -> Knowledge | None:
         if data is None:
@@ -359,7 +360,7 @@ def read_strength(reader: Reader, data: Mapping[str, Any]) -> StrengthSpec:
     ):
         values["solver"] = table.solver
     if table.interval is not None and reader.choose(
-        (*root, "interval"), table.interval, ("cautious", "plain"), "kind of interval"
+        (*root, "interval"), table.interval, INTERVALS, "kind of interval"
     ):
         values["interval"] = table.interval
     if table.roughness is not None:

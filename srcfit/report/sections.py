@@ -11,7 +11,7 @@ from srcfit.captions import extent, percent, section_curves, source_word, unit
 from srcfit.frames import flags, number
 from srcfit.recovery import Recovery
 from srcfit.report import tables, telling
-from srcfit.report.assumptions import assumptions
+from srcfit.report.assumptions import assumptions, band
 from srcfit.report.data import LINES, READINGS
 from srcfit.report.html import clean, figure, name, nested, safe, section
 from srcfit.report.method import CAUTIONS, method_text
@@ -312,8 +312,8 @@ def numbers(recovery: Recovery) -> str:
         tables.with_own_units(recovery, "nuisances", "Nuisances", ("name",)),
     )
     note = (
-        "<p>Standard uncertainties and intervals are those of the cautious band; they are not "
-        "additive, because neighbouring zones share their doubt.</p>"
+        f"<p>Standard uncertainties and intervals are those of the {band(recovery)} band; they "
+        "are not additive, because neighbouring zones share their doubt.</p>"
     )
     return section("numbers", "Numbers", note + "".join(parts) + _alone(recovery))
 
