@@ -111,7 +111,7 @@ def _draws(covariance: Array, dof: float | None) -> Array:
     rng = np.random.default_rng(SEED)
     factor = sd[:, None] * V[:, keep] * np.sqrt(lam[keep])
     z = rng.normal(size=(DRAWS, int(keep.sum()))) @ factor.T
-    return z if dof is None else z / np.sqrt(rng.chisquare(dof, DRAWS) / dof)[:, None]
+    return np.asarray(z if dof is None else z / np.sqrt(rng.chisquare(dof, DRAWS) / dof)[:, None])
 
 
 def sup_quantile(covariance: Array, level: float, dof: float | None = None) -> float:
