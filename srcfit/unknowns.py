@@ -13,6 +13,7 @@ from srcfit.case.model import Case, ColumnSpec
 from srcfit.member import Array, Member, Unknown
 from srcfit.readings.model import Readings
 from srcfit.state import Matrix
+from srcfit.unit_texts import header_unit
 from srcfit.units import factor, same_dimension
 
 
@@ -77,13 +78,19 @@ def restraint_label(case: Case, name: str) -> tuple[str, str]:
 
 
 def response_unit(case: Case) -> str:
-    """Unit of the first readings of the response itself; the member's SI unit without any."""
+    """Unit of the first readings of the response itself, as the case or a column's header says.
+
+    Without any the member's SI unit, or mm where the response is a movement.
+    """
     kind = case.member.kind
     for spec in case.columns:
-        unit = spec.unit
-        if unit and kind.sensor(spec.kind).quantity == "response":
+        if kind.sensor(spec.kind).quantity != "response":
+            continue
+        unit = spec.unit or header_unit(spec.columns[0], kind.response_unit)
+        if unit:
             return unit if same_dimension(unit, kind.response_unit) else kind.response_unit
-    return kind.response_unit
+    moves = kind.response_unit == "m" and not kind.relative and kind.name != "general"
+    return "mm" if moves else kind.response_unit
 
 
 def place_text(case: Case, at: float) -> str:

@@ -16,7 +16,8 @@ ROOT = Path(srcfit.__file__).parent
 
 # a package counts as one unit; the data of a package (its `model`) may stand above the rest of it
 ORDER = (
-    "errors", "unit_names", "units", "member", "members", "case.model", "readings.model",
+    "errors", "unit_names", "units", "unit_texts", "member", "members", "case.model",
+    "readings.model",
     "problem", "recovery", "case", "readings", "intervals", "state", "influence", "holds",
     "quantities", "nulls", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen",
     "kernel", "sensors", "grid", "unknowns", "forward", "view", "elimination", "whitening",

@@ -39,6 +39,7 @@ from srcfit.case.schema import (
 )
 from srcfit.errors import UnitError
 from srcfit.member import MemberKind
+from srcfit.unit_texts import header_unit
 
 ROOT: Path = ("source",)
 FEWEST_CELLS = 3
@@ -72,7 +73,8 @@ def read_source(
         reader, "total_unit", table.total_unit, kind.total_unit,
         units.total_unit(unit, "m", kind.geometry),
     )  # fmt: skip
-    first = tables[0].position.unit if tables else None
+    at = tables[0].position if tables else None
+    first = (at.unit or header_unit(at.column, "m")) if at else None
     position_unit = _unit(reader, "position_unit", table.position_unit, "m", first or "m")
     ask = _Asked(reader, kind, span)
     zones = ask.zones(table.zones)

@@ -9,9 +9,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from srcfit import unit_texts as convert
 from srcfit.errors import ReadingsError
-from srcfit.readings import convert
-from srcfit.readings.convert import Unit
 from srcfit.readings.numbers import (
     INCH,
     PLAIN,
@@ -24,6 +23,7 @@ from srcfit.readings.numbers import (
 )
 from srcfit.readings.table import Table, title
 from srcfit.readings.text import Cell, clean
+from srcfit.unit_texts import Unit
 
 Array = NDArray[np.float64]
 _INCHES = (INCH, 12 * INCH)

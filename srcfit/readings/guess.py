@@ -13,9 +13,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from srcfit import unit_texts as convert
 from srcfit.errors import ReadingsError
 from srcfit.member import MemberKind, SensorSpec
-from srcfit.readings import convert
 from srcfit.readings.columns import Ask, read_numbers
 from srcfit.readings.sheets import File
 from srcfit.readings.text import clean

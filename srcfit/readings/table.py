@@ -7,8 +7,8 @@ import unicodedata
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
+from srcfit import unit_texts as convert
 from srcfit.errors import ReadingsError
-from srcfit.readings import convert
 from srcfit.readings.numbers import MISSING, UnreadableError, amount, normal, why_not
 from srcfit.readings.text import (
     DELIMITERS,

@@ -5,8 +5,8 @@ from __future__ import annotations
 import re
 from dataclasses import dataclass
 
+from srcfit import unit_texts as convert
 from srcfit.errors import ReadingsError, UnitError
-from srcfit.readings import convert
 from srcfit.readings.sheets import File, manners, open_table
 from srcfit.readings.table import Table, Wanted, is_number, title
 from srcfit.readings.text import Cell, Records, clean

@@ -92,6 +92,12 @@ def in_header(header: str, si: str, difference: bool = False) -> tuple[Unit | No
     return None, other
 
 
+def header_unit(header: str, si: str) -> str | None:
+    """The unit in a header's brackets under the name that a case file takes; None without one."""
+    unit, _ = in_header(header, si)
+    return case_name(unit.text, si) if unit else None
+
+
 def bare(text: str) -> str:
     """Text of a units row without brackets around it."""
     match = _BRACKETS.fullmatch(text.strip())
