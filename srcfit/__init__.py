@@ -17,8 +17,8 @@ if TYPE_CHECKING:
     from srcfit.case.load import make_case as make_case
     from srcfit.case.member import make_member as make_member
     from srcfit.case.model import Case as Case
-    from srcfit.compare import Comparison as Comparison
     from srcfit.compare import compare as compare
+    from srcfit.comparison import Comparison as Comparison
     from srcfit.eigen import modes as modes
     from srcfit.kernel import kernel as kernel
     from srcfit.kernel import respond as respond
@@ -39,7 +39,7 @@ _FACE = {
     "modes": "srcfit.eigen",
     "respond": "srcfit.kernel",
     "Case": "srcfit.case.model",
-    "Comparison": "srcfit.compare",
+    "Comparison": "srcfit.comparison",
     "Member": "srcfit.member",
     "Readings": "srcfit.readings.model",
     "Recovery": "srcfit.recovery",

@@ -21,7 +21,7 @@ from srcfit.captions import (
 from srcfit.drawing import BLACK, BLUE, GREY, MARKERS, VERMILLION, draw_member, plain, short
 from srcfit.errors import UnitError
 from srcfit.frames import flags, ladder_of, number, numbers, pretty, texts
-from srcfit.recovery import Recovery
+from srcfit.recovery import Recovery, Result
 from srcfit.rounding import UNDETERMINED, brief, minus, plus_minus
 from srcfit.units import factor
 
@@ -34,7 +34,7 @@ INKS = (BLUE, VERMILLION, BLACK)
 SHOWN_LINES = 12  # influence lines in the printed figure
 
 
-def plot_member(recovery: Recovery, ax: Axes) -> None:
+def plot_member(recovery: Result, ax: Axes) -> None:
     """The member to scale with its sensors."""
     draw_member(recovery.case.member, recovery.readings, ax, per_metre=per_metre(recovery))
 
@@ -45,7 +45,7 @@ def labelled(name: str, unit_text: str) -> str:
     return plain(f"{name} [{shown}]" if shown else name)
 
 
-def plot_source(recovery: Recovery, ax: Axes) -> None:
+def plot_source(recovery: Result, ax: Axes) -> None:
     """Source density with its band, the zones' means and the lumped parts."""
     frame = recovery.source
     edges = np.append(numbers(frame, "from"), numbers(frame, "to")[-1:])
@@ -65,10 +65,10 @@ def plot_source(recovery: Recovery, ax: Axes) -> None:
     ax.set_xlim(*extent(recovery))
     ax.set_xlabel(labelled("x", unit(recovery, "position")))
     ax.set_ylabel(labelled(source_word(recovery), unit(recovery, "source")))
-    _legend(ax, 2, 1.07)
+    legend(ax, 2, 1.07)
 
 
-def _zones(recovery: Recovery, ax: Axes) -> None:
+def _zones(recovery: Result, ax: Axes) -> None:
     """Edges and means of the zones; names above, dropped where they would overlap."""
     frame = recovery.zones
     mean = numbers(frame, "mean")
@@ -99,7 +99,7 @@ def name_rows(start: Array, end: Array) -> list[int]:
     return rows
 
 
-def _lumped(recovery: Recovery, ax: Axes) -> None:
+def _lumped(recovery: Result, ax: Axes) -> None:
     rows = [r for r in recovery.facts.get("lumped") or [] if np.isfinite(number(r.get("at")))]
     for i, row in enumerate(rows):
         label = f"{short(str(row.get('name')))}: {plus_minus(row, unit(recovery, 'total'))}"
@@ -109,7 +109,7 @@ def _lumped(recovery: Recovery, ax: Axes) -> None:
         )  # fmt: skip
 
 
-def _legend(ax: Axes, columns: int = 2, rise: float = 1.0, **place: Any) -> None:
+def legend(ax: Axes, columns: int = 2, rise: float = 1.0, **place: Any) -> None:
     """Legend above the axes (a fixed place: looking for the emptiest corner costs time)."""
     handles, labels = ax.get_legend_handles_labels()
     if handles:
@@ -129,7 +129,7 @@ def plot_sections(recovery: Recovery, axes: Sequence[Axes]) -> None:
         ax.tick_params(labelbottom=False)
         ax.set_xlabel("")
     if len(axes):
-        _legend(axes[0])
+        legend(axes[0])
 
 
 def plot_section(recovery: Recovery, ax: Axes) -> None:
@@ -154,7 +154,7 @@ def _section(recovery: Recovery, curve: SectionCurve, ax: Axes) -> None:
     ax.set_ylabel(labelled(curve.name, curve.unit))
 
 
-def panels(recovery: Recovery) -> list[tuple[str, str]]:
+def panels(recovery: Result) -> list[tuple[str, str]]:
     """Sensor kind and unit of each panel of readings, in order of appearance.
 
     Readings of one kind share a panel in the unit that most of them have, if theirs can be
@@ -163,7 +163,7 @@ def panels(recovery: Recovery) -> list[tuple[str, str]]:
     return list(dict.fromkeys(p for p in _panel_of(recovery) if p[0]))
 
 
-def _panel_of(recovery: Recovery) -> list[tuple[str, str]]:
+def _panel_of(recovery: Result) -> list[tuple[str, str]]:
     """Kind and unit of the panel of each row."""
     frame = recovery.readings
     pairs = list(zip(texts(frame, "kind"), texts(frame, "unit"), strict=True))
@@ -178,7 +178,7 @@ def _panel_of(recovery: Recovery) -> list[tuple[str, str]]:
     return [to.get(p, p) for p in pairs]
 
 
-def _turn(recovery: Recovery, kind: str, unit_text: str, other: str) -> tuple[float, float] | None:
+def _turn(recovery: Result, kind: str, unit_text: str, other: str) -> tuple[float, float] | None:
     """(scale, shift) from a unit to another one of the same kind; None if it cannot be done."""
     if unit_text == other:
         return 1.0, 0.0
@@ -191,7 +191,7 @@ def _turn(recovery: Recovery, kind: str, unit_text: str, other: str) -> tuple[fl
     return a / c, (b - d) / c
 
 
-def turned(recovery: Recovery) -> tuple[Array, Array]:
+def turned(recovery: Result) -> tuple[Array, Array]:
     """Scale and shift (n,) of every row from its own unit into that of its panel."""
     frame = recovery.readings
     pairs = zip(texts(frame, "kind"), texts(frame, "unit"), _panel_of(recovery), strict=True)
@@ -232,7 +232,7 @@ def plot_readings(recovery: Recovery, axes: Sequence[Sequence[Axes]]) -> None:
         _panel(recovery, kind, unit_text, upper)
         _residuals(recovery, kind, unit_text, lower)
     if len(axes):
-        _legend(axes[0][0], 2)
+        legend(axes[0][0], 2)
 
 
 def plot_panel(recovery: Recovery, ax: Axes) -> None:
@@ -241,7 +241,7 @@ def plot_panel(recovery: Recovery, ax: Axes) -> None:
         _panel(recovery, kind, unit_text, ax)
         ax.tick_params(labelbottom=True)
     ax.set_xlabel(labelled("x", unit(recovery, "position")))
-    _legend(ax)
+    legend(ax)
 
 
 def plot_residuals(recovery: Recovery, ax: Axes) -> None:
@@ -250,7 +250,7 @@ def plot_residuals(recovery: Recovery, ax: Axes) -> None:
         _residuals(recovery, kind, unit_text, ax)
 
 
-def here(recovery: Recovery, kind: str, unit_text: str) -> NDArray[np.bool_]:
+def here(recovery: Result, kind: str, unit_text: str) -> NDArray[np.bool_]:
     """Rows (n,) that stand in a panel."""
     return np.array([p == (kind, unit_text) for p in _panel_of(recovery)], dtype=bool)
 
@@ -322,7 +322,7 @@ def plot_l_curve(recovery: Recovery, ax: Axes) -> None:
             label=plain(minus(f"{name}: {brief(value)}") + mark),
         )  # fmt: skip
     _log_ticks(ax)
-    _legend(ax, 1, loc="upper right", bbox_to_anchor=(1.0, 1.0))
+    legend(ax, 1, loc="upper right", bbox_to_anchor=(1.0, 1.0))
 
 
 def _log_ticks(ax: Axes) -> None:
@@ -374,4 +374,4 @@ def plot_modes(recovery: Recovery, ax: Axes) -> None:
         label = minus(f"{i + 1}: {brief(np.real(recovery.pictures.eigenvalues[i]))}")
         ax.plot(x, column / top, color=INKS[i % 3], ls=LINES[i % 4],
                 lw=1.3, label=label)  # fmt: skip
-    _legend(ax, 3, title="mode: eigenvalue", title_fontsize=8)
+    legend(ax, 3, title="mode: eigenvalue", title_fontsize=8)

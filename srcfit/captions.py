@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from srcfit.frames import flags, ladder_of, number, numbers, pretty, texts, unit_of
-from srcfit.recovery import Recovery
+from srcfit.recovery import Recovery, Result
 from srcfit.rounding import NO_INTERVAL, UNDETERMINED, brief, interval, minus, plus_minus
 
 Array = NDArray[np.float64]
@@ -21,22 +21,28 @@ SOURCE_WORDS = {
 }  # fmt: skip
 
 
-def source_word(recovery: Recovery) -> str:
+def source_word(recovery: Result) -> str:
     """What the trade calls the source of this member kind."""
     return SOURCE_WORDS.get(recovery.case.member.kind.name, "source")
 
 
-def percent(recovery: Recovery) -> str:
+def member_word(recovery: Result) -> str:
+    """Plain name of the member's kind for a sentence."""
+    kind = recovery.case.member.kind.name
+    return "member" if kind == "general" else kind.replace("_", " ")
+
+
+def percent(recovery: Result) -> str:
     """Level of the intervals as a text like ``95 %``."""
     return f"{brief(100 * number(recovery.facts.get('level') or 0.95))} %"
 
 
-def unit(recovery: Recovery, name: str) -> str:
+def unit(recovery: Result, name: str) -> str:
     """Unit of position, source, total, response or strength; a dimensionless one is empty."""
     return pretty(str((recovery.facts.get("units") or {}).get(name) or ""))
 
 
-def describe_member(recovery: Recovery) -> str:
+def describe_member(recovery: Result) -> str:
     """Kind, extent, ends, supports and sensors of the member."""
     member, place = recovery.case.member, unit(recovery, "position")
     x0, x1 = extent(recovery)
@@ -51,20 +57,20 @@ def describe_member(recovery: Recovery) -> str:
     )
 
 
-def extent(recovery: Recovery) -> tuple[float, float]:
+def extent(recovery: Result) -> tuple[float, float]:
     """Places of the two ends in the user's position unit, from the first and last cell."""
     start, end = numbers(recovery.source, "from"), numbers(recovery.source, "to")
     return (float(start[0]), float(end[-1])) if len(start) else (0.0, 0.0)
 
 
-def per_metre(recovery: Recovery) -> float:
+def per_metre(recovery: Result) -> float:
     """Position units in one metre."""
     x0, x1 = extent(recovery)
     length = recovery.case.member.length
     return (x1 - x0) / length if length and x1 > x0 else 1.0
 
 
-def count_kinds(recovery: Recovery) -> Mapping[str, int]:
+def count_kinds(recovery: Result) -> Mapping[str, int]:
     """Used readings per sensor kind, in order of appearance."""
     used = flags(recovery.readings)
     kinds = texts(recovery.readings, "kind")

@@ -4,15 +4,18 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass, replace
+from hashlib import sha256
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+from scipy.linalg import cholesky
 
 from srcfit import __version__, checks
 from srcfit.answers import per
 from srcfit.bands import undetermined
 from srcfit.campaigns import Numbers, Pairing
 from srcfit.case.model import Case
+from srcfit.changewords import amount, signed, statements
 from srcfit.errors import Finding
 from srcfit.facts import peak_facts, reaction_facts, zone_facts
 from srcfit.forward import Forward
@@ -28,7 +31,7 @@ from srcfit.results import (
     source_table,
     zones_table,
 )
-from srcfit.rounding import UNDETERMINED, brief, interval, plus_minus, twin
+from srcfit.rounding import brief, interval
 from srcfit.solve import Solved
 from srcfit.text import bullets, clean, findings_text, join, section, table
 from srcfit.unknowns import response_unit
@@ -59,11 +62,11 @@ class Agreed:
 
 @dataclass(frozen=True)
 class Joint:
-    """The joint inversion as one of A's layout; the names of its nuisances, the rows' sd."""
+    """The joint inversion as one of A's layout; the rest as of `joint.Joined`."""
 
     solved: Solved
     nuisances: tuple[tuple[str, str], ...]
-    spread: Array
+    noise: Array
 
 
 # --- tables and summary -------------------------------------------------------------------------
@@ -150,8 +153,16 @@ def _campaign(solved: Solved) -> dict[str, Any]:
             {"file": readings.file[i], "line": int(readings.line[i]), "reason": readings.reason[i]}
             for i in np.flatnonzero(~readings.used)
         ],
-        "inputs": [{"file": f, "sha256": h} for f, h in readings.inputs.items()],
+        "inputs": _inputs(case, readings.inputs),
     }  # fmt: skip
+
+
+def _inputs(case: Case, read: Mapping[str, str]) -> list[dict[str, str]]:
+    """Every file of a campaign with its sha256: the case, what it names, the readings."""
+    own = [case.path] if case.path is not None else []
+    paths = [p for p in (*own, *(case.folder / f for f in case.files)) if p.is_file()]
+    files = [(p.name, sha256(p.read_bytes()).hexdigest()) for p in paths] + [*read.items()]
+    return [{"file": name, "sha256": digest} for name, digest in files]
 
 
 def _fit(solved: Solved) -> dict[str, Any]:
@@ -198,6 +209,7 @@ def _readings(
     import pandas as pd
 
     fit, read = found.solved.answers.fit, found.solved.readings
+    sd, residual = _recoloured(found)
     driven, scale = found.solved.forward.driven, position_scale(found.solved)
     place = f"x [{alone[0].forward.case.source.position_unit}]"
 
@@ -221,18 +233,30 @@ def _readings(
         if driven:
             shown["difference_imag"] = np.imag((other - value) * size)
             return pd.DataFrame(shown)
-        shown["sd"] = found.spread * np.real(size) * (
-            1.0 if found.solved.problem.stated else fit.noise
-        )  # fmt: skip
+        shown["sd"] = sd * np.real(size)
+        shown["predicted"] = shown["difference"] - residual * np.real(size)
         return pd.DataFrame(shown | {"standardised": fit.standardised[:read]})
-    tables = []
-    for side, solved in enumerate(alone):
-        shown, (value, size, shift) = columns(side, np.arange(len(solved.forward.rows)))
+    tables, counts = [], [len(s.forward.rows) for s in alone]
+    for side, rows in enumerate((slice(counts[0]), slice(counts[0], sum(counts)))):
+        shown, (value, size, shift) = columns(side, np.arange(counts[side]))
+        given = np.real(value * size + shift)
         tables.append(pd.DataFrame(
-            {"campaign": "AB"[side]} | shown | {"value": np.real(value * size + shift)}
+            {"campaign": "AB"[side]} | shown | {"value": given, "sd": sd[rows] * np.real(size),
+             "predicted": given - residual[rows] * np.real(size)}
         ))  # fmt: skip
     whole = pd.concat(tables, ignore_index=True)
     return whole.assign(standardised=fit.standardised[:read])
+
+
+def _recoloured(found: Joint) -> tuple[Array, Array]:
+    """Standard deviation and residual (r,) of the joint problem's readings, both in SI."""
+    fit, noise = found.solved.answers.fit, found.noise
+    white = fit.residual[: len(noise)]
+    factor = 1.0 if found.solved.problem.stated else float(fit.noise)
+    if noise.ndim == 1:
+        sd = np.sqrt(noise)
+        return factor * sd, sd * white
+    return factor * np.sqrt(np.diag(noise)), cholesky(noise, lower=True) @ white
 
 
 # --- findings -----------------------------------------------------------------------------------
@@ -348,8 +372,8 @@ def _numbers(facts: Mapping[str, Any]) -> str:
     at, total, density = units["position"], units["total"], units["source"]
 
     def row(name: str, where: str, n: Mapping[str, Any], unit: str) -> tuple[str, ...]:
-        own = [_amount(n[k], unit) if k in n else "" for k in ("a", "b")]
-        return (name, where, *own, _signed(_amount(n, unit)), interval(n, unit))
+        own = [amount(n[k], unit) if k in n else "" for k in ("a", "b")]
+        return (name, where, *own, signed(amount(n, unit)), interval(n, unit))
 
     rows = [row("total", "", facts["total"], total)]
     rows += [row(f"zone {z['name']}", f"{brief(z['from'], 6)} to {brief(z['to'], 6)} {at}", z,
@@ -364,35 +388,3 @@ def _numbers(facts: Mapping[str, Any]) -> str:
              for r in facts["reactions"]]  # fmt: skip
     level = f"{100 * facts['level']:g} % interval"
     return table(("", "where", "A ± sd", "B ± sd", "change ± sd", level), rows, "llrrrr")
-
-
-def statements(facts: Mapping[str, Any]) -> list[str]:
-    """One sentence for the total, each zone and each lumped part: what is shown, what is not."""
-    unit = facts["units"]["total"]
-    named = [("total", facts["total"])]
-    named += [(f"zone {z['name']}", z) for z in facts["zones"]]
-    named += [(f"lumped {p['name']}", p) for p in facts["lumped"]]
-    return [f"{name}: {_statement(n, unit)}" for name, n in named]
-
-
-def _statement(n: Mapping[str, Any], unit: str) -> str:
-    if n["shown"] is None:
-        return "the readings cannot tell its change"
-    change = _signed(_amount(n, unit))
-    if n["shown"]:
-        return f"{change}: a change is shown"
-    lead = f"{change}: no change is shown; not detected is not absent"
-    if n["missed"] is None:
-        return f"{lead}, and these sensors may have missed any change"
-    return f"{lead}, a change of up to {brief(n['missed'], 2)} {unit} may have been missed"
-
-
-def _amount(n: Mapping[str, Any], unit: str) -> str:
-    """Value ± sd; of a driven member with its imaginary part."""
-    told, beside = plus_minus(n, unit), twin(n, unit)
-    return f"{told} and {beside}" if beside and told != UNDETERMINED else told
-
-
-def _signed(text: str) -> str:
-    """The same with a plus sign before a positive change."""
-    return f"+{text}" if text[:1].isdigit() and text[:1] + text[1:2] != "0 " else text

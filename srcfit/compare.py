@@ -6,11 +6,8 @@ cancel, and so does most of what is uncertain about the member.
 
 from __future__ import annotations
 
-import json
-from collections.abc import Collection, Mapping, Sequence
-from dataclasses import dataclass, replace
-from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from collections.abc import Collection, Sequence
+from dataclasses import replace
 
 import numpy as np
 
@@ -18,11 +15,11 @@ from srcfit.campaigns import Pairing, check_alike, check_common, paired
 from srcfit.case.model import Case
 from srcfit.case.vary import vary
 from srcfit.changes import POWER, Agreed, Joint, told
+from srcfit.comparison import Comparison
 from srcfit.errors import SolveError
 from srcfit.forward import Forward, build
 from srcfit.joint import By, Campaign, join
 from srcfit.member import Array
-from srcfit.output import csv_text, input_paths, put, strict
 from srcfit.places import solve
 from srcfit.problem import Questions
 from srcfit.readings import read
@@ -33,72 +30,11 @@ from srcfit.shares import Properties, properties
 from srcfit.solve import Solved, answered
 from srcfit.units import quantity
 
-if TYPE_CHECKING:
-    import pandas as pd
-
 # readings of either campaign whose sensor the other one has: with fewer, all are stacked
 ENOUGH = 0.5
 # changes are tried on problems of no more entries than this, in so many turns, until they are this
 # close; steps are no longer than that, and beyond so many times the first guess nothing would do
 TRIED, TURNS, CLOSE, FASTEST, FAR = 20_000, 12, 0.02, 4.0, 100.0
-
-
-@dataclass(frozen=True)
-class Comparison:
-    """What changed from campaign A to campaign B, in the units of A.
-
-    Attributes
-    ----------
-    cases : (Case, Case)
-    source : DataFrame
-        As `Recovery.source`, of the change.
-    zones : DataFrame
-        As `Recovery.zones`, of the change; then whether it is shown, what would have been missed,
-        and the values of A and B by themselves.
-    readings : DataFrame
-        One row for each difference of readings (or, stacked, for each reading).
-    """
-
-    cases: tuple[Case, Case]
-    source: pd.DataFrame
-    zones: pd.DataFrame
-    readings: pd.DataFrame
-    facts: Mapping[str, Any]
-
-    @property
-    def total(self) -> Mapping[str, Any]:
-        """Change of the total with sd, lower and upper."""
-        found: Mapping[str, Any] = self.facts["total"]
-        return found
-
-    @property
-    def findings(self) -> list[Mapping[str, str]]:
-        """Findings: code, level, sentence."""
-        found: list[Mapping[str, str]] = self.facts["findings"]
-        return found
-
-    def summary(self) -> dict[str, Any]:
-        """The mapping written to summary.json."""
-        return dict(self.facts)
-
-    def save(self, folder: str | Path, *, replace: bool = False) -> Path:
-        """Write source.csv, zones.csv, readings.csv and summary.json, whole or not at all.
-
-        Raises
-        ------
-        OutputError
-            When the folder exists (unless `replace`) or cannot be made.
-        """
-
-        def write(new: Path) -> None:
-            for name in ("source", "zones", "readings"):
-                text = csv_text(getattr(self, name))
-                (new / f"{name}.csv").write_text(text, encoding="utf-8", newline="")
-            text = json.dumps(strict(self.facts), indent=2, ensure_ascii=False, allow_nan=False)
-            (new / "summary.json").write_text(text + "\n", encoding="utf-8")
-
-        inputs = tuple(p for case in self.cases for p in input_paths(case))
-        return put(folder, write, replace=replace, inputs=inputs).folder
 
 
 def compare(
@@ -251,7 +187,7 @@ def _solved(
     return Joint(
         Solved(forward, problem, Noise.given(*noise[0]), joined.asked, answers, ladder, choices,
                choice),
-        joined.nuisances, joined.spread,
+        joined.nuisances, joined.noise,
     )  # fmt: skip
 
 

@@ -55,13 +55,14 @@ class Joined:
         The questions of the case about B - A; null modes are left out.
     nuisances : tuple of (name, "difference" | "A" | "B")
         What the block "nuisances" holds: B - A where both campaigns have it, else itself.
-    spread : (r,) standard deviation of the noise of each row that is no knowledge (SI)
+    noise : (r,) variances of the noise of the rows that are no knowledge (SI), or (r, r)
+        covariance
     """
 
     problem: Problem
     asked: Asked
     nuisances: tuple[tuple[str, str], ...]
-    spread: Array
+    noise: Array
 
 
 # --- the joint problem --------------------------------------------------------------------------
@@ -147,8 +148,7 @@ def join(
         along=_along(first, second, merge, by),
     )  # fmt: skip
     asked, labels = _asked(first, second, merge, by, common)
-    variance = spread if spread.ndim == 1 else np.diag(spread)
-    return Joined(problem, asked, labels, np.sqrt(variance))
+    return Joined(problem, asked, labels, spread)
 
 
 def _expanded(forward: Forward, readings: Numbers) -> Numbers:

@@ -49,7 +49,7 @@ class Drawn:
     text: str
 
 
-def _figure(height: float, above: float = 0.15) -> Figure:
+def new_figure(height: float, above: float = 0.15) -> Figure:
     """An empty figure; `above` inches stay free over the axes."""
     from matplotlib.figure import Figure
 
@@ -58,7 +58,7 @@ def _figure(height: float, above: float = 0.15) -> Figure:
     return figure
 
 
-def _tidy(figure: Figure) -> Figure:
+def tidy(figure: Figure) -> Figure:
     """Small ticks, open frame, labels at fixed places (measuring the ticks for them is slow)."""
     from matplotlib.transforms import blended_transform_factory
 
@@ -80,9 +80,9 @@ def _single(
     plot: Callable[[Recovery, Axes], None], height: float, above: float = 0.15
 ) -> Callable[[Recovery], Figure]:
     def draw(recovery: Recovery) -> Figure:
-        figure = _figure(height, above)
+        figure = new_figure(height, above)
         plot(recovery, figure.add_subplot())
-        return _tidy(figure)
+        return tidy(figure)
 
     return draw
 
@@ -90,35 +90,35 @@ def _single(
 def readings_figure(recovery: Recovery) -> Figure:
     """All panels of readings, fit above and residuals below."""
     count = max(len(panels(recovery)), 1)
-    figure = _figure(3.3 * count + 0.55, 0.45)
+    figure = new_figure(3.3 * count + 0.55, 0.45)
     outer = figure.add_gridspec(count, 1, hspace=0.28)
     pairs = []
     for i in range(count):
         inner = outer[i].subgridspec(2, 1, height_ratios=(5, 2), hspace=0.12)
         pairs.append((figure.add_subplot(inner[0]), figure.add_subplot(inner[1])))
     plot_readings(recovery, pairs)
-    return _tidy(figure)
+    return tidy(figure)
 
 
 def section_figure(recovery: Recovery) -> Figure:
     """Each force inside the member in axes of its own, one above the other."""
     count = max(len(section_curves(recovery)), 1)
-    figure = _figure(2.2 * count + 0.55, 0.35)
+    figure = new_figure(2.2 * count + 0.55, 0.35)
     plot_sections(recovery, list(figure.subplots(count, 1, squeeze=False)[:, 0]))
     figure.subplots_adjust(hspace=0.22)
-    return _tidy(figure)
+    return tidy(figure)
 
 
 def overview(recovery: Recovery) -> Figure:
     """The member, the source and the first panel of readings with its residuals, in one figure."""
-    figure = _figure(9.4, 0.75)
+    figure = new_figure(9.4, 0.75)
     outer = figure.add_gridspec(3, 1, height_ratios=(2.0, 3.4, 3.6), hspace=0.55)
     inner = outer[2].subgridspec(2, 1, height_ratios=(5, 2), hspace=0.12)
     plot_member(recovery, figure.add_subplot(outer[0]))
     plot_source(recovery, figure.add_subplot(outer[1]))
     plot_readings(recovery, [(figure.add_subplot(inner[0]), figure.add_subplot(inner[1]))])
     figure.suptitle(plain(short(recovery.case.title, 80)), fontsize=11)
-    return _tidy(figure)
+    return tidy(figure)
 
 
 IN_AXES: dict[str, Callable[[Recovery, Axes], None]] = {
@@ -166,6 +166,14 @@ def quiet() -> Iterator[None]:
         yield
 
 
+def drawn_as(figure: Figure, text: str) -> Drawn:
+    """Both forms of a figure (inside `quiet`) with its text alternative."""
+    vector, bitmap = io.StringIO(), io.BytesIO()
+    figure.savefig(vector, format="svg", metadata={"Date": None, "Creator": "srcfit"})
+    figure.savefig(bitmap, format="png", dpi=110, metadata={"Software": "srcfit"})
+    return Drawn(vector.getvalue(), bitmap.getvalue(), text)
+
+
 def draw_all(recovery: Recovery, names: Sequence[str] | None = None) -> dict[str, Drawn]:
     """Draw each figure once.
 
@@ -185,11 +193,7 @@ def draw_all(recovery: Recovery, names: Sequence[str] | None = None) -> dict[str
     out = {}
     with quiet():
         for name in FIGURES if names is None else names:
-            figure = FIGURES[name](recovery)
-            vector, bitmap = io.StringIO(), io.BytesIO()
-            figure.savefig(vector, format="svg", metadata={"Date": None, "Creator": "srcfit"})
-            figure.savefig(bitmap, format="png", dpi=110, metadata={"Software": "srcfit"})
-            out[name] = Drawn(vector.getvalue(), bitmap.getvalue(), DESCRIPTIONS[name](recovery))
+            out[name] = drawn_as(FIGURES[name](recovery), DESCRIPTIONS[name](recovery))
     if names is None:
         _latest = weakref.ref(recovery), out
     return dict(out)
@@ -217,10 +221,14 @@ def save_figures(
     list of Path
         The files written.
     """
-    folder = Path(folder)
+    return save_drawn(drawn or draw_all(recovery), Path(folder))
+
+
+def save_drawn(drawn: Mapping[str, Drawn], folder: Path) -> list[Path]:
+    """Write figures that are drawn already; the files written."""
     folder.mkdir(parents=True, exist_ok=True)
     paths = []
-    for name, picture in (drawn or draw_all(recovery)).items():
+    for name, picture in drawn.items():
         for suffix, data in ((".svg", picture.svg.encode()), (".png", picture.png)):
             path = folder / f"{name}{suffix}"
             path.write_bytes(data)

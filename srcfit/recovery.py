@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -64,6 +64,30 @@ class Pictures:
     rungs: Array
     totals: Array
     fits: Array
+
+
+class Result(Protocol):
+    """What a recovery and a comparison of campaigns have in common, so that both can be shown."""
+
+    @property
+    def case(self) -> Case:
+        """What was asked, and of which member."""
+
+    @property
+    def source(self) -> pd.DataFrame:
+        """The density, cell by cell."""
+
+    @property
+    def zones(self) -> pd.DataFrame:
+        """One row a zone."""
+
+    @property
+    def readings(self) -> pd.DataFrame:
+        """One row a reading, or a difference of two."""
+
+    @property
+    def facts(self) -> Mapping[str, Any]:
+        """The mapping written to summary.json."""
 
 
 @dataclass(frozen=True)

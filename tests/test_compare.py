@@ -413,7 +413,10 @@ def test_the_command_writes_a_folder(tmp_path, monkeypatch, capsys):
     out, _ = capsys.readouterr()
     folder = tmp_path / "before-after-change"
     assert sorted(p.name for p in folder.iterdir()) == [
-        "readings.csv", "source.csv", "summary.json", "zones.csv",
+        "figures", "readings.csv", "report.html", "source.csv", "summary.json", "zones.csv",
+    ]  # fmt: skip
+    assert sorted(p.name for p in (folder / "figures").iterdir()) == [
+        "campaigns.png", "campaigns.svg", "change.png", "change.svg",
     ]  # fmt: skip
     facts = json.loads((folder / "summary.json").read_text())
     assert facts["total"]["lower"] < 270 < facts["total"]["upper"]

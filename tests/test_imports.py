@@ -18,7 +18,8 @@ ROOT = Path(srcfit.__file__).parent
 ORDER = (
     "errors", "unit_names", "units", "unit_texts", "member", "members", "case.model",
     "readings.model",
-    "problem", "recovery", "case", "readings", "intervals", "state", "influence", "holds",
+    "problem", "recovery", "comparison", "case", "readings", "intervals", "state", "influence",
+    "holds",
     "quantities", "nulls", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen",
     "kernel", "sensors", "grid", "unknowns", "forward", "view", "elimination", "whitening",
     "priors", "solvers", "criteria", "evidence", "noise", "outliers", "robust", "bands",
@@ -26,13 +27,14 @@ ORDER = (
     "laws", "truncated", "strict", "answers", "limits", "envelope", "constraints", "placing",
     "balance", "checks", "solve", "places", "rounding", "readingsalone", "results", "doubts",
     "verdicts", "facts", "tell", "patterns", "separate", "shares", "knowledge", "frames",
-    "output", "captions", "drawing", "axes", "plots", "report", "recover", "text", "kindtext",
+    "output", "captions", "changewords", "drawing", "axes", "plots", "changeplots", "report",
+    "recover", "text", "kindtext",
     "inspection", "rawplot", "trial", "prediction", "draft", "start", "plan", "rehearse",
     "series", "campaigns", "joint", "changes", "compare", "sklearn", "cli", "__main__",
 )  # fmt: skip
 
 # rooms that a module below them in the list may open inside a function
-ROOMS = {"plots", "report", "recover", "output"}
+ROOMS = {"plots", "changeplots", "report", "recover", "output"}
 # these two open everything only when it is asked for
 LAZY = {"__init__", "cli"}
 # slow to import: inside functions, or where only a type is named

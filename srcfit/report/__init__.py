@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from srcfit.report.change import change_fragment, render_change
 from srcfit.report.page import fragment, render
 
-__all__ = ["fragment", "render"]
+__all__ = ["change_fragment", "fragment", "render", "render_change"]

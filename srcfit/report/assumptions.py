@@ -8,7 +8,7 @@ from srcfit.captions import percent
 from srcfit.case.model import ColumnSpec
 from srcfit.frames import pretty
 from srcfit.member import Unknown
-from srcfit.recovery import Recovery
+from srcfit.recovery import Recovery, Result
 from srcfit.report.html import clean, listing, name, safe, section
 from srcfit.report.numbers import shown
 from srcfit.rounding import brief
@@ -22,34 +22,39 @@ def band(recovery: Recovery) -> str:
 
 def assumptions(recovery: Recovery) -> str:
     """Signs and what was taken for granted, printed back."""
-    kind, asked = recovery.case.member.kind, recovery.case.source
+    body = f"<h3>Signs</h3>{signs(recovery)}<h3>Columns</h3>"
+    body += "".join(column(c) for c in recovery.case.columns)
+    body += f"<h3>Asked of the source</h3>{listing(_asked(recovery, recovery.case.source))}"
+    return section("assumptions", "Signs and assumptions", body)
+
+
+def signs(recovery: Result) -> str:
+    """What is positive, as a list."""
+    kind = recovery.case.member.kind
     radial = kind.geometry != "line" or kind.name == "radial_aquifer"
     grows = (
         "from the inner to the outer radius" if radial else "from the left end to the right end"
     )
-    signs = [
+    told = [
         f"x grows {grows}.",
         f"A positive source pushes the {clean(kind.response)} in its positive direction.",
     ]
     if kind.order == 4:
-        signs.append(
+        told.append(
             "Positive is down for a beam's load and deflection; a sagging moment is positive; a "
             "reaction is positive when it opposes a positive load."
         )
     elif kind.relative:
-        signs.append("A flux is positive towards growing x.")
+        told.append("A flux is positive towards growing x.")
     elif kind.name in ("rod", "cable", "shaft"):
-        signs.append("A force is positive in tension, a torque with growing twist.")
+        told.append("A force is positive in tension, a torque with growing twist.")
     if recovery.case.member.driven:
-        signs.append("Complex amplitudes with time factor exp(+iωt); their real parts are shown.")
-    items = "".join(f"<li>{safe(s)}</li>" for s in signs)
-    body = f"<h3>Signs</h3><ul>{items}</ul><h3>Columns</h3>"
-    body += "".join(_column(c) for c in recovery.case.columns)
-    body += f"<h3>Asked of the source</h3>{listing(_asked(recovery, asked))}"
-    return section("assumptions", "Signs and assumptions", body)
+        told.append("Complex amplitudes with time factor exp(+iωt); their real parts are shown.")
+    return f"<ul>{''.join(f'<li>{safe(s)}</li>' for s in told)}</ul>"
 
 
-def _column(column: ColumnSpec) -> str:
+def column(column: ColumnSpec) -> str:
+    """One column of a table as it was understood."""
     turned = "turned round to the member's own sign" if column.sign < 0 else "as they are"
     pairs = [
         ("kind", safe(column.kind)),

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from srcfit.axes import fit_curve, here, panels, turned
 from srcfit.captions import choices_of, extent, per_metre, source_word, unit
 from srcfit.frames import flags, ladder_of, number, numbers, pretty, texts
-from srcfit.recovery import Recovery
+from srcfit.recovery import Recovery, Result
 from srcfit.report.html import clean
 from srcfit.rounding import brief, plus_minus
 
@@ -44,6 +44,21 @@ def chart_data(recovery: Recovery) -> dict[str, Any]:
     }
 
 
+def source_data(result: Result) -> dict[str, Any]:
+    """What the page's script needs of a result that has a source alone, and no ladder."""
+    return {
+        "units": {k: unit(result, k) for k in ("position", "source", "total")},
+        "word": source_word(result),
+        "extent": [_six(v) for v in extent(result)],
+        "source": _source(result),
+        "panels": [],
+        "ladder": {"strengths": [], "labels": [], "totals": [], "cells": "", "fits": "",
+                   "rows": [], "curve": {"strength": [], "a": [], "b": []}, "marks": [],
+                   "start": 0},
+        "influence": {"x": [], "rows": [], "scale": [], "lines": "", "units": []},
+    }  # fmt: skip
+
+
 def as_json(data: Any) -> str:
     """JSON that cannot end the element it stands in."""
     text = json.dumps(data, separators=(",", ":"), ensure_ascii=True, allow_nan=False)
@@ -72,7 +87,7 @@ def _kept(recovery: Recovery) -> NDArray[np.int64]:
     return used
 
 
-def _source(recovery: Recovery) -> dict[str, Any]:
+def _source(recovery: Result) -> dict[str, Any]:
     frame = recovery.source
     lumped = [
         {"name": clean(r.get("name")), "at": _six(r.get("at")),

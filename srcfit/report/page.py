@@ -8,9 +8,10 @@ import re
 from collections.abc import Mapping
 from functools import lru_cache
 from importlib import resources
+from typing import Any
 
 from srcfit.plots import Drawn, draw_all
-from srcfit.recovery import Recovery
+from srcfit.recovery import Recovery, Result
 from srcfit.report import tables
 from srcfit.report.data import as_json, chart_data
 from srcfit.report.html import clean, name, safe
@@ -47,10 +48,16 @@ def render(recovery: Recovery, drawn: Mapping[str, Drawn] | None = None) -> str:
     """
     drawn = drawn or draw_all(recovery)
     body = "\n".join(section(recovery) for section in SECTIONS.values())
-    body = _with_figures(body, drawn)
+    title = str(recovery.facts.get("title") or recovery.case.title or "Recovery")
+    return document(
+        recovery, title, with_figures(body, drawn, CAPTIONS), chart_data(recovery)
+    )  # fmt: skip
+
+
+def document(result: Result, title: str, body: str, data: Mapping[str, Any]) -> str:
+    """A whole page around its sections, with the numbers of its live charts."""
     style = _asset("uPlot.min.css") + _asset("page.css")
     scripts = (_asset("uPlot.iife.min.js"), _asset("page.js"))
-    title = str(recovery.facts.get("title") or recovery.case.title or "Recovery")
     policy = (
         "default-src 'none'; img-src data:; base-uri 'none'; form-action 'none'; "
         f"script-src {' '.join(map(_hash, scripts))}; style-src {_hash(style)}"
@@ -62,10 +69,10 @@ def render(recovery: Recovery, drawn: Mapping[str, Drawn] | None = None) -> str:
         '<meta name="color-scheme" content="light dark">\n<link rel="icon" href="data:,">\n'
         f"<title>{safe(title)}</title>\n<style>{style}</style>\n</head>\n<body>\n"
         '<a class="skip" href="#answer">Skip to the answer</a>\n'
-        f"<header><p>{safe(recovery.case.member.kind.title)}</p><h1>{name(title)}</h1></header>\n"
+        f"<header><p>{safe(result.case.member.kind.title)}</p><h1>{name(title)}</h1></header>\n"
         f'<div class="frame">{_contents(body)}\n<main>\n{body}\n</main></div>\n'
-        f"<footer><p>srcfit {safe(recovery.facts.get('version'))}</p></footer>\n"
-        f'<script type="application/json" id="data">{as_json(chart_data(recovery))}</script>\n'
+        f"<footer><p>srcfit {safe(result.facts.get('version'))}</p></footer>\n"
+        f'<script type="application/json" id="data">{as_json(data)}</script>\n'
         + "".join(f"<script>{s}</script>\n" for s in scripts)
         + "</body>\n</html>\n"
     )
@@ -79,14 +86,19 @@ def fragment(recovery: Recovery) -> str:
     str
         HTML without scripts and styles of its own.
     """
-    drawn = draw_all(recovery, ("source",))
-    title = name(recovery.facts.get("title") or recovery.case.title)
-    plain = re.sub(r'<a class="anchor".*?</a>', "", answer(recovery) + findings(recovery))
+    title = str(recovery.facts.get("title") or recovery.case.title)
+    body = answer(recovery) + findings(recovery) + tables.zones(recovery)
+    return in_notebook(title, body, draw_all(recovery, ("source",))["source"])
+
+
+def in_notebook(title: str, body: str, drawn: Drawn) -> str:
+    """Sections and a figure without anchors, links and ids, under a title."""
+    plain = re.sub(r'<a class="anchor".*?</a>', "", body)
     plain = re.sub(r'<a href="#findings">(.*?)</a>', r"\1", plain)
-    plain = re.sub(r' (?:id|aria-labelledby)="[^"]*"', "", plain + tables.zones(recovery))
-    tag = hashlib.sha256(drawn["source"].svg.encode()).hexdigest()[:8]
-    picture = inline(drawn["source"].svg, f"srcfit-{tag}", drawn["source"].text)
-    return f'<div class="srcfit"><h3>{title}</h3>{plain}{picture}</div>'
+    plain = re.sub(r' (?:id|aria-labelledby)="[^"]*"', "", plain)
+    tag = hashlib.sha256(drawn.svg.encode()).hexdigest()[:8]
+    picture = inline(drawn.svg, f"srcfit-{tag}", drawn.text)
+    return f'<div class="srcfit"><h3>{name(title)}</h3>{plain}{picture}</div>'
 
 
 def _contents(body: str) -> str:
@@ -95,13 +107,15 @@ def _contents(body: str) -> str:
     return f'<nav aria-label="Contents"><ol>{items}</ol></nav>'
 
 
-def _with_figures(body: str, drawn: Mapping[str, Drawn]) -> str:
-    return re.sub(r"<!--figure ([a-z-]+)-->", lambda m: _figure(m.group(1), drawn), body)
+def with_figures(body: str, drawn: Mapping[str, Drawn], captions: Mapping[str, str]) -> str:
+    """`body` with each drawn figure in its place."""
+    return re.sub(
+        r"<!--figure ([a-z-]+)-->", lambda m: _figure(m[1], drawn[m[1]], captions[m[1]]), body
+    )  # fmt: skip
 
 
-def _figure(key: str, drawn: Mapping[str, Drawn]) -> str:
+def _figure(key: str, picture: Drawn, caption: str) -> str:
     """One figure: the drawing, the place of the live chart, the text alternative, downloads."""
-    picture = drawn[key]
     bitmap = base64.b64encode(picture.png).decode("ascii")
     vector = inline(picture.svg, key, picture.text)
     live = f'<div class="live" id="live-{LIVE[key]}" hidden></div>' if key in LIVE else ""
@@ -109,8 +123,8 @@ def _figure(key: str, drawn: Mapping[str, Drawn]) -> str:
     return (
         f'<figure id="figure-{key}">{live}'
         f'<div class="{kind}"><div class="scroll" tabindex="0" role="region" '
-        f'aria-label="Figure: {CAPTIONS[key]}">{vector}</div></div>'
-        f"<figcaption>{CAPTIONS[key]} {shown(clean(picture.text))} "
+        f'aria-label="Figure: {caption}">{vector}</div></div>'
+        f"<figcaption>{caption} {shown(clean(picture.text))} "
         f'<span class="get"><a download="{key}.png" href="data:image/png;base64,{bitmap}">'
         f"PNG<span class='unseen'> of the figure {key}</span></a></span></figcaption></figure>"
     )

@@ -7,9 +7,9 @@ from typing import Any
 
 import numpy as np
 
-from srcfit.captions import extent, percent, section_curves, source_word, unit
+from srcfit.captions import extent, member_word, percent, section_curves, source_word, unit
 from srcfit.frames import flags, number
-from srcfit.recovery import Recovery
+from srcfit.recovery import Recovery, Result
 from srcfit.report import tables, telling
 from srcfit.report.assumptions import assumptions, band
 from srcfit.report.data import LINES, READINGS
@@ -34,9 +34,9 @@ def answer(recovery: Recovery) -> str:
     body = f'<p class="answer">{total_sentence(recovery)}</p>'
     zones = recovery.facts.get("zones") or []
     if zones:
-        scale = _span(zones)
+        scale = span(zones)
         body += f'<ul class="zones">{"".join(_zone(recovery, z, scale) for z in zones)}</ul>'
-    body += _verdict(recovery) + _first_findings(recovery)
+    body += _verdict(recovery) + first_findings(recovery)
     return section("answer", "Answer", body)
 
 
@@ -70,13 +70,7 @@ def total_sentence(recovery: Recovery) -> str:
     return f"{lead}: with {percent(recovery)} confidence {where}."
 
 
-def member_word(recovery: Recovery) -> str:
-    """Plain name of the member's kind for a sentence."""
-    kind = recovery.case.member.kind.name
-    return "member" if kind == "general" else kind.replace("_", " ")
-
-
-def _span(zones: Sequence[Mapping[str, Any]]) -> tuple[float, float]:
+def span(zones: Sequence[Mapping[str, Any]]) -> tuple[float, float]:
     """Range that holds zero, every zone's value and its interval."""
     ends = [number(z.get(k)) for z in zones for k in ("value", "lower", "upper")]
     known = [0.0, *(v for v in ends if np.isfinite(v))]
@@ -84,7 +78,7 @@ def _span(zones: Sequence[Mapping[str, Any]]) -> tuple[float, float]:
     return (low, high) if high > low else (low, low + 1.0)
 
 
-def _strip(zone: Mapping[str, Any], scale: tuple[float, float]) -> str:
+def strip(zone: Mapping[str, Any], scale: tuple[float, float]) -> str:
     """A zone's value as a dot on its interval, all zones on one scale; zero as a tick."""
 
     def at(value: Any) -> float:
@@ -114,10 +108,15 @@ def _zone(recovery: Recovery, zone: Mapping[str, Any], scale: tuple[float, float
     share = number(zone.get("data_share"))
     weak = np.isfinite(share) and share < 0.5
     doubt = '<span class="weak">mainly the prior’s</span>' if weak else ""
+    both = both if ends != NO_INTERVAL else "–"
+    return zone_item(zone, place, f"{amount}{doubt}", strip(zone, scale), both)
+
+
+def zone_item(zone: Mapping[str, Any], place: str, amount: str, drawn: str, ends: str) -> str:
+    """A zone's line in the answer: name and place, amount, strip, interval (a plain text)."""
     return (
         f'<li><span class="zone">{name(zone.get("name"))} <small>{place}</small></span>'
-        f'<span class="amount">{amount}{doubt}</span>{_strip(zone, scale)}'
-        f'<span class="range">{shown(both) if ends != NO_INTERVAL else "–"}</span></li>'
+        f'<span class="amount">{amount}</span>{drawn}<span class="range">{shown(ends)}</span></li>'
     )
 
 
@@ -142,7 +141,8 @@ def _verdict(recovery: Recovery) -> str:
     )
 
 
-def _first_findings(recovery: Recovery) -> str:
+def first_findings(recovery: Result) -> str:
+    """How many findings of each level there are, with the way to them."""
     found = recovery.facts.get("findings") or []
     counts = {level: sum(f.get("level") == level for f in found) for level in LEVELS}
     words = {"serious": ("serious finding",) * 2, "caution": ("caution", "cautions"),
@@ -199,7 +199,7 @@ def inside(recovery: Recovery) -> str:
     return section("inside", "Inside the member", body)
 
 
-def _driven(recovery: Recovery) -> str:
+def _driven(recovery: Result) -> str:
     """What the charts of a driven member show."""
     if not recovery.case.member.driven:
         return ""
@@ -279,7 +279,7 @@ def influence(recovery: Recovery) -> str:
     return section("influence", "Influence", body + figure("modes") + tables.modes(recovery))
 
 
-def findings(recovery: Recovery) -> str:
+def findings(recovery: Result) -> str:
     """What the user must know and do, the most serious first."""
     found = recovery.facts.get("findings") or []
     ranked = sorted(found, key=lambda f: _rank(f.get("level")))
@@ -347,7 +347,7 @@ def inputs(recovery: Recovery) -> str:
     )
 
 
-def cautions(recovery: Recovery) -> str:
+def cautions(recovery: Result) -> str:
     """The member's own cautions and the general ones."""
     own = [clean(c) for c in recovery.facts.get("cautions") or recovery.case.member.kind.cautions]
     every = dict.fromkeys([*own, *CAUTIONS])

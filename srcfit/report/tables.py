@@ -9,7 +9,7 @@ import numpy as np
 
 from srcfit.captions import choices_of, per_metre, percent, section_curves, unit
 from srcfit.frames import flags, header, number, numbers, pretty, pretty_header, texts
-from srcfit.recovery import Recovery
+from srcfit.recovery import Recovery, Result
 from srcfit.report.data import influence_unit
 from srcfit.report.html import Num, name, num, safe, table
 from srcfit.rounding import UNDETERMINED, brief, round_like, round_pair
@@ -42,7 +42,7 @@ def estimate(row: Mapping[str, Any], driven: bool = False) -> list[Num]:
     return [first, *like("imaginary"), spread, *ends]
 
 
-def estimate_heads(recovery: Recovery, unit_text: str) -> list[str]:
+def estimate_heads(recovery: Result, unit_text: str) -> list[str]:
     """Headers of the cells of `estimate`."""
     ends = [f"{percent(recovery)} {word}" for word in ("from", "to")]
     if not recovery.case.member.driven:
@@ -77,7 +77,7 @@ def zones(recovery: Recovery) -> str:
     return table("table-zones", "Totals by zone", heads, rows)
 
 
-def background(recovery: Recovery) -> str:
+def background(recovery: Result) -> str:
     """The constant background density."""
     row = recovery.facts.get("background")
     if not row or row.get("value") is None:
@@ -87,7 +87,7 @@ def background(recovery: Recovery) -> str:
     return table("table-background", "Background", heads, [["background", *estimate(row, driven)]])
 
 
-def lumped(recovery: Recovery) -> str:
+def lumped(recovery: Result) -> str:
     """Lumped parts with their places."""
     driven = recovery.case.member.driven
     rows: list[Row] = [
@@ -99,7 +99,7 @@ def lumped(recovery: Recovery) -> str:
     return table("table-lumped", "Lumped parts", heads, rows)
 
 
-def with_own_units(recovery: Recovery, key: str, caption: str, first: Sequence[str]) -> str:
+def with_own_units(recovery: Result, key: str, caption: str, first: Sequence[str]) -> str:
     """A table of estimates that carry their own unit: nuisances, reactions."""
     driven = recovery.case.member.driven
     rows: list[Row] = []
@@ -131,7 +131,7 @@ def detection(recovery: Recovery) -> str:
     return table("table-detection", "Detection (not detected is not absent)", heads, rows)
 
 
-def cells(recovery: Recovery) -> str:
+def cells(recovery: Result) -> str:
     """The source cell by cell."""
     frame = recovery.source
     amounts = ("estimate", "estimate_imag", "lower", "upper", "lower_imag", "upper_imag")
