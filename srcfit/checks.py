@@ -6,6 +6,7 @@ say. `recover` calls them in turn.
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable, Mapping, Sequence
 
 import numpy as np
@@ -13,11 +14,13 @@ import numpy as np
 from srcfit.balance import Balance
 from srcfit.eigen import modes
 from srcfit.eigencount import number_below
-from srcfit.errors import Finding
+from srcfit.errors import Finding, as_percent
 from srcfit.forward import Forward
 from srcfit.member import Member
+from srcfit.readings.reader import OFF
 from srcfit.robust import Noise
 from srcfit.state import Matrix
+from srcfit.units import factor
 from srcfit.whitening import sequences
 
 SURE = 0.001  # probability below which a residual pattern is called more than chance
@@ -107,8 +110,8 @@ def edge(index: int, count: int, name: str) -> list[Finding]:
     ]  # fmt: skip
 
 
-def disagreement(values: Mapping[str, float | None]) -> list[Finding]:
-    """Criteria whose strengths lie far apart."""
+def disagreement(values: Mapping[str, float | None], chosen: str) -> list[Finding]:
+    """Criteria whose strengths lie far apart, where the answer follows one of them."""
     known = {name: v for name, v in values.items() if v is not None and v > 0}
     if len(known) < 2:
         return []
@@ -120,8 +123,8 @@ def disagreement(values: Mapping[str, float | None]) -> list[Finding]:
         Finding(
             "criteria-disagree", "note",
             f"The criteria disagree about the strength by a factor of {ratio:.2g} ({low} weakest, "
-            f"{high} strongest; more than {DISAGREE:g}): one single strength would be hard to "
-            "justify here.",
+            f"{high} strongest), and the answer follows {chosen} alone: \"averaged\" would weigh "
+            "all strengths.",
         )
     ]  # fmt: skip
 
@@ -129,7 +132,7 @@ def disagreement(values: Mapping[str, float | None]) -> list[Finding]:
 def told(names: Sequence[str], shares: Sequence[float | None]) -> list[Finding]:
     """Zones whose answer comes mainly from what was assumed beforehand."""
     weak = [
-        f"{name} ({share:.0%})"
+        f"{name} ({as_percent(share)})"
         for name, share in zip(names, shares, strict=True)
         if share is not None and share < TOLD
     ]
@@ -259,8 +262,8 @@ def resonance(forward: Forward) -> list[Finding]:
         return [
             Finding(
                 "near-eigenvalue", "caution",
-                f"lambda = {target:.6g} lies within {off:.1%} of the eigenvalue {near:.6g}: an "
-                "error of the coefficients as large as that turns the answer over.",
+                f"lambda = {target:.6g} lies within {as_percent(off, 1)} of the eigenvalue "
+                f"{near:.6g}: an error of the coefficients of that size turns the answer over.",
             )
         ]  # fmt: skip
     gain = 1 / np.hypot(off, member.damping)
@@ -291,19 +294,46 @@ def balanced(result: Balance, unit: str, scale: float) -> list[Finding]:
 
 
 def exclusions(forward: Forward) -> list[Finding]:
-    """How many readings were left out, and why."""
+    """How many readings were left out, and why; those that lie off the member, by line."""
+    readings = forward.readings
     reasons: dict[str, int] = {}
-    for used, reason in zip(forward.readings.used, forward.readings.reason, strict=True):
+    off = []
+    for i, (used, reason) in enumerate(zip(readings.used, readings.reason, strict=True)):
         if not used:
-            kind = reason.partition(" (")[0]
+            kind = re.sub(r" of line \d+$", "", reason.partition(" (")[0])
             reasons[kind] = reasons.get(kind, 0) + 1
+            if kind == OFF:
+                off.append(i)
     if not reasons:
         return []
     total = sum(reasons.values())
     listed = "; ".join(f"{count} × {reason}" for reason, count in reasons.items())
+    left = "1 reading was" if total == 1 else f"{total} readings were"
+    found = [Finding("excluded", "note", f"{left} left out: {listed}; see readings.csv.")]
+    return _off_member(forward, off) + found
+
+
+def _off_member(forward: Forward, off: Sequence[int]) -> list[Finding]:
+    """A place off the member is more often a wrong length, unit or origin than a stray sensor."""
+    if not off:
+        return []
+    readings, case = forward.readings, forward.case
+    unit = case.source.position_unit
+    scale = 1 / factor(unit, "m", "source.position_unit")[0]
+    named = ", ".join(
+        f"{readings.file[i]} line {readings.line[i]} at {readings.x[i] * scale:.6g} {unit}"
+        for i in off[:3]
+    )
+    more = f" and {len(off) - 3} more" if len(off) > 3 else ""
+    lie = "1 reading lies" if len(off) == 1 else f"{len(off)} readings lie"
+    reach = f"{case.member.start * scale:.6g} to {case.member.end * scale:.6g} {unit}"
     return [
-        Finding("excluded", "note", f"{total} readings were left out: {listed}; see readings.csv.")
-    ]
+        Finding(
+            "off-member", "caution",
+            f"{lie} off the member, which reaches from {reach} ({named}{more}): check the "
+            "member's length, and the unit and origin of the positions.",
+        )
+    ]  # fmt: skip
 
 
 def few(n: int, unknown: int) -> list[Finding]:
@@ -313,7 +343,8 @@ def few(n: int, unknown: int) -> list[Finding]:
     return [
         Finding(
             "few-readings", "serious",
-            f"{n} readings for {unknown} unpenalised unknowns leave fewer than three to judge the "
-            "fit by: the intervals are left empty; add readings.",
+            f"{n} readings for {unknown} unknowns (the mean level of the source, lumped parts, "
+            "offsets, settlements and the like) leave fewer than three to judge the fit by: the "
+            "intervals are left empty; add readings.",
         )
     ]  # fmt: skip

@@ -16,6 +16,7 @@ from srcfit.whitening import Rows, parts_of, together
 
 SURE = 0.001  # probability below which repeats contradict the noise
 NAMED = 8  # readings named one by one
+MOST_FAR = 0.25  # part of the readings that may lie far from the fit and still be named
 UNWEIGHTED = 1e-6  # weight of a doubtful reading in the other total
 
 
@@ -93,9 +94,7 @@ def _totals(solved: Solved, shown: Shown, weight: Array, when: str) -> str:
     """What the total would be with other weights; empty where there is none."""
     noise = replace(solved.noise, weight=weight)
     other = invert(solved.forward, False, np.random.SeedSequence(0), noise)
-    both = [
-        s.numbers("total")[0] for s in (shown, Shown(other, np.zeros(len(other.answers.value))))
-    ]
+    both = [s.numbers("total")[0] for s in (shown, Shown(other, shown.extra))]
     unit = solved.forward.case.source.total_unit
     here, there = (plus_minus(number_map(n), unit) for n in both)
     if UNDETERMINED in (here, there):
@@ -104,16 +103,20 @@ def _totals(solved: Solved, shown: Shown, weight: Array, when: str) -> str:
 
 
 def _far(solved: Solved, score: Array) -> list[Finding]:
-    """Readings at full weight that stay far from the fit."""
+    """Readings at full weight that stay far from the fit.
+
+    Where they are many, none of them is at fault: that is for the finding on the noise to say.
+    """
     n, weight = len(score), solved.noise.weight
     bound = gross(n)
     far = np.flatnonzero((np.nan_to_num(score) > bound) & (weight == 1))
-    if not len(far):
+    if not len(far) or len(far) > max(MOST_FAR * n, 2):
         return []
+    lie = "lies" if len(far) == 1 else "lie"
     lines = _few([_line(solved, i) for i in far[:NAMED]], len(far))
     return [Finding(
         "far-from-fit", "caution",
-        f"{len(far)} of {n} readings lie more than {bound:.1f} standard deviations from the fit "
+        f"{len(far)} of {n} readings {lie} more than {bound:.1f} standard deviations from the fit "
         f"({lines}), in a way that a source may explain better than an error of one reading: a "
         "source sharper than the smooth part allows wants a lumped part or breaks there; exclude "
         "what is not a reading.",

@@ -84,3 +84,8 @@ class Finding:
     code: str
     level: Level
     sentence: str
+
+
+def as_percent(part: float, digits: int = 0) -> str:
+    """A part of a whole in a sentence, as in ``57 %``."""
+    return f"{100 * part:.{digits}f} %"

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from srcfit.answers import per
 from srcfit.constraints import Held
-from srcfit.errors import Finding
+from srcfit.errors import Finding, as_percent
 from srcfit.results import Shown
 from srcfit.solve import Solved
 
@@ -42,7 +42,7 @@ def places(solved: Solved) -> list[Finding]:
         apart = [s for s in place.stretches if s.probability >= APART]
         if len(apart) > 1:
             words = "; ".join(
-                f"{s.start * scale:.4g}–{s.end * scale:.4g} {unit} ({s.probability:.0%})"
+                f"{s.start * scale:.4g}–{s.end * scale:.4g} {unit} ({as_percent(s.probability)})"
                 for s in apart
             )
             found.append(
@@ -163,9 +163,10 @@ def sampled(solved: Solved, held: Held) -> list[Finding]:
     found = [
         Finding(
             "sampled-intervals", "note",
-            f"Under what is known of the source there is no closed form: each interval spans both "
-            f"that of {held.draws} draws (worth at least {least:.0f} independent ones for total, "
-            "zones and lumped parts) and strict bounds; the same seed gives the same numbers.",
+            "What is known of the source (its sign or other limits) is kept exactly: the "
+            f"intervals come from {held.draws} draws of sources that keep it and fit the readings "
+            f"(worth at least {least:.0f} independent ones) and from strict bounds. The same seed "
+            "gives the same numbers.",
         )
     ]  # fmt: skip
     if least < 1:
@@ -178,7 +179,11 @@ def sampled(solved: Solved, held: Held) -> list[Finding]:
             )
         )  # fmt: skip
     elif least < ENOUGH or held.refused > REFUSED:
-        lost = f", and {held.refused:.1%} of the trajectories were lost" if held.refused else ""
+        lost = (
+            f", and {as_percent(held.refused, 1)} of the trajectories were lost"
+            if held.refused
+            else ""
+        )
         found.append(
             Finding(
                 "few-draws", "caution",

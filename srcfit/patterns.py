@@ -18,7 +18,7 @@ from math import comb
 import numpy as np
 from numpy.typing import NDArray
 
-from srcfit.errors import Finding
+from srcfit.errors import Finding, as_percent
 from srcfit.member import Array
 from srcfit.results import reading_units, recoloured
 from srcfit.smoother import Smoother, colours
@@ -173,7 +173,7 @@ def _sentence(solved: Solved, group: str, member: int, pattern: Pattern) -> Find
             "a support that is not as described does that; check those first.",
         )  # fmt: skip
     more = "more" if pattern.size > 0 else "less"
-    part = f"{abs(pattern.size):.0%}"
+    part = as_percent(abs(pattern.size))
     return Finding(
         "residuals-gain", "caution",
         f"The readings of {group!r} swing {part} {more} than the member and "

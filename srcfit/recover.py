@@ -152,9 +152,11 @@ def _findings(
     ):
         count = len(solved.ladder.strengths)
         found += checks.edge(solved.choice.index, count, solved.choice.criterion)
-    if solved.ladder is not None and solved.ladder.solver == "tikhonov":
+    one = solved.choice is not None and solved.choice.criterion in solved.choices
+    if one and solved.ladder is not None and solved.ladder.solver == "tikhonov":
         found += checks.disagreement(
-            {name: known(c.strength) for name, c in solved.choices.items() if c.index >= 0}
+            {name: known(c.strength) for name, c in solved.choices.items() if c.index >= 0},
+            case.strength.choose if isinstance(case.strength.choose, str) else "one",
         )
     found += knowledge.findings(solved, shown)
     names = [z.name for z in case.source.zones]

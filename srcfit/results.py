@@ -41,7 +41,7 @@ class Shown:
         self.imaginary: Array = np.imag(value)
         self.sd: Array = sd * np.abs(asked.factor)
         self.lower, self.upper = _interval(solved, np.sqrt(extra_variance), self.value)
-        self._solved, self._reach, self._extra = solved, _reach(solved), extra_variance
+        self._solved, self._reach, self.extra = solved, _reach(solved), extra_variance
         self.share = -asked.widest(-a.data_share)
         self._blocks = solved.asked.blocks
 
@@ -108,7 +108,7 @@ class Shown:
     def alone(self) -> ReadingsAlone:
         """What the readings alone say of the total and of each wide zone."""
         _, _, lower, upper, _ = self.block("cells")
-        return readings_alone(self._solved, self._extra, lower, upper)
+        return readings_alone(self._solved, self.extra, lower, upper)
 
     def _beside(self, where: slice) -> tuple[Array, Array]:
         """Ends of the intervals of imaginary parts: as wide as those of the real parts."""

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from srcfit import checks
 from srcfit.bands import undetermined
 from srcfit.elimination import eliminate
-from srcfit.errors import Finding
+from srcfit.errors import Finding, as_percent
 from srcfit.evidence import Weighted, conditional, grid, weigh
 from srcfit.forward import along
 from srcfit.member import Array
@@ -230,8 +230,8 @@ def would_tell(solved: Solved, name: str) -> str:
         return "No one further reading would tell it much better."
     part = np.sqrt(left[best])
     return (
-        f"{_reading(solved, asked, best, [name])} would cut the sd of {name} to {part:.0%} of "
-        "what it is."
+        f"{_reading(solved, asked, best, [name])} would cut the sd of {name} to "
+        f"{as_percent(part)} of what it is."
     )
 
 

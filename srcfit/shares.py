@@ -10,14 +10,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from srcfit.case.vary import vary
-from srcfit.errors import Finding
+from srcfit.errors import Finding, as_percent
 from srcfit.member import Array
 from srcfit.places import solve
 from srcfit.solve import Solved
 
 DOMINATES = 0.5  # share of a variance that one property may have without a sentence
 BENDS = 0.3  # second over first difference of an effect
-MATTERS = 0.05  # share of a variance from which on the bend of an effect is worth a sentence
+MATTERS = 0.2  # share of a variance from which on the bend is worth a sentence: a tenth of the sd
 
 
 @dataclass(frozen=True)
@@ -159,7 +159,9 @@ def findings(found: list[Share]) -> list[Finding]:
     for key in found[0].properties if found else ():
         most = [(s.properties[key], _named(s)) for s in found if s.properties[key] > DOMINATES]
         if most:
-            listed = _listed([f"{share:.0%} of the variance of {name}" for share, name in most])
+            listed = _listed(
+                [f"{as_percent(share)} of the variance of {name}" for share, name in most]
+            )
             verb = "comes" if len(most) == 1 else "come"
             told.append(
                 Finding(
@@ -170,7 +172,7 @@ def findings(found: list[Share]) -> list[Finding]:
             )  # fmt: skip
         bent = [(s.bend[key], _named(s)) for s in found if s.properties[key] > MATTERS]
         worst, name = max(bent, default=(0.0, ""))
-        how = f"bends by {worst:.0%} over" if worst < 1 else "turns round within"
+        how = f"bends by {as_percent(worst)} over" if worst < 1 else "turns round within"
         if worst > BENDS:
             told.append(
                 Finding(

@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from srcfit.bands import Fit
-from srcfit.errors import Finding
+from srcfit.errors import Finding, Level, as_percent
 from srcfit.member import Array
 from srcfit.problem import Questions
 from srcfit.recovery import Number
@@ -216,8 +216,8 @@ def _narrow(solved: Solved, told: Told) -> list[Finding]:
         if not sure and size < width:
             listed.append(
                 f"zone {zone.name} is {size * scale:.3g} {unit} wide, the readings resolve "
-                f"{width * scale:.2g} {unit} there, and {beside:.0%} of the weight of its value "
-                "lies beside it"
+                f"{width * scale:.2g} {unit} there, and {as_percent(beside)} of the weight of "
+                "its value lies beside it"
             )
     if not listed:
         return []
@@ -307,9 +307,11 @@ def _heavy(solved: Solved, told: Told, total: Number) -> list[Finding]:
         return [Finding("influential-reading", "caution", text)]
     if others:
         first += f"; so does {_lines(solved, others)}"
+    # where readings are few, many a sound one moves the total by that much
+    level: Level = "caution" if abs(shift[worst]) > 2 * half else "note"
     return [
         Finding(
-            "influential-reading", "caution",
+            "influential-reading", level,
             f"{first}: check that reading before you use the total, which would be "
             f"{total.value - shift[worst]:.4g} {unit} without it.",
         )

@@ -86,7 +86,7 @@ def _undetected(case: Case, detected: Sequence[Mapping[str, Any]]) -> list[Findi
         Finding(
             "not-detected", "note",
             f"No source is detected in {listed(missed)}: not detected is not absent, so compare "
-            "what may be there unseen with what matters.",
+            "that with what matters.",
         )
     ]  # fmt: skip
 

@@ -119,7 +119,7 @@ def test_few_draws_are_said(tmp_path):
     assert "worth only 90 independent ones" in few.sentence
     assert "11 %" in few.sentence
     lost = knowledge.sampled(found, replace(found.held, refused=0.05))[1]
-    assert "5.0% of the trajectories were lost" in lost.sentence
+    assert "5.0 % of the trajectories were lost" in lost.sentence
 
 
 def test_property_uncertainty_and_a_sign_go_together(tmp_path):

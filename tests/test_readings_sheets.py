@@ -52,7 +52,7 @@ def test_a_spreadsheet(tmp_path):
     assert [bool(r) for r in found.reason] == [False, False, True, True, True, True]
     assert found.reason[5] == "an exact duplicate of line 5"
     assert (
-        "spreadsheet, sheet 'data'; 1 lines before the header; names in line 3"
+        "spreadsheet, sheet 'data'; 1 line before the header; names in line 3"
         in (found.understood[0])
     )
 

@@ -92,7 +92,7 @@ def test_one_more_reading_as_a_rank_one_update(monkeypatch):
 
     monkeypatch.setattr(separate, "family", one)
     said = separate.would_tell(found, "settlement:24 m")
-    part = float(re.search(r"to (\d+)% of what it is", said)[1]) / 100
+    part = float(re.search(r"to (\d+) % of what it is", said)[1]) / 100
     asked = separate.candidates(found)
     problem = found.problem
     unit = Questions(np.zeros((1, problem.A.shape[1])), np.ones((1, 1)))
@@ -130,7 +130,7 @@ def test_a_settled_support_wants_its_level(tmp_path):
     found = example("girder_settled_pier/strain_only.toml")
     said = separate.would_tell(found, "settlement:24 m")
     assert re.match(r"A deflection reading of sd [\d.]+ [um]m near x = 24 m would cut", said), said
-    part = float(re.search(r"to (\d+)% of what it is", said)[1]) / 100
+    part = float(re.search(r"to (\d+) % of what it is", said)[1]) / 100
     sd = re.search(r"of sd ([\d.]+ [um]m)", said)[1]
     more = added(tmp_path, "girder_settled_pier/strain_only.toml", ["24,9.0"], kind="deflection",
                  unit="mm", sd=sd, positive="down", group="level")  # fmt: skip

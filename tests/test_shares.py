@@ -104,7 +104,7 @@ def test_a_bent_effect_is_said_where_it_matters():
     share = shares.Share(None, 0.5, 0.1, {"k": 0.35, "h": 0.01}, {"k": 0.5, "h": 3.0})
     told = shares.findings([share])
     assert [f.code for f in told] == ["property-not-linear"]
-    assert "of k on the total bends by 50% over one standard deviation" in told[0].sentence
+    assert "of k on the total bends by 50 % over one standard deviation" in told[0].sentence
     turned = shares.findings([replace(share, bend={"k": 2.0, "h": 0.0})])
     assert "of k on the total turns round within one standard" in turned[0].sentence
 

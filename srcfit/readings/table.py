@@ -373,7 +373,7 @@ class _Builder:
         first = self.blocks[0]
         parts = [self.found.manner]
         if self.start:
-            parts.append(f"{self.start} lines before the header")
+            parts.append(f"{self.start} line{'s' * (self.start > 1)} before the header")
         parts.append(f"names in line {first.line}")
         if first.units:
             lines = sorted({line for _, line in first.units.values()})
