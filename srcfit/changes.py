@@ -52,12 +52,14 @@ class Agreed:
     shared : correlation of one sensor's noise between them
     by : how the change is found
     level : mean density of a change to reckon with (SI)
+    stated : whether it was stated, else it is that of the larger source
     """
 
     common: frozenset[str]
     shared: float
     by: By
     level: float
+    stated: bool = True
 
 
 @dataclass(frozen=True)
@@ -271,6 +273,7 @@ def _findings(
     saying = [f for forward in (first, second) for f in forward.readings.findings]
     saying += _sensors(first, second, pairing, asked)
     saying += _same(first, second, pairing)
+    saying += _floor(alone, asked)
     saying += checks.singular(first)
     saying += checks.inseparable(first, undetermined(solved.problem))
     if solved.answers.reason:
@@ -325,6 +328,24 @@ def _same(a: Forward, b: Forward, pairing: Pairing) -> list[Finding]:
         "same-readings", "serious",
         "Every common reading has the same value in both campaigns: two campaigns never do, so "
         "the same file or column was probably read twice.",
+    )]  # fmt: skip
+
+
+def _floor(alone: Sequence[Solved], asked: Agreed) -> list[Finding]:
+    """A mean of the sources that hangs on a datum is no floor to trust."""
+    if asked.stated or not alone[0].problem.smooth:
+        return []
+    totals = [float(s.answers.value[s.asked.blocks["total"].start]) for s in alone]
+    if np.isfinite(totals).all():
+        return []
+    source = alone[0].forward.case.source
+    level = asked.level * per(source.unit, alone[0].forward.case.member.kind.source_unit)
+    return [Finding(
+        "floor-unsure", "caution",
+        "Where the readings do not tell the change it is taken to vary as a source of the mean "
+        f"{brief(level)} {source.unit} does, but the readings of one campaign do not determine "
+        "that mean, so the number and the width of the intervals are partly arbitrary: state how "
+        "large a change must be reckoned with (--reckon).",
     )]  # fmt: skip
 
 

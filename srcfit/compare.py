@@ -114,6 +114,7 @@ def compare(
             shared_noise,
             by or _by(first, second, pairing),
             _level(alone, reckon),
+            reckon is not None,
         )
         _enough(first, second, pairing, asked)
         noise = [_noise(s) for s in alone]

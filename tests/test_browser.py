@@ -14,6 +14,7 @@ from tempfile import TemporaryDirectory
 import fake_recovery as fake
 import numpy as np
 import pytest
+import two_campaigns
 from selenium import webdriver
 from selenium.webdriver.chrome.service import Service
 from selenium.webdriver.common.action_chains import ActionChains
@@ -56,6 +57,7 @@ PAGES = {
     "recovered": recovered,
     "large": lambda: fake.make("conductor", 1000, 400),
     "hostile": lambda: fake.make("beam", hostile=True, bare=True),
+    "change": two_campaigns.hostile,
 }
 # Waits until what was asked for is on the canvas: charts draw in a microtask.
 STEP = """
@@ -76,7 +78,8 @@ def recoveries():
 def pages(recoveries, tmp_path_factory):
     folder = tmp_path_factory.mktemp("pages")
     for name, recovery in recoveries.items():
-        (folder / f"{name}.html").write_text(report.render(recovery), encoding="utf-8")
+        render = report.render_change if name == "change" else report.render
+        (folder / f"{name}.html").write_text(render(recovery), encoding="utf-8")
     return folder
 
 
@@ -128,7 +131,8 @@ def test_no_message_and_no_request(browser, pages, name):
     for log in ("browser", "performance"):  # empties what earlier pages left
         browser.get_log(log)
     show(browser, pages, name)
-    browser.execute_async_script(STEP, 3)
+    if name != "change":  # it has no slider
+        browser.execute_async_script(STEP, 3)
     assert browser.get_log("browser") == []
     asked = [json.loads(entry["message"])["message"] for entry in browser.get_log("performance")]
     sent = [m for m in asked if m["method"] == "Network.requestWillBeSent"]
@@ -231,8 +235,9 @@ def test_pointing_at_a_reading_shows_its_influence(browser, pages, recoveries):
 
 @pytest.mark.parametrize(
     ("name", "dark", "width"),
-    [("beam", False, 1280), ("recovered", False, 768), ("hostile", True, 360)],
-)
+    [("beam", False, 1280), ("recovered", False, 768), ("hostile", True, 360),
+     ("change", False, 1280), ("change", True, 360)],
+)  # fmt: skip
 def test_accessibility(browser, pages, name, dark, width):
     show(browser, pages, name, width=width, dark=dark)
     browser.execute_script("document.querySelectorAll('details').forEach(d => { d.open = true; })")
@@ -248,9 +253,10 @@ def test_accessibility(browser, pages, name, dark, width):
 
 @pytest.mark.parametrize("width", [360, 768, 1280, 3840])
 def test_no_page_is_wider_than_its_window(browser, pages, width):
-    show(browser, pages, "hostile", width=width)
-    inner = browser.execute_script("return document.documentElement.scrollWidth")
-    assert inner <= width
+    for name in ("change", "hostile"):
+        show(browser, pages, name, width=width)
+        inner = browser.execute_script("return document.documentElement.scrollWidth")
+        assert inner <= width
     charts = browser.execute_script(
         "return Object.values(window.report.charts).map(u => u.root.getBoundingClientRect().right)"
     )
@@ -327,11 +333,12 @@ def test_a_large_page_is_quick(browser, pages):
     assert np.median(steps) < 50
 
 
-@pytest.mark.parametrize("name", ["hostile", "recovered"])
+@pytest.mark.parametrize("name", ["hostile", "recovered", "change"])
 def test_hostile_names_run_nothing_and_read_right(browser, pages, name):
     browser.get_log("browser")
     show(browser, pages, name)
     named = fake.HOSTILE.replace("\u202e", "").replace("\u202c", "")
+    named += f" to {named}" if name == "change" else ""
     assert browser.title == named
     assert browser.find_element(By.TAG_NAME, "h1").text == named
     assert browser.execute_script("return document.images.length + document.scripts.length") == 3

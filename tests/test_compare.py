@@ -140,7 +140,10 @@ def test_a_common_offset_cancels(tmp_path):
         assert found.facts["total"]["lower"] < 270 < found.facts["total"]["upper"]
         assert found.facts["nuisances"] == []
     np.testing.assert_allclose(*seen, rtol=1e-6)
+    assert found.findings == []
     free = srcfit.compare(*cases)
+    # the mean that a datum hides is no floor
+    assert "floor-unsure" in [f["code"] for f in free.findings]
     assert free.facts["total"]["value"] is None
     assert [f["code"] for f in free.findings if f["level"] == "serious"] == ["inseparable"]
 
