@@ -92,6 +92,14 @@ def ring():
     return x, 24.0 + solved.at("response", x)
 
 
+def floor(pipe, room):
+    """Temperature [degC] at 24 sensors of a floor strip, the pipe run giving `pipe` W/m."""
+    x = 0.1875 + 0.375 * np.arange(24)
+    strip = second_order.Line(0.0, 9.0, 0.525, 6.0)
+    heat = [(0.0, 9.0, 14.0), (3.0, 5.5, pipe), (6.5, 8.5, 40.0)]
+    return x, room + second_order.settle(strip, heat, size=0.25, places=x).at("response", x)
+
+
 def autoregressive(rng, sd, lag, count):
     """Stationary noise whose neighbours correlate by `lag`."""
     e = rng.normal(0.0, sd, count)
@@ -120,7 +128,7 @@ def named(letters, x, values, decimals):
 
 def main(folder=ROOT / "examples"):
     """Write every file of readings below `folder`."""
-    rngs = [np.random.default_rng(s) for s in np.random.SeedSequence(SEED).spawn(6)]
+    rngs = [np.random.default_rng(s) for s in np.random.SeedSequence(SEED).spawn(8)]
     invented = "invented readings, made by datasets/make_demo.py"
 
     x, w = ground_beam()
@@ -199,6 +207,18 @@ def main(folder=ROOT / "examples"):
         ["well", "r [m]", "head [m]"],
         named("OW", x, h, 3),
     )
+
+    campaigns = (("before", 80.0, 20.4, rngs[6]), ("after", 12.0, 18.9, rngs[7]))
+    for campaign, pipe, room, rng in campaigns:
+        x, T = floor(pipe, room)
+        T = T + 1.3 + rng.normal(0.0, 0.15, len(x))
+        write(
+            folder / "insulated_pipe" / f"{campaign}.csv",
+            [invented, f"24 sensors in the screed, {campaign} the pipe was insulated, mean of 1 h",
+             "the logger's cold junction reads a little high, by how much is not known"],
+            ["sensor", "x [m]", "T [degC]"],
+            named("F", x, T, 2),
+        )  # fmt: skip
 
 
 if __name__ == "__main__":

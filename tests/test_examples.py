@@ -81,7 +81,7 @@ TRUTHS = {
 OTHERS = {
     "ground_beam_datum/case.toml", "girder_settled_pier/settlement_ignored.toml",
     "three_bars/aluminium.toml", "three_bars/brass.toml",
-    "three_bars/iron.toml",
+    "three_bars/iron.toml", "insulated_pipe/before.toml", "insulated_pipe/after.toml",
 }  # fmt: skip
 
 
@@ -195,6 +195,56 @@ def test_infiltration_ring():
     assert {"property-dominates", "property-not-linear"} & codes(found)
 
 
+PIPE = ("insulated_pipe/before.toml", "insulated_pipe/after.toml")
+
+
+@cache
+def insulated(common=True):
+    cases = (srcfit.load_case(EXAMPLES / name) for name in PIPE)
+    return srcfit.compare(*cases, common=["offset:screed"] * common, reckon="50 W/m")
+
+
+def test_neither_campaign_tells_the_heat_but_both_tell_the_change():
+    """The pipe gave 80 W/m over 2.5 m before and 12 W/m after: -170 W; elsewhere nothing."""
+    for name in PIPE:
+        found = summary(name)
+        assert all(n["value"] is None for n in (found["total"], *found["zones"]))
+        assert "inseparable" in codes(found)
+    found = insulated().facts
+    zones = {z["name"]: z for z in found["zones"]}
+    for n, truth in ((found["total"], -170), (zones["pipe run"], -170), (zones["entrance"], 0),
+                     (zones["heated annex"], 0)):  # fmt: skip
+        assert n["lower"] <= truth <= n["upper"]
+        assert n["shown"] is (truth != 0)
+    assert found["findings"] == []
+    for name in ("entrance", "heated annex"):  # 40 W/m heats the annex in both
+        assert half(zones[name]) < 7
+        assert zones[name]["missed"] < 10
+    # what the loss leaves open, 10 % of 170 W, is nearly all that the change is uncertain by
+    assert zones["pipe run"]["sd"] == pytest.approx(17, rel=0.05)
+
+
+def test_the_common_datum_cancels(tmp_path):
+    """Whatever the logger reads too high in both campaigns, the change is the same."""
+    for file in ("before", "after"):
+        lines = (EXAMPLES / "insulated_pipe" / f"{file}.csv").read_text().splitlines()
+        for i, line in enumerate(lines):
+            cells = line.split(",")
+            if len(cells) == 3 and line[0] == "F":
+                lines[i] = f"{cells[0]},{cells[1]},{float(cells[2]) + 4.0:.2f}"
+        (tmp_path / f"{file}.csv").write_text("\n".join([*lines, ""]))
+        case = (EXAMPLES / "insulated_pipe" / f"{file}.toml").read_text(encoding="utf-8")
+        (tmp_path / f"{file}.toml").write_text(case, encoding="utf-8")
+    cases = [srcfit.load_case(tmp_path / f"{n}.toml") for n in ("before", "after")]
+    moved = srcfit.compare(*cases, common=["offset:screed"], reckon="50 W/m")
+    for key in ("value", "sd", "lower", "upper"):
+        ours = [n[key] for n in (insulated().total, *insulated().facts["zones"])]
+        theirs = [n[key] for n in (moved.total, *moved.facts["zones"])]
+        assert theirs == pytest.approx(ours, rel=1e-6, abs=1e-6)
+    # a datum that may have moved hides the change as well
+    assert insulated(common=False).total["value"] is None
+
+
 def test_sediment():
     found = numbers(summary("sediment_column/case.toml"))
     assert half(found["dark layer"]) == pytest.approx(0.08, rel=0.3)
@@ -233,7 +283,7 @@ def test_heated_bars(bar):
 def test_demo_readings_are_made_by_the_script(tmp_path):
     make_demo.main(tmp_path)
     made = sorted(p.relative_to(tmp_path) for p in tmp_path.glob("*/*.csv"))
-    assert len(made) == 8
+    assert len(made) == 10
     for path in made:
         ours = (EXAMPLES / path).read_text(encoding="utf-8").splitlines()
         theirs = (tmp_path / path).read_text(encoding="utf-8").splitlines()
@@ -272,6 +322,16 @@ def test_demo_responses_are_the_stated_ones():
     np.testing.assert_allclose(h, flow_head(r), atol=1e-9)
     _, C = make_demo.sediment()
     assert C.max() == pytest.approx(10_170, rel=0.03)  # a slice of 1.5 cm sees a little less
+
+
+def test_the_comparison_has_its_page():
+    from srcfit.report import render_change
+    from srcfit.report.change import CHANGE_SECTIONS
+
+    page = render_change(insulated())
+    assert len(page.encode()) < 1e6
+    assert all(f'id="{anchor}"' in page for anchor in CHANGE_SECTIONS)
+    assert "the heat source on this conductor changed by" in page
 
 
 @pytest.mark.parametrize(
