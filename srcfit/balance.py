@@ -21,6 +21,8 @@ from srcfit.state import Matrix, operator
 from srcfit.units import factor
 from srcfit.unknowns import restraint_label
 
+ROUNDING = 1e-12  # part of what goes into a sum below which the sum is nothing
+
 
 @dataclass(frozen=True)
 class Balance:
@@ -54,6 +56,7 @@ def balance(forward: Forward, f: Matrix, beta: Matrix) -> Balance:
     # what cancels in sums is measured by what goes into them
     size = float((forward.grid.weights * np.abs(f)).sum()) + abs(_known_total(forward))
     size = max(abs(put_in), abs(out), abs(loss), size, 1e-300)
+    put_in, out, loss = (v if abs(v) > ROUNDING * size else 0.0 for v in (put_in, out, loss))
     return Balance(put_in, out, loss, float(abs(put_in - out - loss) / size))
 
 

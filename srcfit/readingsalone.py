@@ -13,7 +13,7 @@ from srcfit.answers import per
 from srcfit.case.model import Case
 from srcfit.member import Array
 from srcfit.problem import Questions
-from srcfit.rounding import brief, interval
+from srcfit.rounding import brief, interval, with_unit
 from srcfit.solve import Solved
 from srcfit.unaided import alone, bounded, signed
 
@@ -139,26 +139,27 @@ def sentences(
 def assumed(found: ReadingsAlone, density: str) -> str:
     """What stands behind the sentences."""
     if found.within is None:
-        return "The readings alone, with nothing but the declared sign assumed about the source"
+        return "Without smoothness, assuming nothing but the declared sign, the readings allow"
     return (
-        "The readings alone, without smoothness, the density anywhere within "
-        f"{brief(found.within, 2)} {density} of its mean (twice the reach of the band)"
+        "Without smoothness (the density anywhere within "
+        f"{with_unit(brief(found.within, 2), density)} of its mean, twice the reach of the band), "
+        "the readings allow"
     )
 
 
 def _sentence(name: str, n: Mapping[str, Any], low: float, high: float, unit: str) -> str:
     if np.isnan(low) or np.isnan(high) or (np.isinf(low) and np.isinf(high)):
-        return f"{name}: they say nothing; the answer is the prior's"
+        return f"{name}: anything; the answer rests on smoothness alone"
     spread = {"sd": n["sd"], "value": n["value"]}
     if np.isinf(low) or np.isinf(high):
         kept, word = (high, "at most") if np.isinf(low) else (low, "at least")
         edge = interval({**spread, "lower": kept, "upper": kept}, unit).split(" to ", 1)[1]
         return f"{name}: {word} {edge}, and no limit on the other side"
     ratio = (n["upper"] - n["lower"]) / (high - low)
-    lead = f"{name}: {interval({**spread, 'lower': low, 'upper': high}, unit)}"
+    wide = {"lower": low, "upper": high, "value": n["value"], "sd": max(n["sd"], (high - low) / 4)}
+    lead = f"{name}: {interval(wide, unit)}"
     if ratio >= MUCH:
-        return f"{lead}; the prior adds next to nothing"
-    part = f"the prior narrows it to {brief(100 * ratio, 2)} % of that"
-    return f"{lead}; {part}" + (
-        "" if ratio >= LITTLE else ", so the answer rests mainly on the prior"
+        return f"{lead}; smoothness adds next to nothing"
+    return f"{lead}; the interval above is {brief(100 * ratio, 2)} % as wide" + (
+        "" if ratio >= LITTLE else " and rests on the source being smooth between readings"
     )

@@ -63,7 +63,7 @@ def plus_minus(number: Mapping[str, Any], unit: str = "") -> str:
     value, sd = round_pair(number.get("value"), number.get("sd"))
     if not value:
         return UNDETERMINED
-    return minus(" ".join(t for t in (value, f"± {sd}" if sd else "", unit) if t))
+    return minus(with_unit(f"{value} ± {sd}" if sd else value, unit))
 
 
 def twin(number: Mapping[str, Any], unit: str = "") -> str:
@@ -94,7 +94,22 @@ def interval(number: Mapping[str, Any], unit: str = "") -> str:
     ends = [round_like(number.get(k), sd, value) for k in ("lower", "upper")]
     if not all(ends):
         return NO_INTERVAL
-    return minus(f"{ends[0]} to {ends[1]} {unit}".rstrip())
+    return minus(with_unit(f"{ends[0]} to {ends[1]}", unit))
+
+
+def with_unit(text: str, unit: str) -> str:
+    """A number's text with its unit, if it has one."""
+    return text if unit in ("", "1") else f"{text} {unit}"
+
+
+def held_word(name: str, kind: str) -> str:
+    """What an end or a support takes, in the words of the trade, as in ``outflow left``.
+
+    `kind` as in summary.json: force, moment, torque, or a flow or flux of something.
+    """
+    words = {"moment": "moment", "torque": "torque"}
+    word = "reaction" if kind.endswith("force") else words.get(kind, "outflow")
+    return f"{word} {name}"
 
 
 def chance_text(chance: float, level: float = 0.95) -> str:
@@ -121,15 +136,16 @@ def peak_sentence(facts: Mapping[str, Any], unit: str, position: str) -> str:
         return ""
     spread = {**joint, "value": peak["value"], "sd": (joint["upper"] - joint["lower"]) / 4}
     wider = together["factor"] / together["pointwise"]
+    first, last = (minus(brief(joint[f"position_{k}"], 4)) for k in ("lower", "upper"))
+    place = f"at {first}" if first == last else f"between {first} and {last}"
     size = "smallest (most negative)" if peak["value"] < 0 else "largest"
     if peak.get("imaginary") is not None:
         size = "largest (by modulus)"
     return (
         f"With {100 * facts['level']:.10g} % confidence, for size and place at once: the {size} "
-        f"density is between {interval(spread, unit).replace(' to ', ' and ')} and stands between "
-        f"{minus(brief(joint['position_lower'], 4))} and "
-        f"{minus(brief(joint['position_upper'], 4))} {position}. The band that holds at all "
-        f"places at once is {brief(wider, 2)} times as wide as that for any one place."
+        f"density is between {interval(spread, unit).replace(' to ', ' and ')} and stands {place} "
+        f"{position}. The band that holds at all places at once is {brief(wider, 2)} times as "
+        "wide as that for any one place."
     )
 
 

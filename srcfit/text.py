@@ -11,14 +11,18 @@ from srcfit.rounding import (
     UNDETERMINED,
     brief,
     chance_text,
+    held_word,
     interval,
+    minus,
     peak_sentence,
     plus_minus,
     twin,
     twin_interval,
+    with_unit,
 )
 
 WIDTH = 96
+ROUNDING = 1e-6  # part of the largest amount of a balance that is rounding
 LEVELS = ("serious", "caution", "note")
 
 Summary = Mapping[str, Any]
@@ -113,9 +117,9 @@ def balance_text(balance: Mapping[str, float], unit: str) -> str:
     words = {"source": "source", "reactions": "ends and supports", "along": "along the member",
              "difference": "difference"}  # fmt: skip
     size = max(abs(v) for v in balance.values())
-    shares = {k: v if abs(v) > 1e-9 * size else 0.0 for k, v in balance.items()}
+    shares = {k: v if abs(v) > ROUNDING * size else 0.0 for k, v in balance.items()}
     rows = [(words[k], f"{brief(v, 6)} {unit}") for k, v in shares.items()]
-    return table(("", ""), rows, "lr")
+    return minus(table(("", ""), rows, "lr"))
 
 
 def findings_text(findings: Iterable[Mapping[str, str]]) -> str:
@@ -146,9 +150,9 @@ def _dof(value: float | None) -> str:
 
 def _noise(summary: Summary) -> str:
     noise = summary["noise"]
+    sds = ((g, with_unit(brief(g["sd"]), g["unit"])) for g in noise["groups"])
     groups = ", ".join(
-        f"{g['group']} {brief(g['sd'])} {g['unit']}{' (estimated)' if g['estimated'] else ''}"
-        for g in noise["groups"]
+        f"{g['group']} {sd}{' (estimated)' if g['estimated'] else ''}" for g, sd in sds
     )
     scale = brief(noise["scale"])
     seen = f"; residuals {scale} times that" if scale else ""
@@ -172,7 +176,7 @@ def _numbers(summary: Summary) -> str:
     rows += [_peak(summary["peak"], at, source)] if summary["peak"] else []
     rows += [(n["name"], "", *_cells(n, n["unit"]), "") for n in summary["nuisances"] or ()]
     rows += [
-        (f"reaction {r['name']}", _at(r["at"], at), *_cells(r, r["unit"]), "")
+        (held_word(r["name"], r["kind"]), _at(r["at"], at), *_cells(r, r["unit"]), "")
         for r in summary["reactions"] or ()
     ]
     level = f"{100 * summary['level']:g} % interval"
@@ -210,7 +214,7 @@ def _peak(peak: Mapping[str, Any], at: str, source: str) -> tuple[str, str, str,
     if first is not None and last is not None:
         place += f" ({brief(first, 4)} to {brief(last, 4)})"
     told = plus_minus(spread, source).split(" ± ")[0]
-    told = told if told == UNDETERMINED or not known else f"{told} {source}"
+    told = told if told == UNDETERMINED or not known else with_unit(told, source)
     return "peak", place, told, interval(spread, source), ""
 
 
@@ -221,11 +225,11 @@ def _everywhere(summary: Summary) -> str:
 
 
 def _alone(summary: Summary) -> str:
-    """What the readings say without the prior."""
+    """What the readings say without smoothness."""
     alone = summary.get("alone") or {}
     if not alone.get("told"):
         return ""
-    lead = textwrap.fill(f"{alone['assumed']}, allow", WIDTH)
+    lead = textwrap.fill(alone["assumed"], WIDTH)
     return section(lead, bullets(alone["told"]))
 
 

@@ -179,7 +179,7 @@ def test_the_total_and_wide_zones_are_looked_at(tmp_path):
     assert "twice the reach of the band" in alone["assumed"]
     assert [t.split(":")[0] for t in alone["told"]] == ["total", "zone wide"]
     page = (found.save(tmp_path / "out") / "report.html").read_text()
-    assert "Without the prior" in page
+    assert "Without smoothness" in page
 
 
 def test_units_change_nothing(tmp_path):
@@ -206,7 +206,7 @@ def test_where_the_readings_say_nothing_it_is_said():
     lower, upper = np.array([nan, -inf, 5.0, 7.9, -30.0]), np.array([nan, inf, inf, 12.3, 40.0])
     found = ReadingsAlone(lower, upper, np.ones(5, dtype=bool), 3.0)
     told = sentences(found, list("abcde"), [n] * 5, "kN")
-    assert told[:2] == [f"{k}: they say nothing; the answer is the prior's" for k in "ab"]
+    assert told[:2] == [f"{k}: anything; the answer rests on smoothness alone" for k in "ab"]
     assert told[2] == "c: at least 5.0 kN, and no limit on the other side"
-    assert told[3] == "d: 7.9 to 12.3 kN; the prior adds next to nothing"
-    assert told[4].endswith("narrows it to 5.7 % of that, so the answer rests mainly on the prior")
+    assert told[3] == "d: 7.9 to 12.3 kN; smoothness adds next to nothing"
+    assert told[4].endswith("5.7 % as wide and rests on the source being smooth between readings")

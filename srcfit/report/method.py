@@ -52,7 +52,9 @@ STEPS = (
     (
         "Share of the data",
         "One minus the variance that is left over the variance that the prior alone would give. "
-        "Near 100 % the readings speak; near 0 % the answer is the prior's.",
+        "Near 100 % the readings speak; near 0 % the answer is the prior's. Either way the source "
+        "is taken to be smooth between the readings; what they allow without that stands among "
+        "the numbers.",
     ),
     (
         "Numbers",

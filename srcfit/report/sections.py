@@ -308,8 +308,8 @@ def numbers(recovery: Recovery) -> str:
         tables.background(recovery),
         tables.lumped(recovery),
         tables.detection(recovery),
-        tables.with_own_units(recovery, "reactions", "Reactions", ("name", "at", "kind")),
-        tables.with_own_units(recovery, "nuisances", "Nuisances", ("name",)),
+        tables.with_own_units(recovery, "reactions", _held(recovery), ("name", "at", "kind")),
+        tables.with_own_units(recovery, "nuisances", "Other unknowns", ("name",)),
     )
     note = (
         f"<p>Standard uncertainties and intervals are those of the {band(recovery)} band; they "
@@ -318,13 +318,20 @@ def numbers(recovery: Recovery) -> str:
     return section("numbers", "Numbers", note + "".join(parts) + _alone(recovery))
 
 
+def _held(recovery: Recovery) -> str:
+    """Heading of what ends and supports take."""
+    kinds = {str(r.get("kind")) for r in recovery.facts.get("reactions") or []}
+    mechanical = all(k.endswith(("force", "moment", "torque")) for k in kinds)
+    return "Reactions" if mechanical else "Outflow at the ends"
+
+
 def _alone(recovery: Recovery) -> str:
-    """How much of the answer the readings give without the prior."""
+    """What the readings allow without smoothness."""
     alone = recovery.facts.get("alone") or {}
     if not alone.get("told"):
         return ""
     items = "".join(f"<li>{shown(clean(t))}</li>" for t in alone["told"])
-    lead = f"<h3>Without the prior</h3><p>{shown(clean(alone['assumed']))}, allow:</p>"
+    lead = f"<h3>Without smoothness</h3><p>{shown(clean(alone['assumed']))}:</p>"
     return f"{lead}<ul>{items}</ul>"
 
 
