@@ -312,7 +312,7 @@ def compare(
     by: Literal["pairs", "stack"] | None, reckon: str | None, seed: int, strict: bool,
     as_json: bool, quiet: bool, replace: bool,
 ) -> int:  # fmt: skip
-    """Find what changed from campaign A to campaign B and write tables into a new folder.
+    """Find what changed from campaign A to campaign B; tables, a page and figures in a new folder.
 
     A and B are case files of one layout: the same member and the same questions, each with its
     own readings. Readings of sensors that both have are differenced, so that what is the same in
@@ -398,12 +398,18 @@ def _limit_unit(case: Case) -> str:
 
 
 def _say(message: str, quiet: bool) -> None:
-    """Progress and errors on the error stream, without the control characters of names."""
+    """Progress and errors on the error stream, without the control characters of names.
+
+    Several errors in one message stay one a line.
+    """
     from unicodedata import category
 
     if not quiet:
-        plain = "".join(" " if category(c)[0] == "C" else c for c in message)
-        click.echo(f"srcfit: {' '.join(plain.split())}", err=True)
+        lines = (
+            " ".join("".join(" " if category(c)[0] == "C" else c for c in line).split())
+            for line in message.split("\n  ")
+        )
+        click.echo("srcfit: " + "\n  ".join(lines), err=True)
 
 
 def _print_json(value: Mapping[str, Any] | Sequence[Any]) -> None:

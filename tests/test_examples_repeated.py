@@ -121,3 +121,26 @@ def test_infiltration_ring_repeated(tmp_path):
     check(found, TRUTHS[name], {})
     # as closely as two straight lines on semi-logarithmic paper, without their assumption
     assert np.median([half(n["ring"]) for n in found]) < 0.25 * 14.6
+
+
+def test_insulated_pipe_repeated(tmp_path):
+    """The change of both campaigns, whatever the datum; no change is shown where none is."""
+    rng = np.random.default_rng(13)
+    found = []
+    for _ in range(12):
+        cases, datum = [], rng.normal(0.0, 2.0)
+        for name, pipe, room in (("before", 80.0, 20.4), ("after", 12.0, 18.9)):
+            x, T = make_demo.floor(pipe, room)
+            T = T + datum + rng.normal(0.0, 0.15, len(x))
+            rows = [("x [m]", "T [degC]"), *zip(x.tolist(), T.tolist(), strict=True)]
+            with (tmp_path / f"{name}.csv").open("w", newline="", encoding="utf-8") as out:
+                csv.writer(out).writerows(rows)
+            text = (EXAMPLES / "insulated_pipe" / f"{name}.toml").read_text(encoding="utf-8")
+            cases.append(srcfit.make_case(tomllib.loads(text), tmp_path))
+        facts = srcfit.compare(*cases, common=["offset:screed"], reckon="50 W/m").facts
+        found.append({"total": facts["total"], **{z["name"]: z for z in facts["zones"]}})
+    truths = {"total": -170, "pipe run": -170, "entrance": 0, "heated annex": 0}
+    check(found, truths, {"pipe run": 33})
+    assert all(n["pipe run"]["shown"] for n in found)
+    for name in ("entrance", "heated annex"):
+        assert sum(n[name]["shown"] for n in found) <= 1
