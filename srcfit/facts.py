@@ -13,7 +13,7 @@ from srcfit.readingsalone import ends
 from srcfit.readingsalone import facts as alone_facts
 from srcfit.results import Shown, known, number_map, position_scale, reading_units
 from srcfit.solve import Solved, strength_unit
-from srcfit.unknowns import place_text, response_unit
+from srcfit.unknowns import reaction_label, response_unit
 from srcfit.verdicts import detection_facts, limit_facts
 
 
@@ -176,15 +176,12 @@ def zone_facts(solved: Solved, shown: Shown) -> list[dict[str, Any]]:
 def reaction_facts(solved: Solved, shown: Shown) -> list[dict[str, Any]]:
     """Reactions and end flows as in summary.json."""
     case, scale = solved.forward.case, position_scale(solved)
-    facts = []
-    for r, n in zip(solved.forward.reactions, shown.numbers("reactions"), strict=True):
-        name = r.name
-        if name.startswith("support."):
-            name = f"support:{place_text(case, r.at)}"
-        facts.append(
-            {"name": name, "at": r.at * scale, "kind": r.kind, "unit": r.unit} | number_map(n)
-        )
-    return facts
+    both = zip(solved.forward.reactions, shown.numbers("reactions"), strict=True)
+    return [
+        {"name": reaction_label(case, r), "at": r.at * scale, "kind": r.kind, "unit": r.unit}
+        | number_map(n)
+        for r, n in both
+    ]
 
 
 def peak_facts(solved: Solved, shown: Shown) -> dict[str, Any] | None:

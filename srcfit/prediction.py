@@ -17,11 +17,12 @@ from srcfit.inspection import shown
 from srcfit.member import Array, Member, Unknown
 from srcfit.output import strict
 from srcfit.readings.model import Readings
-from srcfit.rounding import brief, round_like
+from srcfit.rounding import brief, held_word, minus, round_like, with_unit
 from srcfit.state import Matrix
 from srcfit.text import balance_text, bullets, clean, join, section, table
 from srcfit.trial import Trial
 from srcfit.units import factor
+from srcfit.unknowns import Column, reaction_label
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -156,7 +157,8 @@ def _reactions(case: Case, forward: Forward, f: Array, beta: Matrix) -> list[dic
         moment = reaction.kind == "moment"
         unit = reaction.unit if moment else case.source.total_unit
         si = reaction.unit if moment else case.member.kind.total_unit
-        row = {"name": reaction.name, "at": shown(reaction.at, case.source.position_unit, "m"),
+        at = shown(reaction.at, case.source.position_unit, "m")
+        row = {"name": reaction_label(case, reaction), "at": at,
                "kind": reaction.kind, "unit": unit,
                "value": float(shown(np.real(value), unit, si))}  # fmt: skip
         if case.member.driven:
@@ -196,10 +198,12 @@ def _frame(case: Case, readings: Readings, rows: Any, residual: Matrix) -> pd.Da
 def _notes(case: Case, forward: Forward, trial: Trial) -> tuple[str, ...]:
     """What the reader of a prediction must know."""
     notes = []
-    nuisances = [c.name for c in forward.columns if c.kind == "nuisance"]
-    nuisances = [name for name in nuisances if name not in trial.amounts]
-    if nuisances:
-        notes.append(f"Unknown amounts are taken at their guess: {', '.join(nuisances)}.")
+    guessed = [
+        f"{c.name} = {with_unit(brief(_guess(c)), c.unit)}"
+        for c in forward.columns if c.kind == "nuisance" and c.name not in trial.amounts
+    ]  # fmt: skip
+    if guessed:
+        notes.append(minus(f"Unknown amounts are taken at their guess: {', '.join(guessed)}."))
     if any(c.kind == "null" for c in forward.columns):
         notes.append("Nothing holds the member: its free motion is fitted to the readings.")
     if case.source.known:
@@ -207,6 +211,12 @@ def _notes(case: Case, forward: Forward, trial: Trial) -> tuple[str, ...]:
     if trial.unread:
         notes.append(f"Columns of the source that were not used: {', '.join(trial.unread)}.")
     return tuple(notes)
+
+
+def _guess(column: Column) -> float:
+    """The guess of an unknown amount in the unit that it is reported in."""
+    value = column.guess + column.shift
+    return float(shown(value, column.unit, column.si_unit, difference=not column.absolute))
 
 
 def facts(found: Prediction) -> dict[str, Any]:
@@ -226,20 +236,21 @@ def text(found: Prediction) -> str:
     names = ["value", "predicted", "residual"]
     names += [c for c in ("predicted_imag",) if c in frame.columns]
     rows = [
-        (r["group"], r["kind"], brief(r[place], 6), *(round_like(r[c], r["sd"]) for c in names),
-         r["unit"]) for r in frame.to_dict("records")
+        (r["group"], r["kind"], brief(r[place], 6),
+         *(minus(round_like(r[c], r["sd"])) for c in names), r["unit"])
+        for r in frame.to_dict("records")
     ]  # fmt: skip
     header = ["group", "kind", place, *names, "unit"]
     reactions = [
-        (r["name"], f"{brief(r['at'], 6)} {source.position_unit}", r["kind"],
-         f"{brief(r['value'], 5)} {r['unit']}") for r in found.reactions
+        (held_word(r["name"], r["kind"]), f"{brief(r['at'], 6)} {source.position_unit}",
+         minus(f"{brief(r['value'], 5)} {r['unit']}")) for r in found.reactions
     ]  # fmt: skip
     misfit = f"Root mean square of residual/sd: {brief(found.misfit)}" if found.misfit else ""
     return join(
         clean(found.case.title),
         section("Readings", table(header, rows, "llrrrr" + "r" * (len(names) - 3))),
         misfit,
-        section("Reactions", table(("", "", "", ""), reactions, "lllr")),
+        section("Ends and supports", table(("", "", ""), reactions, "llr")),
         section("Balance", balance_text(found.balance, source.total_unit)),
         bullets(found.notes),
     )

@@ -77,6 +77,12 @@ def restraint_label(case: Case, name: str) -> tuple[str, str]:
     return (name.replace("value", "settlement") if kind.order == 4 else name), kind.response_unit
 
 
+def reaction_label(case: Case, reaction: Reaction) -> str:
+    """Name under which a reaction is reported."""
+    inside = reaction.name.startswith("support.")
+    return f"support:{place_text(case, reaction.at)}" if inside else reaction.name
+
+
 def response_unit(case: Case) -> str:
     """Unit of the first readings of the response itself, as the case or a column's header says.
 

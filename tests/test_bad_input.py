@@ -108,16 +108,19 @@ def job(tmp_path, monkeypatch):
 
 
 def refused(capsys, folder, *argv):
-    """The one sentence of a refused run."""
+    """The one message of a refused run: a sentence, or several with one in each line."""
     before = tree(folder)
     status = cli.main([str(a) for a in argv])
     out, err = capsys.readouterr()
     assert (status, out) == (3, "")
     assert tree(folder) == before
     assert "Traceback" not in err
-    (sentence,) = [line for line in err.splitlines() if not line.startswith(
+    sentence, *more = [line for line in err.splitlines() if not line.startswith(
         ("srcfit: reading ", "srcfit: recovering "))]  # fmt: skip
     assert sentence.startswith("srcfit: ")
+    assert len(more) == (int(sentence.split()[-2]) if sentence.endswith(" errors") else 0)
+    assert all(line.startswith("  ") for line in more)
+    sentence = " ".join([sentence, *(line.strip() for line in more)])
     assert sentence.endswith(".")
     return sentence
 

@@ -129,6 +129,15 @@ def test_completion_offers_commands_and_kinds():
 # --- errors ------------------------------------------------------------------------------------
 
 
+def test_several_errors_stand_one_a_line(tmp_path, capsys):
+    (tmp_path / "c.toml").write_text('[member]\nkind = "beam"\nlength = 8\nsize = 3\n')
+    assert cli.main(["inspect", str(tmp_path / "c.toml")]) == 3
+    first, *rest = capsys.readouterr().err.splitlines()[1:]
+    assert first.endswith("errors")
+    assert int(first.split()[-2]) == len(rest) > 1
+    assert all(line.startswith("  ") and line.endswith(".") for line in rest)
+
+
 def raising(monkeypatch, error):
     def fail(*args):
         raise error

@@ -147,7 +147,8 @@ def test_nuisances_stand_at_their_guess_and_are_named():
     found = predict(case, readings_of(case, [[1.0]]), Trial((Known(0, 4, Q),)))
     span = Q * 2.0**4 / E_I * (5 / 384 - 1 / 128)  # half a two-span beam: propped cantilever
     assert found.readings["predicted"][0] == pytest.approx(2 * 1e3 * span, rel=1e-9)
-    assert any("settlement:2 m" in n and "offset:w" in n for n in found.notes)
+    assert any("settlement:2 m = 0 mm" in n and "offset:w = 0 mm" in n for n in found.notes)
+    assert "reaction support:2 m" in text(found)  # as `srcfit recover` names it
 
 
 def test_estimated_noise_gives_no_misfit():
