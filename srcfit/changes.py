@@ -162,7 +162,8 @@ def _campaign(solved: Solved) -> dict[str, Any]:
 def _inputs(case: Case, read: Mapping[str, str]) -> list[dict[str, str]]:
     """Every file of a campaign with its sha256: the case, what it names, the readings."""
     own = [case.path] if case.path is not None else []
-    paths = [p for p in (*own, *(case.folder / f for f in case.files)) if p.is_file()]
+    named = dict.fromkeys(p.resolve() for p in (*own, *(case.folder / f for f in case.files)))
+    paths = [p for p in named if p.is_file()]
     files = [(p.name, sha256(p.read_bytes()).hexdigest()) for p in paths] + [*read.items()]
     return [{"file": name, "sha256": digest} for name, digest in files]
 

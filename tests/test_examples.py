@@ -332,6 +332,8 @@ def test_the_comparison_has_its_page():
     assert len(page.encode()) < 1e6
     assert all(f'id="{anchor}"' in page for anchor in CHANGE_SECTIONS)
     assert "the heat source on this conductor changed by" in page
+    files = [i["file"] for side in "ab" for i in insulated().facts[side]["inputs"]]
+    assert files == ["before.toml", "before.csv", "after.toml", "after.csv"]
 
 
 @pytest.mark.parametrize(

@@ -91,17 +91,14 @@ def _part(comparison: Comparison, part: Mapping[str, Any], scale: tuple[float, f
     if "from" in part:
         where = f"{brief(part['from'], 6)} to {brief(part['to'], 6)}"
     told = shown(signed(amount(part, T)))
-    if not part["shown"]:
-        told += f'<span class="weak">{shown(_verdict(part, T))}</span>'
+    doubt = "" if part["shown"] else f'<span class="weak">{shown(_verdict(part, T))}</span>'
     return zone_item(part, shown(minus(f"{where} {P}")), told, strip(part, scale),
-                     between(part, T) or "–")  # fmt: skip
+                     between(part, T) or "–", doubt)  # fmt: skip
 
 
 def _verdict(part: Mapping[str, Any], unit_text: str) -> str:
     if part["shown"] is None:
         return "the readings cannot tell"
-    if part["shown"]:
-        return "change shown"
     if part["missed"] is None:
         return "no change shown; any may be missed"
     return f"no change shown; up to {brief(part['missed'], 2)} {unit_text} may be missed"

@@ -112,10 +112,12 @@ def _zone(recovery: Recovery, zone: Mapping[str, Any], scale: tuple[float, float
     return zone_item(zone, place, f"{amount}{doubt}", strip(zone, scale), both)
 
 
-def zone_item(zone: Mapping[str, Any], place: str, amount: str, drawn: str, ends: str) -> str:
+def zone_item(
+    zone: Mapping[str, Any], place: str, amount: str, drawn: str, ends: str, below: str = ""
+) -> str:
     """A zone's line in the answer: name and place, amount, strip, interval (a plain text)."""
     return (
-        f'<li><span class="zone">{name(zone.get("name"))} <small>{place}</small></span>'
+        f'<li><span class="zone">{name(zone.get("name"))} <small>{place}</small>{below}</span>'
         f'<span class="amount">{amount}</span>{drawn}<span class="range">{shown(ends)}</span></li>'
     )
 
