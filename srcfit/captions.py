@@ -161,15 +161,18 @@ def _extremes(recovery: Recovery, curve: SectionCurve) -> str:
 def describe_readings(recovery: Recovery) -> str:
     """How well the readings are met: counts, spread and largest standardised residual."""
     frame, fit = recovery.readings, recovery.facts.get("fit") or {}
-    z = numbers(frame, "standardised")
+    z, weight = numbers(frame, "standardised"), numbers(frame, "weight")
     text = f"{fit.get('used')} of {fit.get('read')} readings used"
-    if np.isfinite(z).any():
+    full = z[~(weight < 1)]  # one that hardly counts says little of the fit
+    if np.isfinite(full).any():
         worst = int(np.nanargmax(np.abs(z)))
+        low = int((weight < 1).sum())
+        less = f" (without {low} down-weighted)" if low else ""
         text += (
             f"; standardised residuals have a root mean square of "
-            f"{brief(float(np.sqrt(np.nanmean(z**2))), 2)}, the largest is {brief(z[worst], 2)} "
-            f"at x = {brief(numbers(frame, 'x')[worst])} {pretty(unit_of(frame, 'x'))} "
-            f"(line {texts(frame, 'line')[worst]})"
+            f"{brief(float(np.sqrt(np.nanmean(full**2))), 2)}{less}, the largest of all is "
+            f"{brief(z[worst], 2)} at x = {brief(numbers(frame, 'x')[worst])} "
+            f"{pretty(unit_of(frame, 'x'))} (line {texts(frame, 'line')[worst]})"
         )
     chi, dof = brief(fit.get("chi_square")), brief(fit.get("dof"))
     return minus(text + (f". Chi-square {chi} on {dof} degrees of freedom." if chi else "."))

@@ -87,12 +87,9 @@ SOURCES = (
     "JCGM 100:2008, Guide to the expression of uncertainty in measurement, 7.2.6.",
 )
 
+# beside those of each member kind
 CAUTIONS = (
-    "Estimates of loads rate no structure: whether it is safe is for the engineer in charge.",
-    "Hot and live parts, excavation, pressure and radioactive material are for qualified people "
-    "under local codes.",
-    "Not detected is not absent: see the detection limits.",
-    "Not for alarms or protection.",
+    "Local codes and licensed practice come first.",
     "The numbers hold for the member as it was described; a wrong end condition or coefficient "
     "changes them without widening any interval, unless its uncertainty is stated.",
 )

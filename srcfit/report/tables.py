@@ -64,7 +64,7 @@ def zones(recovery: Recovery) -> str:
     means = dict(zip(texts(recovery.zones, "name"), numbers(recovery.zones, "mean"), strict=True))
     rows: list[Row] = [
         [name(z.get("name")), num(z.get("from")), num(z.get("to")), *estimate(z, driven),
-         num(means.get(str(z.get("name")))), share(z.get("data_share"))]
+         _mean(z, means.get(str(z.get("name")))), share(z.get("data_share"))]
         for z in facts.get("zones") or []
     ]  # fmt: skip
     blank: list[Num] = [num(None)] * 2
@@ -75,6 +75,14 @@ def zones(recovery: Recovery) -> str:
     heads += estimate_heads(recovery, unit(recovery, "total"))
     heads += [with_unit("mean", unit(recovery, "source")), "share of the data"]
     return table("table-zones", "Totals by zone", heads, rows)
+
+
+def _mean(zone: Mapping[str, Any], mean: float | None) -> Num:
+    """Mean density of a zone, rounded as its value is."""
+    value, sd = number(zone.get("value")), number(zone.get("sd"))
+    if mean is None or not value:
+        return num(mean)
+    return num(mean, round_like(mean, abs(sd * mean / value)))
 
 
 def background(recovery: Result) -> str:
