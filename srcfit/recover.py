@@ -140,6 +140,7 @@ def _findings(
     if fit["chi_square"] is not None and fit["dof"] is not None:
         odds = float("nan") if solved.held else chance(answers.fit)
         found += checks.noise(fit["chi_square"], fit["dof"], solved.problem.stated, odds)
+        found += checks.noise_from_rest(fit["used"], fit["dof"], solved.problem.stated)
     left = together(forward, np.nan_to_num(answers.fit.standardised))
     found += doubts.findings(solved, shown) + doubts.repeatability(solved)
     alike = checks.correlated(forward, left, solved.noise)

@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 import srcfit
+from srcfit import checks
 
 MEMBER = {"kind": "beam", "length": "12 m", "bending_stiffness": "30 MN*m^2", "left": "pinned",
           "right": "pinned", "foundation": "0.2 MN/m^2"}  # fmt: skip
@@ -73,3 +74,11 @@ def test_a_total_with_an_outlier_carries_the_same_uncertainty_of_properties(tmp_
     properties = sum(found.summary()["shares"][0]["properties"].values())
     assert properties > 0.3
     assert there > here * np.sqrt(properties) * 0.99
+
+
+def test_a_noise_that_cannot_be_told_from_the_source_is_said():
+    """Most of what the readings tell went into the source, and the noise was left to the rest."""
+    (told,) = checks.noise_from_rest(299, 77.0, stated=False)
+    assert "222 of 299 degrees of freedom" in told.sentence
+    assert not checks.noise_from_rest(299, 77.0, stated=True)
+    assert not checks.noise_from_rest(20, 12.0, stated=False)
