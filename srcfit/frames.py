@@ -28,14 +28,14 @@ def unit_of(frame: pd.DataFrame, name: str) -> str:
     return text[len(name) + 2 : -1] if text.endswith("]") else ""
 
 
-_RAISED = str.maketrans("0123456789-", "⁰¹²³⁴⁵⁶⁷⁸⁹⁻")
+RAISED = str.maketrans("0123456789-", "⁰¹²³⁴⁵⁶⁷⁸⁹⁻")
 
 
 def pretty(unit: str) -> str:
     """A unit text for people: ``kN*m^2`` as kN·m²; a plain number has none."""
     if unit in ("", "1", "dimensionless"):
         return ""
-    raised = re.sub(r"(?:\^|\*\*)(-?\d+)", lambda m: m[1].translate(_RAISED), unit)
+    raised = re.sub(r"(?:\^|\*\*)(-?\d+)", lambda m: m[1].translate(RAISED), unit)
     return {"degC": "°C", "degF": "°F", "ue": "µε"}.get(raised, raised.replace("*", "·"))
 
 

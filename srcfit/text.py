@@ -162,36 +162,33 @@ def _noise(summary: Summary) -> str:
 def _numbers(summary: Summary) -> str:
     units = summary["units"]
     at, total, source = units["position"], units["total"], units["source"]
-    rows = [("total", "", *_cells(summary["total"], total), "")]
-    rows += [
-        (f"zone {z['name']}", f"{brief(z['from'], 6)} to {brief(z['to'], 6)} {at}",
-         *_cells(z, total), _share(z)) for z in summary["zones"] or ()
-    ]  # fmt: skip
+    rows = _rows("total", "", summary["total"], total)
+    for z in summary["zones"] or ():
+        place = f"{brief(z['from'], 6)} to {brief(z['to'], 6)} {at}"
+        rows += _rows(f"zone {z['name']}", place, z, total, _share(z))
     if summary["background"]:
-        rows.append(("background", "", *_cells(summary["background"], source), ""))
-    rows += [
-        (f"lumped {p['name']}", _at(p["at"], at), *_cells(p, total), "")
-        for p in summary["lumped"] or ()
-    ]
+        rows += _rows("background", "", summary["background"], source)
+    for p in summary["lumped"] or ():
+        rows += _rows(f"lumped {p['name']}", _at(p["at"], at), p, total)
     rows += [_peak(summary["peak"], at, source)] if summary["peak"] else []
-    rows += [(n["name"], "", *_cells(n, n["unit"]), "") for n in summary["nuisances"] or ()]
-    rows += [
-        (held_word(r["name"], r["kind"]), _at(r["at"], at), *_cells(r, r["unit"]), "")
-        for r in summary["reactions"] or ()
-    ]
+    for n in summary["nuisances"] or ():
+        rows += _rows(n["name"], "", n, n["unit"])
+    for r in summary["reactions"] or ():
+        rows += _rows(held_word(r["name"], r["kind"]), _at(r["at"], at), r, r["unit"])
     level = f"{100 * summary['level']:g} % interval"
     return table(("", "where", "value ± sd", level, "data share"), rows, "llrrr")
 
 
-def _cells(number: Mapping[str, Any], unit: str) -> tuple[str, str]:
+def _rows(
+    name: str, where: str, number: Mapping[str, Any], unit: str, share: str = ""
+) -> list[tuple[str, ...]]:
+    """A row of the table; of a driven member the imaginary part in one of its own below."""
     told = plus_minus(number, unit)
-    bounds = interval(number, unit)
+    rows: list[tuple[str, ...]] = [(name, where, told, interval(number, unit), share)]
     beside = twin(number, unit)
     if beside and told != UNDETERMINED:
-        told += f" and {beside}"
-    if twin_interval(number, unit):
-        bounds += f" and {twin_interval(number, unit)}"
-    return told, bounds
+        rows.append(("  imaginary part", "", beside, twin_interval(number, unit), ""))
+    return rows
 
 
 def _at(place: float | None, unit: str) -> str:

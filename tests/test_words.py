@@ -2,6 +2,7 @@
 
 import pytest
 
+from srcfit.report.numbers import shown
 from srcfit.rounding import held_word, interval, peak_sentence, plus_minus
 from srcfit.text import balance_text
 
@@ -37,3 +38,7 @@ def test_rounding_of_a_balance_is_not_printed():
     )
     assert "difference               0 m" in told
     assert "e-" not in told
+
+
+def test_units_in_sentences_of_the_page_are_raised():
+    assert shown("up to 0.76 W/m^2, k^-1 & 2^3") == "up to 0.76 W/m², k⁻¹ &amp; 2^3"
