@@ -203,9 +203,13 @@ class Judged:
 
 def averaged(fr: Frame, asked: Asked, ground: Ground) -> tuple[Array, Fit, float]:
     """Values (q,) of the evidence-averaged estimate, its fit and its mean level."""
-    f = mean_source(ground.averaged)
-    size = mean_level(fr, _density(fr, f))
-    return means(fr, asked, f), averaged_fit(ground.averaged), size
+    value = means(fr, asked, mean_source(ground.averaged))
+    return value, averaged_fit(ground.averaged), level_of(fr, ground)
+
+
+def level_of(fr: Frame, ground: Ground) -> float:
+    """Mean level of the evidence-averaged estimate."""
+    return mean_level(fr, _density(fr, mean_source(ground.averaged)))
 
 
 def judge(fr: Frame, asked: Asked, ground: Ground, value: Array, size: float) -> Judged:

@@ -43,6 +43,7 @@ def solve(
     rng: np.random.SeedSequence | None = None,
     edges: Sequence[float] = (),
     noise: Noise | None = None,
+    features: Array | None = None,
 ) -> Solved:
     """Invert a case whose lumped parts may have unknown places.
 
@@ -53,6 +54,8 @@ def solve(
         Further places where cells are cut [m].
     noise : Noise, optional
         Found from the readings when left out; with unknown places it always is.
+    features : (m', k), optional
+        Of the grid, where they are not to be looked for again.
 
     Raises
     ------
@@ -63,7 +66,8 @@ def solve(
     unknown = [i for i, p in enumerate(case.source.lumped) if p.at is None]
     if not unknown:
         forward = build(case, readings, edges=edges)
-        return replace(invert(forward, criteria, seed, noise), edges=tuple(edges))
+        alone = invert(forward, criteria, seed, noise, features=features)
+        return replace(alone, edges=tuple(edges))
     _check(case, unknown)
     ranges = [_range(case.source.lumped[i]) for i in unknown]
     grids, chances = _search(case, readings, unknown, ranges, seed)

@@ -152,7 +152,7 @@ def pieces(grid: Grid, *, zones: bool) -> Array:
     """Indicators (m', j) of the pieces within which the source may step, on the free cells.
 
     Stretches between zero cells and between breaks, and (with `zones`) the declared zones; each
-    set of cells counts once. Nothing drawn: no piece.
+    set of cells counts once. Nothing drawn: no piece. Features found in the readings stand last.
     """
     x = grid.middles[grid.free]
     found: list[Array] = []
@@ -164,7 +164,10 @@ def pieces(grid: Grid, *, zones: bool) -> Array:
     for piece in found:
         if piece.any() and not any(np.array_equal(piece, u) for u in unique):
             unique.append(piece)
-    return grid.per_part(np.stack(unique, axis=1) if unique else np.zeros((len(x), 0)))
+    drawn = grid.per_part(np.stack(unique, axis=1) if unique else np.zeros((len(x), 0)))
+    if grid.features is not None:
+        drawn = np.hstack([drawn, grid.features])
+    return drawn
 
 
 def _stretches(grid: Grid) -> list[Array]:

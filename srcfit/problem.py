@@ -29,6 +29,8 @@ class Grid:
         Declared zones [m] (questions; the source may jump near their edges).
     breaks : tuple of float
         Places where the source is known to jump [m].
+    features : (m', k) or None
+        Further shapes on the free cells that the source may have, found in the readings.
     parts : {1, 2}
         2 where the source is a complex amplitude: cells of the real part come first, then those
         of the imaginary part, alike and independent beforehand.
@@ -40,6 +42,7 @@ class Grid:
     zones: tuple[tuple[float, float], ...] = ()
     breaks: tuple[float, ...] = ()
     parts: int = 1
+    features: Array | None = None
 
     @property
     def middles(self) -> Array:

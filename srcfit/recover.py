@@ -20,6 +20,7 @@ from srcfit import (
 from srcfit.answers import per
 from srcfit.balance import Balance, balance, balance_facts
 from srcfit.case.model import Case
+from srcfit.demands import demands
 from srcfit.eigen import modes
 from srcfit.errors import Finding
 from srcfit.facts import facts, fit_facts
@@ -159,6 +160,7 @@ def _findings(
             {name: known(c.strength) for name, c in solved.choices.items() if c.index >= 0},
             case.strength.choose if isinstance(case.strength.choose, str) else "one",
         )
+    found += demands(solved, shown)
     found += knowledge.findings(solved, shown)
     names = [z.name for z in case.source.zones]
     found += checks.told(

@@ -6,7 +6,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -20,6 +20,7 @@ from srcfit.criteria import CRITERIA, Choice, choose
 from srcfit.eigen import modes
 from srcfit.elimination import eliminate
 from srcfit.errors import SolveError
+from srcfit.features import featured
 from srcfit.forward import Forward, build
 from srcfit.limits import limits
 from srcfit.member import Array, Member
@@ -111,17 +112,22 @@ def solve(
 
 def invert(
     forward: Forward, criteria: bool, rng: np.random.SeedSequence, noise: Noise | None = None,
-    *, tuned: bool = True,
+    *, tuned: bool = True, features: Array | None = None,
 ) -> Solved:  # fmt: skip
     """Invert a forward model; parameters as of `solve`, the noise found where it is not given.
 
-    `tuned`: calibrate the band where the case asks for it and criteria are run.
+    `tuned`: calibrate the band where the case asks for it and criteria are run. `features` of the
+    grid that are not to be looked for again.
     """
     case, balanced = forward.case, eliminate(forward)
     noise = noise_of(forward, balanced) if noise is None else noise
     problem = whitened(forward, noise.sd, noise.lag, balanced, noise.weight)
     asked = ask(forward, balanced)
     strength = case.strength
+    if features is not None and len(features) == int(problem.grid.unknown.sum()):
+        problem = replace(problem, grid=replace(problem.grid, features=features))
+    elif strength.roughness == "adaptive":
+        problem = featured(problem)
     runs = None
     if tuned and criteria and strength.interval == "calibrated":
         runs = asked.runs("cells", *(f.name for f in section_forces(case)))
@@ -166,7 +172,7 @@ def answered(
         answers = plain(
             problem, questions, level=strength.level,
             choose_by=str(strength.choose) if choice else "evidence",
-            roughness=1 if strength.roughness == "averaged" else strength.roughness,
+            roughness=one_roughness(case),
             strength=choice.strength if choice and choice.criterion == "stated" else None,
         )  # fmt: skip
     elif runs is not None and centre is None:
@@ -178,9 +184,15 @@ def answered(
     return answers, ladder, choices, choice
 
 
+def one_roughness(case: Case) -> int | float:
+    """The roughness of one family, on which the choices are compared: 1 where it is averaged."""
+    roughness = case.strength.roughness
+    return 1 if isinstance(roughness, str) else roughness
+
+
 def _ladder(case: Case, forward: Forward, problem: Problem) -> Ladder:
     strength = case.strength
-    roughness = 1 if strength.roughness == "averaged" else strength.roughness
+    roughness = one_roughness(case)
     given: dict[str, Any] = {}
     if strength.solver == "eigenbasis":
         given["basis"] = mode_shapes(case.member, problem.grid, len(forward.rows))
@@ -206,7 +218,7 @@ def _choice(case: Case, ladder: Ladder, choices: Mapping[str, Choice]) -> Choice
     """The rung to follow; None where estimates are averaged."""
     strength = case.strength
     if strength.choose == "averaged":
-        if strength.solver == "tikhonov" and strength.roughness == "averaged":
+        if strength.solver == "tikhonov" and isinstance(strength.roughness, str):
             return None
         # one family or a cut has no families to average over: evidence, or where there is none GCV
         best = choices["evidence"]

@@ -20,7 +20,7 @@ from srcfit.problem import Questions
 from srcfit.recovery import Number
 from srcfit.results import Shown, known, position_scale
 from srcfit.smoother import Smoother, colours, smoother
-from srcfit.solve import Solved
+from srcfit.solve import Solved, one_roughness
 from srcfit.solvers import SOLVERS
 from srcfit.whitening import linked_rows, parts_of
 
@@ -89,10 +89,9 @@ def _around(solved: Solved, fit: Fit) -> Fit:
     """The fit with rungs on both sides of its strength: a stated one stands on a single rung."""
     if len(fit.ladders) != 1 or len(fit.ladders[0].strengths) > 1:
         return fit
-    roughness = solved.forward.case.strength.roughness
     tau = fit.ladders[0].strengths[0] * np.array([0.1, 1.0, 10.0])
     ladder = SOLVERS["tikhonov"](
-        solved.problem, roughness=1 if roughness == "averaged" else roughness, strengths=tau
+        solved.problem, roughness=one_roughness(solved.forward.case), strengths=tau
     )  # fmt: skip
     return replace(fit, ladders=(ladder,), weights=(np.eye(3)[1],))
 

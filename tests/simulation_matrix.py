@@ -19,12 +19,14 @@ from numpy.typing import NDArray
 from simulation import CELLS, FINER, SHAPES, Z
 from threadpoolctl import threadpool_limits
 
-from srcfit.bands import averaged, judge, weighed
+from srcfit.bands import averaged, cautious, judge, weighed
 from srcfit.calibration import tune
+from srcfit.features import featured
 from srcfit.priors import FLOOR
 from srcfit.problem import Grid, Problem, Questions
 from srcfit.repeats import Sets, Shared
 from srcfit.solvers.frame import Complement, Frame, ask, frame
+from srcfit.solvers.tikhonov import tikhonov
 
 Array = NDArray[np.float64]
 Shape = Callable[[Array], Array]
@@ -196,6 +198,94 @@ def narrower(found: Sequence[Mapping[str, Found]]) -> float:
     return float(np.mean(ratio))
 
 
+def errors(
+    forward: Callable[[Array, Array], Array], n: int, noise: float, shapes: Mapping[str, Shape],
+    draws: int, seed: int = 11,
+) -> Array:  # fmt: skip
+    """Error of the average over that of the best strength of the ladder, (shapes, draws)."""
+    fine, x, blank, _ = layout(forward, n, FIVE)
+    cells = np.eye(CELLS)
+    found, rng = np.empty((len(shapes), draws)), np.random.default_rng(seed)
+    for i, shape in enumerate(shapes.values()):
+        u = fine @ shape(x)
+        sd, truth = noise * np.abs(u).max(), shape(x).reshape(CELLS, FINER).mean(axis=1)
+        for j in range(draws):
+            d = (u + sd * rng.normal(size=n)) / sd
+            problem = Problem(blank.A / sd, blank.B, d, blank.grid, places=blank.places)
+            fr = frame(problem)
+            value = averaged(fr, ask(fr, Questions(cells, cells[:, :0])), weighed(fr))[0]
+            best = np.linalg.norm(tikhonov(problem).estimates - truth[:, None], axis=0).min()
+            found[i, j] = np.linalg.norm(value - truth) / best
+    return found
+
+
+def adaptive(
+    forward: Callable[[Array, Array], Array], n: int, noise: float, shapes: Mapping[str, Shape],
+    draws: int, seed: int = 5,
+) -> tuple[Array, Array, Array]:  # fmt: skip
+    """Held (2, shapes, 6), width and error of the cells (shapes,) without and with features.
+
+    Widths and errors are those with features over those without, the mean and the root mean
+    square of the draws.
+    """
+    fine, x, blank, questions = layout(forward, n, FIVE)
+    rows = np.vstack([questions.cells, np.eye(CELLS)])
+    every, rng = Questions(rows, rows[:, :0]), np.random.default_rng(seed)
+    held = np.empty((2, len(shapes), draws, 6))
+    width, error = np.empty((2, len(shapes), draws)), np.empty((2, len(shapes), draws))
+    for i, shape in enumerate(shapes.values()):
+        u = fine @ shape(x)
+        sd, cells = noise * np.abs(u).max(), shape(x).reshape(CELLS, FINER).mean(axis=1)
+        truth = rows @ cells
+        for j in range(draws):
+            d = (u + sd * rng.normal(size=n)) / sd
+            problem = Problem(blank.A / sd, blank.B, d, blank.grid, places=blank.places)
+            for k, given in enumerate((problem, featured(problem))):
+                band = cautious(given, every)
+                off = np.abs(band.value - truth)
+                held[k, i, j] = off[:6] <= band.upper[:6] - band.value[:6]
+                width[k, i, j] = band.sd[:5].mean()
+                error[k, i, j] = np.linalg.norm(off[6:])
+    size, rms = width.mean(axis=2), np.sqrt((error**2).mean(axis=2))
+    return held.mean(axis=2), size[1] / size[0], rms[1] / rms[0]
+
+
+def adaptive_table(draws: int) -> None:
+    """Print zones / worst shape / total without and with features, and both ratios."""
+    shapes = {**SHAPES, **AFTER}
+    print("\n| member | averaged | adaptive | width | error, least and largest of a shape |")
+    for member, forward in MEMBERS.items():
+        found = [
+            adaptive(forward, n, noise, shapes, draws)
+            for n in (12, 40, 150) for noise in (0.003, 0.02)
+        ]  # fmt: skip
+        held = np.mean([f[0] for f in found], axis=0)
+        texts = [
+            f"{h[:, :5].mean():.3f} / {h[:, :5].mean(axis=1).min():.2f} / {h[:, 5].mean():.3f}"
+            for h in held
+        ]
+        width = np.exp(np.mean([np.log(f[1]) for f in found]))
+        error = np.exp(np.mean([np.log(f[2]) for f in found], axis=0))
+        texts += [
+            f"{width:.2f}",
+            f"{np.exp(np.log(error).mean()):.2f}, {error.min():.2f} to {error.max():.2f}",
+        ]
+        print(f"| {member} | " + " | ".join(texts) + " |", flush=True)
+
+
+def error_table(draws: int) -> None:
+    """Print median and 90th percentile of the error over that of the best strength."""
+    shapes = {k: f for k, f in {**SHAPES, **AFTER}.items() if k != "constant"}
+    print("\n| member | 12 | 40 | 150 |")
+    for member, forward in MEMBERS.items():
+        found = [
+            np.concatenate([errors(forward, n, noise, shapes, draws) for noise in (0.003, 0.02)])
+            for n in (12, 40, 150)
+        ]
+        cells = [f"{np.median(e):.2f}, {np.quantile(e, 0.9):.2f}" for e in found]
+        print(f"| {member} | " + " | ".join(cells) + " |", flush=True)
+
+
 def main(draws: int = 200) -> None:
     """Print all tables as Markdown."""
     print(
@@ -227,6 +317,8 @@ def main(draws: int = 200) -> None:
                     f"{h.mean():.3f}, {np.mean(h.min(axis=2) < 0.8):.2f}" for h in held.values()
                 )
                 print(f"| {ratio:g}, {n} | {label} | {text} | {narrower(found):.2f} |", flush=True)
+    error_table(draws // 20)
+    adaptive_table(draws // 20)
 
 
 if __name__ == "__main__":

@@ -63,6 +63,7 @@ TRUTHS = {
         "total": 844, "span 1": 192, "span 2": 460, "span 3": 192, "queue": 300,
     },
     "busbar_joint/case.toml": {"total": 186.1, "joint A": 28.1, "joint B": 76.4},
+    "busbar_joint/adaptive.toml": {"total": 186.1, "joint A": 28.1, "joint B": 76.4},
     "busbar_joint/joints.toml": {
         "total": 186.1, "joint A": 7.7, "joint B": 56.0, "background": 51.0,
     },
@@ -164,6 +165,9 @@ def test_an_ignored_settlement_is_caught():
 def test_hot_joint():
     smooth = numbers(summary("busbar_joint/case.toml"))
     assert half(smooth["joint B"]) == pytest.approx(11, rel=0.2)
+    sharp = numbers(summary("busbar_joint/adaptive.toml"))
+    assert abs(sharp["joint B"]["value"] - 76.4) < abs(smooth["joint B"]["value"] - 76.4)
+    assert half(sharp["joint B"]) < 0.8 * half(smooth["joint B"])
     joints = numbers(summary("busbar_joint/joints.toml"))
     assert half(joints["joint B"]) == pytest.approx(2.1, rel=0.1)
     assert joints["joint B"]["lower"] > 25.6  # above 10 microohm at 1600 A: outage now

@@ -110,6 +110,10 @@ def test_hot_joint_repeated(tmp_path):
     head = ("x [m]", "T [degC]")
     smooth = run("busbar_joint/case.toml", head, x, T, 0.4, tmp_path)
     check(smooth, {"joint B": 76.4, "total": 186.1}, {"joint B": 11, "total": 10.8})
+    sharp = run("busbar_joint/adaptive.toml", head, x, T, 0.4, tmp_path)
+    check(sharp, {"joint B": 76.4, "total": 186.1}, {})
+    off = [np.median([abs(n["joint B"]["value"] - 76.4) for n in f]) for f in (smooth, sharp)]
+    assert off[1] < 0.6 * off[0]
     joints = run("busbar_joint/joints.toml", head, x, T, 0.4, tmp_path)
     check(joints, {"joint B": 56.0}, {"joint B": 2.1})
 

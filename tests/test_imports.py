@@ -17,20 +17,19 @@ ROOT = Path(srcfit.__file__).parent
 # a package counts as one unit; the data of a package (its `model`) may stand above the rest of it
 ORDER = (
     "errors", "unit_names", "units", "unit_texts", "member", "members", "case.model",
-    "readings.model",
-    "problem", "recovery", "comparison", "case", "readings", "intervals", "state", "influence",
-    "holds",
-    "quantities", "nulls", "eigenshapes", "eigenform", "eigencount", "eigensolve", "eigen",
-    "kernel", "sensors", "grid", "unknowns", "forward", "view", "elimination", "whitening",
-    "priors", "solvers", "criteria", "evidence", "noise", "outliers", "robust", "bands",
-    "references", "repeats", "calibration", "simultaneous", "unaided", "misfit", "smoother",
-    "laws", "truncated", "strict", "answers", "limits", "envelope", "constraints", "placing",
-    "balance", "checks", "solve", "places", "rounding", "readingsalone", "results", "doubts",
-    "verdicts", "facts", "tell", "patterns", "separate", "shares", "knowledge", "frames",
-    "output", "captions", "changewords", "drawing", "axes", "plots", "changeplots", "report",
-    "recover", "text", "kindtext",
-    "inspection", "rawplot", "trial", "prediction", "draft", "start", "plan", "rehearse",
-    "series", "campaigns", "joint", "changes", "compare", "sklearn", "cli", "__main__",
+    "readings.model", "problem", "recovery", "comparison", "case", "readings", "intervals",
+    "state", "influence", "holds", "quantities", "nulls", "eigenshapes", "eigenform",
+    "eigencount", "eigensolve", "eigen", "kernel", "sensors", "grid", "unknowns", "forward",
+    "view", "elimination", "whitening", "priors", "solvers", "criteria", "evidence", "noise",
+    "outliers", "robust", "bands", "references", "repeats", "calibration", "features",
+    "simultaneous", "unaided", "misfit", "smoother", "laws", "truncated", "strict", "answers",
+    "limits", "envelope", "constraints", "placing", "balance", "checks", "solve", "places",
+    "rounding", "readingsalone", "results", "doubts", "verdicts", "facts", "tell", "patterns",
+    "separate", "shares", "demands", "knowledge", "frames", "output", "captions",
+    "changewords", "drawing", "axes", "plots", "changeplots", "report", "recover", "text",
+    "kindtext", "inspection", "rawplot", "trial", "prediction", "draft", "start", "plan",
+    "rehearse", "series", "campaigns", "joint", "changes", "compare", "sklearn", "cli",
+    "__main__",
 )  # fmt: skip
 
 # rooms that a module below them in the list may open inside a function

@@ -214,7 +214,7 @@ class StrengthSpec:
     """How the strength is chosen. `choose` may be a number (the strength itself)."""
 
     solver: Literal["tikhonov", "eigenbasis", "svd-cut"] = "tikhonov"
-    roughness: Literal["averaged", 0, 1, 2] | float = "averaged"
+    roughness: Literal["averaged", "adaptive", 0, 1, 2] | float = "averaged"
     choose: Choose | float = "averaged"
     level: float = 0.95
     interval: Literal["cautious", "calibrated", "plain"] = "cautious"

@@ -45,6 +45,7 @@ ROOT: Path = ("source",)
 FEWEST_CELLS = 3
 DENSE_MATRICES = 6  # square matrices of cells by cells held at once
 CONTRADICTION = 5.0  # standard deviations
+AVERAGES = ("averaged", "adaptive")
 INTERVALS = ("cautious", "calibrated", "plain")
 
 
@@ -377,17 +378,17 @@ def read_strength(reader: Reader, data: Mapping[str, Any]) -> StrengthSpec:
 
 
 def _roughness(reader: Reader, path: Path, value: object) -> Any:
-    """An order, a correlation length or "averaged"."""
-    if value == "averaged":
+    """An order, a correlation length, "averaged" or "adaptive"."""
+    if value in AVERAGES:
         return value
     if isinstance(value, (int, float)) and not isinstance(value, bool):
         if value in (0, 1, 2) and isinstance(value, int):
             return value
-        reader.wrong(path, f"{value!r} is no roughness",
-                     'write 0, 1, 2, "averaged", or a correlation length as in "3 m"')  # fmt: skip
+        how = 'write 0, 1, 2, "averaged", "adaptive", or a correlation length as in "3 m"'
+        reader.wrong(path, f"{value!r} is no roughness", how)
         return "averaged"
     if isinstance(value, str) and not value[:1].isdigit():
-        reader.choose(path, value, ("averaged",), "roughness")
+        reader.choose(path, value, AVERAGES, "roughness")
         return "averaged"
     # a float, also when the number is whole: 1 as an int means first differences
     return float(reader.quantity(path, value, "m", above=0))

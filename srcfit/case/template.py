@@ -148,6 +148,7 @@ def _source(kind: MemberKind) -> list[str]:
 def _strength() -> list[str]:
     return [
         "[strength]",
+        _line("roughness", "adaptive", "or averaged (smooth curves), 0, 1, 2, a length"),
         _line("choose", "averaged", "or evidence, gcv, l-curve, discrepancy … or a number"),
         _line("level", 0.95, "of the intervals"),
     ]
