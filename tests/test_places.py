@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import re
+
 import numpy as np
 import pytest
 import referee
@@ -187,11 +189,7 @@ def test_two_places_that_fit_are_both_told(tmp_path):
     sentence = bimodal[0]["sentence"]
     assert "more than one place" in sentence
     # as probable as each other
-    shares = [
-        int(word.strip("(%);.:"))
-        for word in sentence.split()
-        if word.endswith(("%)", "%);", "%)."))
-    ]
+    shares = [int(number) for number in re.findall(r"\((\d+)\s?%\)", sentence)]
     assert len(shares) == 2
     assert abs(shares[0] - shares[1]) <= 6
     assert sum(shares) >= 90
