@@ -8,7 +8,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from srcfit.answers import per
+from srcfit.answers import CURRIE, per
 from srcfit.constraints import Held
 from srcfit.errors import Finding, as_percent
 from srcfit.results import Shown
@@ -23,7 +23,7 @@ APART = 0.05  # probability from which a stretch of places is named
 
 def findings(solved: Solved, shown: Shown) -> list[Finding]:
     """Everything about the knowledge of a case."""
-    found, held = places(solved), solved.held
+    found, held = places(solved, shown), solved.held
     if held is None:
         return found
     if held.reason:
@@ -34,11 +34,20 @@ def findings(solved: Solved, shown: Shown) -> list[Finding]:
     return [*found, *active(solved, held, shown), *sampled(solved, held)]
 
 
-def places(solved: Solved) -> list[Finding]:
-    """Places that were looked for and are apart, or at the end of where they were looked for."""
+def places(solved: Solved, shown: Shown) -> list[Finding]:
+    """Places that were looked for and are apart, or at the end of where they were looked for.
+
+    Of a part that is not detected there is nothing to be said: it may stand anywhere.
+    """
+    lumped = [c.name for c in solved.forward.columns if c.kind == "lumped"]
+    amounts = dict(zip(lumped, shown.numbers("lumped"), strict=True))
     unit = solved.forward.case.source.position_unit
     scale, found = per(unit, "m"), []
     for place in solved.places.values():
+        amount = amounts[place.name]
+        size = abs(complex(amount.value or 0.0, amount.imaginary or 0.0))
+        if amount.sd is not None and size <= CURRIE * amount.sd:
+            continue
         apart = [s for s in place.stretches if s.probability >= APART]
         if len(apart) > 1:
             words = "; ".join(

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -200,6 +201,17 @@ def test_two_places_that_fit_are_both_told(tmp_path):
     total = summary["total"]
     assert total["value"] == pytest.approx(50, abs=1.5)
     assert total["upper"] - total["lower"] < 6
+
+
+def test_nothing_is_said_of_the_place_of_what_is_not_detected(tmp_path):
+    """No load at all, read all along: the part may stand anywhere, and that is no news."""
+    case = crane_case(tmp_path, 2.9, known=False, sd=0.02)
+    readings = srcfit.read(case)
+    noise = 2e-5 * np.random.default_rng(4).normal(size=len(readings))
+    found = srcfit.recover(case, replace(readings, value=noise)).summary()
+    codes = {f["code"] for f in found["findings"]}
+    assert "not-detected" in codes
+    assert not any(code.startswith("place") for code in codes)
 
 
 def test_a_place_at_the_end_of_its_stretch_is_told(tmp_path):
