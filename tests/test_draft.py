@@ -136,6 +136,15 @@ def test_a_column_of_standard_uncertainties_is_taken(tmp_path):
     assert case.source.unit == "Bq/(m^3*s)"
 
 
+def test_a_name_that_looks_like_a_label_is_a_reading_by_its_unit(tmp_path):
+    """Rn is radon here and a record's number elsewhere; a number of something has no unit."""
+    rows = [f"{x},{x},{90 * x},5" for x in range(1, 12)]
+    (tmp_path / "t.csv").write_text("\n".join(["RN,depth [cm],Rn-222 [Bq/m3],u [Bq/m3]", *rows]))
+    case, _ = written(tmp_path, "column", tmp_path / "t.csv")
+    assert specs(case)[1] == [(("Rn-222 [Bq/m3]",), "concentration", "Bq/m3")]
+    assert case.columns[0].sd_column == "u [Bq/m3]"
+
+
 def test_what_may_be_more_is_left_in_remarks(tmp_path):
     text = draft("conductor", EXAMPLES / "three_bars" / "temperatures.csv", tmp_path).text
     assert '# CHECK: "T_brass" fits too' in text

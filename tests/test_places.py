@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from dataclasses import replace
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
@@ -12,8 +13,11 @@ from scipy.integrate import dblquad, quad
 from test_forward import case_of
 
 import srcfit
+from srcfit import knowledge
+from srcfit.places import solve
 from srcfit.placing import log_both_below, place_of, probabilities, stand_ins
 from srcfit.problem import Grid, Problem
+from srcfit.results import Shown
 
 L, EI = 8.0, 2e7
 BEAM = {
@@ -204,14 +208,14 @@ def test_two_places_that_fit_are_both_told(tmp_path):
 
 
 def test_nothing_is_said_of_the_place_of_what_is_not_detected(tmp_path):
-    """No load at all, read all along: the part may stand anywhere, and that is no news."""
-    case = crane_case(tmp_path, 2.9, known=False, sd=0.02)
-    readings = srcfit.read(case)
-    noise = 2e-5 * np.random.default_rng(4).normal(size=len(readings))
-    found = srcfit.recover(case, replace(readings, value=noise)).summary()
-    codes = {f["code"] for f in found["findings"]}
-    assert "not-detected" in codes
-    assert not any(code.startswith("place") for code in codes)
+    """Two places and an amount of half its sd: the part may stand anywhere, and that is no news."""
+    case = crane_case(tmp_path, 2.0, x=[4.0, 4.0, 4.0, 4.0])
+    solved = solve(case, srcfit.read(case), rng=np.random.SeedSequence(0))
+    shown = Shown(solved, np.zeros(len(solved.answers.value)))
+    assert [f.code for f in knowledge.places(solved, shown)] == ["place-bimodal"]
+    part = replace(shown.numbers("lumped")[0], sd=2 * shown.numbers("lumped")[0].value)
+    faint = SimpleNamespace(numbers=lambda block: [part])
+    assert not knowledge.places(solved, faint)
 
 
 def test_a_place_at_the_end_of_its_stretch_is_told(tmp_path):

@@ -273,9 +273,11 @@ def _wide(
     for name in free:
         words = set(words_of(name))
         match = _matches(sheet, name, kind)
-        if match is None or words & (LABELS | PHASES | TIMES):
+        if match is None or words & (PHASES | TIMES):
             continue
         sensor, unit, why = match
+        if unit is None and words & LABELS:  # a number of something has no unit
+            continue
         reading = Reading((name,), sensor.name, unit, why)
         first = next((i for i, r in enumerate(found) if r.kind == sensor.name), None)
         if words & DERIVED or why == WEAK or (first is None and _unsure(sensor, why)):
