@@ -208,7 +208,7 @@ def test_two_places_that_fit_are_both_told(tmp_path):
 
 
 def test_nothing_is_said_of_the_place_of_what_is_not_detected(tmp_path):
-    """Two places and an amount of half its sd: the part may stand anywhere, and that is no news."""
+    """Two places and an amount of half its sd: the part may stand anywhere; no news."""
     case = crane_case(tmp_path, 2.0, x=[4.0, 4.0, 4.0, 4.0])
     solved = solve(case, srcfit.read(case), rng=np.random.SeedSequence(0))
     shown = Shown(solved, np.zeros(len(solved.answers.value)))
