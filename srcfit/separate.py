@@ -77,8 +77,11 @@ class Candidates:
     questions: Questions
 
 
-def candidates(solved: Solved) -> Candidates:
-    """Every sensor kind of the member along it; they share no nuisance with the readings."""
+def candidates(solved: Solved) -> Candidates | None:
+    """Every sensor kind of the member along it; they share no nuisance with the readings.
+
+    None where no reading of any kind feels the source or an unknown.
+    """
     forward = solved.forward
     edges, kind = forward.grid.edges, forward.case.member.kind
     even = np.linspace(edges[0], edges[-1], PLACES)
@@ -113,6 +116,8 @@ def candidates(solved: Solved) -> Candidates:
         sd = float(np.median(own)) if len(own) else precise * typical
         if sd > 0:
             parts.append((sensor.name, place, sd, lever * cells, lever * columns))
+    if not parts:
+        return None
     names = [name for name, place, *_ in parts for _ in place]
     cells, columns, _ = eliminate(forward).apply(
         np.concatenate([p[3] for p in parts]), np.concatenate([p[4] for p in parts])
@@ -180,9 +185,9 @@ def would_separate(solved: Solved, names: Sequence[str]) -> str:
         return ""
     asked, fr = candidates(solved), _frame(solved)
     v = mixed(problem, names)
-    sees = seen(problem, asked.questions, v)
+    sees = np.zeros(0) if asked is None else seen(problem, asked.questions, v)
     clear = np.flatnonzero(sees)
-    if not len(clear):
+    if asked is None or not len(clear):
         return "No one further reading of the kinds that this member has would separate them."
     own = problem.names.index(target)
     ratio = (v[len(v) - len(problem.names) + own] / sees[clear])[:, None]
@@ -210,7 +215,7 @@ def would_tell(solved: Solved, name: str) -> str:
     if solved.forward.driven or problem.grid.parts > 1 or name not in problem.names:
         return ""
     asked, fr = candidates(solved), _frame(solved)
-    if not len(fr.free) or fr.nu == 0:
+    if asked is None or not len(fr.free) or fr.nu == 0:
         return ""
     unit = np.zeros((1, problem.B.shape[1]))
     unit[0, problem.names.index(name)] = 1.0
