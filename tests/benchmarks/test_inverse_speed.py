@@ -15,7 +15,9 @@ from scipy.linalg import eigh
 from threadpoolctl import threadpool_limits
 
 from srcfit.bands import cautious
+from srcfit.calibration import calibrated
 from srcfit.criteria import CRITERIA
+from srcfit.features import featured
 from srcfit.priors import factor
 from srcfit.problem import Grid, Problem, Questions
 from srcfit.solvers import SOLVERS
@@ -111,4 +113,18 @@ def test_whole_default(benchmark, unit):
 def test_exact_route(benchmark, unit, sharp):
     problem, questions = default_case(1e-5 if sharp else 0.005)
     benchmark(cautious, replace(problem, stated=sharp), questions)
+    assert benchmark.stats.stats.median <= 60 * unit
+
+
+def test_calibrated_band(benchmark, unit):
+    """400 reference sources on top of the default; one in sixteen cells has its own factor."""
+    problem, questions = default_case()
+    benchmark(calibrated, problem, questions, runs=[slice(0, CELLS)])
+    assert benchmark.stats.stats.median <= 90 * unit
+
+
+def test_search_for_features(benchmark, unit):
+    """Some nine hundred shapes beside seven families, the default's own weighing included."""
+    problem, _ = default_case()
+    benchmark(featured, problem)
     assert benchmark.stats.stats.median <= 60 * unit
