@@ -219,6 +219,17 @@ def _zones(forward: Forward) -> tuple[Array, Array]:
     return cells, columns
 
 
+def smooth_sizes(forward: Forward) -> tuple[Array, Array]:
+    """Sizes (1 + z,) that the smooth part takes up of the member and of each zone.
+
+    Also the parts (1 + z, p) of every lumped amount that count there.
+    """
+    cells, columns = _zones(forward)
+    lumped = [i for i, c in enumerate(forward.columns) if c.kind == "lumped"]
+    sizes = np.append((forward.grid.weights * forward.grid.free).sum(), cells.sum(axis=1))
+    return sizes, np.vstack([np.ones(len(lumped)), columns[:, lumped]])
+
+
 def zone_sizes(case: Case) -> Array:
     """Area-weighted size of each zone, (z,): a zone's mean density is its integral over this."""
     ends = np.array([case.member.start, case.member.end])

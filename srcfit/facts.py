@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from srcfit.answers import peak
+from srcfit.answers import peak, per, smooth_sizes
 from srcfit.member import Array
 from srcfit.readingsalone import ends
 from srcfit.readingsalone import facts as alone_facts
@@ -15,6 +15,8 @@ from srcfit.results import Shown, known, number_map, position_scale, reading_uni
 from srcfit.solve import Solved, strength_unit
 from srcfit.unknowns import reaction_label, response_unit
 from srcfit.verdicts import detection_facts, limit_facts
+
+MEANS = 0.1  # part of the error of the peak's size that goes to means
 
 
 def facts(
@@ -198,17 +200,64 @@ def peak_facts(solved: Solved, shown: Shown) -> dict[str, Any] | None:
 
 
 def _joint(solved: Solved, shown: Shown, x: Array, value: float) -> dict[str, float] | None:
-    """Interval of the size and places of the peak that hold together, each at half the error."""
+    """Interval of the size and places of the peak that hold together, each at half the error.
+
+    The largest density is at least every mean, and a mean is often told far better than any one
+    place: `MEANS` of the size's error goes to limits of the means of member and zones.
+    """
     level, grid = solved.forward.case.strength.level, solved.forward.grid
     estimate, twin = shown.block("cells")[0], shown.twin("cells", "imaginary").get("imaginary")
-    each = (1 + level) / 2
-    whole = peak(x, estimate, *shown.everywhere(each), grid.free, twin)
+    each, turn = (1 - level) / 2, -1.0 if value < 0 else 1.0
+    least = None if shown.driven else _least_mean(solved, shown, turn, MEANS * each)
+    size = each if least is None else (1 - MEANS) * each
+    whole = peak(x, estimate, *shown.everywhere(1 - size), grid.free, twin)
     if whole is None:
         return None
-    rivals = x[shown.rivals(-1.0 if value < 0 else 1.0, each) & grid.free]
+    rivals = x[shown.rivals(turn, 1 - each) & grid.free]
+    ends = sorted([turn * whole["lower"], turn * whole["upper"]])
+    if least is not None:
+        ends[0] = min(max(ends[0], least), ends[1])
+    lower, upper = sorted([turn * ends[0], turn * ends[1]])
     # the band that bounds the size bounds the place too: the place keeps to both
     return {
-        "lower": whole["lower"], "upper": whole["upper"],
+        "lower": lower, "upper": upper,
         "position_lower": max(float(rivals.min()), whole["position_lower"]),
         "position_upper": min(float(rivals.max()), whole["position_upper"]),
     }  # fmt: skip
+
+
+def _least_mean(solved: Solved, shown: Shown, turn: float, error: float) -> float | None:
+    """What the largest mean density of the smooth part, times `turn`, is at least.
+
+    Of the member and of every zone, less what lumped parts may hold of it; each of these limits
+    has an equal part of `error`, so that all hold at once (Bonferroni). In the user's unit; None
+    where no mean is told.
+    """
+    from scipy.special import ndtri, stdtrit
+
+    if shown.together is None:
+        return None
+    sizes, parts = smooth_sizes(solved.forward)
+    if solved.places:  # which zone a part of unknown place stands in is not known
+        sizes, parts = sizes[:1], parts[:1]
+    where = np.flatnonzero(sizes > 0)
+    if not len(where):
+        return None
+    chance = 1 - error / (len(where) + parts.shape[1])
+    dof = shown.together.dof
+    quantile = float(ndtri(chance) if dof is None else stdtrit(dof, chance))
+    ratio = quantile / solved.answers.quantile
+
+    def limits(block: str, side: float) -> Array:
+        """What the numbers times `turn` are at least (side -1) or at most (1)."""
+        value, _, lower, upper, _ = shown.block(block)
+        end = upper if side * turn > 0 else lower
+        return np.asarray(turn * (value + ratio * (end - value)))
+
+    whole = np.concatenate([limits("total", -1.0), limits("zones", -1.0)])[where]
+    rest = np.where(parts > 0, parts * limits("lumped", 1.0), 0.0).sum(axis=1)[where]
+    case = solved.forward.case
+    kind, source = case.member.kind, case.source
+    unit = per(source.unit, kind.source_unit) / per(source.total_unit, kind.total_unit)
+    means = (whole - rest) / sizes[where] * unit
+    return float(np.nanmax(means)) if np.isfinite(means).any() else None

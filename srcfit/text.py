@@ -218,7 +218,13 @@ def _peak(peak: Mapping[str, Any], at: str, source: str) -> tuple[str, str, str,
 def _everywhere(summary: Summary) -> str:
     units = summary["units"]
     told = peak_sentence(summary, units["source"], units["position"])
-    return bullets([told]) if told else ""
+    if not told:
+        return ""
+    which = (
+        'The row "peak" above is read off the narrower band for any one place; where size and '
+        "place must both hold, use these limits."
+    )
+    return bullets([f"{told} {which}"])
 
 
 def _alone(summary: Summary) -> str:
