@@ -17,6 +17,8 @@ from srcfit.solvers.frame import ask, frame
 HALF = 0.5
 # most features that are named one by one
 MOST_NAMED = 3
+# sds by which an answer, or the source at one place, would move for the hint to be worth it
+MATTERS, PLACE_MATTERS = 0.5, 2.0
 
 
 def demands(solved: Solved, shown: Shown) -> list[Finding]:
@@ -24,11 +26,11 @@ def demands(solved: Solved, shown: Shown) -> list[Finding]:
     grid = solved.problem.grid
     roughness = solved.forward.case.strength.roughness
     if roughness == "adaptive":
-        return [] if grid.features is None else _taken(solved)
+        return _taken(solved) if grid.featured else []
     if solved.choice is not None or solved.ladder is None or roughness != "averaged":
         return []
     other = featured(solved.problem)
-    if other.grid.features is None:
+    if not other.grid.featured:
         return []
     fr = frame(other)
     value = averaged(fr, ask(fr, solved.asked.questions), weighed(fr))[0]
@@ -72,12 +74,13 @@ def _left_out(solved: Solved, shown: Shown, grid: Grid, value: Array) -> list[Fi
     source, blocks = solved.forward.case.source, solved.asked.blocks
     names = ["the total", *(f"zone {z.name}" for z in source.zones)]
     rows = [blocks["total"].start, *range(blocks["zones"].start, blocks["zones"].stop)]
-    moved = np.abs(value[rows] - shown.value[rows]) / np.maximum(
-        shown.sd[rows], np.finfo(float).tiny
-    )
+    moved = np.abs(value - shown.value) / np.maximum(shown.sd, np.finfo(float).tiny)
+    answers, places = np.nan_to_num(moved[rows]), np.nan_to_num(moved[blocks["cells"]])
+    most = int(np.argmax(answers))
+    if answers[most] < MATTERS and places.max(initial=0.0) < PLACE_MATTERS:
+        return []
     text = ""
-    if np.isfinite(moved).any():
-        most = int(np.nanargmax(moved))
+    if answers[most] >= MATTERS:
         text = (
             f" ({names[most]} would be {value[rows[most]]:.4g} instead of "
             f"{shown.value[rows[most]]:.4g} {source.total_unit})"

@@ -40,7 +40,7 @@ FAINT, LOUD = 1.0, 10.0
 
 
 def featured(problem: Problem) -> Problem:
-    """The problem with the features that its readings demand in its grid (none: as it is).
+    """The problem with the features that its readings demand in its grid, maybe none.
 
     Looked for beside the evidence-averaged families; not in complex amplitudes.
     """
@@ -49,8 +49,6 @@ def featured(problem: Problem) -> Problem:
         return problem
     ground = weighed(fr)
     found = _demanded(fr, ground, level_of(fr, ground))
-    if not found.shape[1]:
-        return problem
     return replace(problem, grid=replace(problem.grid, features=found))
 
 

@@ -30,7 +30,8 @@ class Grid:
     breaks : tuple of float
         Places where the source is known to jump [m].
     features : (m', k) or None
-        Further shapes on the free cells that the source may have, found in the readings.
+        Further shapes on the free cells that the source may have, found in the readings; None
+        where they were not looked for.
     parts : {1, 2}
         2 where the source is a complex amplitude: cells of the real part come first, then those
         of the imaginary part, alike and independent beforehand.
@@ -43,6 +44,11 @@ class Grid:
     breaks: tuple[float, ...] = ()
     parts: int = 1
     features: Array | None = None
+
+    @property
+    def featured(self) -> bool:
+        """Whether the readings demanded any feature."""
+        return self.features is not None and self.features.shape[1] > 0
 
     @property
     def middles(self) -> Array:
