@@ -116,11 +116,48 @@ def invert(
 ) -> Solved:  # fmt: skip
     """Invert a forward model; parameters as of `solve`, the noise found where it is not given.
 
-    `tuned`: calibrate the band where the case asks for it and criteria are run. `features` of the
-    grid that are not to be looked for again.
+    The intervals hold what an estimated correlation leaves open (`Noise.others`), about the
+    estimate at its mean. `tuned`: calibrate the band where the case asks for it and criteria are
+    run. `features` of the grid that are not to be looked for again.
     """
+    noise = noise_of(forward) if noise is None else noise
+    main = _inverted(forward, criteria, rng, noise, tuned, features)
+    if not noise.others:
+        return main
+    same = main.problem.grid.features
+    each = [_inverted(forward, criteria, rng, n, tuned, same).answers for n in noise.others]
+    share = np.full(len(each), 1 / len(each))
+    return replace(main, answers=mixed(each, share, main.answers, main.answers.value))
+
+
+def mixed(each: Sequence[Answers], share: Array, main: Answers, value: Array) -> Answers:
+    """Mixture of answers about a value (q,): each side of intervals by its mean square distance.
+
+    What is not mixed is that of `main`.
+    """
+
+    def stack(name: str) -> Array:
+        return np.stack([getattr(a, name) for a in each])
+
+    apart, quantile = stack("value") - value, main.quantile
+    below = np.sqrt(share @ ((stack("value") - stack("lower")) ** 2 + (quantile * apart) ** 2))
+    above = np.sqrt(share @ ((stack("upper") - stack("value")) ** 2 + (quantile * apart) ** 2))
+    lower, upper = value - below, value + above
+    if main.low is not None and main.high is not None:
+        lower, upper = np.maximum(lower, main.low), np.minimum(upper, main.high)
+    sd, s_c = (np.sqrt(share @ (stack(name) ** 2 + apart**2)) for name in ("sd", "s_c"))
+    return replace(
+        main, value=value, sd=sd, lower=lower, upper=upper, m_c=share @ stack("m_c"),
+        m_0=share @ stack("m_0"), s_c=s_c, data_share=share @ stack("data_share"),
+    )  # fmt: skip
+
+
+def _inverted(
+    forward: Forward, criteria: bool, rng: np.random.SeedSequence, noise: Noise, tuned: bool,
+    features: Array | None,
+) -> Solved:  # fmt: skip
+    """Invert with one noise; parameters as of `invert`."""
     case, balanced = forward.case, eliminate(forward)
-    noise = noise_of(forward, balanced) if noise is None else noise
     problem = whitened(forward, noise.sd, noise.lag, balanced, noise.weight)
     asked = ask(forward, balanced)
     strength = case.strength
@@ -145,6 +182,9 @@ def invert(
             narrow=narrow, along=[asked.blocks[f.name] for f in section_forces(case)],
             band=criteria,
         )  # fmt: skip
+        if held.draws and not narrow:
+            # where inequalities shape the band it is the cautious one, whatever was asked for
+            answers = replace(answers, band="cautious")
     return Solved(forward, problem, noise, asked, answers, ladder, choices, choice, held)
 
 

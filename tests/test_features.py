@@ -173,8 +173,9 @@ def test_hot_joint_of_a_busbar(tmp_path):
 
 def test_with_a_sign_and_calibrated(tmp_path):
     strength = {"roughness": "adaptive", "interval": "calibrated"}
-    for source in ({}, {"sign": "nonnegative"}):
+    for source, band in (({}, "calibrated"), ({"sign": "nonnegative"}, "cautious")):
         found = srcfit.recover(busbar(tmp_path, strength, **source))
+        assert found.facts["strength"]["interval"] == band
         zone = found.facts["zones"][0]
         assert zone["lower"] < 76.4 < zone["upper"]
 
