@@ -20,7 +20,7 @@ from simulation import CELLS, FINER, SHAPES, Z
 from threadpoolctl import threadpool_limits
 
 from srcfit.bands import averaged, cautious, judge, weighed
-from srcfit.calibration import tune
+from srcfit.calibration import calibrated, tune
 from srcfit.features import featured
 from srcfit.priors import FLOOR
 from srcfit.problem import Grid, Problem, Questions
@@ -273,6 +273,42 @@ def adaptive_table(draws: int) -> None:
         print(f"| {member} | " + " | ".join(texts) + " |", flush=True)
 
 
+def sharpest(
+    forward: Callable[[Array, Array], Array], n: int, noise: float, shapes: Mapping[str, Shape],
+    draws: int, seed: int = 13,
+) -> tuple[Array, float]:  # fmt: skip
+    """Held (shapes, 6) by features and calibration together; width over the cautious average's."""
+    fine, x, blank, questions = layout(forward, n, FIVE)
+    rng, held = np.random.default_rng(seed), np.empty((len(shapes), draws, 6))
+    ratio = []
+    for i, shape in enumerate(shapes.values()):
+        u = fine @ shape(x)
+        sd = noise * np.abs(u).max()
+        truth = questions.cells @ shape(x).reshape(CELLS, FINER).mean(axis=1)
+        for j in range(draws):
+            d = (u + sd * rng.normal(size=n)) / sd
+            problem = Problem(blank.A / sd, blank.B, d, blank.grid, places=blank.places)
+            band = calibrated(featured(problem), questions)
+            held[i, j] = np.abs(band.value - truth) <= band.upper - band.value
+            ratio.append((band.sd / cautious(problem, questions).sd)[:5].mean())
+    return held.mean(axis=1), float(np.mean(ratio))
+
+
+def sharpest_table(draws: int) -> None:
+    """Print zones / worst shape / total and width of features and calibration together."""
+    shapes = {**SHAPES, **AFTER}
+    print("\n| member | adaptive and calibrated | width |")
+    for member, forward in MEMBERS.items():
+        found = [
+            sharpest(forward, n, noise, shapes, draws)
+            for n in (12, 40, 150) for noise in (0.003, 0.02)
+        ]  # fmt: skip
+        held = np.mean([f[0] for f in found], axis=0)
+        zones = held[:, :5].mean(axis=1)
+        text = f"{zones.mean():.3f} / {zones.min():.2f} / {held[:, 5].mean():.3f}"
+        print(f"| {member} | {text} | {np.mean([f[1] for f in found]):.2f} |", flush=True)
+
+
 def error_table(draws: int) -> None:
     """Print median and 90th percentile of the error over that of the best strength."""
     shapes = {k: f for k, f in {**SHAPES, **AFTER}.items() if k != "constant"}
@@ -319,6 +355,7 @@ def main(draws: int = 200) -> None:
                 print(f"| {ratio:g}, {n} | {label} | {text} | {narrower(found):.2f} |", flush=True)
     error_table(draws // 20)
     adaptive_table(draws // 20)
+    sharpest_table(draws // 20)
 
 
 if __name__ == "__main__":
