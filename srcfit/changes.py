@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from scipy.linalg import cholesky
 
-from srcfit import __version__, checks
+from srcfit import __version__, checks, doubts
 from srcfit.answers import per
 from srcfit.bands import undetermined
 from srcfit.campaigns import Numbers, Pairing
@@ -31,7 +31,7 @@ from srcfit.results import (
     source_table,
     zones_table,
 )
-from srcfit.rounding import brief, interval
+from srcfit.rounding import brief, held_word, interval
 from srcfit.solve import Solved
 from srcfit.text import bullets, clean, findings_text, join, section, table
 from srcfit.unknowns import response_unit
@@ -40,6 +40,8 @@ if TYPE_CHECKING:
     import pandas as pd
 
 POWER = 1.6448536269514722  # one-sided 5 % point of the normal distribution
+# findings about readings of one campaign that hold for the comparison too
+SINGLE = ("outlier", "outlier-or-source")
 
 
 @dataclass(frozen=True)
@@ -102,7 +104,7 @@ def told(
         for r, n in zip(reaction_facts(solved, shown), judged("reactions"), strict=True)
     ]
     fit = _fit(solved)
-    findings = _findings(found, alone, pairing, asked, fit)
+    findings = _findings(found, alone, single, pairing, asked, fit)
     reckoned = asked.level * per(source.unit, cases[0].member.kind.source_unit)
     facts: dict[str, Any] = {
         "schema": 1, "version": __version__,
@@ -113,7 +115,7 @@ def told(
         "total": judged("total")[0], "zones": zones,
         "background": next(iter(judged("background")), None),
         "peak": peak_facts(solved, shown), "lumped": lumped,
-        "nuisances": _nuisances(found, shown, beyond, alone), "reactions": reactions,
+        "nuisances": _nuisances(found, shown, beyond, alone, single), "reactions": reactions,
         "findings": [asdict(f) for f in findings],
         "level": cases[0].strength.level, "seed": seed.entropy,
         "cautions": list(cases[0].member.kind.cautions),
@@ -179,18 +181,27 @@ def _fit(solved: Solved) -> dict[str, Any]:
 
 
 def _nuisances(
-    found: Joint, shown: Shown, beyond: Array, alone: Sequence[Solved]
+    found: Joint, shown: Shown, beyond: Array, alone: Sequence[Solved], single: Sequence[Shown]
 ) -> list[dict[str, Any]]:
     units = {c.name: c.unit for s in alone for c in s.forward.columns}
+
+    def own(side: int, name: str) -> dict[str, float | None] | None:
+        """What a campaign says by itself; None where it has none, or another unit."""
+        columns = [c for c in alone[side].forward.columns if c.kind == "nuisance"]
+        numbers = zip(columns, single[side].numbers("nuisances"), strict=True)
+        told = (number_map(n) for c, n in numbers if (c.name, c.unit) == (name, units[name]))
+        return next(told, None)
+
     return [
-        {"name": name, "of": of} | _judged(n, m) | {"unit": units[name]}
+        {"name": name, "of": of} | _judged(n, m)
+        | {"a": own(0, name), "b": own(1, name), "unit": units[name]}
         for (name, of), n, m in zip(
             found.nuisances,
             shown.numbers("nuisances"),
             beyond[found.solved.asked.blocks["nuisances"]],
             strict=True,
         )
-    ]
+    ]  # fmt: skip
 
 
 def _zones(
@@ -266,12 +277,17 @@ def _recoloured(found: Joint) -> tuple[Array, Array]:
 
 
 def _findings(
-    found: Joint, alone: Sequence[Solved], pairing: Pairing, asked: Agreed,
-    fit: Mapping[str, Any],
+    found: Joint, alone: Sequence[Solved], single: Sequence[Shown], pairing: Pairing,
+    asked: Agreed, fit: Mapping[str, Any],
 ) -> list[Finding]:  # fmt: skip
     first, second = (s.forward for s in alone)
     solved = found.solved
     saying = [f for forward in (first, second) for f in forward.readings.findings]
+    saying += [
+        replace(f, sentence=f"In campaign {side}, {f.sentence}")
+        for side, s, own in zip("AB", alone, single, strict=True)
+        for f in doubts.findings(s, own) if f.code in SINGLE
+    ]  # fmt: skip
     saying += _sensors(first, second, pairing, asked)
     saying += _same(first, second, pairing)
     saying += _floor(alone, asked)
@@ -394,7 +410,7 @@ def _numbers(facts: Mapping[str, Any]) -> str:
     at, total, density = units["position"], units["total"], units["source"]
 
     def row(name: str, where: str, n: Mapping[str, Any], unit: str) -> tuple[str, ...]:
-        own = [amount(n[k], unit) if k in n else "" for k in ("a", "b")]
+        own = [amount(n[k], unit) if n.get(k) else "" for k in ("a", "b")]
         return (name, where, *own, signed(amount(n, unit)), interval(n, unit))
 
     rows = [row("total", "", facts["total"], total)]
@@ -406,7 +422,7 @@ def _numbers(facts: Mapping[str, Any]) -> str:
              for p in facts["lumped"]]  # fmt: skip
     rows += [row(n["name"] + ("" if n["of"] == "difference" else f" (of {n['of']})"), "", n,
                  n["unit"]) for n in facts["nuisances"]]  # fmt: skip
-    rows += [row(f"reaction {r['name']}", f"{brief(r['at'], 6)} {at}", r, r["unit"])
+    rows += [row(held_word(r["name"], r["kind"]), f"{brief(r['at'], 6)} {at}", r, r["unit"])
              for r in facts["reactions"]]  # fmt: skip
     level = f"{100 * facts['level']:g} % interval"
     return table(("", "where", "A ± sd", "B ± sd", "change ± sd", level), rows, "llrrrr")

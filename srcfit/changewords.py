@@ -47,10 +47,10 @@ def _statement(n: Number, unit_text: str) -> str:
     change = signed(amount(n, unit_text))
     if n["shown"]:
         return f"{change}: a change is shown"
-    lead = f"{change}: no change is shown; not detected is not absent"
+    lead = f"{change}: no change is shown"
     if n["missed"] is None:
-        return f"{lead}, and these sensors may have missed any change"
-    return f"{lead}, a change of up to {brief(n['missed'], 2)} {unit_text} may have been missed"
+        return f"{lead}, but these sensors may have missed any"
+    return f"{lead}, but one of up to {brief(n['missed'], 2)} {unit_text} may have been missed"
 
 
 def amount(n: Number, unit_text: str) -> str:
@@ -61,7 +61,7 @@ def amount(n: Number, unit_text: str) -> str:
 
 def signed(text: str) -> str:
     """The same with a plus sign before a positive change."""
-    return f"+{text}" if text[:1].isdigit() and text[:1] + text[1:2] != "0 " else text
+    return f"+{text}" if text[:1].isdigit() and text.split(" ")[0].strip("0.") else text
 
 
 def between(n: Number, unit_text: str) -> str:

@@ -20,7 +20,7 @@ from srcfit.report.html import Num, clean, figure, listing, name, num, safe, sec
 from srcfit.report.method import method_text
 from srcfit.report.numbers import minus, shown
 from srcfit.report.page import document, in_notebook, with_figures
-from srcfit.report.sections import cautions, findings, first_findings, span, strip, zone_item
+from srcfit.report.sections import cautions, findings, first_findings, held, span, strip, zone_item
 from srcfit.report.tables import Row, estimate, estimate_heads, share, with_unit
 from srcfit.rounding import brief, plus_minus
 
@@ -182,9 +182,11 @@ def amounts(comparison: Comparison) -> str:
         "zones share their doubt.</p>"
     )
     body = note + _zones(comparison) + tables.background(comparison)
-    for key, first in (("reactions", ("name", "at", "kind")), ("nuisances", ("name", "of"))):
-        caption = f"{key.capitalize()}: change from A to B"
-        body += tables.with_own_units(comparison, key, caption, first)
+    for key, head, first in (
+        ("reactions", held(comparison), ("name", "at", "kind")),
+        ("nuisances", "Nuisances", ("name", "of")),
+    ):
+        body += tables.with_own_units(comparison, key, f"{head}: change from A to B", first)
     return section("numbers", "Numbers", body)
 
 
@@ -281,9 +283,9 @@ def inputs(comparison: Comparison) -> str:
 
 CHANGE_SECTIONS: dict[str, Callable[[Comparison], str]] = {
     "answer": answer,
+    "findings": findings,
     "change": change,
     "readings": readings,
-    "findings": findings,
     "numbers": amounts,
     "assumptions": assumptions,
     "method": method,

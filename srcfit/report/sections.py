@@ -310,7 +310,7 @@ def numbers(recovery: Recovery) -> str:
         tables.background(recovery),
         tables.lumped(recovery),
         tables.detection(recovery),
-        tables.with_own_units(recovery, "reactions", _held(recovery), ("name", "at", "kind")),
+        tables.with_own_units(recovery, "reactions", held(recovery), ("name", "at", "kind")),
         tables.with_own_units(recovery, "nuisances", "Other unknowns", ("name",)),
     )
     note = (
@@ -320,7 +320,7 @@ def numbers(recovery: Recovery) -> str:
     return section("numbers", "Numbers", note + "".join(parts) + _alone(recovery))
 
 
-def _held(recovery: Recovery) -> str:
+def held(recovery: Result) -> str:
     """Heading of what ends and supports take."""
     kinds = {str(r.get("kind")) for r in recovery.facts.get("reactions") or []}
     mechanical = all(k.endswith(("force", "moment", "torque")) for k in kinds)
@@ -366,13 +366,13 @@ def cautions(recovery: Result) -> str:
 
 SECTIONS: dict[str, Callable[[Recovery], str]] = {
     "answer": answer,
+    "findings": findings,
     "member": member,
     "source": source,
     "inside": inside,
     "readings": readings,
     "strength": strength,
     "influence": influence,
-    "findings": findings,
     "numbers": numbers,
     "assumptions": assumptions,
     "method": method,

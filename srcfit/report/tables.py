@@ -12,7 +12,7 @@ from srcfit.frames import flags, header, number, numbers, pretty, pretty_header,
 from srcfit.recovery import Recovery, Result
 from srcfit.report.data import influence_unit
 from srcfit.report.html import Num, name, num, safe, table
-from srcfit.rounding import UNDETERMINED, brief, round_like, round_pair
+from srcfit.rounding import UNDETERMINED, brief, plus_minus, round_like, round_pair
 
 Row = list[str | Num]
 IMAGINARY = ("value_imag", "predicted_imag", "residual_imag")  # driven members
@@ -108,14 +108,21 @@ def lumped(recovery: Result) -> str:
 
 
 def with_own_units(recovery: Result, key: str, caption: str, first: Sequence[str]) -> str:
-    """A table of estimates that carry their own unit: nuisances, reactions."""
+    """A table of estimates that carry their own unit: nuisances, reactions.
+
+    Of a comparison with what each campaign says by itself.
+    """
     driven = recovery.case.member.driven
+    sides = [k for k in ("a", "b") if any(k in r for r in recovery.facts.get(key) or [])]
     rows: list[Row] = []
     for r in recovery.facts.get(key) or []:
         lead: Row = [name(r.get(first[0]))]
         lead += [num(r.get(k)) if k == "at" else safe(r.get(k)) for k in first[1:]]
+        own = [r.get(k) or {} for k in sides]
+        lead += [num(n.get("value"), plus_minus(n) if n else "–") for n in own]
         rows.append([*lead, *estimate(r, driven), safe(pretty(str(r.get("unit") or "")))])
     heads = [with_unit(k, unit(recovery, "position")) if k == "at" else k for k in first]
+    heads += [k.upper() for k in sides]
     return table(
         f"table-{key}", caption, [*heads, *estimate_heads(recovery, ""), "unit"], rows
     )  # fmt: skip

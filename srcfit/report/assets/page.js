@@ -253,6 +253,15 @@
     u.ctx.fillRect(u.bbox.left, top, u.bbox.width, bottom - top);
     u.ctx.restore();
   };
+  /* Ticks of a residual chart: ± 2, and multiples of it for as many as there is room. */
+  const sds = (u, axis, low, high) => {
+    const most = Math.max(-low, high);
+    let step = 2;
+    for (let k = 0; most > 2.5 * step; k += 1) step = [4, 10, 20][k % 3] * 10 ** Math.floor(k / 3);
+    const out = [];
+    for (let k = Math.ceil(low / step); k <= Math.floor(high / step); k += 1) out.push(k * step);
+    return out;
+  };
   const groupsOf = (panel) => [...new Set(panel.group)];
   const byGroup = (panel, values) => {
     const groups = groupsOf(panel);
@@ -315,7 +324,7 @@
       const z = padded([panel.standardised, [-3, 3]], 0.02);
       chart(`residuals${p}`, panelHost(host, `residual / sd, ${panel.kind}`), {
         high: 8, sync: true, plot: {
-          scales: { x: alongX, y: { range: () => z } }, axes: [place(), yAxis()],
+          scales: { x: alongX, y: { range: () => z } }, axes: [place(), yAxis({ splits: sds })],
           series: [{}, readingDots(panel)],
           hooks: { drawClear: [expected], setCursor: [(u) => pointed(u, panel)] },
         },
