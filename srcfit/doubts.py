@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -18,6 +18,7 @@ SURE = 0.001  # probability below which repeats contradict the noise
 NAMED = 8  # readings named one by one
 MOST_FAR = 0.25  # part of the readings that may lie far from the fit and still be named
 UNWEIGHTED = 1e-6  # weight of a doubtful reading in the other total
+OPEN = 0.5  # range of probable correlations that is worth a sentence
 
 
 def findings(solved: Solved, shown: Shown) -> list[Finding]:
@@ -32,11 +33,31 @@ def findings(solved: Solved, shown: Shown) -> list[Finding]:
             "weights of outliers) did not come to rest; state what is known of it (`sd`, "
             "`correlation`), or exclude what is not a reading.",
         ))  # fmt: skip
+    found += _open(solved)
     if (weight < 1).any():
         found.append(_weighted(solved, shown, score))
     if unsure.any():
         found.append(_doubtful(solved, shown))
     return found + _far(solved, np.maximum(np.abs(score.real), np.abs(score.imag)))
+
+
+def _open(solved: Solved) -> list[Finding]:
+    """Groups whose correlation was estimated, but is hardly told."""
+    lags = np.array([n.lag for n in solved.noise.others])
+    return [
+        Finding(
+            "correlation-open", "note",
+            f"The readings hardly tell how the errors of neighbouring readings of {name!r} hang "
+            f"together: a lag-1 correlation of {low:.1f} is about as probable as one of "
+            f"{high:.1f}. The intervals allow for both; if `correlation` is known, state it: they "
+            "would be surer, and often narrower.",
+        )
+        for name, low, high in zip(
+            solved.forward.groups, lags.min(axis=0, initial=1), lags.max(axis=0, initial=0),
+            strict=True,
+        )
+        if high - low > OPEN
+    ] if len(lags) else []  # fmt: skip
 
 
 def _weighted(solved: Solved, shown: Shown, score: Array) -> Finding:
@@ -92,7 +113,7 @@ def _doubtful(solved: Solved, shown: Shown) -> Finding:
 
 def _totals(solved: Solved, shown: Shown, weight: Array, when: str) -> str:
     """What the total would be with other weights; empty where there is none."""
-    noise = replace(solved.noise, weight=weight)
+    noise = solved.noise.weighing(weight)
     other = invert(solved.forward, False, np.random.SeedSequence(0), noise)
     both = [s.numbers("total")[0] for s in (shown, Shown(other, shown.extra))]
     unit = solved.forward.case.source.total_unit

@@ -1,6 +1,8 @@
 """Noise that the readings must tell: standard deviations by group, correlation of neighbours.
 
-Both maximise the restricted likelihood of the whitened rows under a few families of the source.
+Both come from the restricted likelihood of the whitened rows under a few families of the source:
+the standard deviations at its maximum, the correlation as a few values that stand for all, because
+a source that the readings see almost one by one is hard to tell from correlated noise.
 Source: Harville (1977), J. Am. Stat. Assoc. 72, 320 (the fixed point for variances); Prais &
 Winsten (1954) for the whitening of first-order autoregressive noise.
 """
@@ -26,6 +28,8 @@ ROUNDS, CLOSE = 40, 5e-3
 # a group needs this many readings beyond what the fit spends on it
 FEWEST = 2.0
 LAGS = (0.0, 0.15, 0.3, 0.45, 0.6, 0.75, 0.9)
+# equally probable values that stand for all correlations, and the steps between 0 and the largest
+STAND_INS, STEPS = 5, 900
 
 
 def estimate_noise(problem: Problem, groups: Groups) -> Array:
@@ -70,7 +74,11 @@ def rescaled(problem: Problem, groups: Groups, factors: Array) -> Problem:
 
 
 def estimate_lag(likelihood: Callable[[Array], float], unknown: NDArray[np.bool_]) -> Array:
-    """Lag-1 correlation of neighbours in each group whose correlation is unknown.
+    """Lag-1 correlations of neighbours that stand for all probable ones, in each unknown group.
+
+    No correlation from 0 to the largest of `LAGS` is preferred beforehand; their probability is
+    the likelihood, and every stand-in is the mean of an equal part of it. Their mean is that of
+    all: the largest likelihood alone jumps between the ends where it is flat.
 
     Parameters
     ----------
@@ -80,25 +88,33 @@ def estimate_lag(likelihood: Callable[[Array], float], unknown: NDArray[np.bool_
 
     Returns
     -------
-    (g,) correlations, 0 where they are not asked for; never negative.
+    (STAND_INS, g) ascending correlations, 0 where they are not asked for; never negative.
     """
-    lags = np.zeros(len(unknown))
+    lags, found = np.zeros(len(unknown)), np.zeros((STAND_INS, len(unknown)))
     for g in map(int, np.flatnonzero(unknown)):
         scores = []
         for lag in LAGS:
             lags[g] = lag
             scores.append(likelihood(lags.copy()))
-        best = int(np.argmax(scores))
-        lags[g] = LAGS[best]
-        if 0 < best < len(LAGS) - 1:
-            lags[g] = _vertex(LAGS[best - 1 : best + 2], scores[best - 1 : best + 2])
-    return lags
+        found[:, g] = stand_ins(np.array(scores))
+        lags[g] = found[:, g].mean()
+    return found
 
 
-def _vertex(x: tuple[float, ...], y: list[float]) -> float:
-    """Place of the vertex of the parabola through three equally spaced points."""
-    bend = y[0] - 2 * y[1] + y[2]
-    return x[1] if bend >= 0 else x[1] + (x[1] - x[0]) * (y[0] - y[2]) / (2 * bend)
+def stand_ins(scores: Array) -> Array:
+    """Means (STAND_INS,) of equal parts of a probability, its logarithm told at `LAGS`."""
+    from scipy.interpolate import CubicSpline
+
+    lag = np.linspace(LAGS[0], LAGS[-1], STEPS + 1)
+    log = CubicSpline(LAGS, scores)(lag)
+    chance = np.exp(log - log.max())
+    chance /= chance.sum()
+    end = np.cumsum(chance)
+    edges = np.linspace(0, 1, STAND_INS + 1)[:, None]
+    # how much of each step lies in each part
+    part = np.minimum(end, edges[1:]) - np.maximum(end - chance, edges[:-1])
+    part = np.maximum(part, 0.0)
+    return np.asarray(part @ lag / part.sum(axis=1))
 
 
 def restricted(problem: Problem) -> float:

@@ -22,7 +22,7 @@ from srcfit.member import Array
 from srcfit.placing import Place, combinations, place_of, probabilities, stand_ins
 from srcfit.readings.model import Readings
 from srcfit.robust import Noise, noise_of
-from srcfit.solve import Solved, invert
+from srcfit.solve import Solved, invert, mixed
 from srcfit.whitening import whitened
 
 Numbers = NDArray[np.intp]
@@ -227,20 +227,8 @@ def _cuts(case: Case, unknown: Sequence[int], spots: Sequence[Sequence[float]]) 
 
 
 def _averaged(each: Sequence[Answers], share: Array, main: Answers) -> Answers:
-    """Mixture of answers: each side of the intervals by its mean square distance."""
-
-    def stack(name: str) -> Array:
-        return np.stack([getattr(a, name) for a in each])
-
-    value = share @ stack("value")
-    apart = stack("value") - value
-    quantile = main.quantile
-    below = np.sqrt(share @ ((stack("value") - stack("lower")) ** 2 + (quantile * apart) ** 2))
-    above = np.sqrt(share @ ((stack("upper") - stack("value")) ** 2 + (quantile * apart) ** 2))
-    lower, upper = value - below, value + above
-    if main.low is not None and main.high is not None:
-        lower, upper = np.maximum(lower, main.low), np.minimum(upper, main.high)
-    sd, s_c = (np.sqrt(share @ (stack(name) ** 2 + apart**2)) for name in ("sd", "s_c"))
+    """Mixture of answers and of their fits."""
+    value = share @ np.stack([a.value for a in each])
 
     def fits(name: str) -> Array:
         return np.asarray(share @ np.stack([getattr(a.fit, name) for a in each]))
@@ -248,7 +236,4 @@ def _averaged(each: Sequence[Answers], share: Array, main: Answers) -> Answers:
     fit = replace(
         main.fit, residual=fits("residual"), leave_one_out=fits("leave_one_out"), hat=fits("hat")
     )
-    return replace(
-        main, value=value, sd=sd, lower=lower, upper=upper, m_c=share @ stack("m_c"),
-        m_0=share @ stack("m_0"), s_c=s_c, data_share=share @ stack("data_share"), fit=fit,
-    )  # fmt: skip
+    return replace(mixed(each, share, main, value), fit=fit)

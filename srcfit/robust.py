@@ -45,6 +45,9 @@ class Noise:
     unsure : (n,) bool, far from the others, but kept: a narrow source would look the same
     settled : bool
         False where the rounds between weights, sd and correlation did not come to rest.
+    others : tuple of Noise
+        Where a correlation was estimated: equally probable ones that stand for all, with the sd
+        that each asks for; `lag` is their mean.
     """
 
     sd: Array
@@ -52,11 +55,22 @@ class Noise:
     weight: Array
     unsure: Mask
     settled: bool = True
+    others: tuple[Noise, ...] = ()
 
     @classmethod
     def given(cls, sd: Array, lag: Array) -> Noise:
         """Of a known sd and correlation, without outliers."""
         return cls(sd, lag, np.ones(len(sd)), np.zeros(len(sd), dtype=bool))
+
+    @property
+    def alone(self) -> Noise:
+        """The same without others."""
+        return replace(self, others=())
+
+    def weighing(self, weight: Array) -> Noise:
+        """The same, and its others, with other weights (n,)."""
+        others = tuple(o.weighing(weight) for o in self.others)
+        return replace(self, weight=weight, others=others)
 
 
 @dataclass(frozen=True)
@@ -91,18 +105,24 @@ def noise_of(forward: Forward, balanced: Elimination | None = None) -> Noise:
         sd[unknown] = max(float(np.median(size)), float(size.max()) * 1e-3) or 1.0
     several = len(np.unique(forward.group[unknown])) + int(not unknown.all()) > 1
     by_group, by_lag = several and bool(unknown.any()), bool(np.isnan(forward.lag).any())
-    now = Noise.given(sd, lag)
+    now, lags = Noise.given(sd, lag), lag[None]
     for _ in range(ROUNDS):
         before = now
         if by_group:
             sd = _sds(forward, before, unknown, balanced)
         if by_lag:
-            lag = _lags(forward, replace(before, sd=sd), balanced)
+            lags = _lags(forward, replace(before, sd=sd), balanced)
+            lag = lags.mean(axis=0)
         found = _doubt(forward, sd, lag, balanced)
         now = Noise(sd, lag, found.weight, found.unsure, found.settled)
         if (by_group + by_lag == 0) or _alike(before, now, by_group and by_lag):
-            return now
-    return replace(now, settled=False)
+            break
+    else:
+        now = replace(now, settled=False)
+    each = [replace(now, lag=one) for one in lags if by_lag and np.ptp(lags, axis=0).any()]
+    if by_group:
+        each = [replace(n, sd=_sds(forward, n, unknown, balanced)) for n in each]
+    return replace(now, others=tuple(each))
 
 
 def _alike(a: Noise, b: Noise, entangled: bool) -> bool:
@@ -127,7 +147,7 @@ def _sds(forward: Forward, noise: Noise, unknown: Mask, balanced: Elimination) -
 
 
 def _lags(forward: Forward, noise: Noise, balanced: Elimination) -> Array:
-    """Correlations with those in question estimated."""
+    """Correlations (k, g) with those in question estimated: k values that stand for all."""
     sizes = np.zeros(len(forward.groups), dtype=np.intp)
     for g, members in sequences(forward):
         sizes[g] = max(sizes[g], len(members))

@@ -62,7 +62,7 @@ def properties(solved: Solved, rng: np.random.SeedSequence) -> Properties:
         # parts of unknown place stay where they most probably are
         centre = solve(
             forward.case, forward.readings, criteria=False, rng=rng, edges=solved.edges,
-            noise=solved.noise, features=solved.problem.grid.features,
+            noise=solved.noise.alone, features=solved.problem.grid.features,
         )  # fmt: skip
     shift, bend = {}, {}
     for key in uncertain:
@@ -74,7 +74,7 @@ def properties(solved: Solved, rng: np.random.SeedSequence) -> Properties:
                     criteria=False,
                     rng=rng,
                     edges=solved.edges,
-                    noise=solved.noise,
+                    noise=solved.noise.alone,
                     features=solved.problem.grid.features,
                 )
             )

@@ -18,7 +18,7 @@ from srcfit.case.model import Case
 from srcfit.constraints import Held, constrained
 from srcfit.criteria import CRITERIA, Choice, choose
 from srcfit.eigen import modes
-from srcfit.elimination import eliminate
+from srcfit.elimination import Elimination, eliminate
 from srcfit.errors import SolveError
 from srcfit.features import featured
 from srcfit.forward import Forward, build
@@ -120,12 +120,15 @@ def invert(
     estimate at its mean. `tuned`: calibrate the band where the case asks for it and criteria are
     run. `features` of the grid that are not to be looked for again.
     """
-    noise = noise_of(forward) if noise is None else noise
-    main = _inverted(forward, criteria, rng, noise, tuned, features)
+    balanced = eliminate(forward)
+    noise = noise_of(forward, balanced) if noise is None else noise
+    main = _inverted(forward, balanced, criteria, rng, noise, tuned, features)
     if not noise.others:
         return main
     same = main.problem.grid.features
-    each = [_inverted(forward, criteria, rng, n, tuned, same).answers for n in noise.others]
+    each = [
+        _inverted(forward, balanced, criteria, rng, n, tuned, same).answers for n in noise.others
+    ]
     share = np.full(len(each), 1 / len(each))
     return replace(main, answers=mixed(each, share, main.answers, main.answers.value))
 
@@ -153,11 +156,11 @@ def mixed(each: Sequence[Answers], share: Array, main: Answers, value: Array) ->
 
 
 def _inverted(
-    forward: Forward, criteria: bool, rng: np.random.SeedSequence, noise: Noise, tuned: bool,
-    features: Array | None,
+    forward: Forward, balanced: Elimination, criteria: bool, rng: np.random.SeedSequence,
+    noise: Noise, tuned: bool, features: Array | None,
 ) -> Solved:  # fmt: skip
     """Invert with one noise; parameters as of `invert`."""
-    case, balanced = forward.case, eliminate(forward)
+    case = forward.case
     problem = whitened(forward, noise.sd, noise.lag, balanced, noise.weight)
     asked = ask(forward, balanced)
     strength = case.strength

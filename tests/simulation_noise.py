@@ -19,10 +19,11 @@ import simulation
 from numpy.typing import NDArray
 from threadpoolctl import threadpool_limits
 
-from srcfit.bands import cautious
+from srcfit.bands import Answers, cautious
 from srcfit.noise import estimate_lag, restricted
-from srcfit.problem import Problem
+from srcfit.problem import Problem, Questions
 from srcfit.robust import Doubt, doubt
+from srcfit.solve import mixed
 from srcfit.whitening import Links
 
 Array = NDArray[np.float64]
@@ -69,29 +70,39 @@ def weighted(problem: Problem) -> tuple[Problem, Doubt]:
     return given(found.weight)[0], found
 
 
-def lag_of(problem: Problem) -> float:
-    """Lag-1 correlation of the rows by restricted likelihood."""
+def correlated(problem: Problem, questions: Questions) -> Answers:
+    """Answers where the correlation of the rows is to be estimated, as `solve.invert` has them."""
 
     def likelihood(lag: Array) -> float:
         volume = 0.5 * (len(problem.d) - 1) * float(np.log1p(-(lag[0] ** 2)))
         return restricted(white(problem, float(lag[0]))) - volume
 
-    return float(estimate_lag(likelihood, np.array([True]))[0])
+    lags = estimate_lag(likelihood, np.array([True]))[:, 0]
+    each = [cautious(white(problem, float(one)), questions) for one in lags]
+    main = cautious(white(problem, float(lags.mean())), questions)
+    return mixed(each, np.full(len(each), 1 / len(each)), main, main.value)
 
 
-def treatments() -> dict[str, tuple[str, Callable[[Problem], Problem]]]:
-    """Name -> (kind of noise, what is made of the problem)."""
+def treatments() -> dict[str, tuple[str, Callable[[Problem, Questions], Answers]]]:
+    """Name -> (kind of noise, answers to a problem's questions)."""
+
+    def after(treat: Callable[[Problem], Problem]) -> Callable[[Problem, Questions], Answers]:
+        return lambda problem, questions: cautious(treat(problem), questions)
+
     return {
-        "white, sd stated": ("white", lambda p: p),
-        "white, sd estimated": ("white", lambda p: replace(p, stated=False)),
-        "5 % outliers, weighted": ("spoiled", lambda p: weighted(p)[0]),
+        "white, sd stated": ("white", after(lambda p: p)),
+        "white, sd estimated": ("white", after(lambda p: replace(p, stated=False))),
+        "5 % outliers, weighted": ("spoiled", after(lambda p: weighted(p)[0])),
         "5 % outliers, sd estimated, weighted": (
-            "spoiled", lambda p: weighted(replace(p, stated=False))[0],
+            "spoiled", after(lambda p: weighted(replace(p, stated=False))[0]),
         ),
-        "5 % outliers, taken at their word": ("spoiled", lambda p: p),
-        "correlated 0.5, ignored": ("correlated", lambda p: p),
-        "correlated 0.5, stated": ("correlated", lambda p: white(p, LAG)),
-        "correlated 0.5, estimated": ("correlated", lambda p: white(p, lag_of(p))),
+        "5 % outliers, taken at their word": ("spoiled", after(lambda p: p)),
+        "correlated 0.5, ignored": ("correlated", after(lambda p: p)),
+        "correlated 0.5, stated": ("correlated", after(lambda p: white(p, LAG))),
+        "correlated 0.5, estimated": ("correlated", correlated),
+        "correlated 0.5, estimated with the sd": (
+            "correlated", lambda p, q: correlated(replace(p, stated=False), q),
+        ),
     }  # fmt: skip
 
 
@@ -123,7 +134,7 @@ def simulate(
             for name, (kind, treat) in chosen.items():
                 d = u / sd + noises[kind]
                 problem = Problem(blank.A / sd, blank.B, d, blank.grid, places=blank.places)
-                band = cautious(treat(problem), questions)
+                band = treat(problem, questions)
                 half = (band.upper - band.value)[:6]
                 held[name][i, j] = np.abs(band.value[:6] - truth) <= half
                 width[name][i, j] = half

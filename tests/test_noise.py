@@ -91,7 +91,7 @@ def correlated(seed, lag, n=120):
 
 @pytest.mark.parametrize("lag", [0.0, 0.5])
 def test_lag_is_found(lag):
-    found = [estimate_lag(correlated(seed, lag), np.array([True]))[0] for seed in range(4)]
+    found = [estimate_lag(correlated(seed, lag), np.array([True])).mean() for seed in range(4)]
     # one sd of a lag-1 correlation from 120 readings is about 0.09
     assert np.mean(found) == pytest.approx(lag, abs=0.15)
     assert max(found) <= LAGS[-1]
@@ -99,4 +99,4 @@ def test_lag_is_found(lag):
 
 def test_lag_that_is_not_asked_for_stays_zero():
     found = estimate_lag(correlated(0, 0.5), np.array([False]))
-    assert found.tolist() == [0.0]
+    assert not found.any()
