@@ -22,6 +22,7 @@ from srcfit.unaided import alone, bounded, signed
 WIDE, MOST, FINEST = 0.2, 20, 500
 TWICE = 2.0  # how far the density may go, in units of the band's largest reach about its mean
 MUCH, LITTLE = 0.8, 0.25  # parts of the width that the readings alone leave
+SEEN = 0.02  # part of the width of the interval above that it may stick out without a word
 
 
 @dataclass(frozen=True)
@@ -158,6 +159,9 @@ def _sentence(name: str, n: Mapping[str, Any], low: float, high: float, unit: st
     ratio = (n["upper"] - n["lower"]) / (high - low)
     wide = {"lower": low, "upper": high, "value": n["value"], "sd": max(n["sd"], (high - low) / 4)}
     lead = f"{name}: {interval(wide, unit)}"
+    beyond = max(low - n["lower"], n["upper"] - high) > SEEN * (n["upper"] - n["lower"])
+    if beyond:
+        lead += " (an estimate of its own, so it need not contain the interval above)"
     if ratio >= MUCH:
         return f"{lead}; smoothness adds next to nothing"
     return f"{lead}; the interval above is {brief(100 * ratio, 2)} % as wide" + (

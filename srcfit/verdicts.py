@@ -9,7 +9,7 @@ from srcfit.answers import CURRIE, detection, per, verdict, zone_sizes
 from srcfit.case.model import Case
 from srcfit.errors import Finding
 from srcfit.results import Shown
-from srcfit.rounding import brief, chance_text, listed
+from srcfit.rounding import brief, listed
 from srcfit.solve import Solved
 
 
@@ -94,15 +94,12 @@ def _undetected(case: Case, detected: Sequence[Mapping[str, Any]]) -> list[Findi
 def _undecided(case: Case, limit: Mapping[str, Any] | None) -> list[Finding]:
     if limit is None or limit["verdict"] != "undecided":
         return []
-    level, asked = case.strength.level, case.source.limit
-    unit = case.source.unit if asked is not None and asked.density else case.source.total_unit
+    level = case.strength.level
     return [
         Finding(
             "limit-undecided", "caution",
-            f"Whether {limit['zone']} keeps its limit of {brief(limit['at_most'], 6)} {unit} is "
-            f"undecided: the probability that it does is "
-            f"{chance_text(limit['probability'], level)}, which lies between "
-            f"{100 * (1 - level):.10g} % (exceeded) and {100 * level:.10g} % (kept). Take it for "
-            "neither; more or better readings near the zone would decide it.",
+            f"Whether {limit['zone']} keeps its limit is undecided: a probability between "
+            f"{100 * (1 - level):.10g} % (exceeded) and {100 * level:.10g} % (kept) decides "
+            "nothing; more or better readings near the zone would.",
         )
     ]  # fmt: skip

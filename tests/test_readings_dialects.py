@@ -396,6 +396,21 @@ def test_stuck_channels_marks_and_flags_are_told(tmp_path):
     assert found.used.all()
 
 
+@pytest.mark.parametrize(
+    ("values", "told"),
+    [
+        ([4, 4, 4, 7.5, 4, 4, 4], "one value in 6 of 7 readings, all but line 5;"),
+        ([4, 4, 4, 7.5, 4, 4, 3], None),  # five of seven
+        ([4, 4, 4, 4, 4, 4, 4], None),  # a member without any source
+        ([1, 2, 3, 4, 5, 6, 7], None),
+    ],
+)
+def test_nearly_all_of_one_value_is_told(tmp_path, values, told):
+    text = "x;w\n" + "".join(f"{i};{v}\n" for i, v in enumerate(values))
+    found = [f for f in read(table_case(tmp_path, text)).findings if f.code == "stuck-readings"]
+    assert [told in f.sentence for f in found] == ([True] if told else [])
+
+
 def test_several_tables_and_one_file_twice(tmp_path):
     one = table_case(tmp_path, "x;w;r\n0;1;2\n")
     two = case(tmp_path, "t.csv", column("r", "rotation", "mrad"))

@@ -21,6 +21,7 @@ _STATUS = frozenset((
 _MARKS = np.array([7999, 9999, 99999, 999999, 999.9, 999.99, 9999.9, 6999, 8888, 32767, 32768,
                    65535, 1e30, 1e20, 999])  # fmt: skip
 _RUN = 5
+_MOST = 0.8  # part of the readings that is nearly all
 _NEAR = 0.1  # places at random come so near by chance in fewer than one table of ten
 
 
@@ -117,9 +118,18 @@ def _flags(table: Table, batches: Sequence[Batch]) -> list[Finding]:
 
 
 def _stuck(name: str, batch: Batch) -> list[Finding]:
-    """Long runs of one value in a column whose values otherwise differ."""
+    """Nearly all readings of one value, or long runs of one in a column that otherwise differs."""
     keep = used_rows(batch)
     value, line = batch.raw[keep], batch.line[keep]
+    kinds, count = np.unique(value, return_counts=True)
+    if len(kinds) > 1 and count.max() >= max(_RUN, _MOST * len(value)):
+        others = line[value != kinds[np.argmax(count)]].tolist()
+        return [Finding(
+            "stuck-readings", "caution",
+            f"{name}: {batch.name!r} has one value in {count.max()} of {len(value)} readings, all "
+            f"but {lines_text(others)}; check whether the channel was stuck, or its numbers "
+            "written with too few digits.",
+        )]  # fmt: skip
     if len(value) < 2 * _RUN or np.count_nonzero(value[1:] == value[:-1]) < _RUN - 1:
         return []
     edges = np.flatnonzero(np.r_[True, value[1:] != value[:-1], True])

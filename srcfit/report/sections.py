@@ -101,7 +101,7 @@ def strip(zone: Mapping[str, Any], scale: tuple[float, float]) -> str:
 
 def _zone(recovery: Recovery, zone: Mapping[str, Any], scale: tuple[float, float]) -> str:
     T, P = unit(recovery, "total"), unit(recovery, "position")
-    place = shown(minus(f"{brief(zone.get('from'))} to {brief(zone.get('to'))} {P}"))
+    place = shown(minus(f"{brief(zone.get('from'), 6)} to {brief(zone.get('to'), 6)} {P}"))
     amount = shown(f"{plus_minus(zone, T)} {twin(zone, T)}".rstrip())
     ends = interval(zone, T)
     both = f"{ends} {twin_interval(zone, T)}".rstrip()
