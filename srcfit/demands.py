@@ -10,6 +10,7 @@ from srcfit.errors import Finding
 from srcfit.features import featured
 from srcfit.problem import Array, Grid
 from srcfit.results import Shown
+from srcfit.rounding import minus, round_like
 from srcfit.solve import Solved
 from srcfit.solvers.frame import ask, frame
 
@@ -81,10 +82,10 @@ def _left_out(solved: Solved, shown: Shown, grid: Grid, value: Array) -> list[Fi
         return []
     text = ""
     if answers[most] >= MATTERS:
-        text = (
-            f" ({names[most]} would be {value[rows[most]]:.4g} instead of "
-            f"{shown.value[rows[most]]:.4g} {source.total_unit})"
-        )
+        there, here = float(value[rows[most]]), float(shown.value[rows[most]])
+        size, sd = max(abs(there), abs(here)), float(shown.sd[rows[most]])
+        told = [minus(round_like(v, sd, size)) for v in (there, here)]
+        text = f" ({names[most]} would be {' instead of '.join(told)} {source.total_unit})"
     text = (
         f"The readings point to something sharper than a smooth curve at {_places(solved, grid)}: "
         f'`roughness = "adaptive"` under [strength] takes it in{text}, or declare what stands '

@@ -233,6 +233,21 @@ def test_pointing_at_a_reading_shows_its_influence(browser, pages, recoveries):
     )
 
 
+def test_residual_charts_have_ticks_at_two_standard_deviations(browser, pages):
+    """As far as they fit; a residual of 30 sd leaves room for few."""
+    show(browser, pages, "beam")
+    ticks = """
+        const axis = window.report.charts.residuals0.axes[1];
+        return arguments[0].map(([low, high]) => axis.splits(null, 1, low, high));
+    """
+    ranges = [(-3.1, 3.1), (-3.0, 4.9), (-7.0, 3.0), (-3.0, 31.0)]
+    assert browser.execute_script(ticks, ranges) == [
+        [-2, 0, 2], [-2, 0, 2, 4], [-4, 0], [0, 20],
+    ]  # fmt: skip
+    shown = browser.execute_script("return window.report.charts.residuals0.axes[1]._splits")
+    assert {-2, 0, 2} <= set(shown)
+
+
 @pytest.mark.parametrize(
     ("name", "dark", "width"),
     [("beam", False, 1280), ("recovered", False, 768), ("hostile", True, 360),

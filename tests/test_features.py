@@ -154,7 +154,9 @@ def test_hot_joint_of_a_busbar(tmp_path):
     plain = srcfit.recover(busbar(tmp_path))
     hints = [f["sentence"] for f in plain.findings if f["code"] == "feature-demanded"]
     assert len(hints) == 1
-    assert "zone joint B would be" in hints[0]
+    both = hints[0].split("zone joint B would be ")[1].split(" W)")[0].split(" instead of ")
+    assert both[0] != both[1]
+    assert len({len(n.partition(".")[2]) for n in both}) == 1  # rounded alike
     found = srcfit.recover(busbar(tmp_path, {"roughness": "adaptive"}))
     codes = [f["code"] for f in found.findings]
     assert "feature-found" in codes
