@@ -4,8 +4,9 @@ The estimate is the exact constrained one at the evidence-weighted mean strength
 averaged over families. The interval of a question is the hull of draws under the cautious
 families and of strict bounds under steeper ones (see `envelope`), around the estimate and around
 their own centre; the distances between estimate and centres, with and without steps at the drawn
-edges, widen it as in `bands`. Where the inequalities take next to nothing from the
-unconstrained posterior, the closed forms of `bands` stand and nothing is drawn.
+edges, widen it as in `bands`. The interval without the inequalities holds whatever the source, so
+theirs goes little beyond it. Where the inequalities take next to nothing from the unconstrained
+posterior, the closed forms of `bands` stand and nothing is drawn.
 """
 
 from __future__ import annotations
@@ -38,6 +39,9 @@ TIGHT = 1e-7  # relative slack of a wall that is met
 # strict bounds reckon with a source that varies by half of STEEP times its level where it acts;
 # at walls along at least this part of the free length they may pass the band without inequalities
 STEEP, PART = 4.0, 0.03
+# but no side passes it by more than the estimate moved, or by this part of its half-width: where
+# it misses a source that keeps the inequalities, it rarely misses it by more
+ROOM = 0.5
 TINY = 1e-300
 
 
@@ -354,8 +358,10 @@ def _banded(
     )
     if not band.at_walls:
         strict = np.stack([np.maximum(strict[0], free.lower), np.minimum(strict[1], free.upper)])
-    lower = np.minimum(np.minimum(drawn[0], strict[0]), value)
-    upper = np.maximum(np.maximum(drawn[1], strict[1]), value)
+    room = np.maximum(np.abs(value - free.value), ROOM * (free.upper - free.lower) / 2)
+    lower = np.fmax(np.minimum(drawn[0], strict[0]), free.lower - room)
+    upper = np.fmin(np.maximum(drawn[1], strict[1]), free.upper + room)
+    lower, upper = np.minimum(lower, value), np.maximum(upper, value)
     sd = np.sqrt(((points.values - value) ** 2).mean(axis=0))
     if free.reason:
         sd = lower = upper = np.full(len(value), np.nan)

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from simulation import CELLS, FINER, layout
 from threadpoolctl import threadpool_limits
 
-from srcfit.bands import cautious
+from srcfit.bands import Answers, cautious
 from srcfit.case.model import SourceSpec
 from srcfit.constraints import constrained
 from srcfit.elimination import Elimination
@@ -73,7 +73,11 @@ class Draw:
     truth: Array
     drawn: Array
     strict: Array
-    free_width: Array
+    free: Answers
+
+    @property
+    def free_width(self) -> Array:
+        return np.asarray(self.free.upper - self.free.lower)
 
     @property
     def held(self) -> NDArray[np.bool_]:
@@ -99,8 +103,7 @@ def simulate(
             at = np.random.SeedSequence([seed, i])
             band, held = constrained(problem, questions, known, free, at)
             yield Draw(
-                shape, band.lower, band.upper, band.value, truth, held.drawn, held.strict,
-                free.upper - free.lower,
+                shape, band.lower, band.upper, band.value, truth, held.drawn, held.strict, free,
             )  # fmt: skip
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import tomllib
 from dataclasses import replace
 
 import cvxpy
@@ -10,7 +11,9 @@ import pytest
 import referee
 from scipy.optimize import nnls
 from simulation_constraints import knowledge, simulate, tally
+from test_examples import EXAMPLES, TRUTHS, numbers
 
+import srcfit
 from srcfit import constraints
 from srcfit.bands import cautious
 from srcfit.case.model import Monotone
@@ -340,6 +343,36 @@ def test_intervals_hold_for_sources_that_are_zero_elsewhere(member, n, noise):
     assert found.touched >= 0.95  # what is zero may be zero
     assert found.least >= 0
     assert found.width <= 1  # and something is gained by knowing the sign
+
+
+@pytest.mark.parametrize("interval", ["cautious", "calibrated"])
+def test_knowing_the_sign_of_a_ring_costs_no_width(interval):
+    """A ring stands on a small part of its disc; as strong all over, it would be far more."""
+    name = "infiltration_ring/case.toml"
+    with (EXAMPLES / name).open("rb") as file:
+        table = tomllib.load(file)
+    table["strength"] = {"interval": interval}
+    free, known = (
+        numbers(srcfit.recover(srcfit.make_case(case, (EXAMPLES / name).parent)).summary())
+        for case in (table, table | {"source": table["source"] | {"sign": "nonnegative"}})
+    )
+    for key, truth in TRUTHS[name].items():
+        assert known[key]["lower"] <= truth <= known[key]["upper"], key
+        width, other = (found[key]["upper"] - found[key]["lower"] for found in (known, free))
+        assert width <= 1.1 * other, key
+
+
+@pytest.mark.parametrize(("shape", "n"), [("narrow load", 12), ("two narrow blocks", 40)])
+def test_no_side_goes_far_beyond_the_interval_without_the_sign(shape, n):
+    """By no more than the estimate moved, or than half of that interval's half-width."""
+    passed = 0
+    for draw in simulate("conductor mL = 4", n, 0.003, 2, 3, (shape,)):
+        room = np.maximum(np.abs(draw.value - draw.free.value), draw.free_width / 4)
+        slack = 1e-9 * draw.truth[5]
+        assert (draw.upper <= np.maximum(draw.value, draw.free.upper + room) + slack).all()
+        assert (draw.lower >= np.minimum(draw.value, draw.free.lower - room) - slack).all()
+        passed += (draw.upper > draw.free.upper).sum()
+    assert passed  # it may go beyond
 
 
 @pytest.mark.parametrize("seed", range(8))
