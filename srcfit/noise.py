@@ -1,22 +1,23 @@
 """Noise that the readings must tell: standard deviations by group, correlation of neighbours.
 
-Both come from the restricted likelihood of the whitened rows under a few families of the source:
-the standard deviations at its maximum, the correlation as a few values that stand for all, because
-a source that the readings see almost one by one is hard to tell from correlated noise.
+Both come from the restricted likelihood of the whitened rows: the standard deviations at its
+maximum under a few families of the source, the correlation under all families of the estimate and
+as a few values that stand for all, because a source that the readings see almost one by one is
+hard to tell from correlated noise.
 Source: Harville (1977), J. Am. Stat. Assoc. 72, 320 (the fixed point for variances); Prais &
 Winsten (1954) for the whitening of first-order autoregressive noise.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from srcfit.evidence import FAINTEST, Weighted, grid, mean_noise, weigh
-from srcfit.priors import SCALE, SMOOTH, STEPPED, Family, pieces
+from srcfit.priors import SCALE, SMOOTH, STEPPED, Family, estimate_families, pieces
 from srcfit.problem import Array, Problem
 from srcfit.solvers.frame import Frame, frame, unpenalised
 from srcfit.solvers.ladder import penalised
@@ -122,7 +123,7 @@ def restricted(problem: Problem) -> float:
 
     Comparable between whitenings W of the same readings once ln|det W| is added.
     """
-    fr, found = few(problem)
+    fr, found = many(problem)
     if found:
         best = max(float(w.log_evidence.max()) for w in found)
         average = sum(float(np.exp(w.log_evidence - best).sum()) for w in found)
@@ -143,10 +144,26 @@ def _families(problem: Problem) -> tuple[tuple[Family, ...], Array]:
 
 def few(problem: Problem) -> tuple[Frame, list[Weighted]]:
     """The problem under a few families; none where it has no smooth part."""
+    return _under(problem, *_families(problem))
+
+
+def many(problem: Problem) -> tuple[Frame, list[Weighted]]:
+    """The problem under all families of the estimate; none where it has no smooth part.
+
+    A correlation wants them all: to a family that the source does not obey, what it cannot follow
+    smoothly is rough, and so is white noise, which then fits better than correlated noise.
+    """
+    drawn = pieces(problem.grid, zones=True)
+    return _under(problem, estimate_families(drawn), drawn)
+
+
+def _under(
+    problem: Problem, families: Sequence[Family], drawn: Array
+) -> tuple[Frame, list[Weighted]]:
+    """The problem under some families, with steps within drawn pieces."""
     fr = frame(problem)
     if not len(fr.free):
         return fr, []
-    families, drawn = _families(problem)
     keys = [SCALE, *((f.base, f.length) for f in families)]
     products = bases(fr, keys, route(fr))
     spectra = [spectrum(fr, f, products, drawn) for f in families]

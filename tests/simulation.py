@@ -72,6 +72,10 @@ MEMBERS: dict[str, Callable[[Array, Array], Array]] = {
         e, x, 1.0, foundation=4 * 5.0**4, left="free", right="free"
     )[0],
 }
+# a buried fibre told almost reading by reading: decay over half the distance of two readings
+DENSE: dict[str, Callable[[Array, Array], Array]] = {
+    "fibre": lambda e, x: referee.fin(e, x, 1.0, (len(x) / 0.49) ** 2),
+}
 
 
 @dataclass(frozen=True)
@@ -107,7 +111,7 @@ def layout(member: str, n: int) -> tuple[Array, Array, Problem, Questions]:
     x = (np.arange(n) + 0.5) / n
     fine = np.linspace(0, 1, CELLS * FINER + 1)
     edges = np.linspace(0, 1, CELLS + 1)
-    forward = MEMBERS[member]
+    forward = (MEMBERS | DENSE)[member]
     bounds = [(i / 5, (i + 1) / 5) for i in range(5)]
     grid = Grid(edges, np.diff(edges), np.ones(CELLS, dtype=bool), tuple(bounds))
     problem = Problem(forward(edges, x), np.zeros((n, 0)), np.zeros(n), grid, places=x)

@@ -5,7 +5,8 @@ small part. Layouts and sources are those of `simulation`.
 
 Noise, in units of its stated sd: white and stated; white and to be estimated; 5 % of the readings
 off by another 10 to 30 sd, down-weighted or not; first-order autoregressive with a lag-1
-correlation of 0.5 along the member, ignored, stated or estimated.
+correlation of 0.5 along the member, ignored, stated or estimated. A fibre whose readings a source
+reaches one by one has a noise of its own size: there source and noise are hard to tell apart.
 """
 
 from __future__ import annotations
@@ -28,6 +29,8 @@ from srcfit.whitening import Links
 
 Array = NDArray[np.float64]
 NOISE, LAG = simulation.NOISE, 0.5
+# of a fibre: a few tenths of a kelvin in ten
+LOUD = 0.03
 OFTEN, NEAR, FAR = 0.05, 10.0, 30.0
 
 
@@ -107,12 +110,14 @@ def treatments() -> dict[str, tuple[str, Callable[[Problem, Questions], Answers]
 
 
 def simulate(
-    member: str, n: int, draws: int, names: Sequence[str] = (), shapes: Sequence[str] = ()
-) -> dict[str, simulation.Tally]:
+    member: str, n: int, draws: int, names: Sequence[str] = (), shapes: Sequence[str] = (),
+    part: float = NOISE,
+) -> dict[str, simulation.Tally]:  # fmt: skip
     """Tallies of the cautious band; every treatment sees the same white noise underneath.
 
     The error is that of the source's density on the cells (root of the sum of squares); nan where
-    no outlier was drawn though outliers are looked at.
+    no outlier was drawn though outliers are looked at. The noise's sd is `part` of the largest
+    reading.
     """
     A_fine, middles, blank, questions = simulation.layout(member, n)
     shapes = tuple(shapes or simulation.SHAPES)
@@ -121,13 +126,13 @@ def simulate(
     held = {k: np.full(size, np.nan) for k in chosen}
     width = {k: np.full(size, np.nan) for k in chosen}
     error = {k: np.full(size[:2], np.nan) for k in chosen}
-    rng = np.random.default_rng([list(simulation.MEMBERS).index(member), n, 5])
+    rng = np.random.default_rng([list(simulation.MEMBERS | simulation.DENSE).index(member), n, 5])
     for i, shape in enumerate(shapes):
         f = simulation.SHAPES[shape](middles)
         cells = f.reshape(simulation.CELLS, simulation.FINER).mean(axis=1)
         truth = questions.cells[:6] @ cells
         u = A_fine @ f
-        sd = NOISE * np.abs(u).max()
+        sd = part * np.abs(u).max()
         for j in range(draws):
             e = rng.normal(size=n)
             noises = {"white": e, "spoiled": spoiled(e, rng), "correlated": autoregressive(e)}
@@ -156,9 +161,10 @@ def main(draws: int = 20) -> None:
     print("by draw: median, 90 % point.\n")
     print("| layout, readings | " + " | ".join(names) + " |")
     print("|---" * (len(names) + 1) + "|")
-    for member in simulation.MEMBERS:
-        for n in (12, 40):
-            found = simulate(member, n, draws)
+    for member in (*simulation.MEMBERS, *simulation.DENSE):
+        dense = member in simulation.DENSE
+        for n in (60, 100) if dense else (12, 40):
+            found = simulate(member, n, draws, part=LOUD if dense else NOISE)
             cells = []
             for name in names:
                 zones, _, total = found[name].row()

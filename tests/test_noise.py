@@ -3,13 +3,23 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from itertools import pairwise
 
 import numpy as np
 import pytest
 from scipy.optimize import minimize_scalar
+from scipy.stats import truncnorm
 from test_solvers import cable
 
-from srcfit.noise import LAGS, estimate_lag, estimate_noise, rescaled, restricted
+from srcfit.noise import (
+    LAGS,
+    STAND_INS,
+    estimate_lag,
+    estimate_noise,
+    rescaled,
+    restricted,
+    stand_ins,
+)
 
 
 def two_groups(seed, ratio=4.0, n=80):
@@ -100,3 +110,19 @@ def test_lag_is_found(lag):
 def test_lag_that_is_not_asked_for_stays_zero():
     found = estimate_lag(correlated(0, 0.5), np.array([False]))
     assert not found.any()
+
+
+@pytest.mark.parametrize(("centre", "sd"), [(0.45, 0.08), (0.1, 0.2), (1.2, 0.3)])
+def test_stand_ins_are_means_of_equal_parts(centre, sd):
+    """Against scipy's truncated normal law: means of five equal parts, and the mean of all."""
+    found = stand_ins(-0.5 * ((np.array(LAGS) - centre) / sd) ** 2)
+    law = truncnorm((LAGS[0] - centre) / sd, (LAGS[-1] - centre) / sd, centre, sd)
+    ends = law.ppf(np.linspace(0, 1, STAND_INS + 1))
+    means = [law.expect(lb=a, ub=b) * STAND_INS for a, b in pairwise(ends)]
+    np.testing.assert_allclose(found, means, atol=2e-3)
+    assert found.mean() == pytest.approx(law.mean(), abs=2e-3)
+
+
+def test_a_flat_likelihood_prefers_no_correlation():
+    np.testing.assert_allclose(stand_ins(np.zeros(len(LAGS))), [0.09, 0.27, 0.45, 0.63, 0.81],
+                               atol=1e-3)  # fmt: skip
