@@ -322,7 +322,7 @@
         high: 15, sync: true, plot: panelPlot(panel, range, true),
       }, [panel.x, panel.value, ...byGroup(panel, panel.predicted)]);
       const z = padded([panel.standardised, [-3, 3]], 0.02);
-      chart(`residuals${p}`, panelHost(host, `residual / sd, ${panel.kind}`), {
+      chart(`residuals${p}`, panelHost(host, `residual / sd, ${panel.kind} (shaded: ± 2)`), {
         high: 8, sync: true, plot: {
           scales: { x: alongX, y: { range: () => z } }, axes: [place(), yAxis({ splits: sds })],
           series: [{}, readingDots(panel)],
