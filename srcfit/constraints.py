@@ -4,9 +4,9 @@ The estimate is the exact constrained one at the evidence-weighted mean strength
 averaged over families. The interval of a question is the hull of draws under the cautious
 families and of strict bounds under steeper ones (see `envelope`), around the estimate and around
 their own centre; the distances between estimate and centres, with and without steps at the drawn
-edges, widen it as in `bands`. The interval without the inequalities holds whatever the source, so
-theirs goes little beyond it. Where the inequalities take next to nothing from the unconstrained
-posterior, the closed forms of `bands` stand and nothing is drawn.
+edges, widen it as in `bands`. The interval without the inequalities is meant for any source, so
+theirs goes beyond it only so far (`ROOM`). Where the inequalities take next to nothing from the
+unconstrained posterior, the closed forms of `bands` stand and nothing is drawn.
 """
 
 from __future__ import annotations
