@@ -72,8 +72,7 @@ def noise_from_rest(used: int, dof: float, stated: bool) -> list[Finding]:
     """A noise estimated from little: most of what the readings tell went into the source.
 
     Seen on a cable whose readings stand two diffusion lengths apart: 220 of 299 degrees of freedom
-    in the source, the noise found 0.8 to 1 times as large as it was; with a lag-1 correlation of
-    0.5 that was to be estimated too, 0.5 to 1.6 times, and the total held 2 times in 6.
+    in the source, the noise found 0.8 to 1 times as large as it was.
     """
     if stated or dof >= RESTS * used:
         return []
