@@ -32,6 +32,7 @@ Numbers = NDArray[np.intp]
 # columns that the others explain but for this part of their square are not seen
 UNSEEN = 1e-10
 TINY = 1e-300
+ROUNDED = 1e-13  # part of a column that is no more than rounding
 # correlations beyond this are taken for it; probabilities below that are rounding
 LIKE, FAINT = 1 - 1e-12, 1e-13
 
@@ -164,6 +165,8 @@ def _gain(
     scale = np.prod(np.diagonal(plain, axis1=1, axis2=2), axis=1)
     bad = known <= UNSEEN * np.maximum(scale, TINY)
     plain[bad], seen[bad] = np.eye(k), np.eye(k)
+    # a rung so loud that the smooth part takes all of a column away leaves rounding of it
+    seen = seen + ROUNDED * plain[:, None]
     told = np.linalg.solve(seen, v[..., None])[..., 0]
     won = (v * told).sum(axis=2)
     volume = np.log(np.linalg.det(plain))[:, None] - np.log(np.linalg.det(seen))

@@ -245,3 +245,22 @@ def test_place_intervals_hold():
         widths.append(place.upper - place.lower)
     assert held >= 26  # of 30: 28.5 are promised, 26 or more happen with 98 %
     assert np.median(widths) < 0.25
+
+
+def test_unknown_noise_on_a_dense_fibre(tmp_path):
+    """Rungs so loud that the smooth part explains all readings leave nothing of a column."""
+    rng = np.random.default_rng(0)
+    x = np.arange(0.5, 60, 1.0)
+    T = 21 + 13.5 * ((x > 28) & (x < 31)) + rng.normal(0, 0.3, len(x))
+    member = {
+        "kind": "conductor", "length": "60 m", "conductance": "0.243 W*m/K",
+        "loss": "1.11 W/(m*K)", "ambient": "12 degC", "left": "insulated", "right": "insulated",
+    }  # fmt: skip
+    columns = [{"column": "w", "kind": "temperature", "unit": "degC", "sd": "estimate"}]
+    source = {
+        "unit": "W/m", "cells": 120, "lumped": [{"name": "joint", "between": ["25 m", "35 m"]}],
+    }  # fmt: skip
+    case = case_of(tmp_path, member, columns, list(zip(x, T, strict=True)), source)
+    lumped = srcfit.recover(case).summary()["lumped"][0]
+    assert 25 <= lumped["at"] <= 35
+    assert np.isfinite([lumped["value"], lumped["lower"], lumped["upper"]]).all()
