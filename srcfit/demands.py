@@ -45,6 +45,8 @@ def stretches(grid: Grid) -> list[tuple[float, float]]:
     if grid.features is not None:
         edges = np.flatnonzero(grid.free)
         for column in grid.features.T:
+            if column.min() < 0:  # what is open about the one before
+                continue
             cells = edges[column >= HALF * column.max()]
             found.append((float(grid.edges[cells[0]]), float(grid.edges[cells[-1] + 1])))
     return sorted(found)

@@ -35,6 +35,8 @@ SIZES = (2.0, 10.0)
 # ends that are tried once a stretch is found, over half its width, and how often at the most
 NEAR: Array = np.linspace(-1.0, 1.0, 11)
 CLOSER = 6
+# how many ways of differing are kept, and how large a part of the feature they must be
+WAYS, FAINTEST = 3, 0.05
 # a feature's column is scaled to the size it seems to have, within these
 FAINT, LOUD = 1.0, 10.0
 
@@ -55,6 +57,7 @@ def featured(problem: Problem) -> Problem:
 def _demanded(fr: Frame, ground: Ground, size: float) -> Array:
     """Columns (m', k) of the features, for a source of mean level `size`."""
     found: Array = np.zeros((len(fr.free), 0))
+    count = 0
     if size <= 0:
         return found
     x, step = _along(fr.problem.grid)
@@ -64,12 +67,12 @@ def _demanded(fr: Frame, ground: Ground, size: float) -> Array:
     seen = fr.QA @ tried
     spectra = [w.spectrum for w in ground.averaged]
     sigma = ground.sigma[::STRIDE]
-    while found.shape[1] < MOST:
+    while count < MOST:
         likely, amounts, plain = _tried(spectra, sigma, seen, size)
         if np.logaddexp.reduce(likely) - np.log(len(likely)) - plain < ODDS:
             break
         best = int(np.argmax(likely))
-        column = amounts[best] * tried[:, best]
+        columns = amounts[best] * tried[:, best, None]
         if best >= drawn.shape[1]:
             which = (best - drawn.shape[1]) % len(a)
             stretch = float(a[which]), float(b[which])
@@ -81,13 +84,23 @@ def _demanded(fr: Frame, ground: Ground, size: float) -> Array:
                 before, stretch = stretch, (float(first[which]), float(last[which]))
                 if max(abs(p - q) for p, q in zip(before, stretch, strict=True)) < step / 2:
                     break
-            share = np.exp(likely - np.logaddexp.reduce(likely))
-            column = near @ (share * amounts)
-        found = np.hstack([found, column[:, None]])
+            columns = _open(near * amounts, np.exp(likely - np.logaddexp.reduce(likely)))
+        found, count = np.hstack([found, columns]), count + 1
         steps = np.hstack([drawn, found])
         families = estimate_families(steps)
         spectra = [spectrum(fr, f, ground.products, steps) for f in families]
     return found
+
+
+def _open(near: Array, share: Array) -> Array:
+    """Mean of shapes (m', J) by their shares, then the main ways in which they differ from it.
+
+    The latter change sign and carry what is open about the feature's place and width.
+    """
+    mean = near @ share
+    U, s, _ = np.linalg.svd((near - mean[:, None]) * np.sqrt(share), full_matrices=False)
+    kept = s[:WAYS] > FAINTEST * np.linalg.norm(mean)
+    return np.column_stack([mean, (U * s)[:, :WAYS][:, kept]])
 
 
 def shapes(x: Array, a: Array, b: Array) -> Array:

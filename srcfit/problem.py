@@ -30,8 +30,8 @@ class Grid:
     breaks : tuple of float
         Places where the source is known to jump [m].
     features : (m', k) or None
-        Further shapes on the free cells that the source may have, found in the readings; None
-        where they were not looked for.
+        Further shapes on the free cells that the source may have, found in the readings, those
+        that change sign being what is open about the one before; None where not looked for.
     parts : {1, 2}
         2 where the source is a complex amplitude: cells of the real part come first, then those
         of the imaginary part, alike and independent beforehand.
