@@ -17,7 +17,7 @@ from srcfit.readings.guess import Guesses, Place, Reading, guess
 from srcfit.readings.sheets import File, load
 from srcfit.units import amount_of
 
-GUESS, TODO = "GUESS", "TO FILL IN"
+GUESS, BLANK = "GUESS", "TO FILL IN"
 _TABLES = frozenset((".csv", ".txt", ".tsv", ".dat"))
 _MOST_BYTES = 1_000_000
 _MOST_FILES = 20
@@ -41,7 +41,7 @@ class _Lines:
     def put(self, line: str, mark: str = "", why: str = "") -> None:
         remark = f"# {mark}: {why}" if mark else ""
         self.text.append(f"{line:<43} {remark}" if remark else line)
-        if mark == TODO:
+        if mark == BLANK:
             self.todo.append(why)
 
 
@@ -109,7 +109,7 @@ def _readings(kind: MemberKind, found: Guesses, file: str) -> _Lines:
     out.put(f"# {file}: {found.story}".replace("\n", " "))
     out.put(f"file = {quoted(file)}")
     if found.unclear:
-        out.put('# decimal = "."', TODO, f'`decimal`: {found.unclear}; set it to "." or ","')
+        out.put('# decimal = "."', BLANK, f'`decimal`: {found.unclear}; set it to "." or ","')
     _position(out, found.place, file)
     spread = [name for name, key in found.notes if key == "sd_column"]
     lone = len(found.readings) == 1 and len(found.readings[0].headers) == 1 and len(spread) == 1
@@ -138,10 +138,10 @@ def _position(out: _Lines, place: Place, file: str) -> None:
     extra = _origin(place)
     line = f"position = {{ {text}, {unit}{extra} }}"
     if not place.header:
-        out.put(line, TODO, "`position`: no column of positions was recognised; set `column`, or "
+        out.put(line, BLANK, "`position`: no column of positions was recognised; set `column`, or "
                 "name the table with the places of the gauges: file, gauge, column")  # fmt: skip
     elif place.unit is None and place.unit_column is None:
-        out.put(line, TODO, f"`position`: the file states no unit of {quoted(place.header)}; "
+        out.put(line, BLANK, f"`position`: the file states no unit of {quoted(place.header)}; "
                 "m is only a guess")  # fmt: skip
     else:
         out.put(line, GUESS, place.why)
@@ -176,10 +176,10 @@ def _column(out: _Lines, kind: MemberKind, reading: Reading, spread: str) -> Non
     if spread:
         out.put(f"sd_column = {quoted(spread)}", GUESS, "named like a standard deviation")
     else:
-        out.put('sd = "estimate"', TODO, f"`sd` of {name}: the standard deviation of one "
+        out.put('sd = "estimate"', BLANK, f"`sd` of {name}: the standard deviation of one "
                 'reading with its unit; "estimate" leaves it to the readings')  # fmt: skip
     if sensor.needs_distance:
-        out.put('distance = "1 m"', TODO, f"`distance` of {name}: depth of the gauges below "
+        out.put('distance = "1 m"', BLANK, f"`distance` of {name}: depth of the gauges below "
                 "the axis; 1 m is invented")  # fmt: skip
     if sensor.directions:
         first, second = sensor.directions
@@ -203,7 +203,7 @@ def _unit(out: _Lines, kind: MemberKind, reading: Reading) -> None:
         effect = (
             "until then the numbers count as they stand" if plain else "it cannot be read before"
         )
-        out.put(f"# unit = {quoted(_example(kind, reading.kind))}", TODO,
+        out.put(f"# unit = {quoted(_example(kind, reading.kind))}", BLANK,
                 f"`unit` of {name}: the file states none; {effect}")  # fmt: skip
 
 
@@ -307,13 +307,13 @@ def _assembled(text: str, path: Path, member: str, lines: _Lines) -> str:
         new = re.search(r"\b(Bq|kg)\b", member)
         source = re.sub(r"\bn?mol\b", new[0] if new else "mol", source)
     zones = '# zones = [ { name = "…", from = "…", to = "…" } ]'
-    source = re.sub(r"^zones = .*$", lambda _: f"{zones}  # {TODO}: the stretches you ask about",
+    source = re.sub(r"^zones = .*$", lambda _: f"{zones}  # {BLANK}: the stretches you ask about",
                     source, count=1, flags=re.MULTILINE)  # fmt: skip
     lines.todo.append("`zones` in [source]: the stretches you ask about; and its `unit`")
     head = [
         text[: text.index("\n")],
         f"# Drafted from {quoted(path.name)}. Lines marked {GUESS} were found in the file: judge",
-        f"# them. Lines marked {TODO}, and all numbers of [member], are yours to set:",
+        f"# them. Lines marked {BLANK}, and all numbers of [member], are yours to set:",
         *(f"# - {item}" for item in dict.fromkeys(lines.todo)),
         f"title = {quoted(path.stem)}",
     ]
